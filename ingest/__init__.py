@@ -1,0 +1,1 @@
+"""From historian exports to reconciled states: everything that happens before a figure is computed."""

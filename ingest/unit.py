@@ -1,0 +1,156 @@
+"""One reactor as its unit file describes it: frozen, checked, in the program's own units.
+
+Everything downstream of `unitfile.load` sees only these objects. Times are `timedelta`, relative
+uncertainties are fractions (not percent), floors and ranges stay in the instrument's own unit.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import datetime, timedelta
+
+FLOW_KINDS = ("molar flow", "mass flow", "volume flow", "actual volume flow")
+FRACTION_KINDS = ("mole fraction", "mass fraction")
+BALANCE_KINDS = (*FLOW_KINDS, *FRACTION_KINDS, "species flow", "flow ratio")
+AUXILIARY_KINDS = ("pressure", "temperature", "signal")
+KINDS = (*BALANCE_KINDS, *AUXILIARY_KINDS)
+
+SAMPLINGS = ("held", "interpolated", "mean at end", "mean at start")
+PRIORITIES = ("high", "medium", "low")
+REACTORS = ("well-mixed", "packed bed", "batch")
+
+
+@dataclass(frozen=True, slots=True)
+class Species:
+    """A chemical species: its name in the unit file, formula, atoms per molecule, molar mass [kg/kmol]."""
+
+    name: str
+    formula: str
+    atoms: tuple[tuple[str, float], ...]
+    molar_mass_kg_kmol: float
+    inert: bool
+
+
+@dataclass(frozen=True, slots=True)
+class Stream:
+    """A flow crossing the envelope; `direction` is 'in' or 'out'; species in state order."""
+
+    name: str
+    direction: str
+    species: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Uncertainty:
+    """Standard uncertainty (k = 1) of a reading y: `relative * |y| + floor`, floor in the reading's unit."""
+
+    relative: float
+    floor: float
+
+
+@dataclass(frozen=True, slots=True)
+class Instrument:
+    """Anything that gives a reading about a stream.
+
+    A reading in its own unit becomes a base value by `(reading + offset) * to_base`; base values are
+    kmol/h (molar, volume and species flow), kg/h (mass flow), mole or mass fraction, mol/mol (flow
+    ratio), kPa, K. An actual volume flow has `to_base` to m3/h and becomes kmol/h with the readings of
+    `pressure` and `temperature` (names of auxiliary instruments).
+    """
+
+    name: str
+    kind: str
+    tag: str | None  # None: declared, see value
+    value: float | None  # a declared reading, in own unit
+    unit: str
+    to_base: float
+    offset: float
+    stream: str | None  # None only for auxiliary kinds
+    per_stream: str | None  # flow ratio: stream over per_stream
+    species: tuple[str, ...]  # what a fraction or species flow counts; empty otherwise
+    left_out: tuple[str, ...]  # species the sample no longer holds (water behind a drier)
+    random: Uncertainty
+    systematic: Uncertainty
+    low: float  # range in own unit; -inf / inf when not stated
+    high: float
+    cycle: timedelta  # time between independent results
+    dead_time: timedelta
+    max_age: timedelta  # a result older than this is stale
+    sampling: str  # one of SAMPLINGS
+    analyzer: str | None  # channels of one analyzer share this name
+    pressure: str | None
+    temperature: str | None
+
+
+@dataclass(frozen=True, slots=True)
+class SharedError:
+    """A systematic error common to several instruments, as a fraction of each reading (k = 1)."""
+
+    name: str
+    instruments: tuple[str, ...]
+    relative: float
+
+
+@dataclass(frozen=True, slots=True)
+class Operating:
+    """How the load tells the operating condition; limits in the load instrument's own unit.
+
+    Down below `down_below`; back only above `running_above`; starting for `starting_for` after that;
+    turned down below `turned_down_below`.
+    """
+
+    load: str
+    down_below: float
+    running_above: float
+    turned_down_below: float
+    starting_for: timedelta
+
+
+@dataclass(frozen=True, slots=True)
+class Watch:
+    """Limits on one windowed figure. `low`/`high` in the figure's unit; None means no such limit."""
+
+    name: str
+    figure: str
+    window: timedelta
+    low: float | None
+    high: float | None
+    priority: str
+    deadband: float
+    on_delay: timedelta
+    off_delay: timedelta
+    steady: bool  # watch the steady figure rather than the as-operated one
+
+
+@dataclass(frozen=True, slots=True)
+class ExportRules:
+    """What the unit file fixes about exports where the file itself does not tell."""
+
+    time_zone: str | None
+    missing_words: tuple[str, ...]
+    quality: str | None  # 'words', 'opc ua', 'opc da' or None (found out)
+
+
+@dataclass(frozen=True, slots=True)
+class Unit:
+    """One reactor. `key` is the unit file's stem and names the unit in the store and in links."""
+
+    key: str
+    name: str
+    time_zone: str
+    cell: timedelta
+    reactor: str  # one of REACTORS
+    species: tuple[Species, ...]
+    key_reactant: str
+    wanted: str
+    unwanted: tuple[str, ...]
+    key_element: str
+    streams: tuple[Stream, ...]
+    instruments: tuple[Instrument, ...]  # the instrument axis of every array
+    shared: tuple[SharedError, ...]
+    operating: Operating | None
+    catalyst_charged: datetime | None  # tz-aware
+    watches: tuple[Watch, ...]
+    windows: tuple[timedelta, ...]
+    least_coverage: float
+    exports: ExportRules

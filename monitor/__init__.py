@@ -1,0 +1,1 @@
+"""From reconciled states to figures, episodes, the page and the command line."""

@@ -1,0 +1,1 @@
+"""The Streamlit page: thin views over frames that a pass has stored."""
