@@ -1,0 +1,106 @@
+"""Imports run one way: a file imports only from files that stand above it in ORDER."""
+
+from __future__ import annotations
+
+import ast
+import subprocess
+import sys
+
+import pytest
+
+from tests.source import PACKAGES, ROOT, Source, sources
+
+ORDER = (
+    "ingest.errors",
+    "ingest.chemistry",
+    "ingest.quantities",
+    "ingest.unit",
+    "ingest.unitfile",
+    "ingest.dialect",
+    "ingest.exports",
+    "ingest.readings",
+    "ingest.screen",
+    "ingest.cells",
+    "ingest.instruments",
+    "ingest.balance",
+    "ingest.reconcile",
+    "ingest.ledger",
+    "ingest.intake",
+    "demo_data.plant",
+    "monitor.amounts",
+    "monitor.figures",
+    "monitor.windows",
+    "monitor.drift",
+    "monitor.run",
+    "monitor.cli",
+    "monitor.__main__",
+)
+MODULES = [s for s in sources() if s.path.name != "__init__.py"]
+
+
+def _imported(source: Source) -> set[str]:
+    """Every own module that a file imports, wherever in the file the import stands."""
+    known = {s.module for s in sources()}
+    found: set[str] = set()
+    for node in ast.walk(source.tree):
+        if isinstance(node, ast.Import):
+            found.update(alias.name for alias in node.names)
+        elif isinstance(node, ast.ImportFrom):
+            assert node.level == 0, f"{source.place}:{node.lineno}: write the import with its full name"
+            base = node.module or ""
+            inner = {f"{base}.{alias.name}" for alias in node.names}
+            found.update(inner & known or {base})
+    return {name for name in found if name.split(".")[0] in PACKAGES}
+
+
+def test_every_file_has_its_place_in_the_order_and_nothing_gone_has_one():
+    assert sorted(ORDER) == sorted(s.module for s in MODULES)
+
+
+@pytest.mark.parametrize("source", MODULES, ids=lambda s: s.place)
+def test_a_file_imports_only_from_files_above_it(source: Source):
+    if source.module not in ORDER:
+        pytest.fail(f"{source.place} has no place in ORDER")
+    above = set(ORDER[: ORDER.index(source.module)])
+    assert _imported(source) <= above, f"{source.place} imports from below itself"
+
+
+@pytest.mark.parametrize("source", MODULES, ids=lambda s: s.place)
+def test_no_file_imports_the_init_of_a_package(source: Source):
+    inits = {s.module for s in sources() if s.path.name == "__init__.py"}
+    assert not _imported(source) & inits
+
+
+def test_ingest_knows_neither_the_monitor_nor_the_demo_plant():
+    for source in MODULES:
+        if source.module.startswith("ingest."):
+            assert {name.split(".")[0] for name in _imported(source)} <= {"ingest"}, source.place
+
+
+def test_an_init_holds_a_docstring_and_nothing_else():
+    for source in sources():
+        if source.path.name == "__init__.py":
+            assert ast.get_docstring(source.tree), f"{source.place} needs its one line"
+            assert len(source.tree.body) == 1, f"{source.place} holds code"
+
+
+def test_only_the_page_imports_streamlit():
+    for source in MODULES:
+        if not source.module.startswith("monitor.page."):
+            names = [n for n in ast.walk(source.tree) if isinstance(n, ast.Import | ast.ImportFrom)]
+            roots = {alias.name.split(".")[0] for n in names for alias in n.names if isinstance(n, ast.Import)}
+            roots |= {(n.module or "").split(".")[0] for n in names if isinstance(n, ast.ImportFrom)}
+            assert "streamlit" not in roots, source.place
+
+
+def test_help_imports_no_heavy_library():
+    # pandas 0.6 s, streamlit 0.5 s, pint 0.3 s to import: help must answer at once.
+    script = (
+        "import sys\n"
+        "from monitor.cli import main\n"
+        "sys.argv = ['outlet', '--help']\n"
+        "try:\n    main()\nexcept SystemExit as stop:\n    assert not stop.code\n"
+        "print(sorted({'numpy', 'pandas', 'streamlit', 'pint', 'pyarrow', 'scipy', 'altair'} & set(sys.modules)))\n"
+    )
+    done = subprocess.run([sys.executable, "-c", script], cwd=ROOT, capture_output=True, text=True, check=True)
+    assert done.stdout.splitlines()[-1] == "[]"
