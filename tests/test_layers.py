@@ -88,7 +88,9 @@ def test_only_the_page_imports_streamlit():
     for source in MODULES:
         if not source.module.startswith("monitor.page."):
             names = [n for n in ast.walk(source.tree) if isinstance(n, ast.Import | ast.ImportFrom)]
-            roots = {alias.name.split(".")[0] for n in names for alias in n.names if isinstance(n, ast.Import)}
+            roots = {
+                alias.name.split(".")[0] for n in names for alias in n.names if isinstance(n, ast.Import)
+            }
             roots |= {(n.module or "").split(".")[0] for n in names if isinstance(n, ast.ImportFrom)}
             assert "streamlit" not in roots, source.place
 
@@ -100,7 +102,10 @@ def test_help_imports_no_heavy_library():
         "from monitor.cli import main\n"
         "sys.argv = ['outlet', '--help']\n"
         "try:\n    main()\nexcept SystemExit as stop:\n    assert not stop.code\n"
-        "print(sorted({'numpy', 'pandas', 'streamlit', 'pint', 'pyarrow', 'scipy', 'altair'} & set(sys.modules)))\n"
+        "heavy = {'numpy', 'pandas', 'streamlit', 'pint', 'pyarrow', 'scipy', 'altair'}\n"
+        "print(sorted(heavy & set(sys.modules)))\n"
     )
-    done = subprocess.run([sys.executable, "-c", script], cwd=ROOT, capture_output=True, text=True, check=True)
+    done = subprocess.run(
+        [sys.executable, "-c", script], cwd=ROOT, capture_output=True, text=True, check=True
+    )
     assert done.stdout.splitlines()[-1] == "[]"
