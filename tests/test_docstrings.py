@@ -19,7 +19,10 @@ CASES = [
 
 def _is_command(node: Function) -> bool:
     """A click command: its docstring is the help text that people read."""
-    return any(re.search(r"\.(command|group)\b", ast.unparse(d)) or "click." in ast.unparse(d) for d in node.decorator_list)
+    return any(
+        re.search(r"\.(command|group)\b", ast.unparse(d)) or "click." in ast.unparse(d)
+        for d in node.decorator_list
+    )
 
 
 def _parameters(node: Function) -> list[str]:
@@ -50,4 +53,6 @@ def test_the_docstring_names_the_parameters_of_the_signature(source: Source, nod
 def test_the_first_line_is_one_sentence(source: Source, node: Function):
     first = (ast.get_docstring(node) or "").splitlines()[:2]
     assert first[0].rstrip().endswith((".", "?", ":")), f"{source.place}:{node.lineno}: end the first line"
-    assert len(first) == 1 or not first[1].strip(), f"{source.place}:{node.lineno}: one line, then a blank one"
+    assert len(first) == 1 or not first[1].strip(), (
+        f"{source.place}:{node.lineno}: one line, then a blank one"
+    )
