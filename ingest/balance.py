@@ -49,7 +49,7 @@ class Problem:
     @property
     def linear(self) -> NDArray[np.bool_]:
         """Tell which instruments see a plain sum rather than a ratio, array (m,)."""
-        return ~self.denominator.any(axis=1)
+        return np.asarray(~np.any(self.denominator, axis=1))
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,7 +88,7 @@ def null_space(matrix: Floats) -> Floats:
     if matrix.shape[0] == 0:
         return np.eye(matrix.shape[1])
     _, sizes, right = np.linalg.svd(matrix)
-    rank = int((sizes > RANK_TOLERANCE * max(sizes[0], 1e-300)).sum())
+    rank = int((sizes > RANK_TOLERANCE * np.fmax(sizes[0], 1e-300)).sum())
     return np.ascontiguousarray(right[rank:].T)
 
 
@@ -144,7 +144,9 @@ def problem_of(unit: Unit) -> Problem:
     names = tuple(one.name for one in instruments.balance_instruments(unit))
     rows = conservation_of(unit, state)
     found = problem(rows, numerator, denominator, state=state, names=names)
-    held = [f"{stream}: {name}" for (stream, name), row in zip(state, found.basis, strict=True) if not row.any()]
+    held = [
+        f"{stream}: {name}" for (stream, name), row in zip(state, found.basis, strict=True) if not row.any()
+    ]
     if not found.basis.shape[1] or held:
         raise BalanceError(
             f"{unit.key}: the balance forces {', '.join(held) or 'every flow'} to zero",
@@ -242,7 +244,7 @@ def _independent(rows: Floats) -> Floats:
     found: list[Floats] = []
     for row in rows:
         rest = row - sum((part @ row * part for part in found), np.zeros_like(row))
-        if np.linalg.norm(rest) > RANK_TOLERANCE * max(np.linalg.norm(row), 1e-300):
+        if np.linalg.norm(rest) > RANK_TOLERANCE * np.fmax(np.linalg.norm(row), 1e-300):
             found.append(rest / np.linalg.norm(rest))
             kept.append(row)
     return np.array(kept).reshape(len(kept), rows.shape[1])

@@ -52,6 +52,22 @@ class Measured:
         """Give the variance of each reading without its shared part, array (m, t)."""
         return self.random**2 * self.averaged + self.systematic**2
 
+    def take(self, place: NDArray[np.intp]) -> Measured:
+        """Give the readings of some cells only.
+
+        Parameters
+        ----------
+        place : array (t',)
+            Which cells.
+        """
+        return Measured(
+            reading=self.reading[:, place],
+            random=self.random[:, place],
+            systematic=self.systematic[:, place],
+            loading=self.loading[:, :, place],
+            averaged=self.averaged[:, place],
+        )
+
 
 def balance_instruments(unit: Unit) -> tuple[Instrument, ...]:
     """Give the instruments that take part in the balance, in the unit's order.
@@ -149,7 +165,9 @@ def _mole_fraction(instrument: Instrument, chemistry: _Chemistry) -> Row:
 
 def _mass_fraction(instrument: Instrument, chemistry: _Chemistry) -> Row:
     sample = chemistry.sample(instrument)
-    return chemistry.masses(instrument.stream, instrument.species), chemistry.masses(instrument.stream, sample)
+    return chemistry.masses(instrument.stream, instrument.species), chemistry.masses(
+        instrument.stream, sample
+    )
 
 
 def _ratio(instrument: Instrument, chemistry: _Chemistry) -> Row:
@@ -252,7 +270,7 @@ def _gas(unit: Unit, instrument: Instrument, value: Floats) -> list[tuple[Floats
 def _with_state_of_gas(
     unit: Unit, value: Floats, reading: Floats, random: Floats, systematic: Floats
 ) -> tuple[Floats, Floats]:
-    """Widen actual volume flows by what pressure and temperature are uncertain (quotient rule, JCGM 100 5.1.6)."""
+    """Widen actual volume flows by the errors of pressure and temperature (JCGM 100, 5.1.6)."""
     random, systematic = random.copy(), systematic.copy()
     for i, instrument in enumerate(balance_instruments(unit)):
         if instrument.kind == "actual volume flow":
