@@ -1,0 +1,263 @@
+"""The store's SQLite file: its tables, how it is opened, the lock between passes, its faults in words."""
+
+from __future__ import annotations
+
+import json
+import os
+import socket
+import sqlite3
+import time
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
+from datetime import UTC, datetime
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+
+from ingest.errors import StoreError
+
+LEDGER = "ledger.sqlite"
+LOCK = "pass.lock"
+HOLDER = "pass.holder"
+SCHEMA_VERSION = 1
+APPLICATION_ID = 0x4F75746C  # "Outl" in the file's header says that the file is ours
+BUSY_S = 30.0  # a commit waits so long for another one; each takes milliseconds
+
+SCHEMA = """
+BEGIN IMMEDIATE;
+CREATE TABLE meta (key TEXT PRIMARY KEY, value TEXT NOT NULL) STRICT;
+CREATE TABLE passes (
+  number INTEGER PRIMARY KEY, started TEXT NOT NULL, finished TEXT NOT NULL,
+  exports INTEGER NOT NULL, rows INTEGER NOT NULL, note TEXT NOT NULL
+) STRICT;
+CREATE TABLE exports (
+  number INTEGER PRIMARY KEY, sha256 TEXT NOT NULL UNIQUE, name TEXT NOT NULL, size INTEGER NOT NULL,
+  taken_at TEXT NOT NULL, status TEXT NOT NULL CHECK (status IN ('taken', 'set aside')),
+  error TEXT NOT NULL, asked TEXT NOT NULL, account TEXT NOT NULL,
+  made_by INTEGER NOT NULL REFERENCES passes (number)
+) STRICT;
+CREATE TABLE seen (path TEXT PRIMARY KEY, size INTEGER NOT NULL, mtime_ns INTEGER NOT NULL,
+  sha256 TEXT NOT NULL) STRICT;
+CREATE TABLE parts (
+  unit TEXT NOT NULL, stage TEXT NOT NULL, month TEXT NOT NULL, file TEXT NOT NULL UNIQUE,
+  sha256 TEXT NOT NULL, rows INTEGER NOT NULL, size INTEGER NOT NULL,
+  made_by INTEGER NOT NULL REFERENCES passes (number), PRIMARY KEY (unit, stage, month)
+) STRICT;
+CREATE TABLE episodes (
+  unit TEXT NOT NULL, position INTEGER NOT NULL, watch TEXT, raised TEXT, cleared TEXT,
+  detail TEXT NOT NULL, PRIMARY KEY (unit, position)
+) STRICT;
+CREATE TABLE episode_columns (unit TEXT PRIMARY KEY, columns TEXT NOT NULL) STRICT;
+CREATE TABLE journal (
+  number INTEGER PRIMARY KEY AUTOINCREMENT, written TEXT NOT NULL, who TEXT NOT NULL, what TEXT NOT NULL,
+  note TEXT NOT NULL DEFAULT '', unit TEXT, watch TEXT, raised TEXT
+) STRICT;
+CREATE TRIGGER journal_keeps_lines BEFORE UPDATE ON journal
+  BEGIN SELECT RAISE(ABORT, 'the journal is append-only'); END;
+CREATE TRIGGER journal_loses_nothing BEFORE DELETE ON journal
+  BEGIN SELECT RAISE(ABORT, 'the journal is append-only'); END;
+CREATE TRIGGER journal_replaces_nothing BEFORE INSERT ON journal
+  WHEN EXISTS (SELECT 1 FROM journal WHERE number = NEW.number)
+  BEGIN SELECT RAISE(ABORT, 'the journal is append-only'); END;
+"""
+
+# SQLite's primary result codes (sqlite.org/rescode.html) that a user can mend; any other is our bug.
+FAULTS = {
+    sqlite3.SQLITE_BUSY: ("is being written by another program", "Try again in a moment."),
+    sqlite3.SQLITE_READONLY: (
+        "cannot be written",
+        "Give this account the right to write in the store's folder (reading needs it too).",
+    ),
+    sqlite3.SQLITE_CANTOPEN: (
+        "cannot be opened",
+        "Give this account the right to write in the store's folder (reading needs it too).",
+    ),
+    sqlite3.SQLITE_IOERR: ("the disk reports a fault", "Look to the disk; nothing of this pass is kept."),
+    sqlite3.SQLITE_FULL: ("the disk is full", "Make room, then run the same pass again; nothing is lost."),
+    sqlite3.SQLITE_CORRUPT: ("is damaged", "Put the store back from a copy, or take the exports in anew."),
+    sqlite3.SQLITE_NOTADB: ("is not a ledger of this program", "Name another folder with --store."),
+}
+
+
+def now() -> str:
+    """Give the present as text, UTC, to the second.
+
+    Returns
+    -------
+    str
+        ISO 8601.
+    """
+    return datetime.now(UTC).isoformat(timespec="seconds")
+
+
+def program_version() -> str:
+    """Give this program's version.
+
+    Returns
+    -------
+    str
+        'not installed' when it runs from its source folder alone.
+    """
+    try:
+        return version("outlet-selectivity-monitor")
+    except PackageNotFoundError:
+        return "not installed"
+
+
+@contextmanager
+def open_ledger(folder: Path) -> Iterator[sqlite3.Connection]:
+    """Open the ledger of a store; what SQLite has to say comes out as StoreError.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+
+    Yields
+    ------
+    sqlite3.Connection
+        In autocommit; closed at the end.
+    """
+    path = folder / LEDGER
+    if not has_ledger(folder):
+        raise StoreError(
+            f"{folder}: there is no store here", remedy="Take exports in first, or name another --store."
+        )
+    with _in_words(path), closing(_connect(path, "rw", BUSY_S)) as ledger:
+        _must_be_ours(ledger, path)
+        ledger.execute("PRAGMA synchronous = FULL")
+        ledger.execute("PRAGMA foreign_keys = ON")
+        yield ledger
+
+
+def make_ledger(folder: Path) -> None:
+    """Make the ledger of a new store, or leave the one that is there.
+
+    Parameters
+    ----------
+    folder : Path
+        Exists; the caller holds the lock.
+    """
+    path = folder / LEDGER
+    with _in_words(path), closing(_connect(path, "rwc", BUSY_S)) as ledger:
+        if _is_empty(ledger):
+            ledger.execute("PRAGMA journal_mode = WAL")
+            ledger.execute("PRAGMA synchronous = FULL")
+            facts = {"schema_version": str(SCHEMA_VERSION), "program_version": program_version()}
+            ledger.executescript(SCHEMA)
+            ledger.execute(f"PRAGMA application_id = {APPLICATION_ID}")
+            ledger.executemany("INSERT INTO meta VALUES (?, ?)", list(facts.items()))
+            ledger.execute("COMMIT")
+        _must_be_ours(ledger, path)
+
+
+def has_ledger(folder: Path) -> bool:
+    """Tell whether a folder holds a ledger that has its tables.
+
+    Parameters
+    ----------
+    folder : Path
+
+    Returns
+    -------
+    bool
+    """
+    path = folder / LEDGER
+    if not path.is_file():
+        return False
+    with _in_words(path), closing(_connect(path, "rw", BUSY_S)) as ledger:
+        return not _is_empty(ledger)
+
+
+@contextmanager
+def only_one(folder: Path, wait_s: float) -> Iterator[None]:
+    """Hold the lock between passes; it falls with the process, however that ends.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    wait_s : float
+        How long to wait for another pass [s].
+
+    Yields
+    ------
+    None
+    """
+    path = folder / LOCK
+    # SQLite's own file lock is the one that works alike on Linux, macOS and Windows.
+    with _in_words(path), closing(_connect(path, "rwc", 0.0)) as lock:
+        _take(lock, folder, time.monotonic() + wait_s)
+        holder = folder / HOLDER
+        holder.write_text(
+            json.dumps({"pid": os.getpid(), "host": socket.gethostname(), "since": now()}), encoding="utf-8"
+        )
+        try:
+            yield
+        finally:
+            holder.unlink(missing_ok=True)
+            lock.rollback()
+
+
+def _take(lock: sqlite3.Connection, folder: Path, until: float) -> None:
+    """Take the lock, trying until the monotonic clock reads `until`."""
+    while True:
+        try:
+            lock.execute("BEGIN EXCLUSIVE")
+        except sqlite3.OperationalError as fault:
+            if fault.sqlite_errorcode & 0xFF != sqlite3.SQLITE_BUSY:
+                raise
+            if time.monotonic() >= until:
+                raise _held(folder) from None
+            time.sleep(0.05)
+        else:
+            return
+
+
+def _held(folder: Path) -> StoreError:
+    """Say who holds the lock."""
+    try:
+        who = json.loads((folder / HOLDER).read_text(encoding="utf-8"))
+        by = f"process {who['pid']} on {who['host']} since {who['since']}"
+    except (OSError, ValueError, KeyError):  # the holder is just writing or removing it
+        by = "a process that has only just begun or ended"
+    return StoreError(
+        f"{folder}: another pass is running: {by}", remedy="Wait until it has finished, or end that process."
+    )
+
+
+def _connect(path: Path, mode: str, busy_s: float) -> sqlite3.Connection:
+    """Open a SQLite file in autocommit."""
+    uri = f"{path.resolve().as_uri()}?mode={mode}"
+    return sqlite3.connect(uri, uri=True, isolation_level=None, timeout=busy_s)
+
+
+def _is_empty(ledger: sqlite3.Connection) -> bool:
+    """Tell whether a file holds no table yet: new, or its maker died before the first commit."""
+    return not ledger.execute("SELECT count(*) FROM sqlite_schema").fetchone()[0]
+
+
+def _must_be_ours(ledger: sqlite3.Connection, path: Path) -> None:
+    """Refuse a file of another program, and one of a later version of this program."""
+    if ledger.execute("PRAGMA application_id").fetchone()[0] != APPLICATION_ID:
+        raise StoreError(
+            f"{path}: is not a ledger of this program", remedy="Name another folder with --store."
+        )
+    facts = dict(ledger.execute("SELECT key, value FROM meta"))
+    if int(facts["schema_version"]) > SCHEMA_VERSION:
+        raise StoreError(
+            f"{path}: schema version {facts['schema_version']}, made by program {facts['program_version']}; "
+            f"this program knows schema versions up to {SCHEMA_VERSION}",
+            remedy="Use a newer version of this program, or name another folder with --store.",
+        )
+
+
+@contextmanager
+def _in_words(path: Path) -> Iterator[None]:
+    """Turn what SQLite reports and a user can mend into StoreError."""
+    try:
+        yield
+    except sqlite3.DatabaseError as fault:
+        known = FAULTS.get(getattr(fault, "sqlite_errorcode", 0) & 0xFF)
+        if known is None:
+            raise
+        raise StoreError(f"{path}: {known[0]} ({fault})", remedy=known[1]) from fault
