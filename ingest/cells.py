@@ -119,7 +119,9 @@ class _Pieces:
 
 
 def look_back(unit: Unit) -> timedelta:
-    """Give how long before a cell readings must reach, and so how long after a reading cells can change.
+    """Give how long before its start a cell can depend on readings: `reach` tells the other side.
+
+    Readings that arrive for a time t can change the cells with t - reach <= start <= t + look_back.
 
     Parameters
     ----------
@@ -140,7 +142,7 @@ def look_back(unit: Unit) -> timedelta:
 
 
 def reach(unit: Unit) -> timedelta:
-    """Give how long after a cell readings can change it, and so how long before a reading cells can change.
+    """Give how long after its start a cell can depend on readings.
 
     Parameters
     ----------
@@ -149,8 +151,8 @@ def reach(unit: Unit) -> timedelta:
     Returns
     -------
     timedelta
-        Dead time or interval, then the way to the next reading of an interpolated signal, then what stuck
-        needs to be sure.
+        The cell, then dead time or interval, then the way to the next reading of an interpolated signal,
+        then what stuck needs to be sure.
     """
     needs = [
         (t.shift_us + t.linear * t.hold_us) * _US + _stuck_cycles(i, STUCK_LOOKS_AHEAD)
@@ -158,7 +160,7 @@ def reach(unit: Unit) -> timedelta:
         if i.tag is not None
         for t in (_timing(i),)
     ]
-    return max(needs, default=timedelta(0))
+    return unit.cell + max(needs, default=timedelta(0))
 
 
 def cell_starts(unit: Unit, first_us: int, last_us: int) -> Times:
@@ -373,7 +375,7 @@ def _stuck_cycles(instrument: Instrument, cycles: int) -> timedelta:
 def _near(unit: Unit, readings: Readings, grid: _Grid) -> Readings:
     """The readings that can have a part in the cells of the grid, for every tag of the unit."""
     first = grid.first_us - look_back(unit) // _US
-    last = grid.first_us + grid.count * grid.size_us + reach(unit) // _US
+    last = grid.first_us + (grid.count - 1) * grid.size_us + reach(unit) // _US
     near = {}
     for tag in {i.tag for i in unit.instruments if i.tag is not None}:
         series = readings.get(tag) or empty()
@@ -395,7 +397,7 @@ def _pieces_of(
 def _cut_spans(time: Times, timing: _Timing, grid: _Grid) -> _Pieces:
     """Give each reading its span and cut the spans at the edges of the cells."""
     begin = time - timing.shift_us
-    following = np.concatenate([begin[1:], [_NEVER][: begin.size]])
+    following = _next(begin, _NEVER)
     end = np.minimum(following, begin + timing.hold_us)
     reading, cell, left, right = _cut(begin, end, grid)
     length = (right - left).astype(np.float64)
@@ -415,9 +417,9 @@ def _summed(cell: Places, weight: Floats, grid: _Grid) -> Floats:
 def _cut(begin: Times, end: Times, grid: _Grid) -> tuple[Places, Places, Times, Times]:
     """Cut spans at the edges of cells: which span, which cell, from, to. Off the grid is left out."""
     first, size = grid.first_us, grid.size_us
-    span = np.flatnonzero((end > begin) & (end > first) & (begin < first + grid.count * size))
-    left = np.maximum(begin[span], first)
-    right = np.minimum(end[span], first + grid.count * size)
+    left, right = np.maximum(begin, first), np.minimum(end, first + grid.count * size)
+    span = np.flatnonzero(right > left)
+    left, right = left[span], right[span]
     cell = (left - first) // size
     times = (right - 1 - first) // size - cell + 1
     if (times > 1).any():
@@ -454,12 +456,18 @@ def _spans(value: Floats, codes: Codes, linked: Flags, linear: bool) -> tuple[Co
     """Condition of each reading's span, the value at its begin and the change over it (0 where refused)."""
     if not linear:
         return codes, np.where(codes == GOOD, value, 0.0), np.zeros(0)
-    after = np.concatenate([codes[1:], [STALE][: codes.size]]).astype(np.int8)
+    after = _next(codes, STALE)
     # A straight line needs both its ends: the last reading before a long gap tells nothing about the gap.
-    span = np.where(codes != GOOD, codes, np.where(linked, after, STALE)).astype(np.int8)
+    span = np.where(codes != GOOD, codes, np.where(linked, after, np.int8(STALE)))
     here = np.where(span == GOOD, value, 0.0)
-    following = np.concatenate([value[1:], [0.0][: value.size]])
-    return span, here, np.where(span == GOOD, following, 0.0) - here
+    return span, here, np.where(span == GOOD, _next(value, 0.0), 0.0) - here
+
+
+def _next(of: NDArray[Any], last: float) -> NDArray[Any]:
+    """What comes after each entry, and `last` after the last."""
+    following = np.roll(of, -1)
+    following[-1:] = last
+    return following
 
 
 def _dearest(
