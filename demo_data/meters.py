@@ -17,6 +17,7 @@ from demo_data import scenario
 from demo_data.kinetics import GAS_CONSTANT_KJ_MOL_K, Floats
 from demo_data.plant import STATE, Truth
 from demo_data.scenario import Calibration, Event
+from ingest.readings import Readings, Series
 from ingest.unit import Instrument, Uncertainty, Unit
 
 MARKS = ("good", "calibration", "no number", "not stored")
@@ -235,3 +236,27 @@ def held(results: Results, time_us: NDArray[np.int64]) -> Results:
     value = np.where(before, np.nan, results.value[last])
     mark = np.where(before, NOT_STORED, results.mark[last]).astype(np.int8)
     return Results(time_us, value, mark)
+
+
+def as_readings(results: dict[str, Results]) -> Readings:
+    """Hand results over as the archive would give them after a faultless intake.
+
+    Parameters
+    ----------
+    results : dict of Results
+        By tag.
+
+    Returns
+    -------
+    dict of Series
+        By tag; good or bad quality, NaN where bad, nothing where nothing was stored.
+    """
+    readings = {}
+    for tag, rows in results.items():
+        kept = rows.mark != NOT_STORED
+        good = rows.mark[kept] == GOOD
+        value = np.where(good, rows.value[kept], np.nan)
+        number = np.arange(1, len(good) + 1, dtype=np.int64)
+        quality = np.where(good, 2, 0).astype(np.int8)
+        readings[tag] = Series(rows.time[kept], value, quality, np.zeros(len(good), dtype=np.int32), number)
+    return readings
