@@ -1,0 +1,183 @@
+"""One month of one unit from readings to figures: the grain of work, a pure function of its arguments.
+
+What a month holds follows from the readings in it and near it, from the cells of the longest window before
+it, and from nothing else. Late data, one more day and a rebuild of ten years are therefore the same work on
+the same input, and give the same bits.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, fields, replace
+from datetime import timedelta
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from ingest.balance import Problem, problem_of
+from ingest.cells import Carried, Cells, cells_frame, make_cells
+from ingest.errors import Problem as Fault
+from ingest.errors import UnitFileError
+from ingest.readings import Readings
+from ingest.reconcile import STATUS, States
+from ingest.unit import Unit
+from monitor.amounts import Amounts, amount_names, amounts_of
+from monitor.figures import Figure, figures_of
+from monitor.layout import figure_stage, flat, states_frame
+from monitor.windows import window_figures
+
+PIECE = 8192  # cells reconciled in one go; keeps the errors of one piece within some tens of MB
+PER_CELL = ("start", "kmol", "random", "systematic", "operating")
+SOLVED, UNSOLVED = STATUS.index("solved"), STATUS.index("did not converge")
+_US = timedelta(microseconds=1)
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """What all months of a unit share."""
+
+    unit: Unit
+    problem: Problem
+    figures: tuple[Figure, ...]
+
+    @property
+    def cell_us(self) -> int:
+        """Give the length of a cell [us]."""
+        return self.unit.cell // _US
+
+    @property
+    def lead_us(self) -> int:
+        """Give how long before its first cell a month looks back: the longest window, in whole cells [us]."""
+        longest = max(self.unit.windows) // _US
+        return -(-longest // self.cell_us) * self.cell_us
+
+
+@dataclass(frozen=True, slots=True)
+class Month:
+    """What one month holds: a frame for each stage as it is stored, its cells, and how many were solved."""
+
+    stages: Mapping[str, pd.DataFrame]
+    cells: int
+    solved: int
+
+
+def plan_of(unit: Unit) -> Plan:
+    """Give the plan of a unit: its balance and its figures; every watch must find its figure.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor.
+
+    Returns
+    -------
+    Plan
+
+    Raises
+    ------
+    BalanceError
+        The balance forces a flow to zero.
+    UnitFileError
+        A watch names a figure that the unit does not have.
+    """
+    figures = figures_of(unit, amount_names(unit))
+    names = [figure.name for figure in figures]
+    lost = [
+        Fault(f"watch[{place}].figure", f"the unit has no figure '{watch.figure}'", f"write one of {names}")
+        for place, watch in enumerate(unit.watches, start=1)
+        if watch.figure not in names
+    ]
+    if lost:
+        raise UnitFileError(unit.key, lost)
+    return Plan(unit, problem_of(unit), figures)
+
+
+def work(
+    plan: Plan, readings: Readings, edges: tuple[int, int, int], *, before: Cells, carried: Carried
+) -> Month:
+    """Work one month out.
+
+    Parameters
+    ----------
+    plan : Plan
+        Of the unit.
+    readings : dict of str to Series
+        From `cells.look_back` before the first cell to `cells.reach` after the last.
+    edges : tuple of int
+        First cell start, end of the cells, end of the month [us UTC]; no cells when the first two are one.
+    before : Cells
+        Those of the longest window before the first cell, without holes; none where the record begins.
+    carried : Carried
+        What the cells before have told about the operating condition.
+
+    Returns
+    -------
+    Month
+        Stages cells, states, figures-...; figures have a row for each window end from the first cell start
+        to before the end of the month, so that the month's last window stands in the next month.
+    """
+    first, last, after = edges
+    cells = make_cells(plan.unit, readings, first, last, carried=carried)
+    states: list[States] = []
+    figures: list[dict[timedelta, pd.DataFrame]] = []
+    held, unsolved = None, np.zeros(0, dtype=bool)
+    for piece in (*_pieces(before), *_pieces(cells)):
+        begin = int(piece.start[0])
+        found, amounts = amounts_of(plan.unit, plan.problem, piece)
+        held = amounts if held is None else _joined(_since(held, begin - plan.lead_us), amounts)
+        unsolved = np.concatenate([unsolved, found.status == UNSOLVED])[-len(held.start) :]
+        since = max(begin, first - plan.cell_us)
+        if piece.start[-1] >= since:
+            figures.append(window_figures(plan.unit, held, plan.figures, since_us=since, unsolved=unsolved))
+        if begin >= first:
+            states.append(found)
+    stages = {"cells": cells_frame(plan.unit, cells)}
+    stages |= {"states": pd.concat([states_frame(plan.problem, one) for one in states])} if states else {}
+    stages |= {figure_stage(window): frame for window, frame in _of_month(figures, after).items()}
+    solved = sum(int((one.status == SOLVED).sum()) for one in states)
+    return Month(stages, len(cells.start), solved)
+
+
+def rows(cells: Cells, which: slice) -> Cells:
+    """Keep some rows of cells.
+
+    Parameters
+    ----------
+    cells : Cells
+        t cells.
+    which : slice
+        Along the axis of cells.
+
+    Returns
+    -------
+    Cells
+        Views.
+    """
+    return Cells(*(getattr(cells, field.name)[which] for field in fields(Cells)))
+
+
+def _pieces(cells: Cells) -> Iterator[Cells]:
+    return (rows(cells, slice(at, at + PIECE)) for at in range(0, len(cells.start), PIECE))
+
+
+def _since(amounts: Amounts, first_us: int) -> Amounts:
+    """Drop the cells before an instant."""
+    kept = slice(int(np.searchsorted(amounts.start, first_us)), None)
+    return replace(amounts, **{name: getattr(amounts, name)[kept] for name in PER_CELL})
+
+
+def _joined(earlier: Amounts, later: Amounts) -> Amounts:
+    """Put the cells of one piece behind those of another."""
+    pairs: dict[str, Any] = {
+        name: np.concatenate([getattr(earlier, name), getattr(later, name)]) for name in PER_CELL
+    }
+    return replace(later, **pairs)
+
+
+def _of_month(parts: list[dict[timedelta, pd.DataFrame]], after: int) -> dict[timedelta, pd.DataFrame]:
+    """Join the figures of all pieces; the window that ends with the month belongs to the next one."""
+    windows = parts[0] if parts else {}
+    joined = {window: pd.concat([part[window] for part in parts]) for window in windows}
+    end = pd.Timestamp(after, unit="us", tz="UTC")
+    return {window: flat(frame[frame.index < end]) for window, frame in joined.items()}
