@@ -121,7 +121,7 @@ class _Pieces:
 def look_back(unit: Unit) -> timedelta:
     """Give how long before its start a cell can depend on readings: `reach` tells the other side.
 
-    Readings that arrive for a time t can change the cells with t - reach <= start <= t + look_back.
+    Readings that arrive for a time t can change the cells with t - reach < start <= t + look_back.
 
     Parameters
     ----------
@@ -379,7 +379,7 @@ def _near(unit: Unit, readings: Readings, grid: _Grid) -> Readings:
     near = {}
     for tag in {i.tag for i in unit.instruments if i.tag is not None}:
         series = readings.get(tag) or empty()
-        begin, end = np.searchsorted(series.time, [first, last + 1])
+        begin, end = np.searchsorted(series.time, [first, last])
         near[tag] = series.take(slice(begin, end))
     return near
 

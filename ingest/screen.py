@@ -27,8 +27,8 @@ LARGEST = 3.4e38  # largest IEEE 754 single: historians fill with it or more, no
 STUCK_AFTER = 2  # cycles without anything new: the second analysis in succession that repeats the one before
 STUCK_GAP = 2  # cycles; readings further apart than this are not successive analyses
 STUCK_CHANNELS = 2  # one channel alone repeats honestly, two and more to the last digit do not
-STUCK_LOOKS_BACK = 6  # cycles of readings before a reading that its being stuck can depend on, and after it
-STUCK_LOOKS_AHEAD = 3
+STUCK_LOOKS_BACK = 6  # cycles: being stuck depends on no reading longer ago than this
+STUCK_LOOKS_AHEAD = 3  # cycles: nor on any that follows later than this
 
 # A 4 to 20 mA signal measures from 3.8 to 20.5 mA and fails beyond (NAMUR NE 43).
 UNDER = (4.0 - 3.8) / 16.0

@@ -412,7 +412,7 @@ def near(unit: Unit, readings: Readings, first: int, last: int) -> Readings:
     """Readings from look_back before first to reach after last, which the last start lies before."""
     begin = first - look_back(unit) // timedelta(microseconds=1)
     end = last + reach(unit) // timedelta(microseconds=1)
-    return {tag: s.take((s.time >= begin) & (s.time <= end)) for tag, s in readings.items()}
+    return {tag: s.take((s.time >= begin) & (s.time < end)) for tag, s in readings.items()}
 
 
 @settings(max_examples=60, deadline=None)
@@ -456,7 +456,7 @@ def test_a_reading_changes_no_cell_beyond_its_stated_reach(names: tuple[str, ...
         after = make_cells(unit, moved, MIDNIGHT, MIDNIGHT + 3 * DAY)
         same = [np.array_equal(a, b, equal_nan=True) for a, b in zip(before.value, after.value, strict=True)]
         changed = before.start[~np.array(same) | (before.condition != after.condition).any(axis=1)]
-        assert (changed >= series.time[at] - reach(unit) // timedelta(microseconds=1)).all()
+        assert (changed > series.time[at] - reach(unit) // timedelta(microseconds=1)).all()
         assert (changed <= series.time[at] + look_back(unit) // timedelta(microseconds=1)).all()
         seen += changed.size
     assert seen > 20
@@ -501,6 +501,13 @@ def test_one_instrument_does_not_depend_on_the_others():
     for at in (0, 1, 2, 5):
         alone = make_cells(replace(unit, instruments=(unit.instruments[at],)), readings, *span)
         np.testing.assert_array_equal(alone.value[:, 0], whole.value[:, at])
+
+
+def test_meters_alike_in_all_but_their_stamps_are_kept_apart():
+    unit = made_unit(made_instrument("FI-1"), made_instrument("FI-2"), operating=None)
+    readings = {"FI-1.PV": made_series([0, 4], [10, 10]), "FI-2.PV": made_series([3, 8], [20, 20])}
+    cells = make_cells(unit, readings, MIDNIGHT, MIDNIGHT + CELL)
+    assert cells.share.tolist() == pytest.approx(np.array([[0.4, 0.5]]))
 
 
 def test_making_cells_changes_no_reading():
@@ -580,6 +587,20 @@ def test_nothing_is_known_of_a_load_between_the_limits_before_anything_has_told(
 def test_what_was_carried_in_goes_on():
     one_hour_ago = Carried(down=False, returned_us=MIDNIGHT - HOUR)
     assert operating([50, 50], one_hour_ago) == ["starting", "running"]
+
+
+def test_a_start_longer_than_a_chunk_is_carried_through_it():
+    plant = replace(PLANT, starting_for=timedelta(hours=5))
+    carried, found = Carried(), []
+    for hour, load in enumerate([5, 50, 50, 50, np.nan, 50, 50]):
+        start = np.array([MIDNIGHT + hour * HOUR])
+        codes = operating_of(np.array([load], dtype=float), start, plant, carried)
+        nothing = np.empty((1, 0))
+        carried = carried_after(Cells(start, nothing, nothing, nothing, codes), carried)
+        found += told(codes)
+    # Back at hour 1, so starting until hour 6.
+    assert found == ["down", "starting", "starting", "starting", "not known", "starting", "running"]
+    assert carried == Carried(down=False)
 
 
 def test_a_unit_file_that_names_no_load_leaves_the_condition_not_known():
