@@ -144,9 +144,8 @@ def problem_of(unit: Unit) -> Problem:
     names = tuple(one.name for one in instruments.balance_instruments(unit))
     rows = conservation_of(unit, state)
     found = problem(rows, numerator, denominator, state=state, names=names)
-    held = [
-        f"{stream}: {name}" for (stream, name), row in zip(state, found.basis, strict=True) if not row.any()
-    ]
+    still = np.linalg.norm(found.basis, axis=1) < RANK_TOLERANCE
+    held = [f"{stream}: {name}" for (stream, name), zero in zip(state, still, strict=True) if zero]
     if not found.basis.shape[1] or held:
         raise BalanceError(
             f"{unit.key}: the balance forces {', '.join(held) or 'every flow'} to zero",

@@ -32,6 +32,7 @@ SOLVED, NOT_CONVERGED, UNSEEN, NO_READINGS, DOWN = range(len(STATUS))
 MOST_ITERATIONS = 12
 SMALLEST_STEP = 1e-9  # of the unit's total flow
 ZERO_FLOW = 1e-10  # of the unit's total flow; a flow below minus this is negative
+ZERO_SLOPE = 1e-9  # of the steepest direction; less than that pushes nowhere
 BLOCK = 1024  # cells in one go: the arrays of one step stay inside the processor's cache
 RIDGE = 1e-8  # keeps directions that no reading sees near an even guess, at the start only
 
@@ -210,12 +211,16 @@ def _patterns(flags: Flags) -> list[tuple[Places, Flags]]:
 
 
 def _bounded(problem: Problem, readings: Measured, rows: Floats, view: Sight) -> Solution:
-    """Solve cells of one pattern; flows that come out negative are held at zero, and let go if pushed up."""
+    """Solve cells of one pattern; flows that come out negative are held at zero, and let go if pushed up.
+
+    That holds for flows which no reading tells too: where none of their free values is possible, the bound
+    itself tells something about the others.
+    """
     found = _settled(problem, readings, rows, view)
     held = np.zeros(found.flow.shape, dtype=bool)
     freed = np.zeros_like(held)
     for _ in range(len(problem.state)):
-        low = _below_zero(found.flow, view.seen) & ~held
+        low = _below_zero(found.flow) & ~held
         lifted = _lifted(problem, readings, found.flow, held) & ~freed & ~low.any(axis=0)
         changed = np.flatnonzero((low | lifted).any(axis=0))
         if not len(changed):
@@ -231,9 +236,8 @@ def _bounded(problem: Problem, readings: Measured, rows: Floats, view: Sight) ->
     return found
 
 
-def _below_zero(flow: Floats, seen: Flags) -> Flags:
-    total = np.abs(flow).sum(axis=0) / 2
-    return np.asarray((flow < -ZERO_FLOW * total) & seen[:, None])
+def _below_zero(flow: Floats) -> Flags:
+    return np.asarray(flow < -ZERO_FLOW * np.abs(flow).sum(axis=0) / 2)
 
 
 def _lifted(problem: Problem, readings: Measured, flow: Floats, held: Flags) -> Flags:
@@ -249,7 +253,7 @@ def _lifted(problem: Problem, readings: Measured, flow: Floats, held: Flags) -> 
     for group, pattern in _patterns(held):
         if pattern.any():
             multiplier = np.linalg.lstsq(problem.basis[pattern].T, uphill[:, group], rcond=None)[0]
-            lifted[np.ix_(pattern, group)] = multiplier < 0
+            lifted[np.ix_(pattern, group)] = multiplier < -ZERO_SLOPE * np.abs(uphill[:, group]).max(axis=0)
     return lifted
 
 
