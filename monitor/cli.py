@@ -1,0 +1,203 @@
+"""The commands: thin, quick to start, and the one place where an error becomes an exit code.
+
+Libraries that take long to import are imported inside the command that needs them.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import socket
+import sys
+from collections.abc import Iterable, Sequence
+from dataclasses import asdict
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from ingest.errors import OutletError
+from monitor.page.launch import DEFAULT_PORT, command
+
+if TYPE_CHECKING:
+    from monitor.run import PassResult
+
+FINE, YOURS, STOPPED = (
+    0,
+    2,
+    130,
+)  # exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C
+DEMO_DAYS = 60
+
+_file = click.Path(dir_okay=False, path_type=Path)
+_folder = click.Path(file_okay=False, path_type=Path)
+_units = click.option(
+    "--unit",
+    "unit_files",
+    type=_file,
+    multiple=True,
+    required=True,
+    help="Unit file; give it again for more units.",
+)
+_store = click.option(
+    "--store", type=_folder, default=Path("outlet-store"), show_default=True, help="Folder of the store."
+)
+_port = click.option(
+    "--port",
+    type=click.IntRange(1024, 65535),
+    default=DEFAULT_PORT,
+    show_default=True,
+    help="Port on 127.0.0.1.",
+)
+_json = click.option("--json", "as_json", is_flag=True, help="Print one JSON object.")
+
+
+def main() -> None:
+    """Run one command: exit 0 when fine, 2 when something is the user's to mend, 1 when we are at fault."""
+    try:
+        code = outlet.main(prog_name="outlet", standalone_mode=False)
+    except OutletError as error:
+        click.echo(str(error), err=True)
+        code = YOURS
+    except click.ClickException as error:
+        click.echo(_two_lines(error), err=True)
+        code = YOURS
+    except (click.Abort, KeyboardInterrupt):
+        click.echo("Stopped. The store holds the last pass that was finished.", err=True)
+        code = STOPPED
+    sys.exit(code or FINE)
+
+
+def _two_lines(error: click.ClickException) -> str:
+    """Tell a mistake on the command line as all other errors are told."""
+    context = getattr(error, "ctx", None)
+    path = context.command_path if context else "outlet"
+    return f"{path}: {error.format_message()}\n  See '{path} --help'."
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(package_name="outlet-selectivity-monitor")
+def outlet() -> None:
+    """Conversion, selectivity and yield of a reactor, reconciled from historian exports.
+
+    Advisory only: no protective function, no basis for interlock or trip settings.
+    """
+
+
+@outlet.command()
+@click.option(
+    "--folder", type=_folder, default=Path("demo-plant"), show_default=True, help="Where to put it."
+)
+@click.option(
+    "--days", type=click.IntRange(1, DEMO_DAYS), default=DEMO_DAYS, show_default=True, help="Days of exports."
+)
+@click.option("--no-page", is_flag=True, help="End after the pass.")
+@_port
+@_json
+def demo(folder: Path, days: int, no_page: bool, port: int, as_json: bool) -> int:
+    """Make the invented plant, take its exports in and show the page."""
+    from demo_data import exports
+
+    if not no_page:
+        _must_be_free(port)
+    click.echo(f"Making {days} days of an invented plant in {folder} ...", err=True)
+    made = exports.make(folder, days=days)
+    code = _take_in([exports.UNIT_FILE], folder / "store", made.exports, as_json)
+    return code if no_page else _serve(folder / "store", [exports.UNIT_FILE], port)
+
+
+@outlet.command()
+@click.argument("file", type=_file)
+@_json
+def check(file: Path, as_json: bool) -> None:
+    """Judge a unit FILE: all its faults, or what its instruments let you see and check."""
+    from ingest.unitfile import load
+    from monitor.judge import judge, lines
+
+    found = judge(load(file))
+    _print(asdict(found), lines(found), as_json=as_json)
+
+
+@outlet.command()
+@_units
+@_store
+@_json
+@click.argument("exports", type=_file, nargs=-1, required=True)
+def run(unit_files: Sequence[Path], store: Path, exports: Sequence[Path], as_json: bool) -> int:
+    """Take EXPORTS in and bring figures and episodes up to date, all at once or not at all."""
+    return _take_in(unit_files, store, exports, as_json)
+
+
+@outlet.command()
+@_units
+@_store
+@_port
+def page(unit_files: Sequence[Path], store: Path, port: int) -> int:
+    """Show what is stored in the browser, to this computer alone. Ctrl+C ends it."""
+    _must_be_free(port)
+    return _serve(store, unit_files, port)
+
+
+@outlet.command()
+@_store
+@_json
+def verify(store: Path, as_json: bool) -> int:
+    """Read the whole store and compare it with what was written."""
+    from ingest.ledger import Store
+
+    findings = Store(store).verify()
+    told = [f"{store}/{one.file}: {one.what}\n  {one.remedy}" for one in findings]
+    _print(
+        {"store": str(store), "findings": [asdict(one) for one in findings]},
+        told or [f"{store}: every part is as it was written"],
+        as_json=as_json,
+    )
+    return YOURS if findings else FINE
+
+
+def _take_in(unit_files: Sequence[Path], store: Path, exports: Sequence[Path], as_json: bool) -> int:
+    """Run one pass and tell what it did; an export that was set aside makes the exit code 2."""
+    from ingest.unitfile import load
+    from monitor.progress import Bar
+    from monitor.run import lines, run_pass
+
+    with Bar() as bar:
+        result: PassResult = run_pass([load(file) for file in unit_files], store, exports, progress=bar)
+    _print(asdict(result), lines(result), as_json=as_json)
+    for one in result.set_aside:
+        click.echo(one.error, err=True)
+    return YOURS if result.set_aside else FINE
+
+
+def _print(data: dict[str, Any], told: Iterable[str], *, as_json: bool) -> None:
+    """Print one JSON object for programs, or lines for people."""
+    if as_json:
+        click.echo(json.dumps(data, indent=1, ensure_ascii=False, default=str))
+    else:
+        for line in told:
+            click.echo(line)
+
+
+def _must_be_free(port: int) -> None:
+    """Refuse a port that another program listens on, before any work is done for its sake."""
+    with socket.socket() as probe:
+        probe.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+        try:
+            probe.bind(("127.0.0.1", port))
+        except OSError as fault:
+            raise OutletError(
+                f"port {port}: {fault.strerror}",
+                remedy="End the program that uses it, or give another --port.",
+            ) from fault
+
+
+def _serve(store: Path, unit_files: Sequence[Path], port: int) -> int:
+    """Become the page's server; comes back only where a process cannot be replaced."""
+    from ingest.unitfile import load
+
+    for file in unit_files:
+        load(file)
+    click.echo(f"The page is on http://127.0.0.1:{port} (this computer only). Ctrl+C ends it.", err=True)
+    words = command(store, unit_files, port)
+    sys.stdout.flush()
+    os.execv(words[0], words)  # noqa: S606 - the words are our own, no shell is wanted
