@@ -194,8 +194,14 @@ def read_part(
         inside = np.ones(len(time), dtype=bool)
         inside &= time >= first_us if first_us is not None else True
         inside &= time < last_us if last_us is not None else True
-        table = table if inside.all() else table.filter(pa.array(inside))
+        table = table if inside.all() else table.filter(_mask(inside))
     return table.select(kept)
+
+
+def _mask(inside: NDArray[np.bool_]) -> pa.BooleanArray:
+    """An Arrow mask straight from bits: `pa.array` would import pandas, a third of a second."""
+    bits = pa.py_buffer(np.packbits(inside, bitorder="little"))
+    return pa.BooleanArray.from_buffers(pa.bool_(), len(inside), [None, bits])
 
 
 def make_part(

@@ -94,11 +94,12 @@ class Snapshot:
         Returns
         -------
         pyarrow.Table
-            Ascending in time; null where a month lacks a column; no rows and no columns if nothing is there.
+            Ascending in time; null where a month lacks a column; no columns if the stage has no parts at all.
         """
         wanted = None if columns is None else list(columns)
         low, high = (None if edge is None else parts.instant_us(edge) for edge in (first, last))
-        files = self.paths(unit, stage, first=first, last=last)
+        # Outside all months any part will do: it has no such rows, but it has the columns.
+        files = self.paths(unit, stage, first=first, last=last) or self.paths(unit, stage)[:1]
         tables = [_read(file, wanted, low, high) for file in files]
         return pa.concat_tables(tables, promote_options="default") if tables else pa.table({})
 
