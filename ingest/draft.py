@@ -1,0 +1,136 @@
+"""A unit file as read but not yet judged: its sections as entries, with analyzers opened into instruments."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from datetime import timedelta
+from typing import Any
+
+from ingest import chemistry
+from ingest.errors import OutletError, Problem
+from ingest.keys import Entry, nearest, read_table
+
+ONCE = ("unit", "chemistry", "operating", "catalyst", "exports")
+MANY = ("stream", "instrument", "analyzer", "shared", "watch")
+_NEEDED = ("unit", "chemistry", "stream")
+
+
+@dataclass(slots=True)
+class Draft:
+    """The sections of one unit file; a section that is not there is an entry without values, or an empty list.
+
+    `atoms` holds the composition of each declared species, None where its formula was refused.
+    """
+
+    once: dict[str, Entry]
+    many: dict[str, list[Entry]]
+    atoms: dict[str, chemistry.Atoms | None] = field(default_factory=dict)
+
+    @property
+    def chemistry(self) -> Entry:
+        """Give the chemistry section."""
+        return self.once["chemistry"]
+
+    def names(self, section: str) -> list[str]:
+        """List the stated names of a repeated section."""
+        return [entry.values["name"] for entry in self.many[section] if entry.get("name")]
+
+    def find(self, section: str, name: object) -> Entry | None:
+        """Give the first entry of that name, or None."""
+        return next((entry for entry in self.many[section] if name and entry.get("name") == name), None)
+
+    def waters(self, species: Sequence[str]) -> tuple[str, ...]:
+        """Give those of the species whose formula is water's."""
+        water = chemistry.atoms("H2O")
+        return tuple(name for name in species if self.atoms.get(name) == water)
+
+
+def read(document: Mapping[str, Any]) -> tuple[Draft, list[Problem]]:
+    """Read every section of a parsed unit file.
+
+    Parameters
+    ----------
+    document : mapping
+        What the TOML parser gave.
+
+    Returns
+    -------
+    Draft
+        Only what passed the table of keys.
+    list of Problem
+        What did not.
+    """
+    sections = (*ONCE, *MANY)
+    problems = [
+        Problem(key, "unknown section", nearest(key, sections)) for key in document if key not in sections
+    ]
+    problems += [
+        Problem(section, "missing", f"write a section {_heading(section)}")
+        for section in _NEEDED
+        if section not in document
+    ]
+    draft = Draft({section: Entry(section) for section in ONCE}, {section: [] for section in MANY})
+    for section in (section for section in sections if section in document):
+        problems += _read_section(section, document[section], draft)
+    if not draft.many["instrument"] and not problems:
+        problems.append(Problem("instrument", "missing", "write a section [[instrument]] or [[analyzer]]"))
+    return draft, problems + _read_formulas(draft)
+
+
+def _heading(section: str) -> str:
+    """Write the heading as TOML wants it."""
+    return f"[[{section}]]" if section in MANY else f"[{section}]"
+
+
+def _read_section(section: str, content: object, draft: Draft) -> list[Problem]:
+    """Read one section into the draft; a repeated one entry by entry, named where it has a name."""
+    if isinstance(content, list) is not (section in MANY):
+        return [Problem(section, "wrong kind of heading", f"write {_heading(section)}")]
+    if not isinstance(content, list):
+        draft.once[section], problems = read_table(section, content, section)
+        return problems
+    problems = []
+    for number, table in enumerate(content, start=1):
+        name = table.get("name") if isinstance(table, Mapping) else None
+        place = f"{section}[{name if isinstance(name, str) and name else number}]"
+        entry, faults = read_table(section, table, place)
+        draft.many[section].append(entry)
+        problems += faults
+        if section == "analyzer":
+            problems += _open_channels(entry, draft)
+    return problems
+
+
+def _open_channels(analyzer: Entry, draft: Draft) -> list[Problem]:
+    """Make an instrument of each channel: the analyzer's keys, overridden by the channel's own."""
+    problems = []
+    for species, content in (analyzer.get("channel") or {}).items():
+        place = f"{analyzer.place}.channel.{species}"
+        table = {"tag": content} if isinstance(content, str) else content
+        own, faults = read_table("analyzer.channel", table, place)
+        problems += faults
+        inherited = {key: value for key, value in analyzer.values.items() if key not in ("name", "channel")}
+        values = {"dead_time": timedelta(0), "species": (species,), **inherited, **own.values}
+        values |= {"name": f"{analyzer.get('name')} {species}", "analyzer": analyzer.get("name")}
+        places = {key: analyzer.at(key) for key in inherited if key not in own.values}
+        draft.many["instrument"].append(Entry(place, values, places))
+    return problems
+
+
+def _read_formulas(draft: Draft) -> list[Problem]:
+    """Read the formula of every species."""
+    problems = []
+    for name, formula in (draft.chemistry.get("species") or {}).items():
+        place = f"chemistry.species.{name}"
+        draft.atoms[name] = None
+        if not isinstance(formula, str):
+            problems.append(
+                Problem(place, f"{formula!r} is not a formula in quotes", 'write it as water = "H2O"')
+            )
+            continue
+        try:
+            draft.atoms[name] = chemistry.atoms(formula)
+        except OutletError as error:
+            problems.append(Problem(place, error.what, error.remedy))
+    return problems

@@ -1,0 +1,362 @@
+# ruff: noqa: E501 -- the table is read across, one row per key
+"""The one table of unit file keys, and how a TOML table is read against it.
+
+A row says where a key stands, what form and range its value has, whether it must be there, what it means and what
+to write. Reading, messages and the reference in config/README.md all come from these rows.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, field, replace
+from datetime import datetime, timedelta
+from difflib import get_close_matches
+from typing import Any
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError, available_timezones
+
+from ingest import quantities
+from ingest.errors import OutletError, Problem
+from ingest.unit import KINDS, PRIORITIES, REACTORS, SAMPLINGS
+
+BASES = ("dry", "wet", "as analysed")
+QUALITIES = ("words", "opc ua", "opc da")
+
+
+@dataclass(frozen=True, slots=True)
+class Key:
+    """One key of the unit file.
+
+    `needed` is 'always', empty, or says when; only 'always' is enforced by the table itself. `low` and `high` bound
+    a number, or a time span in seconds. `default` stands in when the key is left out, written as in the file.
+    """
+
+    section: str
+    key: str
+    form: str
+    sentence: str
+    example: str
+    needed: str = ""
+    default: Any = None
+    low: float = -math.inf
+    high: float = math.inf
+    choices: tuple[str, ...] = ()
+
+    @property
+    def name(self) -> str:
+        """Give the dotted name, as documents and messages write it."""
+        return f"{self.section}.{self.key}"
+
+
+_DAY = 86400.0
+
+_INSTRUMENT = (
+    Key("instrument", "name", "text", "name of the instrument, unique in the file", '"FI-201"', "always"),
+    Key("instrument", "tag", "text", "historian tag that gives the reading", '"FI-201.PV"', "unless value is stated"),
+    Key("instrument", "value", "number", "a declared reading that does not change, in the unit", "20.95", "unless tag is stated"),
+    Key("instrument", "kind", "choice", "what the reading is", '"mass flow"', "always", choices=(*KINDS, "volume fraction")),
+    Key("instrument", "unit", "text", "engineering unit of the reading, range and floors", '"kg/h"', "always"),
+    Key("instrument", "stream", "text", "stream the reading is about", '"outlet"', "for all but pressure, temperature, signal"),
+    Key("instrument", "per_stream", "text", "stream that a flow ratio divides by", '"air"', "for a flow ratio"),
+    Key("instrument", "species", "texts", "species that a fraction or species flow counts together", '["oxygen"]', "for fractions and species flow"),
+    Key("instrument", "basis", "choice", "dry leaves out water, wet nothing, as analysed what left_out names", '"dry"', "for fractions of a stream that holds water", choices=BASES),
+    Key("instrument", "left_out", "texts", "species the sample no longer holds when it is analysed", '["water"]', 'for basis "as analysed"'),
+    Key("instrument", "reference", "text", "conditions at which a volume flow is stated", '"0 degC, 101.325 kPa"', "for a volume flow"),
+    Key("instrument", "atmosphere", "text", "atmospheric pressure that a gauge pressure adds to", '"101.325 kPa"', "for a gauge pressure"),
+    Key("instrument", "pressure", "text", "pressure instrument of an actual volume flow", '"PI-211"', "for an actual volume flow"),
+    Key("instrument", "temperature", "text", "temperature instrument of an actual volume flow", '"TI-212"', "for an actual volume flow"),
+    Key("instrument", "random", "uncertainty", "standard uncertainty (k = 1) that differs from result to result", "{ relative_pct = 0.3 }", "for all that enter the balance"),
+    Key("instrument", "systematic", "uncertainty", "standard uncertainty (k = 1) that stays, such as calibration", "{ relative_pct = 0.5, floor = 0.1 }", "for all that enter the balance"),
+    Key("instrument", "range", "pair", "lowest and highest credible reading", "[0, 12000]"),
+    Key("instrument", "cycle", "duration", "time between independent results", '"6min"', "with tag", low=1, high=30 * _DAY),
+    Key("instrument", "dead_time", "duration", "time from the sample leaving the stream to its time stamp", '"4min"', default="0 s", low=0, high=7 * _DAY),
+    Key("instrument", "max_age", "duration", "age at which a result is stale", '"20min"', "with tag", low=1, high=90 * _DAY),
+    Key("instrument", "sampling", "choice", "what a stored value says about the time between two", '"held"', "with tag", choices=SAMPLINGS),
+)  # fmt: skip
+
+
+def _again(section: str, names: Iterable[str]) -> tuple[Key, ...]:
+    """Repeat rows of the instrument for analyzers and channels, where none is needed by itself."""
+    return tuple(
+        replace(row, section=section, needed="", default=None) for row in _INSTRUMENT if row.key in set(names)
+    )
+
+
+_COMMON: tuple[str, ...] = ("kind", "unit", "stream", "basis", "left_out", "random", "systematic", "range")
+_COMMON += ("cycle", "dead_time", "max_age", "sampling")
+
+TABLE: tuple[Key, ...] = (
+    Key("unit", "name", "text", "name of the reactor as people say it", '"Unit 2"', "always"),
+    Key("unit", "time_zone", "zone", "the plant's own time zone, for days, months and wording", '"Europe/Berlin"', "always"),
+    Key("unit", "cell", "duration", "time step of the balance; divides an hour, or is whole hours that divide a day", '"10min"', default="10min", low=1, high=_DAY),
+    Key("unit", "reactor", "choice", "kind of reactor, which decides what instantaneous selectivity means", '"packed bed"', "always", choices=REACTORS),
+    Key("unit", "windows", "durations", "trailing times over which figures are formed", '["1h", "8h"]', default=["1h", "8h", "24h", "7d"], low=1, high=366 * _DAY),
+    Key("unit", "least_coverage", "number", "share of a window that has to be known for a figure", "0.75", default=0.75, low=0.01, high=1),
+    Key("chemistry", "key_reactant", "text", "reactant that conversion is about", '"isobutene"', "always"),
+    Key("chemistry", "wanted", "text", "product that yield is about", '"methacrolein"', "always"),
+    Key("chemistry", "unwanted", "texts", "products that selectivity compares with", '["carbon dioxide"]', "always"),
+    Key("chemistry", "inert", "texts", "species that take no part", '["nitrogen"]', default=[]),
+    Key("chemistry", "key_element", "text", "element that yield and shares count", '"C"', default="C"),
+    Key("chemistry", "species", "formulas", "formula of each species", '{ water = "H2O" }', "always"),
+    Key("stream", "name", "text", "name of the stream, unique in the file", '"outlet"', "always"),
+    Key("stream", "direction", "choice", "into the envelope or out of it", '"in"', "always", choices=("in", "out")),
+    Key("stream", "species", "texts", "every species the stream may hold", '["oxygen", "nitrogen"]', "always"),
+    *_INSTRUMENT,
+    Key("uncertainty", "relative_pct", "number", "part in percent of the reading", "0.5", default=0.0, low=0, high=100),
+    Key("uncertainty", "floor", "number", "part in the unit of the reading", "0.002", default=0.0, low=0),
+    Key("analyzer", "name", "text", "name of the analyzer; its instruments are called name and species", '"AI-220"', "always"),
+    *_again("analyzer", _COMMON),
+    Key("analyzer", "channel", "channels", "tag of each species, or a table of what differs for it", '{ oxygen = "AI-220.O2" }', "always"),
+    *_again("analyzer.channel", ("tag", "species", *_COMMON)),
+    Key("shared", "name", "text", "name of the common error", '"AI-220 span"', "always"),
+    Key("shared", "instruments", "texts", "instruments it moves together", '["FI-201", "FI-203"]', "unless analyzer is stated"),
+    Key("shared", "analyzer", "text", "analyzer whose channels it moves together", '"AI-220"', "unless instruments is stated"),
+    Key("shared", "relative_pct", "number", "standard uncertainty (k = 1) in percent of each reading", "0.3", "always", low=0.001, high=100),
+    Key("operating", "load", "text", "instrument that tells the load", '"FI-201"', "always"),
+    Key("operating", "down_below", "number", "load below which the reactor is down", "1000", "always"),
+    Key("operating", "running_above", "number", "load above which it is back", "2000", "always"),
+    Key("operating", "turned_down_below", "number", "load below which it is turned down; left out, it never is", "4000"),
+    Key("operating", "starting_for", "duration", "time after coming back that counts as starting", '"4h"', default="0 s", low=0, high=30 * _DAY),
+    Key("catalyst", "charged", "moment", "when the catalyst was charged, with its offset", "2026-02-10T06:00:00+01:00", "always"),
+    Key("watch", "name", "text", "name of the watch; left out, it is the figure and the window", '"yield, shift"'),
+    Key("watch", "figure", "text", "figure that is watched", '"yield on feed"', "always"),
+    Key("watch", "window", "duration", "one of the windows of the unit", '"8h"', "always", low=1, high=366 * _DAY),
+    Key("watch", "low", "number", "limit below which an episode begins, in the unit of the figure", "76.0", "unless high is stated"),
+    Key("watch", "high", "number", "limit above which an episode begins, in the unit of the figure", "103.0", "unless low is stated"),
+    Key("watch", "priority", "choice", "how soon somebody has to act", '"high"', "always", choices=PRIORITIES),
+    Key("watch", "deadband", "number", "how far back inside the limit the figure has to come", "0.3", default=0.0, low=0),
+    Key("watch", "on_delay", "duration", "how long the limit has to be crossed", '"1h"', default="0 s", low=0, high=30 * _DAY),
+    Key("watch", "off_delay", "duration", "how long the figure has to be back", '"2h"', default="0 s", low=0, high=30 * _DAY),
+    Key("watch", "steady", "yes or no", "watch the steady figure rather than the one as operated", "true", default=True),
+    Key("exports", "time_zone", "zone", "zone of time stamps that state no offset", '"Europe/Berlin"'),
+    Key("exports", "missing_words", "texts", "words in the value column that mean no reading", '["No Data"]', default=[]),
+    Key("exports", "quality", "choice", "what the quality column holds, where it does not tell by itself", '"words"', choices=QUALITIES),
+)  # fmt: skip
+
+
+@dataclass(slots=True)
+class Entry:
+    """One table of the file after reading: only values that passed, and the place each was written at."""
+
+    place: str
+    values: dict[str, Any] = field(default_factory=dict)
+    places: dict[str, str] = field(default_factory=dict)
+
+    def get(self, key: str) -> Any:
+        """Give a value, or None when it is absent or was refused."""
+        return self.values.get(key)
+
+    def at(self, key: str) -> str:
+        """Give the dotted place of a key."""
+        return self.places.get(key, f"{self.place}.{key}")
+
+
+def rows(section: str) -> dict[str, Key]:
+    """Give the rows of one section by key.
+
+    Parameters
+    ----------
+    section : str
+        For example 'instrument' or 'analyzer.channel'.
+
+    Returns
+    -------
+    dict
+        Key name to row, in the order of the table.
+    """
+    return {row.key: row for row in TABLE if row.section == section}
+
+
+def nearest(word: str, allowed: Iterable[str]) -> str:
+    """Say which allowed word was meant, or list them all.
+
+    Parameters
+    ----------
+    word : str
+        What was written.
+    allowed : iterable of str
+        What may be written.
+
+    Returns
+    -------
+    str
+        "did you mean 'x'?", or "write one of ...".
+    """
+    known = list(allowed)
+    close = get_close_matches(word, known, n=1)
+    if close:
+        return f"did you mean '{close[0]}'?"
+    return f"write one of {', '.join(repr(name) for name in known)}" if known else "none is declared"
+
+
+def read_table(section: str, table: object, place: str) -> tuple[Entry, list[Problem]]:
+    """Read one TOML table against the rows of its section.
+
+    Parameters
+    ----------
+    section : str
+        Section of the table of keys.
+    table : object
+        What the TOML parser gave.
+    place : str
+        Dotted place of the table, for messages.
+
+    Returns
+    -------
+    Entry
+        Values that passed, defaults included; refused and absent ones are left out.
+    list of Problem
+        Unknown, missing, mistyped and out-of-range keys.
+    """
+    entry = Entry(place)
+    if not isinstance(table, Mapping):
+        return entry, [
+            Problem(place, f"{_show(table)} is no table", f"write it under [{section}] or in braces")
+        ]
+    known = rows(section)
+    problems = [
+        Problem(f"{place}.{key}", "unknown key", nearest(key, known)) for key in table if key not in known
+    ]
+    for row in known.values():
+        problems += _read_key(row, table, entry)
+    return entry, problems
+
+
+def _read_key(row: Key, table: Mapping[str, object], entry: Entry) -> list[Problem]:
+    """Read the value of one row into the entry."""
+    place = f"{entry.place}.{row.key}"
+    if row.key not in table:
+        if row.needed == "always":
+            return [Problem(place, f"missing ({row.sentence})", f"write {row.key} = {row.example}")]
+        if row.default is None:
+            return []
+    value = table.get(row.key, row.default)
+    if row.form == "uncertainty":
+        inner, problems = read_table("uncertainty", value, place)
+        entry.values[row.key] = inner.values
+        return problems
+    try:
+        entry.values[row.key] = FORMS[row.form](value, row)
+    except OutletError as error:
+        return [Problem(place, error.what, error.remedy)]
+    return []
+
+
+def _show(value: object) -> str:
+    """Show a value the way TOML writes it, shortened."""
+    text = str(value).lower() if isinstance(value, bool) else repr(value)
+    return text if len(text) <= 60 else f"{text[:57]}..."
+
+
+def _misfit(value: object, row: Key, form: str) -> OutletError:
+    """Say that a value has not the form of its row, and show one that has."""
+    return OutletError(f"{_show(value)} is not {form}", remedy=f"write {row.key} = {row.example}")
+
+
+def _text(value: object, row: Key) -> str:
+    if not isinstance(value, str) or not value.strip() or not value.isprintable():
+        raise _misfit(value, row, "a text in quotes")
+    return value
+
+
+def _texts(value: object, row: Key) -> tuple[str, ...]:
+    if not isinstance(value, list):
+        raise _misfit(value, row, "a list of texts")
+    texts = tuple(_text(item, row) for item in value)
+    twice = [text for position, text in enumerate(texts) if text in texts[:position]]
+    if twice:
+        raise OutletError(f"'{twice[0]}' stands twice", remedy="name each once")
+    return texts
+
+
+def _choice(value: object, row: Key) -> str:
+    if not isinstance(value, str) or value not in row.choices:
+        raise OutletError(f"{_show(value)} is not one of its words", remedy=nearest(str(value), row.choices))
+    return value
+
+
+def _number(value: object, row: Key) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+        raise _misfit(value, row, "a number")
+    if not row.low <= value <= row.high:
+        bounds = f"{row.low:g} to {row.high:g}" if math.isfinite(row.high) else f"at least {row.low:g}"
+        raise OutletError(
+            f"must be {bounds}, got {value:g}", remedy=f"write for example {row.key} = {row.example}"
+        )
+    return float(value)
+
+
+def _pair(value: object, row: Key) -> tuple[float, float]:
+    if not isinstance(value, list) or len(value) != 2:
+        raise _misfit(value, row, "a pair of numbers")
+    low, high = (_number(item, row) for item in value)
+    if low >= high:
+        raise OutletError(f"low {low:g} is not below high {high:g}", remedy="write the lower number first")
+    return low, high
+
+
+def _duration(value: object, row: Key) -> Any:
+    if not isinstance(value, str):
+        raise _misfit(value, row, "a time span in quotes")
+    span = quantities.duration(value)
+    if not row.low <= span.total_seconds() <= row.high:
+        raise OutletError(
+            f"must be {_span(row.low)} to {_span(row.high)}, got {quantities.duration_words(span)}",
+            remedy=f"write for example {row.key} = {row.example}",
+        )
+    return span
+
+
+def _span(seconds: float) -> str:
+    return quantities.duration_words(timedelta(seconds=seconds))
+
+
+def _durations(value: object, row: Key) -> tuple[Any, ...]:
+    if not isinstance(value, list) or not value:
+        raise _misfit(value, row, "a list of time spans")
+    return tuple(_duration(item, row) for item in value)
+
+
+def _moment(value: object, row: Key) -> datetime:
+    if not isinstance(value, datetime) or value.tzinfo is None:
+        raise _misfit(value, row, "a date and time with its offset")
+    return value
+
+
+def _zone(value: object, row: Key) -> str:
+    name = _text(value, row)
+    try:
+        ZoneInfo(name)
+    except (ZoneInfoNotFoundError, ValueError, OSError):
+        close = get_close_matches(name, available_timezones(), n=1)
+        example = f"'{close[0]}'" if close else row.example
+        raise OutletError(f"'{name}' is no time zone", remedy=f"did you mean {example}?") from None
+    return name
+
+
+def _yes_no(value: object, row: Key) -> bool:
+    if not isinstance(value, bool):
+        raise _misfit(value, row, "true or false")
+    return value
+
+
+def _named(value: object, row: Key) -> dict[str, Any]:
+    if not isinstance(value, Mapping) or not value:
+        raise _misfit(value, row, "a table with at least one entry")
+    return dict(value)
+
+
+FORMS: dict[str, Callable[[object, Key], Any]] = {
+    "text": _text,
+    "texts": _texts,
+    "choice": _choice,
+    "number": _number,
+    "pair": _pair,
+    "duration": _duration,
+    "durations": _durations,
+    "moment": _moment,
+    "zone": _zone,
+    "yes or no": _yes_no,
+    "formulas": _named,
+    "channels": _named,
+}

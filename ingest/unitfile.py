@@ -1,0 +1,189 @@
+"""A unit file (TOML) becomes a Unit, or one error that lists all its faults."""
+
+from __future__ import annotations
+
+import math
+import re
+import tomllib
+from collections.abc import Mapping
+from datetime import timedelta
+from pathlib import Path
+from typing import Any
+
+from ingest import chemistry, draft, keys as table, unitrules
+from ingest.draft import Draft
+from ingest.errors import Problem, UnitFileError
+from ingest.keys import Entry, Key
+from ingest.unit import (
+    ExportRules,
+    Instrument,
+    Operating,
+    SharedError,
+    Species,
+    Stream,
+    Uncertainty,
+    Unit,
+    Watch,
+)
+
+_STEM = re.compile(r"[A-Za-z0-9][A-Za-z0-9_-]*")
+
+
+def load(path: Path | str) -> Unit:
+    """Read and judge a unit file; what comes back can be relied on.
+
+    Parameters
+    ----------
+    path : Path or str
+        The TOML file; its stem becomes the key of the unit.
+
+    Returns
+    -------
+    Unit
+        Frozen; times as timedelta, relative uncertainties as fractions.
+
+    Raises
+    ------
+    UnitFileError
+        With every fault found, each with its key and what to write.
+    """
+    file = Path(path)
+    document = _parse(file)
+    read, problems = draft.read(document)
+    if not _STEM.fullmatch(file.stem):
+        problems.insert(
+            0, Problem("file name", f"'{file.stem}' cannot name a unit", "use letters, digits, - and _")
+        )
+    for rule in unitrules.RULES:
+        problems += rule(read)
+    if problems:
+        raise UnitFileError(str(path), list(dict.fromkeys(problems)))
+    return _build(read, file.stem)
+
+
+def keys() -> tuple[Key, ...]:
+    """Give the table of keys: every key a unit file may hold, with its sentence.
+
+    Returns
+    -------
+    tuple of Key
+        In the order of the sections.
+    """
+    return table.TABLE
+
+
+def _parse(file: Path) -> dict[str, Any]:
+    """Read the TOML text; an unreadable file is one fault of its own."""
+    try:
+        return tomllib.loads(file.read_bytes().decode("utf-8-sig").replace("\r\n", "\n"))
+    except OSError as error:
+        fault = Problem("file", f"cannot be read ({error.strerror})", "check its name and folder")
+    except UnicodeDecodeError as error:
+        fault = Problem("file", f"is not UTF-8 text (byte {error.start + 1})", "save it as UTF-8")
+    except tomllib.TOMLDecodeError as error:
+        fault = Problem("file", f"is not TOML: {error}", "mend that line; texts stand in quotes")
+    raise UnitFileError(str(file), [fault])
+
+
+def _build(read: Draft, key: str) -> Unit:
+    """Make the Unit from a draft without faults."""
+    unit, chemical, exports = read.once["unit"], read.chemistry, read.once["exports"]
+    return Unit(
+        key=key,
+        name=unit.get("name"),
+        time_zone=unit.get("time_zone"),
+        cell=unit.get("cell"),
+        reactor=unit.get("reactor"),
+        species=tuple(_species(name, read) for name in read.atoms),
+        key_reactant=chemical.get("key_reactant"),
+        wanted=chemical.get("wanted"),
+        unwanted=chemical.get("unwanted"),
+        key_element=chemical.get("key_element"),
+        streams=tuple(
+            Stream(e.get("name"), e.get("direction"), e.get("species")) for e in read.many["stream"]
+        ),
+        instruments=tuple(_instrument(entry, read) for entry in read.many["instrument"]),
+        shared=tuple(_shared(entry, read) for entry in read.many["shared"]),
+        operating=_operating(read.once["operating"]),
+        catalyst_charged=read.once["catalyst"].get("charged"),
+        watches=tuple(_watch(entry) for entry in read.many["watch"]),
+        windows=tuple(sorted(unit.get("windows"))),
+        least_coverage=unit.get("least_coverage"),
+        exports=ExportRules(
+            exports.get("time_zone"), exports.get("missing_words") or (), exports.get("quality")
+        ),
+    )
+
+
+def _species(name: str, read: Draft) -> Species:
+    """Make one species with its atoms and molar mass."""
+    atoms = read.atoms[name] or ()
+    formula = read.chemistry.get("species")[name]
+    inert = name in read.chemistry.get("inert")
+    return Species(name, formula, atoms, chemistry.molar_mass_kg_kmol(atoms), inert)
+
+
+def _instrument(entry: Entry, read: Draft) -> Instrument:
+    """Make one instrument; a declared value takes the cell as its timing, since it has none of its own."""
+    scale = unitrules.scale_of(entry, read)
+    cell = read.once["unit"].get("cell")
+    low, high = entry.get("range") or (-math.inf, math.inf)
+    return Instrument(
+        name=entry.get("name"),
+        kind=unitrules.base_kind(entry.get("kind")),
+        tag=entry.get("tag"),
+        value=entry.get("value"),
+        unit=entry.get("unit"),
+        to_base=scale.to_base,
+        offset=scale.offset,
+        stream=entry.get("stream"),
+        per_stream=entry.get("per_stream"),
+        species=entry.get("species") or (),
+        left_out=unitrules.left_out(entry, read),
+        random=_uncertainty(entry.get("random")),
+        systematic=_uncertainty(entry.get("systematic")),
+        low=low,
+        high=high,
+        cycle=entry.get("cycle") or cell,
+        dead_time=entry.get("dead_time") or timedelta(0),
+        max_age=entry.get("max_age") or cell,
+        sampling=entry.get("sampling") or "held",
+        analyzer=entry.get("analyzer"),
+        pressure=entry.get("pressure"),
+        temperature=entry.get("temperature"),
+    )
+
+
+def _uncertainty(stated: Mapping[str, float] | None) -> Uncertainty:
+    """Turn percent into a fraction; only auxiliaries outside the balance may state nothing."""
+    part = stated or {}
+    return Uncertainty(part.get("relative_pct", 0.0) / 100.0, part.get("floor", 0.0))
+
+
+def _shared(entry: Entry, read: Draft) -> SharedError:
+    """Make one shared error; an analyzer stands for all its channels."""
+    channels = [e.get("name") for e in read.many["instrument"] if e.get("analyzer") == entry.get("analyzer")]
+    members = entry.get("instruments") or tuple(channels)
+    return SharedError(entry.get("name"), members, entry.get("relative_pct") / 100.0)
+
+
+def _operating(entry: Entry) -> Operating | None:
+    """Make the operating rules, or None when the section is not there."""
+    if not entry.values:
+        return None
+    down = entry.get("down_below")
+    return Operating(
+        load=entry.get("load"),
+        down_below=down,
+        running_above=entry.get("running_above"),
+        turned_down_below=entry.get("turned_down_below") or down,
+        starting_for=entry.get("starting_for"),
+    )
+
+
+def _watch(entry: Entry) -> Watch:
+    """Make one watch under its own or its made name."""
+    return Watch(
+        name=unitrules.watch_name(entry) or "",
+        **{key: entry.get(key) for key in table.rows("watch") if key != "name"},
+    )
