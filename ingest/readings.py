@@ -89,6 +89,26 @@ def empty() -> Series:
     return Series(*(np.zeros(0, dtype) for dtype in _DTYPES.values()))
 
 
+def concatenated(pieces: Sequence[Series]) -> Series:
+    """Put pieces one after the other.
+
+    Parameters
+    ----------
+    pieces : sequence of Series
+        A single one is handed on as it is.
+
+    Returns
+    -------
+    Series
+        Readings in the order given.
+    """
+    if len(pieces) == 1:
+        return pieces[0]
+    if not pieces:
+        return empty()
+    return Series(*(np.concatenate([getattr(p, f.name) for p in pieces]) for f in fields(Series)))
+
+
 def join(pieces: Sequence[Series]) -> tuple[Series, int, int]:
     """Put one tag's pieces from one export in order of time, one reading for each time.
 
@@ -108,7 +128,7 @@ def join(pieces: Sequence[Series]) -> tuple[Series, int, int]:
     duplicates : int
         Readings that the next row of the same time repeats.
     """
-    whole = _concatenated(pieces)
+    whole = concatenated(pieces)
     if _ascends(whole.time):
         return whole, 0, 0
     whole = whole.take(np.lexsort((whole.row, whole.time)))
@@ -139,9 +159,9 @@ def merge(old: Series, new: Series) -> tuple[Series, int, int]:
     if len(old) == 0 or len(new) == 0:
         return (old if len(new) == 0 else new), 0, 0
     if new.time[0] > old.time[-1]:
-        return _concatenated([old, new]), 0, 0
+        return concatenated([old, new]), 0, 0
     stays, comes, duplicates = _contest(old, new)
-    whole = _concatenated([old.take(stays), new.take(comes)])
+    whole = concatenated([old.take(stays), new.take(comes)])
     merged = whole.take(np.argsort(whole.time, kind="stable"))
     return merged, len(old) - int(np.count_nonzero(stays)), duplicates
 
@@ -239,16 +259,7 @@ def read_months(paths: Iterable[Path], tags: Iterable[str], first_us: int, last_
             if high > low:
                 pieces[tag].append(series.take(slice(low, high)))
     ordered = {tag: sorted(parts, key=lambda s: int(s.time[0])) for tag, parts in pieces.items() if parts}
-    return {tag: _concatenated(parts) for tag, parts in ordered.items()}
-
-
-def _concatenated(pieces: Sequence[Series]) -> Series:
-    """All pieces one after the other; a single piece is handed on as it is."""
-    if len(pieces) == 1:
-        return pieces[0]
-    if not pieces:
-        return empty()
-    return Series(*(np.concatenate([getattr(p, f.name) for p in pieces]) for f in fields(Series)))
+    return {tag: concatenated(parts) for tag, parts in ordered.items()}
 
 
 def _ascends(time: NDArray[np.int64]) -> bool:

@@ -1,0 +1,260 @@
+"""What became of every reading of one export; the counts add up exactly.
+
+One unit of account for both layouts: a row of a long export holds one reading, a row of a wide export as
+many readings as the header names tags, whatever became of the row. A row whose columns cannot be told
+apart counts as rejected with all its readings; else a reading whose tag nobody asked for counts as unasked,
+whatever stands in it; else it is accepted or rejected for one reason.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+KEPT = 3  # rows kept as evidence for each reason
+TEXT = 120  # characters kept of each
+
+# Codes of what can be wrong with one reading, in the order of the table below; 0 is nothing.
+(
+    ACCEPTED,
+    COLUMNS,
+    QUOTES,
+    RETURN,
+    TIME,
+    OFFSET,
+    YEAR,
+    GAP,
+    TWICE,
+    TAG,
+    NUMBER,
+    INFINITE,
+    QUALITY,
+) = range(13)
+_ONE_LINE = "Export without line breaks inside a field."
+_WITH_OFFSET = "Export every time with its offset from UTC."
+_NUMBER = "Add the word to missing_words under [exports], or mend the number."
+REASONS: tuple[tuple[str, str], ...] = (
+    ("accepted", ""),
+    (
+        "has another number of columns than the header",
+        "Quote fields that hold the separator, or mend the row.",
+    ),
+    ("has a quote that does not open and close with its field", _ONE_LINE),
+    ("has a carriage return inside the row", _ONE_LINE),
+    ("is not a time", "Write times like the other rows of the file."),
+    ("is a time without offset among times that have one", _WITH_OFFSET),
+    ("lies outside the years 1990 to 2099", "Mend the clock or the row."),
+    ("is a time that the clock skipped", f"Mend time_zone under [exports]. {_WITH_OFFSET}"),
+    ("is in the hour that comes twice, and the order of rows does not tell which", _WITH_OFFSET),
+    ("names no tag", "Give each row its tag."),
+    ("is not a number", _NUMBER),
+    ("is not finite", _NUMBER),
+    (
+        "is no known quality",
+        "Mend quality under [exports] ('words', 'opc ua' or 'opc da'), or mend the code.",
+    ),
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Evidence:
+    """One rejected row or reading: where it stands, what stands there, and a place in REASONS."""
+
+    row: int
+    tag: str | None
+    text: str
+    reason: int
+
+    def describe(self, export: str) -> str:
+        """Say what is wrong in one line that begins with the place.
+
+        Parameters
+        ----------
+        export : str
+            Name of the export.
+
+        Returns
+        -------
+        str
+            `march.csv:4182 [AI-204]: 'n.a.' is not a number`.
+        """
+        tag = f" [{self.tag}]" if self.tag is not None else ""
+        return f"{export}:{self.row}{tag}: {self.text!r} {REASONS[self.reason][0]}"
+
+
+@dataclass(frozen=True, slots=True)
+class Account:
+    """What became of each reading of one export.
+
+    `readings = accepted + superseded + duplicates + rejected + unasked`. `bad` and `unknown` are those of
+    the readings taken from the file that have bad quality or no stated quality. `rejections` holds (reason's
+    place in REASONS, readings); `unasked_tags` (tag, readings).
+    """
+
+    export: str
+    rows: int
+    readings: int
+    accepted: int
+    bad: int
+    unknown: int
+    superseded: int
+    duplicates: int
+    unasked: int
+    rejections: tuple[tuple[int, int], ...]
+    evidence: tuple[Evidence, ...]
+    unasked_tags: tuple[tuple[str, int], ...]
+
+    @property
+    def rejected(self) -> int:
+        """Give the readings rejected for any reason."""
+        return sum(count for _, count in self.rejections)
+
+    @property
+    def adds_up(self) -> bool:
+        """Tell whether every reading is in exactly one place of the account."""
+        return self.readings == (
+            self.accepted + self.superseded + self.duplicates + self.rejected + self.unasked
+        )
+
+    def settled(self, *, superseded: int, duplicates: int) -> Account:
+        """Move accepted readings that lost in `readings.join` or `readings.merge` to where they belong.
+
+        Parameters
+        ----------
+        superseded, duplicates : int
+            Readings of this export that were replaced, or said again what was known.
+
+        Returns
+        -------
+        Account
+            It adds up as before.
+        """
+        return replace(
+            self,
+            accepted=self.accepted - superseded - duplicates,
+            superseded=self.superseded + superseded,
+            duplicates=self.duplicates + duplicates,
+        )
+
+    def describe(self) -> tuple[str, ...]:
+        """Say what became of the readings, one sentence a line.
+
+        Returns
+        -------
+        tuple of str
+            Counts first, then the first rows of each fault with what to do.
+        """
+        counts = (
+            f"{self.rows} rows with {self.readings} readings: {self.accepted} accepted"
+            f" ({self.bad} of bad quality, {self.unknown} of unstated quality as read),"
+            f" {self.superseded} superseded, {self.duplicates} duplicates,"
+            f" {self.rejected} rejected, {self.unasked} of tags nobody asked for."
+        )
+        lines = [counts]
+        for reason, count in self.rejections:
+            what, remedy = REASONS[reason]
+            lines.append(f"{count} rejected: {what}. {remedy}")
+            lines += [f"  {e.describe(self.export)}" for e in self.evidence if e.reason == reason]
+        return tuple(lines)
+
+
+@dataclass(slots=True)
+class Tally:
+    """The account while the export is being read."""
+
+    export: str
+    rows: int = 0
+    readings: int = 0
+    accepted: int = 0
+    bad: int = 0
+    unknown: int = 0
+    unasked: Counter[str] = field(default_factory=Counter)
+    rejections: Counter[int] = field(default_factory=Counter)
+    evidence: list[Evidence] = field(default_factory=list)
+
+    def room(self, reason: int) -> int:
+        """Tell how many more rows are kept as evidence for a reason.
+
+        Parameters
+        ----------
+        reason : int
+            Place in REASONS.
+
+        Returns
+        -------
+        int
+            0 to KEPT.
+        """
+        return KEPT - sum(e.reason == reason for e in self.evidence)
+
+    def keep(self, row: int, tag: str | None, text: object, reason: int) -> None:
+        """Keep one row as evidence.
+
+        Parameters
+        ----------
+        row : int
+            Line or row in the file, from 1.
+        tag : str or None
+            None where the whole row is meant.
+        text : object
+            What stands there.
+        reason : int
+            Place in REASONS.
+        """
+        self.evidence.append(Evidence(row, tag, str("" if text is None else text)[:TEXT], reason))
+
+    def reject(
+        self,
+        reasons: NDArray[np.int8],
+        rows: NDArray[np.int64],
+        tag: Callable[[int], str | None],
+        text: Callable[[int, int], object],
+    ) -> None:
+        """Count the readings that have a reason against them and keep the first of each as evidence.
+
+        Parameters
+        ----------
+        reasons : numpy.ndarray of int8 (n,)
+            Places in REASONS; 0 where the reading is accepted.
+        rows : numpy.ndarray of int64 (n,)
+            Their rows in the file.
+        tag : callable of int
+            Gives the tag of the i-th reading.
+        text : callable of int, int
+            Gives what stands there, for the i-th reading and a reason.
+        """
+        if not reasons.any():
+            return
+        for reason, count in enumerate(np.bincount(reasons).tolist()):
+            if reason == ACCEPTED or not count:
+                continue
+            self.rejections[reason] += count
+            for i in np.flatnonzero(reasons == reason)[: self.room(reason)].tolist():
+                self.keep(int(rows[i]), tag(i), text(i, reason), reason)
+
+    def account(self) -> Account:
+        """Close the account.
+
+        Returns
+        -------
+        Account
+            As read, before the archive's merge.
+        """
+        return Account(
+            export=self.export,
+            rows=self.rows,
+            readings=self.readings,
+            accepted=self.accepted,
+            bad=self.bad,
+            unknown=self.unknown,
+            superseded=0,
+            duplicates=0,
+            unasked=self.unasked.total(),
+            rejections=tuple(sorted(self.rejections.items())),
+            evidence=tuple(sorted(self.evidence, key=lambda e: (e.reason, e.row))),
+            unasked_tags=tuple(sorted(self.unasked.items())),
+        )

@@ -1,0 +1,528 @@
+"""What kind of export is this? Encoding, separator, layout, times, decimal mark and quality codes.
+
+Every decision rests on something that has one meaning only. What has two is refused, with both readings of
+one row from the file, and never settled by a preference.
+"""
+
+from __future__ import annotations
+
+import codecs
+import csv
+from collections.abc import Callable, Collection, Iterator, Sequence
+from dataclasses import dataclass
+from typing import Any
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.compute as pc
+
+from ingest.columns import flags, single
+from ingest.errors import ExportError
+from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US, PATTERNS, Clock
+from ingest.unit import ExportRules
+from ingest.values import MISSING_WORDS, Numbers, is_text, quality_of_word, texts, whole
+
+MOST_COLUMNS = 5_000
+SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
+MARKS = {".": "point", ",": "comma"}
+
+# Names of columns, small letters, blanks for _ - and so on; common practice, no source.
+ROLES = {
+    "time": ("time", "timestamp", "time stamp", "datetime", "date time", "date", "zeit", "zeitstempel"),
+    "tag": ("tag", "tag name", "tagname", "point", "signal"),
+    "value": ("value", "val", "reading", "wert"),
+    "quality": ("quality", "status", "quality code", "status code", "qualität"),
+}
+
+_GROUPED = r"^\s*[+\-\x{2212}]?[1-9]\d{0,2},\d{3}\s*$"  # 1,234: a decimal comma, or a mark between thousands
+_POINT = r"^\s*[+\-\x{2212}]?\d*\.\d+([eE][+-]?\d+)?\s*$"
+_COMMA = r"^\s*[+\-\x{2212}]?\d*,\d+([eE][+-]?\d+)?\s*$"
+_EPOCH = {"epoch s": r"^\s*\d{9,10}([.,]\d+)?\s*$", "epoch ms": r"^\s*\d{12,13}([.,]\d+)?\s*$"}
+_STATED = r"(Z|[+-]\d{2}(:?\d{2})?)\s*$"
+
+Look = Callable[[Sequence[int]], Iterator[Any]]
+"""Given places of columns, the columns of one block after another until the export ends."""
+
+
+@dataclass(frozen=True, slots=True)
+class Layout:
+    """Which columns hold what. `tag`, `value` and `quality` are None in a wide export."""
+
+    time: int
+    tag: int | None = None
+    value: int | None = None
+    quality: int | None = None
+
+    @property
+    def is_long(self) -> bool:
+        """Tell whether a row holds one reading."""
+        return self.tag is not None
+
+
+@dataclass(frozen=True, slots=True)
+class Dialect:
+    """How one export is read. `encoding` and `separator` are empty for Parquet."""
+
+    encoding: str
+    separator: str
+    header: tuple[str, ...]
+    header_row: int
+    layout: Layout
+    clock: Clock
+    numbers: Numbers
+    quality: str | None  # a key of values.QUALITY_FORMS; None where the export has no quality column
+
+    @property
+    def width(self) -> int:
+        """Give the readings that one row holds."""
+        return 1 if self.layout.is_long else len(self.header) - 1
+
+    def describe(self) -> tuple[str, ...]:
+        """Say how the export is read.
+
+        Returns
+        -------
+        tuple of str
+            One decision per sentence.
+        """
+        return (*self._of_file(), *self._of_layout(), *self._of_time(), *self._of_values())
+
+    def _of_file(self) -> tuple[str, ...]:
+        if not self.encoding:
+            return ("Parquet.",)
+        return (
+            f"Text in {self.encoding}, separated by {SEPARATORS[self.separator]};"
+            f" line {self.header_row} names the columns.",
+        )
+
+    def _of_layout(self) -> tuple[str, ...]:
+        time, layout = self.header[self.layout.time], self.layout
+        if layout.tag is None or layout.value is None:
+            return (f"Wide: times in '{time}', one column for each of {self.width} tags.",)
+        roles = (layout.time, layout.tag, layout.value, layout.quality)
+        spare = [name for i, name in enumerate(self.header) if i not in roles]
+        left = (f"Columns not read: {', '.join(spare)}.",) if spare else ()
+        tag, value = self.header[layout.tag], self.header[layout.value]
+        return (f"Long: times in '{time}', tags in '{tag}', values in '{value}'.", *left)
+
+    def _of_time(self) -> tuple[str, ...]:
+        forms = {
+            "timestamp": "time stamps",
+            "epoch s": "seconds since 1970",
+            "epoch ms": "milliseconds since 1970",
+        }
+        form = forms.get(self.clock.form, f"calendar times, {self.clock.form}")
+        if self.clock.form in EPOCHS:
+            return (f"Times are {form}, UTC.",)
+        if self.clock.offset:
+            return (f"Times are {form}, with their offset from UTC.",)
+        return (f"Times are {form}, without offset: read as clock time of {self.clock.zone}.",)
+
+    def _of_values(self) -> tuple[str, ...]:
+        words = ", ".join(repr(word) for word in sorted(self.numbers.missing))
+        quality = "No quality column: quality unknown, usable."
+        if self.quality is not None and self.layout.quality is not None:
+            quality = f"Quality in '{self.header[self.layout.quality]}', by {self.quality}."
+        return (
+            f"Decimal mark: {MARKS[self.numbers.decimal]}.",
+            f"Bad quality instead of a value, whatever the capitals: {words}.",
+            quality,
+        )
+
+
+def decide_encoding(export: str, head: bytes) -> tuple[str, str]:
+    """Find the encoding of a text export.
+
+    Parameters
+    ----------
+    export : str
+        Name of the export, for the error.
+    head : bytes
+        The file's beginning.
+
+    Returns
+    -------
+    str
+        Python's codec.
+    str
+        Its name for people.
+    """
+    if not head.strip():
+        raise ExportError(f"{export}: is empty", remedy="Export it again; an empty file holds no reading.")
+    for begins, what in (
+        (b"PK\3\4", "a spreadsheet or zip file"),
+        (b"\x1f\x8b", "a gz file without .gz in its name"),
+    ):
+        if head.startswith(begins):
+            raise ExportError(f"{export}: is {what}", remedy="Export as CSV text (or .csv.gz) or as Parquet.")
+    if head.startswith(codecs.BOM_UTF8):
+        return "utf-8-sig", "UTF-8 with byte order mark"
+    if head.startswith((codecs.BOM_UTF16_LE, codecs.BOM_UTF16_BE)) and not head.startswith(
+        codecs.BOM_UTF32_LE
+    ):
+        return "utf-16", "UTF-16"
+    if b"\0" in head:
+        return _without_mark(export, head)
+    try:
+        codecs.getincrementaldecoder("utf-8")().decode(head)
+    except UnicodeDecodeError as error:
+        return _latin(export, head, error.start)
+    return "utf-8", "UTF-8"
+
+
+def _without_mark(export: str, head: bytes) -> tuple[str, str]:
+    """UTF-16 shows by NUL in every second byte; anything else with NUL is no text."""
+    even, odd = head[0::2].count(0), head[1::2].count(0)
+    if not even and odd > len(head) // 5:
+        return "utf-16-le", "UTF-16 without byte order mark"
+    if not odd and even > len(head) // 5:
+        return "utf-16-be", "UTF-16 without byte order mark"
+    row = head.count(b"\n", 0, head.index(0)) + 1
+    raise ExportError(
+        f"{export}:{row}: holds NUL bytes, it is not text", remedy="Export as CSV text or as Parquet."
+    )
+
+
+def _latin(export: str, head: bytes, at: int) -> tuple[str, str]:
+    """Latin-1 has no printing character at 0x80 to 0x9F."""
+    if any(0x80 <= byte <= 0x9F for byte in head):
+        row = head.count(b"\n", 0, at) + 1
+        raise ExportError(
+            f"{export}:{row}: byte 0x{head[at]:02X} is neither UTF-8, UTF-16 nor Latin-1",
+            remedy="Save the export as UTF-8.",
+        )
+    return "latin-1", "Latin-1"
+
+
+def decide_separator(export: str, lines: Sequence[str], first_row: int) -> str:
+    """Find the character between fields: the one that gives the rows as many columns as the header.
+
+    Parameters
+    ----------
+    export : str
+        Name of the export, for the error.
+    lines : sequence of str
+        The header and the first rows.
+    first_row : int
+        Number of the header line.
+
+    Returns
+    -------
+    str
+        One of SEPARATORS.
+    """
+    place = f"{export}:{first_row}"
+    widths = {s: [len(fields(line, s)) for line in lines] for s in SEPARATORS}
+    splits = {s: w for s, w in widths.items() if w[0] > 1}
+    if not splits:
+        raise ExportError(
+            f"{place}: the header {lines[0][:60]!r} names one column only",
+            remedy="Export with one header row, separated by comma, semicolon, tab or bar.",
+        )
+    if len(lines) == 1:
+        raise ExportError(
+            f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
+        )
+    fits = [s for s, w in splits.items() if 2 * w[1:].count(w[0]) > len(w) - 1]
+    fits = [s for s in fits if _roles(fields(lines[0], s), frozenset())["time"]] or fits
+    if len(fits) == 1:
+        return fits[0]
+    ways = ", ".join(f"{SEPARATORS[s]}: header {w[0]}, next row {w[1]} columns" for s, w in splits.items())
+    raise ExportError(
+        f"{place}: the separator cannot be told ({ways})",
+        remedy="Export with semicolons, or quote the fields that hold a comma.",
+    )
+
+
+def fields(line: str, separator: str) -> list[str]:
+    """Split one line.
+
+    Parameters
+    ----------
+    line : str
+        Without line end.
+    separator : str
+        The character between fields.
+
+    Returns
+    -------
+    list of str
+        Without the blanks around each.
+    """
+    return [name.strip() for name in next(csv.reader([line], delimiter=separator), [])]
+
+
+def decide_layout(place: str, header: Sequence[str], wanted: Collection[str], look: Look) -> Layout:
+    """Find which columns hold what, by their names; the time column also by what it holds.
+
+    Parameters
+    ----------
+    place : str
+        `file:row` of the header, for the error.
+    header : sequence of str
+        Names of the columns.
+    wanted : collection of str
+        Tags somebody asked for; a column of such a name is a tag.
+    look : callable
+        Gives columns.
+
+    Returns
+    -------
+    Layout
+        Wide, or long where a tag and a value column are named.
+    """
+    _refuse_header(place, header)
+    roles = _roles(header, wanted)
+    time = _time_column(place, header, roles["time"], look)
+    tag, value, quality = (roles[name] for name in ("tag", "value", "quality"))
+    if len(tag) == len(value) == 1 and len(quality) <= 1:
+        return Layout(time, tag[0], value[0], quality[0] if quality else None)
+    found = [header[i] for i in (*tag, *value, *quality)]
+    if found or len(header) < 2:
+        raise ExportError(
+            f"{place}: unknown layout: columns {', '.join(map(repr, found or header))}",
+            remedy="Export long (time, tag, value, quality) or wide (time and one column per tag).",
+        )
+    return Layout(time)
+
+
+def _refuse_header(place: str, header: Sequence[str]) -> None:
+    if len(header) > MOST_COLUMNS:
+        raise ExportError(
+            f"{place}: {len(header)} columns, more than {MOST_COLUMNS}",
+            remedy="Export the tags of the unit file only, or in long form.",
+        )
+    twice = sorted({name for name in header if header.count(name) > 1})
+    if twice:
+        raise ExportError(
+            f"{place}: more than one column is named {twice[0]!r}", remedy="Give every column its own name."
+        )
+
+
+def _roles(header: Sequence[str], wanted: Collection[str]) -> dict[str, list[int]]:
+    """Places of the columns that bear one of the names of each role."""
+    plain = [" ".join(name.casefold().replace("_", " ").replace("-", " ").split()) for name in header]
+    mine = [i for i, name in enumerate(header) if name not in wanted]
+    return {role: [i for i in mine if plain[i] in names] for role, names in ROLES.items()}
+
+
+def _time_column(place: str, header: Sequence[str], named: list[int], look: Look) -> int:
+    """The column called so, else the only one that holds times."""
+    found = named or [i for i in range(len(header)) if _holds_times(next(look([i]), [None])[0])]
+    if len(found) == 1:
+        return found[0]
+    if found:
+        names = ", ".join(repr(header[i]) for i in found)
+        raise ExportError(
+            f"{place}: {names} may each be the time", remedy="Export one time column, named 'time'."
+        )
+    raise ExportError(f"{place}: no time column", remedy="Name the column of times 'time' or 'timestamp'.")
+
+
+def _holds_times(column: Any) -> bool:
+    if column is None or len(column) == 0:
+        return False
+    if pa.types.is_timestamp(column.type):
+        return True
+    return is_text(column.type) and max(_matches(column, p) for p in PATTERNS.values()) > len(column) / 2
+
+
+def _matches(column: Any, pattern: str) -> int:
+    """How many texts match."""
+    return int(np.count_nonzero(flags(pc.match_substring_regex(column, pattern))))
+
+
+def decide_clock(place: str, column: int, look: Look, zone: str | None) -> Clock:
+    """Find how the export writes time.
+
+    Parameters
+    ----------
+    place : str
+        `file` or `file:row` of the first row, for the error.
+    column : int
+        Where the times stand.
+    look : callable
+        Gives columns.
+    zone : str or None
+        Zone of times without offset; None where nobody stated one.
+
+    Returns
+    -------
+    Clock
+        With `zone` set where it is needed.
+    """
+    times = single(next(look([column]), [pa.array([], pa.string())])[0])
+    if pa.types.is_timestamp(times.type):
+        offset = times.type.tz is not None
+        return Clock("timestamp", offset, None if offset else _zone(place, zone), 6)
+    if not is_text(times.type):
+        return _clock_of_numbers(place, times)
+    form, matches = _form(place, times)
+    if form in EPOCHS:
+        return Clock(form, offset=True, zone=None, fraction=0)
+    if form != "year first":
+        form = _date_order(place, (block[0] for block in look([column])))
+    offset = 2 * _matches(times, rf"\d{_STATED}") > matches
+    digits = 9 if _matches(times, r"[.,]\d{7,9}\D*$") else 6
+    return Clock(form, offset, None if offset else _zone(place, zone), digits)
+
+
+def _form(place: str, times: Any) -> tuple[str, int]:
+    """The form that more than half of the first block's times have, and how many."""
+    counts = {form: _matches(times, pattern) for form, pattern in {**PATTERNS, **_EPOCH}.items()}
+    form = max(counts, key=lambda name: counts[name])
+    if 2 * counts[form] > len(times) - _matches(times, r"^\s*$"):
+        return form, counts[form]
+    sample = next((text for text in texts(times) if text.strip()), "")
+    raise ExportError(
+        f"{place}: {sample!r} is no known form of time", remedy="Export times as 2026-03-29T01:30Z."
+    )
+
+
+def _zone(place: str, zone: str | None) -> str:
+    """The stated zone, if there is such a zone."""
+    remedy = "Set time_zone under [exports], e.g. 'Europe/Berlin' or 'UTC'."
+    if zone is None:
+        raise ExportError(f"{place}: times state no offset, and no time zone is stated", remedy=remedy)
+    try:
+        return ZoneInfo(zone).key
+    except (ZoneInfoNotFoundError, ValueError) as error:
+        raise ExportError(f"{place}: there is no time zone {zone!r}", remedy=remedy) from error
+
+
+def _clock_of_numbers(place: str, column: Any) -> Clock:
+    """Seconds and milliseconds since 1970 cannot be mistaken for one another between 1990 and 2100."""
+    number = pc.drop_null(column).cast(pa.float64(), safe=False)
+    for form, us in EPOCHS.items():
+        within = pc.and_(pc.greater_equal(number, EARLIEST_US / us), pc.less(number, LATEST_US / us))
+        if 2 * np.count_nonzero(flags(within)) > len(number):
+            return Clock(form, offset=True, zone=None, fraction=0)
+    raise ExportError(
+        f"{place}: the numbers in the time column are no seconds or milliseconds since 1970",
+        remedy="Export times as 2026-03-29T01:30Z.",
+    )
+
+
+def _date_order(place: str, columns: Iterator[Any]) -> str:
+    """Day first or month first: whichever the first number above 12 allows."""
+    sample = ""
+    for column in columns:
+        day, month = (
+            _matches(column, rf"^\s*{p}")
+            for p in (r"(1[3-9]|[23]\d)[-/.]\d", r"\d+[-/.](1[3-9]|[23]\d)[-/.]")
+        )
+        if day and month:
+            raise ExportError(
+                f"{place}: some dates can only be day first, others only month first",
+                remedy="Export times as 2026-03-29T01:30Z.",
+            )
+        if day or month:
+            return "day first" if day else "month first"
+        sample = sample or next((text for text in texts(column) if text.strip()), "")
+    first, second, *rest = sample.strip().replace("/", ".").replace("-", ".").split(".")
+    year = rest[0][:4]
+    raise ExportError(
+        f"{place}: {sample.strip()!r} is {year}-{second:0>2}-{first:0>2} day first"
+        f" but {year}-{first:0>2}-{second:0>2} month first, and no date in the file tells which",
+        remedy="Export times as 2026-03-29T01:30Z, or a span that holds a day after the 12th.",
+    )
+
+
+def decide_numbers(place: str, columns: Sequence[int], look: Look, rules: ExportRules) -> Numbers:
+    """Find the decimal mark: the first number that can be read in one way only tells.
+
+    Parameters
+    ----------
+    place : str
+        `file` or `file:row`, for the error.
+    columns : sequence of int
+        Columns of values.
+    look : callable
+        Gives columns.
+    rules : ExportRules
+        Further words for "no value".
+
+    Returns
+    -------
+    Numbers
+        Whole numbers only: with a decimal point.
+    """
+    missing = frozenset(word.strip().casefold() for word in (*MISSING_WORDS, *rules.missing_words))
+    grouped = ""
+    for block in look(columns):
+        written = [column for column in block if is_text(column.type)]
+        if not written:
+            return Numbers(".", missing)
+        point = sum(_matches(c, _POINT) for c in written)
+        either = sum(_matches(c, _GROUPED) for c in written)
+        comma = sum(_matches(c, _COMMA) for c in written) - either
+        if point != comma:
+            return Numbers("." if point > comma else ",", missing)
+        if either and not grouped:
+            grouped = next(t for c in written for t in texts(c.filter(pc.match_substring_regex(c, _GROUPED))))
+    if grouped:
+        raise ExportError(
+            f"{place}: {grouped!r} is {grouped.replace(',', '.')} with a decimal comma but"
+            f" {grouped.replace(',', '')} with marks between thousands, and no number tells which",
+            remedy="Export with a decimal point and without marks between thousands.",
+        )
+    return Numbers(".", missing)
+
+
+def decide_quality(place: str, column: int | None, look: Look, rules: ExportRules) -> str | None:
+    """Find how the export writes quality, unless the unit file says it.
+
+    Parameters
+    ----------
+    place : str
+        `file` or `file:row`, for the error.
+    column : int or None
+        The quality column.
+    look : callable
+        Gives columns.
+    rules : ExportRules
+        Its `quality` stands above what is found.
+
+    Returns
+    -------
+    str or None
+        A key of values.QUALITY_FORMS; None without a quality column.
+    """
+    if column is None:
+        return None
+    if rules.quality is not None:
+        return rules.quality
+    seen: set[str] = set()
+    for block in look([column]):
+        seen |= {text.strip() for text in texts(single(block[0]).unique())} - {""}
+        forms = _quality_forms(seen)
+        if len(forms) == 1:
+            return forms[0]
+        if forms:
+            break
+    if not seen:
+        return "words"
+    sample = ", ".join(repr(text) for text in sorted(seen)[:4])
+    raise ExportError(
+        f"{place}: qualities such as {sample} may be words, OPC UA status codes (0 is good)"
+        " or OPC DA qualities (0 is bad)",
+        remedy="Set quality under [exports] to 'words', 'opc ua' or 'opc da'.",
+    )
+
+
+def _quality_forms(seen: Collection[str]) -> list[str]:
+    """The forms for which there is something that no other form could mean.
+
+    OPC UA codes keep their meaning in the upper 16 of 32 bits, OPC DA qualities have 16 bits in all with good
+    and uncertain in 0xC0. Small numbers without those bits mean something else in each house.
+    """
+    codes = [code for code in map(whole, seen) if code is not None]
+    forms = []
+    if any(quality_of_word(text) is not None for text in seen):
+        forms.append("words")
+    if any(code < 0 or code >= 2**16 for code in codes):
+        forms.append("opc ua")
+    if any(0 < code < 2**16 and code & 0xC0 in (0x40, 0xC0) for code in codes):
+        forms.append("opc da")
+    return forms

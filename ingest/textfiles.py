@@ -1,0 +1,304 @@
+"""CSV exports: a block of whole lines at a time -> columns."""
+
+from __future__ import annotations
+
+from collections.abc import Collection, Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.csv as pcsv
+
+from ingest.columns import plain, present, single
+from ingest.dialect import (
+    Dialect,
+    Layout,
+    decide_clock,
+    decide_encoding,
+    decide_layout,
+    decide_numbers,
+    decide_quality,
+    decide_separator,
+    fields,
+)
+from ingest.errors import ExportError
+from ingest.lines import BLOCK, Block, Lines, blocks, opened, screened, wrong_columns
+from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US
+from ingest.unit import ExportRules
+
+_WORDS = pa.dictionary(pa.int32(), pa.string())
+_FIRST_LINES = 50  # what the separator is judged by
+_PATIENCE = 8  # blocks that must be read as text before the quick way is given up
+
+
+@dataclass(frozen=True, slots=True)
+class TextFile:
+    """An open CSV export: what is known of it before the columns are."""
+
+    path: Path
+    codec: str
+    separator: str
+    header: tuple[str, ...]
+    header_row: int
+
+    def lines(self) -> Iterator[Lines]:
+        """Read the rows below the header.
+
+        Yields
+        ------
+        Lines
+            May be empty.
+        """
+        for row, data in blocks(self.path, self.codec):
+            lines = screened(row, data, self.separator)
+            if len(lines.rows) and lines.rows[0] == self.header_row:
+                lines = Lines(lines.data[lines.data.index(b"\n") + 1 :], lines.rows[1:], lines.faults)
+            yield lines
+
+    def look(self, columns: Sequence[int]) -> Iterator[list[Any]]:
+        """Show columns as text, block by block.
+
+        Parameters
+        ----------
+        columns : sequence of int
+            Places in the header.
+
+        Yields
+        ------
+        list of pyarrow.Array
+            One per column.
+        """
+        for lines in self.lines():
+            block = self.parse(lines, dict.fromkeys(columns, pa.string()))
+            if block is not None and len(block.rows):
+                yield [single(block.columns[i]) for i in columns]
+
+    def parse(self, lines: Lines, types: dict[int, Any], **convert: Any) -> Block | None:
+        """Split lines into columns of given types.
+
+        Parameters
+        ----------
+        lines : Lines
+            Rows.
+        types : dict of int to pyarrow.DataType
+            The columns wanted.
+        **convert
+            Further settings of pyarrow.csv.ConvertOptions.
+
+        Returns
+        -------
+        Block or None
+            None where something does not fit its type.
+        """
+        if len(lines.rows) == 0:
+            return Block(lines.rows, {i: pa.array([], kind) for i, kind in types.items()}, lines.faults)
+        wrong: list[int] = []
+
+        def leave_out(row: Any) -> str:
+            wrong.append(row.number - 1)
+            return "skip"
+
+        names = [str(i) for i in range(len(self.header))]
+        try:
+            table = pcsv.read_csv(
+                pa.BufferReader(lines.data),
+                pcsv.ReadOptions(use_threads=False, block_size=len(lines.data) + 1, column_names=names),
+                pcsv.ParseOptions(
+                    delimiter=self.separator,
+                    quote_char='"' if b'"' in lines.data else False,
+                    ignore_empty_lines=False,
+                    invalid_row_handler=leave_out,
+                ),
+                pcsv.ConvertOptions(
+                    column_types={str(i): kind for i, kind in types.items()},
+                    include_columns=[str(i) for i in types],
+                    check_utf8=False,  # the block was checked as a whole
+                    **convert,
+                ),
+            )
+        except pa.ArrowInvalid:
+            return None
+        return self._block(lines, {i: single(table.column(str(i))) for i in types}, wrong)
+
+    def _block(self, lines: Lines, columns: dict[int, Any], wrong: list[int]) -> Block:
+        """The columns with the number of each row."""
+        count = len(next(iter(columns.values())))
+        if count + len(wrong) != len(lines.rows):
+            raise ExportError(
+                f"{self.path.name}:{lines.rows[0]}: the rows from here on cannot be told apart",
+                remedy="Export without quotes or line breaks inside fields.",
+            )
+        if not wrong:
+            return Block(lines.rows, columns, lines.faults)
+        at = np.array(wrong, np.int64)
+        return Block(np.delete(lines.rows, at), columns, (*lines.faults, wrong_columns(lines, at)))
+
+
+def open_text(
+    path: Path, rules: ExportRules, wanted: Collection[str] | None, zone: str | None
+) -> tuple[TextFile, Dialect]:
+    """Find out how a CSV export is to be read.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+        The export.
+    rules : ExportRules
+        What the unit file fixes.
+    wanted : collection of str or None
+        Tags somebody asks for; None: all.
+    zone : str or None
+        Zone of times without offset.
+
+    Returns
+    -------
+    TextFile
+        To read it with.
+    Dialect
+        To say it with.
+    """
+    file, encoding = _begin(path)
+    place = f"{path.name}:{file.header_row}"
+    if next(file.look([0]), None) is None:
+        raise ExportError(
+            f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
+        )
+    layout = decide_layout(place, file.header, wanted or (), file.look)
+    clock = decide_clock(f"{path.name}:{file.header_row + 1}", layout.time, file.look, zone)
+    numbers = decide_numbers(path.name, value_columns(file.header, layout, wanted), file.look, rules)
+    quality = decide_quality(path.name, layout.quality, file.look, rules)
+    return file, Dialect(
+        encoding, file.separator, file.header, file.header_row, layout, clock, numbers, quality
+    )
+
+
+def value_columns(header: Sequence[str], layout: Layout, wanted: Collection[str] | None) -> list[int]:
+    """Find the columns whose values somebody asks for.
+
+    Parameters
+    ----------
+    header : sequence of str
+        Names of the columns.
+    layout : Layout
+        Which column holds what.
+    wanted : collection of str or None
+        Tags asked for; None: all.
+
+    Returns
+    -------
+    list of int
+        Places in the header, ascending; the value column of a long export.
+    """
+    if layout.value is not None:
+        return [layout.value]
+    return [i for i, name in enumerate(header) if i != layout.time and (wanted is None or name in wanted)]
+
+
+def text_blocks(file: TextFile, dialect: Dialect, columns: Sequence[int]) -> Iterator[Block]:
+    """Read a CSV export: numbers at once where a whole block is clean, else as text for a closer look.
+
+    Parameters
+    ----------
+    file : TextFile
+        The export.
+    dialect : Dialect
+        How it is read.
+    columns : sequence of int
+        Columns of values.
+
+    Yields
+    ------
+    Block
+        Time column and values as text wherever anything in the block is not a clean time or number.
+    """
+    quick, text = _types(dialect, columns, quick=True), _types(dialect, columns, quick=False)
+    settings = _settings(dialect)
+    spoilt = 0
+    for lines in file.lines():
+        block = file.parse(lines, quick, **settings) if spoilt < _PATIENCE else None
+        if block is None or not _clean(block, dialect, columns):
+            spoilt += 1
+            block = file.parse(lines, text)
+        else:
+            spoilt = 0
+        if block is None:
+            raise ExportError(
+                f"{file.path.name}:{lines.rows[0]}: the rows from here on cannot be split into columns",
+                remedy="Export as CSV text with one row per line.",
+            )
+        yield block
+
+
+def _begin(path: Path) -> tuple[TextFile, str]:
+    """Encoding, separator and header."""
+    with opened(path) as raw:
+        codec, encoding = decide_encoding(path.name, raw.read(BLOCK))
+    row, data = next(blocks(path, codec))
+    lines = [(row + i, line.rstrip("\r")) for i, line in enumerate(_first(data)) if line.strip()]
+    if not lines:
+        raise ExportError(f"{path.name}: holds blank lines only", remedy="Export it again.")
+    header_row, header = lines[0]
+    if "\r" in header:
+        raise ExportError(
+            f"{path.name}:{header_row}: the lines end in carriage returns alone",
+            remedy="Export with line feeds at the ends of lines.",
+        )
+    separator = decide_separator(path.name, [line for _, line in lines], header_row)
+    if screened(header_row, header.encode() + b"\n", separator).faults:
+        raise ExportError(
+            f"{path.name}:{header_row}: a quote in the header does not open and close with its field",
+            remedy="Quote whole names or none.",
+        )
+    return TextFile(path, codec, separator, tuple(fields(header, separator)), header_row), encoding
+
+
+def _first(data: bytes) -> list[str]:
+    """The first lines of a block, and enough blank ones before them to find a header at all."""
+    return data.decode().split("\n", _FIRST_LINES)[:_FIRST_LINES]
+
+
+def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int, Any]:
+    """What each column is read as."""
+    layout, clock = dialect.layout, dialect.clock
+    time = pa.string()
+    if quick and clock.form == "year first":
+        time = pa.timestamp("ns" if clock.fraction > 6 else "us", "UTC" if clock.offset else None)
+    elif quick and clock.form in EPOCHS:
+        time = pa.float64()
+    types = {layout.time: time, **dict.fromkeys(columns, pa.float64() if quick else pa.string())}
+    return types | {i: _WORDS for i in (layout.tag, layout.quality) if i is not None}
+
+
+def _settings(dialect: Dialect) -> dict[str, Any]:
+    """Words for "no value" become null at once, as they are and in the usual capitals."""
+    words = {
+        form
+        for word in dialect.numbers.missing
+        for form in (word, word.upper(), word.title(), word.capitalize())
+    }
+    return {
+        "null_values": sorted(words),
+        "timestamp_parsers": [pcsv.ISO8601],
+        "decimal_point": dialect.numbers.decimal,
+    }
+
+
+def _clean(block: Block, dialect: Dialect, columns: Sequence[int]) -> bool:
+    """Whether every time is there and within bounds, and every number finite."""
+    time = block.columns[dialect.layout.time]
+    if time.null_count:
+        return False
+    if not pa.types.is_string(time.type) and len(time):
+        whole = pa.types.is_timestamp(time.type)
+        raw = plain(time, np.int64 if whole else np.float64)
+        unit = 1 / EPOCHS.get(dialect.clock.form, 1.0) if not whole or time.type.unit == "us" else 1000
+        if not (EARLIEST_US * unit <= raw.min() and raw.max() < LATEST_US * unit):
+            return False
+    return all(_finite(block.columns[i]) for i in columns)
+
+
+def _finite(column: Any) -> bool:
+    odd = ~np.isfinite(plain(column, np.float64))
+    return not odd.any() or not (odd & present(column)).any()

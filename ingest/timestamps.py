@@ -1,0 +1,288 @@
+"""Time stamps as they come -> us since the epoch, UTC; the doubled and the skipped hour included."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta
+from functools import lru_cache
+from typing import Any
+from zoneinfo import ZoneInfo
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.compute as pc
+from numpy.typing import NDArray
+
+from ingest.account import GAP, OFFSET, TIME, YEAR
+from ingest.columns import coded, flags, plain, present, single
+
+EARLIEST_US = 631_152_000_000_000  # 1990-01-01
+LATEST_US = 4_102_444_800_000_000  # 2100-01-01
+_PER_SECOND = {"s": 1, "ms": 1_000, "us": 1_000_000, "ns": 1_000_000_000}
+EPOCHS = {"epoch s": 1_000_000.0, "epoch ms": 1_000.0}  # us in one unit
+
+_DATES = {
+    "year first": r"(?P<y>\d{4})[-/.](?P<m>\d{1,2})[-/.](?P<d>\d{1,2})",
+    "day first": r"(?P<d>\d{1,2})[-/.](?P<m>\d{1,2})[-/.](?P<y>\d{4})",
+    "month first": r"(?P<m>\d{1,2})[-/.](?P<d>\d{1,2})[-/.](?P<y>\d{4})",
+}
+_CLOCK = r"(?:[T ]+(?P<H>\d{1,2})(?::(?P<M>\d{2})(?::(?P<S>\d{2})(?:[.,](?P<f>\d{1,9}))?)?)?)?"
+_OFFSET = r" ?(?P<z>Z|[+-])?(?P<zh>\d{2})?(?::?(?P<zm>\d{2}))?"
+PATTERNS = {order: rf"^\s*{date}{_CLOCK}(?:{_OFFSET})?\s*$" for order, date in _DATES.items()}
+
+Times = NDArray[np.int64]
+Codes = NDArray[np.int8]
+
+
+@dataclass(frozen=True, slots=True)
+class Clock:
+    """How an export writes time.
+
+    `form` is 'year first', 'day first', 'month first', 'epoch s', 'epoch ms' or 'timestamp'; `offset` tells
+    whether the times state their offset from UTC; `zone` is the zone of those that do not.
+    """
+
+    form: str
+    offset: bool
+    zone: str | None
+    fraction: int  # digits of a second written
+
+    def read(self, column: Any) -> Stamps:
+        """Read a column of times.
+
+        Parameters
+        ----------
+        column : pyarrow.Array (n,)
+            Text, timestamps or numbers, whichever the reader could make of it.
+
+        Returns
+        -------
+        Stamps
+            (n,) times.
+        """
+        column = single(column)
+        kind = column.type
+        if pa.types.is_timestamp(kind):
+            return self._placed(*_from_timestamps(column), stated=np.bool_(kind.tz is not None))
+        if self.form in EPOCHS:
+            time, reason = _from_numbers(column, EPOCHS[self.form])
+            return self._placed(time, reason, stated=np.True_)
+        time, reason, stated = _from_text(column, self.form)
+        return self._placed(time, reason, stated=stated)
+
+    def _placed(self, time: Times, reason: Codes, *, stated: Any) -> Stamps:
+        """Times moved to UTC where they state no offset."""
+        doubled = np.zeros(len(time), np.bool_)
+        if np.all(stated):
+            return Stamps(time, _bounded(time, reason), doubled)
+        if self.zone is None:
+            reason = np.where((reason == 0) & ~stated, OFFSET, reason).astype(np.int8)
+            return Stamps(time, _bounded(time, reason), doubled)
+        reason = _bounded(time, reason)
+        utc, gap, twice = localised(np.where(reason == 0, time, EARLIEST_US), self.zone)
+        reason = np.where((reason == 0) & gap & ~stated, GAP, reason).astype(np.int8)
+        return Stamps(np.where(stated, time, utc), reason, twice & ~stated & (reason == 0))
+
+
+@dataclass(frozen=True, slots=True)
+class Stamps:
+    """Times [us, UTC], a place in account.REASONS for each, and which stand in an hour that comes twice.
+
+    A doubled time is still wall-clock time: `resolved` places it once all rows around it are known.
+    """
+
+    time: Times
+    reason: Codes
+    doubled: NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True)
+class Changes:
+    """Every change of a zone's clock: wall-clock times at which it begins and ends, offsets [us]."""
+
+    low: Times
+    high: Times
+    before: Times
+    after: Times
+
+
+@lru_cache(maxsize=8)
+def changes(zone: str) -> Changes:
+    """Find the changes of a zone's offset between 1989 and 2100.
+
+    Parameters
+    ----------
+    zone : str
+        IANA name, 'Europe/Berlin'.
+
+    Returns
+    -------
+    Changes
+        (k,) ascending; the first stands before 1990 and holds the offset that applies from there.
+    """
+    info = ZoneInfo(zone)
+    step = timedelta(days=7)  # no zone changes its clock and back within a week
+    at = datetime(1989, 6, 1, tzinfo=UTC)
+    start = _offset(at, info)
+    found = [(_micros(at), start, start)]
+    while at.year < 2101:
+        if _offset(at, info) != _offset(at + step, info):
+            found.append(_change(at, at + step, info))
+        at += step
+    instant, before, after = (np.array(column, np.int64) for column in zip(*found, strict=True))
+    return Changes(instant + np.minimum(before, after), instant + np.maximum(before, after), before, after)
+
+
+def localised(wall: Times, zone: str) -> tuple[Times, NDArray[np.bool_], NDArray[np.bool_]]:
+    """Move wall-clock times to UTC.
+
+    Parameters
+    ----------
+    wall : numpy.ndarray of int64 (n,)
+        Wall-clock times as if they were UTC [us].
+    zone : str
+        IANA name.
+
+    Returns
+    -------
+    time : numpy.ndarray of int64 (n,)
+        UTC; left as wall-clock time where `twice`.
+    gap : numpy.ndarray of bool (n,)
+        The clock skipped this time.
+    twice : numpy.ndarray of bool (n,)
+        The clock showed this time twice.
+    """
+    known = changes(zone)
+    none = np.zeros(len(wall), np.bool_)
+    if len(wall) == 0:
+        return wall, none, none
+    first, last = (int(np.searchsorted(known.low, t, side="right")) - 1 for t in (wall.min(), wall.max()))
+    if first == last and wall.min() >= known.high[first]:
+        return wall - known.after[first], none, none
+    place = np.searchsorted(known.low, wall, side="right") - 1
+    inside = wall < known.high[place]
+    gap = inside & (known.after[place] > known.before[place])
+    twice = inside & (known.after[place] < known.before[place])
+    return np.where(twice, wall, wall - known.after[place]), gap, twice
+
+
+def resolved(wall: Times, zone: str, *, ascending: bool) -> tuple[Times, NDArray[np.bool_]]:
+    """Tell the two passes of a doubled hour apart by the order of one tag's rows.
+
+    The second pass begins where the times step back once (newest row first: where they step forward once).
+
+    Parameters
+    ----------
+    wall : numpy.ndarray of int64 (n,)
+        Doubled wall-clock times of one tag in the order of the file [us].
+    zone : str
+        IANA name.
+    ascending : bool
+        Whether time runs forward down the file.
+
+    Returns
+    -------
+    time : numpy.ndarray of int64 (n,)
+        UTC.
+    told : numpy.ndarray of bool (n,)
+        False where the order does not tell; `time` is meaningless there.
+    """
+    known = changes(zone)
+    place = np.searchsorted(known.low, wall, side="right") - 1
+    late, told = np.zeros(len(wall), np.bool_), np.zeros(len(wall), np.bool_)
+    for hour in np.unique(place):
+        rows = np.flatnonzero(place == hour)
+        rows = rows if ascending else rows[::-1]
+        step = np.diff(wall[rows])
+        back = step < 0 if np.any(step < 0) else step == 0
+        if np.count_nonzero(back) == 1:
+            told[rows] = True
+            late[rows] = np.append(False, np.cumsum(back) > 0)
+    return wall - np.where(late, known.after[place], known.before[place]), told
+
+
+def _offset(at: datetime, info: ZoneInfo) -> int:
+    """Offset from UTC at an instant [us]."""
+    return int(at.astimezone(info).utcoffset() / timedelta(microseconds=1))  # type: ignore[operator]
+
+
+def _micros(at: datetime) -> int:
+    return int(at.timestamp()) * 1_000_000
+
+
+def _change(low: datetime, high: datetime, info: ZoneInfo) -> tuple[int, int, int]:
+    """The instant between two at which the offset changes, and the offsets on both sides [us]."""
+    before = _offset(low, info)
+    while high - low > timedelta(seconds=1):
+        middle = low + timedelta(seconds=(high - low) // timedelta(seconds=2))
+        low, high = (middle, high) if _offset(middle, info) == before else (low, middle)
+    return _micros(high), before, _offset(high, info)
+
+
+def _bounded(time: Times, reason: Codes) -> Codes:
+    outside = (time < EARLIEST_US) | (time >= LATEST_US)
+    if not outside.any():
+        return reason
+    return np.where(outside & (reason == 0), YEAR, reason).astype(np.int8)
+
+
+def _from_timestamps(column: Any) -> tuple[Times, Codes]:
+    """Arrow timestamps of any unit."""
+    per = _PER_SECOND[column.type.unit]
+    raw = plain(column, np.int64)
+    reason = np.where(present(column), 0, TIME).astype(np.int8)
+    if per == 1_000_000:
+        return raw, reason
+    if per > 1_000_000:
+        return raw // (per // 1_000_000), reason
+    scale = 1_000_000 // per
+    return np.clip(raw, -(2**62) // scale, 2**62 // scale) * scale, reason
+
+
+def _from_numbers(column: Any, us: float) -> tuple[Times, Codes]:
+    """Seconds or milliseconds since the epoch."""
+    number = column
+    if not pa.types.is_floating(column.type) and not pa.types.is_integer(column.type):
+        text = pc.utf8_trim_whitespace(column)
+        fits = pc.match_substring_regex(text, r"^\d+([.,]\d+)?$")
+        number = pc.replace_substring(pc.if_else(fits, text, None), ",", ".")
+    number = single(number.cast(pa.float64()))
+    there = present(number)
+    micros = np.rint(np.where(there, plain(number, np.float64), 0.0) * us)
+    fine = np.isfinite(micros) & (np.abs(micros) < 2.0**62)
+    return np.where(fine, micros, 0).astype(np.int64), np.where(there, 0, TIME).astype(np.int8)
+
+
+def _from_text(column: Any, form: str) -> tuple[Times, Codes, NDArray[np.bool_]]:
+    """Calendar times; each distinct text is read once."""
+    codes, words = coded(column)
+    time, good, stated = _from_words(words, form)
+    time, good, stated = np.append(time, 0), np.append(good, False), np.append(stated, True)
+    return time[codes], np.where(good[codes], 0, TIME).astype(np.int8), stated[codes]
+
+
+def _from_words(words: Any, form: str) -> tuple[Times, NDArray[np.bool_], NDArray[np.bool_]]:
+    """Wall-clock or UTC times of distinct texts, which are times at all, and which state an offset."""
+    found = pc.extract_regex(words, PATTERNS[form])
+    good = present(found)
+    part = dict(zip((f.name for f in found.type), found.flatten(), strict=True))
+    y, m, d, hour, minute, second = (_whole(part[k]) for k in "ymdHMS")
+    zone_hour, zone_minute = _whole(part["zh"]), _whole(part["zm"])
+    fraction = _whole(pc.utf8_slice_codeunits(pc.utf8_rpad(part["f"], 6, "0"), 0, 6))
+    mark = {text: flags(pc.equal(part["z"], text)) for text in ("Z", "+", "-")}
+    stated = mark["Z"] | mark["+"] | mark["-"]
+    numbered = flags(pc.not_equal(part["zh"], ""))
+    good &= (m >= 1) & (m <= 12) & (d >= 1) & (hour < 24) & (minute < 60) & (second < 60)
+    good &= (zone_hour < 24) & (zone_minute < 60) & (numbered == (mark["+"] | mark["-"]))
+    month = np.where(good, (y - 1970) * 12 + m - 1, 0).astype("datetime64[M]")
+    day = month.astype("datetime64[D]").astype(np.int64) + d - 1
+    good &= day < (month + 1).astype("datetime64[D]").astype(np.int64)
+    seconds = day * 86_400 + hour * 3_600 + minute * 60 + second
+    shift = (zone_hour * 60 + zone_minute) * np.where(mark["-"], -60, 60)
+    return np.where(good, (seconds - shift) * 1_000_000 + fraction, 0), good, stated
+
+
+def _whole(text: Any) -> Times:
+    """Digits as whole numbers; nothing gives 0."""
+    digits = pc.if_else(pc.fill_null(pc.equal(text, ""), True), "0", text)
+    return plain(single(digits.cast(pa.int64())), np.int64)

@@ -1,0 +1,225 @@
+"""Values and qualities as exports write them: numbers, words for "no value", quality words and codes."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.compute as pc
+from numpy.typing import NDArray
+
+from ingest.account import INFINITE, NUMBER, QUALITY
+from ingest.columns import coded, flags, floats, present, single
+from ingest.readings import BAD, GOOD, UNCERTAIN, UNKNOWN
+
+MISSING_WORDS = ("bad", "no data", "-", "#n/a", "err", "")  # whatever their capitals; common practice
+
+NUMBERS = {
+    ".": r"^[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?$",
+    ",": r"^[+-]?(\d+,?\d*|,\d+)([eE][+-]?\d+)?$",
+}
+_NOT_FINITE = r"^[+-]?(inf|infinity|nan)$"
+_MINUS = "\u2212"
+
+Codes = NDArray[np.int8]
+
+
+@dataclass(frozen=True, slots=True)
+class Values:
+    """(n,) values, NaN where there is none, and a place in account.REASONS for each."""
+
+    value: NDArray[np.float64]
+    reason: Codes
+
+
+@dataclass(frozen=True, slots=True)
+class Numbers:
+    """How an export writes numbers: its decimal mark, and the words (small letters) for "no value"."""
+
+    decimal: str
+    missing: frozenset[str]
+
+    def read(self, column: Any) -> Values:
+        """Read a column of values.
+
+        Parameters
+        ----------
+        column : pyarrow.Array (n,)
+            Text, or numbers where the reader could make them.
+
+        Returns
+        -------
+        Values
+            NaN without a reason means that the export has no value there.
+        """
+        column = single(column)
+        if pa.types.is_dictionary(column.type):
+            column = column.dictionary_decode()
+        if is_text(column.type):
+            return self._from_text(column)
+        value = floats(single(column.cast(pa.float64())))
+        reason = np.where(np.isinf(value), INFINITE, 0).astype(np.int8)
+        return Values(value, reason)
+
+    def _from_text(self, column: Any) -> Values:
+        text = pc.replace_substring(pc.utf8_trim_whitespace(column), _MINUS, "-")
+        small = pc.utf8_lower(text)
+        missing = flags(pc.is_in(small, pa.array(sorted(self.missing), small.type))) | ~present(text)
+        fits = pc.match_substring_regex(text, NUMBERS[self.decimal])
+        number = pc.if_else(pc.and_(fits, pa.array(~missing)), text, pa.scalar(None, text.type))
+        value = floats(single(pc.replace_substring(number, self.decimal, ".").cast(pa.float64())))
+        odd = flags(pc.match_substring_regex(small, _NOT_FINITE)) | np.isinf(value)
+        reason = np.where(missing | flags(fits) & ~odd, 0, np.where(odd, INFINITE, NUMBER)).astype(np.int8)
+        return Values(value, np.where(missing, np.int8(0), reason))
+
+
+def is_text(kind: Any) -> bool:
+    """Tell whether an Arrow type holds text.
+
+    Parameters
+    ----------
+    kind : pyarrow.DataType
+        Any type.
+
+    Returns
+    -------
+    bool
+        True for every width of string.
+    """
+    return bool(pa.types.is_string(kind) or pa.types.is_large_string(kind) or pa.types.is_string_view(kind))
+
+
+def quality_of_word(text: str) -> int | None:
+    """Give the quality that a word states; the symbolic names of OPC UA begin with one of the three.
+
+    Parameters
+    ----------
+    text : str
+        As it stands in the file.
+
+    Returns
+    -------
+    int or None
+        A place in readings.QUALITIES; None where the word says none.
+    """
+    word = text.strip().casefold()
+    for start, quality in (("good", GOOD), ("uncertain", UNCERTAIN), ("bad", BAD)):
+        if word.startswith(start):
+            return quality
+    return {"": UNKNOWN, "unknown": UNKNOWN, "ok": GOOD}.get(word)
+
+
+def quality_of_opc_ua(text: str) -> int | None:
+    """Give the quality of an OPC UA status code, by its top two bits alone.
+
+    Source: OPC UA Part 4 (IEC 62541-4): 00 good, 01 uncertain, 10 bad, 11 reserved.
+
+    Parameters
+    ----------
+    text : str
+        Decimal (signed or not) or hexadecimal with 0x.
+
+    Returns
+    -------
+    int or None
+        A place in readings.QUALITIES; None where it is no code.
+    """
+    code = whole(text)
+    if code is None:
+        return None if text.strip() else UNKNOWN
+    if not -(2**31) <= code < 2**32:
+        return None
+    return {0: GOOD, 1: UNCERTAIN, 2: BAD}.get((code & 0xFFFFFFFF) >> 30)
+
+
+def quality_of_opc_da(text: str) -> int | None:
+    """Give the quality of an OPC Data Access quality word, by the mask 0xC0.
+
+    Source: layout QQSSSSLL of its low byte as in OPC UA Part 8, A.3.2.3; QQ = 10 is not in use.
+
+    Parameters
+    ----------
+    text : str
+        Decimal or hexadecimal with 0x.
+
+    Returns
+    -------
+    int or None
+        A place in readings.QUALITIES; None where it is no code.
+    """
+    code = whole(text)
+    if code is None:
+        return None if text.strip() else UNKNOWN
+    if not 0 <= code < 2**16:
+        return None
+    return {0xC0: GOOD, 0x40: UNCERTAIN, 0x00: BAD}.get(code & 0xC0)
+
+
+QUALITY_FORMS: dict[str, Callable[[str], int | None]] = {
+    "words": quality_of_word,
+    "opc ua": quality_of_opc_ua,
+    "opc da": quality_of_opc_da,
+}
+
+
+def whole(text: str) -> int | None:
+    """Read a whole number, decimal or hexadecimal with 0x.
+
+    Parameters
+    ----------
+    text : str
+        '192', '0xC0', '192.0', '-2147483648'.
+
+    Returns
+    -------
+    int or None
+        None where the text is no whole number.
+    """
+    text = text.strip().casefold().removesuffix(".0")
+    try:
+        return int(text, 16) if text.startswith("0x") else int(text)
+    except ValueError:
+        return None
+
+
+def read_qualities(column: Any, form: str) -> tuple[Codes, Codes]:
+    """Read a column of qualities; each distinct text is looked up once.
+
+    Parameters
+    ----------
+    column : pyarrow.Array (n,)
+        Text or whole numbers.
+    form : str
+        A key of QUALITY_FORMS.
+
+    Returns
+    -------
+    quality : numpy.ndarray of int8 (n,)
+        Places in readings.QUALITIES; unknown where the cell is empty.
+    reason : numpy.ndarray of int8 (n,)
+        Places in account.REASONS.
+    """
+    codes, words = coded(column)
+    found = [QUALITY_FORMS[form](text) for text in texts(words)]
+    table = np.array([UNKNOWN if q is None else q for q in found] + [UNKNOWN], np.int8)
+    wrong = np.array([QUALITY if q is None else 0 for q in found] + [0], np.int8)
+    return table[codes], wrong[codes]
+
+
+def texts(words: Any) -> Iterable[str]:
+    """Give distinct values of a column as text.
+
+    Parameters
+    ----------
+    words : pyarrow.Array
+        Text or numbers.
+
+    Returns
+    -------
+    iterable of str
+        Nothing in place of null.
+    """
+    return ("" if word is None else str(word) for word in words.to_pylist())
