@@ -100,7 +100,8 @@ def cell_terms(plan: Functionals, amounts: Amounts, rows: slice) -> CellTerms:
     seen = np.isfinite(kmol) & np.isfinite(systematic).all(axis=1).T
     seen &= np.isfinite(np.diagonal(random, axis1=2, axis2=3)).all(axis=1)
     parts = np.concatenate([kmol.T[:, None], systematic], axis=1)
-    parts[~seen.T[:, None].repeat(parts.shape[1], axis=1)] = 0.0
+    for amount, there in zip(parts, seen.T, strict=True):
+        amount[:, ~there] = 0.0
     linear = plan.weight @ parts.reshape(len(parts), -1)
     return CellTerms(
         linear=linear.reshape(len(linear), *parts.shape[1:]),
