@@ -24,8 +24,8 @@ from numpy.typing import NDArray
 
 from demo_data import meters, plant, scenario, truth
 from demo_data.meters import CALIBRATION, DECIMALS, GOOD, NO_NUMBER, NOT_STORED, Results
-from ingest import unitfile
 from ingest.unit import Unit
+from ingest.unitfile import load
 
 UNIT_FILE = Path(__file__).parent.parent / "config" / "demo.toml"
 STATUS_TAG = "AI-220.CAL"
@@ -66,7 +66,7 @@ def make(folder: Path, *, days: int = 60, seed: int | None = None, unit_file: Pa
     """
     put_in = scenario.load()
     seed = put_in.seed if seed is None else seed
-    unit = unitfile.load(unit_file)
+    unit = load(unit_file)
     true = plant.simulate(days, seed, put_in.events, start=put_in.start)
     measured = meters.measure(true, unit, seed + 1, calibrations=put_in.calibrations)
     tags = measured.results | {STATUS_TAG: _status(true, unit, put_in)}
@@ -100,7 +100,7 @@ def bench_year(path: Path, *, days: int = 365, seed: int = 1, unit_file: Path = 
         `path`. No faults are put in, only calibration windows, whose readings are null.
     """
     put_in = scenario.load()
-    unit = unitfile.load(unit_file)
+    unit = load(unit_file)
     true = plant.simulate(days, seed, start=put_in.start)
     measured = meters.measure(true, unit, seed + 1, calibrations=put_in.calibrations)
     tags = measured.results | {STATUS_TAG: _status(true, unit, put_in)}
