@@ -124,11 +124,19 @@ def limit_episodes(
         (`suppressed` is then true); `worst` at `worst_at` since the first crossing; `sure` is the share of
         the seen time since then in which the whole 95 % interval lay beyond the limit.
 
+    Raises
+    ------
+    ValueError
+        The arrays differ in length.
+
     Notes
     -----
     ANSI/ISA-18.2-2016 for the terms (quoted in an open course text; the standard itself not seen). A value
     on the limit is inside.
     """
+    if not len(end_us) == len(value) == len(half_width) == len(operating):
+        msg = f"rows differ: {len(end_us)} ends, {len(value)} values, {len(operating)} operating conditions"
+        raise ValueError(msg)
     idle = np.isin(operating, SUPPRESSED)
     parts = [_none()]
     for side, limit, way in (("low", watch.low, -1.0), ("high", watch.high, 1.0)):

@@ -209,7 +209,7 @@ def _of_the_feed(unit: Unit, species: Mapping[str, Species], names: tuple[str, .
             consumed,
             fed,
             100.0,
-            f"{key} consumed (in minus out) per {key} fed.",
+            f"Part of the {key} fed that was consumed (in minus out).",
             True,
             names,
         ),
@@ -250,7 +250,7 @@ def _selectivities(unit: Unit, names: tuple[str, ...]) -> list[Figure]:
             {f"made {unit.wanted}": 1.0},
             {f"made {one}": 1.0},
             1.0,
-            f"mol {unit.wanted} made per mol {one} made (out minus in). {INSTANTANEOUS[unit.reactor]}",
+            f"Mol {unit.wanted} made per mol {one} made (out minus in). {INSTANTANEOUS[unit.reactor]}",
             True,
             names,
         )
@@ -286,7 +286,9 @@ def _shares(unit: Unit, species: Mapping[str, Species], names: tuple[str, ...]) 
             unseen,
             consumed,
             100.0,
-            "100 % minus selectivity on converted minus the shares of all unwanted products.",
+            "100 % minus selectivity on converted minus the shares of all unwanted products. A reconciled "
+            "balance has no hole: this is what other species of the streams hold. What no stream lists shows "
+            "in the converted closure.",
             None,
             names,
         ),
@@ -307,7 +309,8 @@ def _closures(unit: Unit, names: tuple[str, ...]) -> list[Figure]:
             {f"raw made {key}": 1.0},
             {f"raw consumed {key}": 1.0},
             100.0,
-            f"{element} in what was made per {element} in the {unit.key_reactant} consumed, by raw readings.",
+            f"{element.capitalize()} in what was made per {element} in the {unit.key_reactant} consumed, "
+            "by raw readings.",
             None,
             names,
         ),
@@ -324,7 +327,7 @@ def _closure(symbol: str, names: tuple[str, ...]) -> Figure:
         {f"raw out {symbol}": 1.0},
         {f"raw in {symbol}": 1.0},
         100.0,
-        f"{element} out per {element} in by raw readings, inert carriers left out.",
+        f"{element.capitalize()} out per {element} in by raw readings, inert carriers left out.",
         None,
         names,
     )
@@ -361,7 +364,7 @@ def _consumptions(unit: Unit, species: Mapping[str, Species], names: tuple[str, 
             {f"{what} {key}": 1.0},
             {f"made {wanted}": 1.0},
             scale,
-            f"kg {key} {what} per kg {wanted} made.",
+            f"Kilograms of {key} {what} per kilogram of {wanted} made.",
             False,
             names,
         )

@@ -286,6 +286,13 @@ def test_a_watch_on_what_the_unit_has_not_says_what_there_is():
         unit_episodes(other, frames, operating)
 
 
+def test_rows_that_do_not_belong_together_are_refused():
+    unit = _unit(_watch())
+    frames, operating = _fallen(unit)
+    with pytest.raises(ValueError, match="432 ends, 432 values, 431 operating conditions"):
+        unit_episodes(unit, frames, operating[1:])
+
+
 def test_no_watches_give_no_episodes():
     unit = _unit()
     assert tuple(unit_episodes(unit, *_fallen(unit)).columns) == EPISODE_COLUMNS
