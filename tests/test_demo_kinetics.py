@@ -19,9 +19,10 @@ from demo_data.kinetics import (
     rates,
     stoichiometry,
 )
-from ingest import chemistry, unitfile
+from ingest import chemistry
+from ingest.unitfile import load
 
-FORMULA = {s.name: s.formula for s in unitfile.load(Path("config/demo.toml")).species}
+FORMULA = {s.name: s.formula for s in load(Path("config/demo.toml")).species}
 ATOMS = chemistry.element_matrix([chemistry.atoms(FORMULA[name]) for name in SPECIES], ("C", "H", "O", "N"))
 
 
