@@ -489,9 +489,9 @@ def _dearest(
 
 
 def _operating(unit: Unit, value: Floats, start: Times, carried: Carried) -> Codes:
-    """The operating condition from the load instrument's row; not known where the unit file names none."""
+    """The operating condition from the load instrument's row; running throughout where no rule is stated."""
     if unit.operating is None:
-        return np.full(start.size, NOT_KNOWN, dtype=np.int8)
+        return np.full(start.size, RUNNING, dtype=np.int8)
     load = [i.name for i in unit.instruments].index(unit.operating.load)
     return operating_of(value[load], start, unit.operating, carried)
 

@@ -603,9 +603,9 @@ def test_a_start_longer_than_a_chunk_is_carried_through_it():
     assert carried == Carried(down=False)
 
 
-def test_a_unit_file_that_names_no_load_leaves_the_condition_not_known():
+def test_a_unit_file_that_states_no_rule_takes_the_unit_as_running_throughout():
     cells = make_cells(made_unit(operating=None), {}, MIDNIGHT, MIDNIGHT + HOUR)
-    assert told(cells.operating) == ["not known"] * 6
+    assert told(cells.operating) == ["running"] * 6
 
 
 def state_machine(load: list[float], plant: Operating) -> list[str]:
