@@ -119,7 +119,7 @@ def outlet(fed_kmol_h: Floats, k: Floats, contact: Floats) -> Floats:
     Parameters
     ----------
     fed_kmol_h : array, shape (t, species)
-        Fed to the bed [kmol/h].
+        Fed to the bed, no methacrolein in it [kmol/h].
     k : array, shape (t, reaction)
         Rate constants, see `rates` [-].
     contact : array, shape (t,)
