@@ -1,0 +1,229 @@
+"""What a pass left in the store, as the frames that people look at; opened anew for every question."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+
+import pandas as pd
+import pyarrow as pa
+
+from ingest.ledger import Store
+from monitor.layout import BAR, figure_stage, instrument_frame, unflat
+from monitor.windows import FIELDS
+
+NEXT = timedelta(microseconds=1)  # the store reads up to, not including
+EPISODE_TIMES = ("raised", "cleared", "worst_at")
+
+
+def version(folder: Path) -> str | None:
+    """Tell in a few microseconds whether anything was committed since the last look.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+
+    Returns
+    -------
+    str or None
+        Another text after every commit; None when there is no store.
+    """
+    ledger, ahead = folder / "ledger.sqlite", folder / "ledger.sqlite-wal"
+    if not ledger.exists():
+        return None
+    stats = [path.stat() for path in (ledger, ahead) if path.exists()]
+    # A reader makes an empty write-ahead file and takes it away again: that is no commit.
+    return " ".join(f"{s.st_ino}:{s.st_mtime_ns}:{s.st_size}" for s in stats if s.st_size)
+
+
+def edges(folder: Path, unit: str) -> tuple[pd.Timestamp, pd.Timestamp] | None:
+    """Give the starts of the first and of the last cell.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+
+    Returns
+    -------
+    tuple of Timestamp or None
+        None when the unit has no cells.
+    """
+    snapshot = Store(folder).snapshot()
+    months = snapshot.months(unit, "cells")
+    if not months:
+        return None
+    after_first = pd.Timestamp(months[0], tz="UTC") + pd.offsets.MonthBegin(1)
+    head = _frame(snapshot.read(unit, "cells", last=after_first, columns=["start"]), "start")
+    tail = _frame(
+        snapshot.read(unit, "cells", first=pd.Timestamp(months[-1], tz="UTC"), columns=["start"]), "start"
+    )
+    return head.index[0], tail.index[-1]
+
+
+def figures(
+    folder: Path,
+    unit: str,
+    window: timedelta,
+    wanted: Sequence[tuple[str, str]] | None,
+    span: tuple[datetime, datetime],
+) -> pd.DataFrame:
+    """Give the figures of one window length over a span.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+    window : timedelta
+        One of the unit's windows.
+    wanted : sequence of (str, str) or None
+        Figure and mode; None for all.
+    span : tuple of datetime
+        First and last window end, both included, zone-aware.
+
+    Returns
+    -------
+    DataFrame
+        Columns (figure, mode, field), index `end` (UTC); empty when nothing is there.
+    """
+    columns = None
+    if wanted is not None:
+        columns = ["end", *(BAR.join((*name, field)) for name in wanted for field in FIELDS)]
+    table = Store(folder).read(
+        unit, figure_stage(window), first=span[0], last=span[1] + NEXT, columns=columns
+    )
+    return unflat(_frame(table, "end")) if table.num_rows else pd.DataFrame()
+
+
+def operating(folder: Path, unit: str, span: tuple[datetime, datetime]) -> pd.DataFrame:
+    """Give the operating condition of each cell.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+    span : tuple of datetime
+        From the first cell start to before the second, zone-aware.
+
+    Returns
+    -------
+    DataFrame
+        Column `operating` (code), index `start` (UTC).
+    """
+    table = Store(folder).read(unit, "cells", first=span[0], last=span[1], columns=["start", "operating"])
+    return _frame(table, "start", "operating")
+
+
+def adjustments(
+    folder: Path, unit: str, names: Sequence[str], span: tuple[datetime, datetime]
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Give the adjustment of each balance instrument in each cell, and the spread it should have.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+    names : sequence of str
+        Balance instruments.
+    span : tuple of datetime
+        From the first cell start to before the second, zone-aware.
+
+    Returns
+    -------
+    tuple of DataFrame
+        Adjustments and their standard deviations, one column per name; NaN where no reading took part.
+    """
+    fields = ("adjustment", "adjustment_sd")
+    columns = [f"{field} {name}" for field in fields for name in names]
+    frame = _frame(
+        Store(folder).read(unit, "states", first=span[0], last=span[1], columns=["start", *columns]),
+        "start",
+        *columns,
+    )
+    first, second = (instrument_frame(frame, field, names) for field in fields)
+    return first, second
+
+
+def objective(folder: Path, unit: str, span: tuple[datetime, datetime]) -> pd.DataFrame:
+    """Give the objective and the degrees of freedom of each cell.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+    span : tuple of datetime
+        From the first cell start to before the second, zone-aware.
+
+    Returns
+    -------
+    DataFrame
+        Columns objective and freedom, index `start` (UTC).
+    """
+    columns = ("objective", "freedom")
+    table = Store(folder).read(unit, "states", first=span[0], last=span[1], columns=["start", *columns])
+    return _frame(table, "start", *columns)
+
+
+def episodes(folder: Path, unit: str) -> pd.DataFrame:
+    """Give all episodes of a unit.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+
+    Returns
+    -------
+    DataFrame
+        One row per episode; `cleared` is NaT while it is open.
+    """
+    frame = Store(folder).snapshot().episodes(unit)
+    if not frame.empty:
+        return frame
+    words = {name: pd.Series(dtype=object) for name in ("watch", "figure", "side", "priority")}
+    numbers = {name: pd.Series(dtype=float) for name in ("limit", "worst")}
+    times = {name: pd.Series(dtype="datetime64[us, UTC]") for name in EPISODE_TIMES}
+    return pd.DataFrame({**words, **numbers, **times})
+
+
+def last_export(folder: Path) -> datetime | None:
+    """Say when the last export was taken in.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+
+    Returns
+    -------
+    datetime or None
+        Zone-aware UTC; None when none was.
+    """
+    taken = [export.taken_at for export in Store(folder).exports() if export.status == "taken"]
+    return datetime.fromisoformat(max(taken)).astimezone(UTC) if taken else None
+
+
+def _frame(table: pa.Table, label: str, *columns: str) -> pd.DataFrame:
+    """Turn a table into a frame with its label as index; an empty one keeps the columns asked for."""
+    frame: pd.DataFrame = table.to_pandas(ignore_metadata=True)
+    if label not in frame:
+        nothing = pd.DatetimeIndex([], tz="UTC", name=label)
+        return pd.DataFrame({name: pd.Series(dtype=float) for name in columns}, index=nothing)
+    frame[label] = pd.to_datetime(
+        frame[label], utc=True, unit="us" if frame[label].dtype.kind == "i" else None
+    )
+    return frame.set_index(label)
