@@ -17,7 +17,7 @@ from ingest.errors import OutletError
 
 Atoms = tuple[tuple[str, float], ...]
 
-# The 83 elements that have a standard atomic weight; read from the pyciaaw 1.3.2 wheel (CIAAW 2021, abridged).
+# The 84 elements that have a standard atomic weight; read from the pyciaaw 1.3.2 wheel (CIAAW 2021).
 _WEIGHTS = """
 H 1.008    He 4.0026  Li 6.94    Be 9.0122  B 10.81    C 12.011   N 14.007   O 15.999   F 18.998   Ne 20.18
 Na 22.99   Mg 24.305  Al 26.982  Si 28.085  P 30.974   S 32.06    Cl 35.45   Ar 39.95   K 39.098   Ca 40.078
@@ -28,14 +28,17 @@ Te 127.6   I 126.9    Xe 131.29  Cs 132.91  Ba 137.33  La 138.91  Ce 140.12  Pr 
 Eu 151.96  Gd 157.25  Tb 158.93  Dy 162.5   Ho 164.93  Er 167.26  Tm 168.93  Yb 173.05  Lu 174.97  Hf 178.49
 Ta 180.95  W 183.84   Re 186.21  Os 190.23  Ir 192.22  Pt 195.08  Au 196.97  Hg 200.59  Tl 204.38  Pb 207.2
 Bi 208.98  Th 232.04  Pa 231.04  U 238.03
-""".split()
-ATOMIC_WEIGHT_KG_KMOL = dict(zip(_WEIGHTS[::2], map(float, _WEIGHTS[1::2]), strict=True))
+"""
+ATOMIC_WEIGHT_KG_KMOL = {
+    symbol: float(weight) for symbol, weight in re.findall(r"([A-Z][a-z]?) ([\d.]+)", _WEIGHTS)
+}
+ELEMENT_NAMES = {"C": "carbon", "H": "hydrogen", "O": "oxygen", "N": "nitrogen"}  # others go by their symbol
 
 # The parser reads past what it does not know, so a formula has to have this form before it is handed over.
 _COUNT = r"(?:[0-9]+(?:\.[0-9]+)?)?"
 _FORMULA = re.compile(rf"(?:[A-Z][a-z]?{_COUNT}|\(|\){_COUNT})+")
-_CHARGE = re.compile(r".*[+\-\u2212][0-9]*\)?$|.*[+\-\u2212].*")
-_WORDS = {"D": "H", "T": "H"}
+_SIGNS = "+-\u2212"  # the last one is the typographic minus
+_HYDROGEN = ("D", "T")
 
 
 def atoms(formula: str) -> Atoms:
@@ -56,7 +59,7 @@ def atoms(formula: str) -> Atoms:
     OutletError
         Not a formula, a charge, or a symbol without a standard atomic weight.
     """
-    if _CHARGE.match(formula):
+    if any(sign in formula for sign in _SIGNS):
         raise OutletError(
             f"'{formula}' carries a charge", remedy="write the neutral species, for example 'NaCl', not 'Na+'"
         )
@@ -79,7 +82,7 @@ def _check_form(formula: str) -> None:
     if not _FORMULA.fullmatch(formula) or depth != 0 or not paired or "()" in formula:
         raise OutletError(
             f"'{formula}' is not a formula",
-            remedy="write symbols, counts and round brackets, for example 'C4H8', '(C2H5)2O', 'CH1.8O0.5N0.2'",
+            remedy="write symbols, counts and round brackets: 'C4H8', '(C2H5)2O', 'CH1.8O0.5N0.2'",
         )
 
 
@@ -87,10 +90,14 @@ def _check_symbol(symbol: str, formula: str) -> None:
     """Refuse a symbol that has no standard atomic weight; isotopes are written as their element."""
     if symbol in ATOMIC_WEIGHT_KG_KMOL:
         return
-    if symbol in _WORDS:
-        remedy = f"write isotopes of hydrogen as '{_WORDS[symbol]}'"
-    elif symbol[0] in ATOMIC_WEIGHT_KG_KMOL and symbol[1:].upper() in ATOMIC_WEIGHT_KG_KMOL:
-        remedy = f"did you mean '{symbol[0]}{symbol[1:].upper()}'? Symbols begin with a capital letter"
+    before = formula[: formula.index(symbol)][-1:]
+    meant = symbol.upper() if len(symbol) > 1 else before + symbol.lower()
+    if symbol in _HYDROGEN:
+        remedy = "write isotopes of hydrogen as 'H'"
+    elif len(symbol) > 1 and set(meant) <= ATOMIC_WEIGHT_KG_KMOL.keys():
+        remedy = f"did you mean '{meant}'? A second letter in small belongs to the symbol"
+    elif meant in ATOMIC_WEIGHT_KG_KMOL:
+        remedy = f"did you mean '{meant}'? The second letter of a symbol is small"
     else:
         remedy = "write the symbol of an element that has a standard atomic weight (CIAAW 2021)"
     raise OutletError(f"'{symbol}' in '{formula}' is no element known here", remedy=remedy)

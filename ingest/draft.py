@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import timedelta
 from typing import Any
 
 from ingest import chemistry
 from ingest.errors import OutletError, Problem
-from ingest.keys import Entry, nearest, read_table
+from ingest.keys import Entry, missing, nearest, read_table, rows
 
 ONCE = ("unit", "chemistry", "operating", "catalyst", "exports")
 MANY = ("stream", "instrument", "analyzer", "shared", "watch")
@@ -18,7 +18,7 @@ _NEEDED = ("unit", "chemistry", "stream")
 
 @dataclass(slots=True)
 class Draft:
-    """The sections of one unit file; a section that is not there is an entry without values, or an empty list.
+    """The sections of one unit file; one that is not there is an entry without values, or an empty list.
 
     `atoms` holds the composition of each declared species, None where its formula was refused.
     """
@@ -109,13 +109,23 @@ def _open_channels(analyzer: Entry, draft: Draft) -> list[Problem]:
         place = f"{analyzer.place}.channel.{species}"
         table = {"tag": content} if isinstance(content, str) else content
         own, faults = read_table("analyzer.channel", table, place)
+        channel = _channel(analyzer, own, species)
+        draft.many["instrument"].append(channel)
+        known = rows("analyzer")
+        faults += [missing(known[key], channel.at(key)) for key in ("kind", "unit") if channel.lacks(key)]
         problems += faults
-        inherited = {key: value for key, value in analyzer.values.items() if key not in ("name", "channel")}
-        values = {"dead_time": timedelta(0), "species": (species,), **inherited, **own.values}
-        values |= {"name": f"{analyzer.get('name')} {species}", "analyzer": analyzer.get("name")}
-        places = {key: analyzer.at(key) for key in inherited if key not in own.values}
-        draft.many["instrument"].append(Entry(place, values, places))
     return problems
+
+
+def _channel(analyzer: Entry, own: Entry, species: str) -> Entry:
+    """Join what an analyzer says of all its channels and what one channel says of itself."""
+    inherited = {key: value for key, value in analyzer.values.items() if key not in ("name", "channel")}
+    values = {"dead_time": timedelta(0), "species": (species,), **inherited, **own.values}
+    if name := analyzer.get("name"):
+        values |= {"name": f"{name} {species}", "analyzer": name}
+    stated = own.values.keys() | own.refused
+    places = {key: analyzer.at(key) for key in rows("analyzer") if key not in stated | {"name", "channel"}}
+    return Entry(own.place, values, places, analyzer.refused - own.values.keys() | own.refused)
 
 
 def _read_formulas(draft: Draft) -> list[Problem]:
@@ -134,3 +144,47 @@ def _read_formulas(draft: Draft) -> list[Problem]:
         except OutletError as error:
             problems.append(Problem(place, error.what, error.remedy))
     return problems
+
+
+def undeclared(
+    entry: Entry, key: str, names: Iterable[str], allowed: Iterable[str], noun: str
+) -> Iterator[Problem]:
+    """Yield a fault for each name that is not among the declared ones.
+
+    Parameters
+    ----------
+    entry : Entry
+        Where the names are written.
+    key : str
+        Under which key.
+    names : iterable of str
+        What is written there.
+    allowed : iterable of str
+        What is declared.
+    noun : str
+        What the names should be, for the message.
+    """
+    known = list(allowed)
+    for name in names:
+        if name not in known:
+            yield Problem(entry.at(key), f"'{name}' is no {noun}", nearest(name, known))
+
+
+def twice(entries: Iterable[Entry], key: str, remedy: str) -> Iterator[Problem]:
+    """Yield a fault for each value of a key that more than one entry has.
+
+    Parameters
+    ----------
+    entries : iterable of Entry
+        One section, or several.
+    key : str
+        The key that has to differ.
+    remedy : str
+        What to write instead.
+    """
+    stated = [(entry.get(key), entry) for entry in entries if entry.get(key) is not None]
+    first: dict[str, Entry] = {}
+    for value, entry in stated:
+        if value in first:
+            yield Problem(entry.at(key), f"'{value}' already belongs to {first[value].place}", remedy)
+        first.setdefault(value, entry)

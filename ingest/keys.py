@@ -140,7 +140,8 @@ class Entry:
 
     place: str
     values: dict[str, Any] = field(default_factory=dict)
-    places: dict[str, str] = field(default_factory=dict)
+    places: dict[str, str] = field(default_factory=dict)  # where it is not place.key
+    refused: frozenset[str] = frozenset()
 
     def get(self, key: str) -> Any:
         """Give a value, or None when it is absent or was refused."""
@@ -149,6 +150,10 @@ class Entry:
     def at(self, key: str) -> str:
         """Give the dotted place of a key."""
         return self.places.get(key, f"{self.place}.{key}")
+
+    def lacks(self, key: str) -> bool:
+        """Tell whether a key was not written at all, so that a refused value is not told twice."""
+        return key not in self.values and key not in self.refused
 
 
 def rows(section: str) -> dict[str, Key]:
@@ -218,22 +223,39 @@ def read_table(section: str, table: object, place: str) -> tuple[Entry, list[Pro
         Problem(f"{place}.{key}", "unknown key", nearest(key, known)) for key in table if key not in known
     ]
     for row in known.values():
-        problems += _read_key(row, table, entry)
+        if row.key in table or row.default is not None:
+            faults = _read_value(row, table.get(row.key, row.default), entry)
+            entry.refused |= {row.key} if faults else set()
+            problems += faults
+        elif row.needed == "always":
+            problems.append(missing(row, f"{place}.{row.key}"))
     return entry, problems
 
 
-def _read_key(row: Key, table: Mapping[str, object], entry: Entry) -> list[Problem]:
-    """Read the value of one row into the entry."""
+def missing(row: Key, place: str) -> Problem:
+    """Say that a key is missing and what to write.
+
+    Parameters
+    ----------
+    row : Key
+        The key.
+    place : str
+        Where it should stand.
+
+    Returns
+    -------
+    Problem
+        With the sentence and the example of the key.
+    """
+    return Problem(place, f"missing ({row.sentence})", f"write {row.key} = {row.example}")
+
+
+def _read_value(row: Key, value: object, entry: Entry) -> list[Problem]:
+    """Read the value of one row into the entry; a refused one stays out."""
     place = f"{entry.place}.{row.key}"
-    if row.key not in table:
-        if row.needed == "always":
-            return [Problem(place, f"missing ({row.sentence})", f"write {row.key} = {row.example}")]
-        if row.default is None:
-            return []
-    value = table.get(row.key, row.default)
     if row.form == "uncertainty":
         inner, problems = read_table("uncertainty", value, place)
-        entry.values[row.key] = inner.values
+        entry.values |= {} if problems else {row.key: inner.values}
         return problems
     try:
         entry.values[row.key] = FORMS[row.form](value, row)

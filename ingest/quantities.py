@@ -1,8 +1,8 @@
 """Engineering units, reference conditions and durations, turned into the program's own base.
 
-Base units: kmol/h, kg/h, m3/h, mole or mass fraction, mol/mol, kPa (absolute), K. The common spellings of each
-kind stand in one table, which also tells the user what fits; any other spelling goes to the pint library, which
-is imported only then because its import takes longer than reading a unit file.
+Base units: kmol/h, kg/h, m3/h, mole or mass fraction, mol/mol, kPa (absolute), K. The common spellings
+of each kind stand in one table, which also tells the user what fits; any other spelling goes to the pint
+library, which is imported only then because its import takes longer than reading a unit file.
 """
 
 from __future__ import annotations
@@ -46,8 +46,8 @@ COMMON: Mapping[str, Mapping[str, float]] = {
 _BASES = {
     "molar flow": "kmol/h",
     "mass flow": "kg/h",
-    "volume flow": "m3/h",
-    "actual volume flow": "m3/h",
+    "volume flow": "m**3/h",
+    "actual volume flow": "m**3/h",
     "pressure": "kPa",
 }
 # Words that mean different amounts to different readers.
@@ -155,8 +155,8 @@ def scale(
     Returns
     -------
     Scale
-        Factor to kmol/h (molar, volume and species flow), kg/h (mass flow), m3/h (actual volume flow), mole or
-        mass fraction, mol/mol (flow ratio), kPa absolute or K.
+        Factor to kmol/h (molar, volume and species flow), kg/h (mass flow), m3/h (actual volume flow),
+        mole or mass fraction, mol/mol (flow ratio), kPa absolute or K.
 
     Raises
     ------
@@ -226,16 +226,19 @@ def _pressure(text: str, atmosphere: str | None) -> Scale:
             f"'{text}' is a gauge pressure of no stated atmosphere",
             remedy='write atmosphere = "101.325 kPa" with the mean pressure of the site',
         )
+    return Scale(factor, offset=_atmosphere_kpa(atmosphere) / factor)
+
+
+def _atmosphere_kpa(atmosphere: str) -> float:
+    """Read the atmospheric pressure of the site."""
     match = re.match(r"^([\d.]+) ?(.+)$", atmosphere.strip())
-    if (
-        match is None
-        or not 50 <= (site := _number(match[1], atmosphere) * _pressure(match[2], None).to_base) <= 110
-    ):
+    kpa = _number(match[1], atmosphere) * _pressure(match[2], None).to_base if match else 0.0
+    if not 50 <= kpa <= 110:
         raise OutletError(
             f"'{atmosphere}' is no atmospheric pressure between 50 and 110 kPa",
             remedy='write it as atmosphere = "101.325 kPa"',
         )
-    return Scale(factor, offset=site / factor)
+    return kpa
 
 
 def fitting(kind: str) -> str:
@@ -266,7 +269,7 @@ def _factor(kind: str, text: str, *, shown: str | None = None) -> float:
     _refuse_ambiguous(text)
     factor = _from_pint(text, _BASES[kind]) if kind in _BASES else None
     if factor is None:
-        raise OutletError(f"'{text}' is no unit of a {shown or kind}", remedy=f"write one of {fits}")
+        raise OutletError(f"'{text}' does not fit kind '{shown or kind}'", remedy=f"write one of {fits}")
     return factor
 
 
@@ -287,18 +290,20 @@ def _from_pint(text: str, base: str) -> float | None:
         return None
     registry, errors = _registry()
     try:
-        return float(registry.Quantity(re.sub(r"(?<=[A-Za-z])([23])", r"**\1", text)).to(base).magnitude)
+        plain = re.sub(r"(?<=[A-Za-z])([23])", r"**\1", text)
+        factor = float(registry.Quantity(plain).to(base).magnitude)
     except (errors.PintError, ValueError, AttributeError):
         return None
+    return factor if 1e-9 <= factor <= 1e9 else None  # 'am3/h' would be cubic attometres
 
 
 @cache
 def _registry() -> tuple[Any, Any]:
-    """Build the registry once, on the first uncommon unit; lbmol is not in it by itself."""
+    """Build the registry once, on the first uncommon unit, with two moles of the trade added."""
     import pint
 
     registry: Any = pint.UnitRegistry()
-    registry.define(f"lbmol = {LB_KG} * kmol = pound_mole")
+    registry.define(f"lbmol = {LB_KG} * kmol")
     registry.define("kgmol = kmol")
     return registry, pint.errors
 

@@ -10,7 +10,8 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
-from ingest import chemistry, draft, keys as table, unitrules
+from ingest import chemistry, draft, instrumentrules, unitrules
+from ingest import keys as table
 from ingest.draft import Draft
 from ingest.errors import Problem, UnitFileError
 from ingest.keys import Entry, Key
@@ -75,7 +76,7 @@ def keys() -> tuple[Key, ...]:
 def _parse(file: Path) -> dict[str, Any]:
     """Read the TOML text; an unreadable file is one fault of its own."""
     try:
-        return tomllib.loads(file.read_bytes().decode("utf-8-sig").replace("\r\n", "\n"))
+        return tomllib.loads(file.read_bytes().decode("utf-8-sig"))
     except OSError as error:
         fault = Problem("file", f"cannot be read ({error.strerror})", "check its name and folder")
     except UnicodeDecodeError as error:
@@ -125,12 +126,12 @@ def _species(name: str, read: Draft) -> Species:
 
 def _instrument(entry: Entry, read: Draft) -> Instrument:
     """Make one instrument; a declared value takes the cell as its timing, since it has none of its own."""
-    scale = unitrules.scale_of(entry, read)
+    scale = instrumentrules.scale_of(entry, read)
     cell = read.once["unit"].get("cell")
     low, high = entry.get("range") or (-math.inf, math.inf)
     return Instrument(
         name=entry.get("name"),
-        kind=unitrules.base_kind(entry.get("kind")),
+        kind=instrumentrules.base_kind(entry.get("kind")),
         tag=entry.get("tag"),
         value=entry.get("value"),
         unit=entry.get("unit"),
@@ -139,7 +140,7 @@ def _instrument(entry: Entry, read: Draft) -> Instrument:
         stream=entry.get("stream"),
         per_stream=entry.get("per_stream"),
         species=entry.get("species") or (),
-        left_out=unitrules.left_out(entry, read),
+        left_out=instrumentrules.left_out(entry, read),
         random=_uncertainty(entry.get("random")),
         systematic=_uncertainty(entry.get("systematic")),
         low=low,
@@ -171,12 +172,12 @@ def _operating(entry: Entry) -> Operating | None:
     """Make the operating rules, or None when the section is not there."""
     if not entry.values:
         return None
-    down = entry.get("down_below")
+    down, turned = entry.get("down_below"), entry.get("turned_down_below")
     return Operating(
         load=entry.get("load"),
         down_below=down,
         running_above=entry.get("running_above"),
-        turned_down_below=entry.get("turned_down_below") or down,
+        turned_down_below=down if turned is None else turned,
         starting_for=entry.get("starting_for"),
     )
 
