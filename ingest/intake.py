@@ -1,0 +1,321 @@
+"""One pass over exports: which to read, what became of each, and which spans of each unit changed."""
+
+from __future__ import annotations
+
+import json
+import time
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import asdict, dataclass, replace
+from datetime import timedelta
+from pathlib import Path
+from typing import Any, Literal
+
+from ingest import database, parts
+from ingest.account import Account
+from ingest.archive import SITE, Archive, Merged, Span, spans_of
+from ingest.errors import ExportError, StoreError
+from ingest.exports import open_export
+from ingest.passes import Pass
+from ingest.records import Export, Seen
+from ingest.unit import ExportRules, Unit
+
+SETTLE = timedelta(seconds=2)  # a file changed more recently may still be growing
+SUFFIXES = (".csv", ".csv.gz", ".txt", ".txt.gz", ".tsv", ".tsv.gz", ".parquet", ".pq")
+NAMES_SHOWN = 5
+
+Status = Literal["taken", "taken already", "set aside", "left for the next pass"]
+Progress = Callable[[int, int], None]  # bytes done, bytes in all
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What became of one file: `words` says it in one line; `account` is None unless it was read now."""
+
+    name: str
+    status: Status
+    words: str
+    account: Account | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class IntakeResult:
+    """What a pass took in: files in the order read, spans changed by unit key, notes for the user.
+
+    A span is first <= t < last [us since 1970, UTC]; changes less than a day apart make one span.
+    """
+
+    outcomes: tuple[Outcome, ...]
+    touched: Mapping[str, tuple[Span, ...]]
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class _Asked:
+    """What all units of a site together ask of an export; the rules name the time zone."""
+
+    tags: frozenset[str]
+    rules: ExportRules
+
+    def entry(self, tags: Iterable[str]) -> dict[str, Any]:
+        """What the ledger keeps of it: with another one an export that was set aside is tried again."""
+        rules = {**asdict(self.rules), "missing_words": list(self.rules.missing_words)}
+        return {"tags": sorted(tags), "rules": rules, "program": database.program_version()}
+
+
+@dataclass(frozen=True, slots=True)
+class _File:
+    """One file to be read; `before` is its entry if it was taken in when nobody asked for `added`."""
+
+    path: Path
+    seen: Seen
+    number: int
+    tags: frozenset[str]  # asked of the file
+    added: frozenset[str]  # those of them that go into the archive
+    before: Export | None
+
+
+def take_in(
+    pass_: Pass,
+    units: Sequence[Unit],
+    paths: Iterable[Path],
+    *,
+    settle: timedelta = SETTLE,
+    progress: Progress | None = None,
+) -> IntakeResult:
+    """Take exports into the archive of a site, each content once, in the order of their names.
+
+    Parameters
+    ----------
+    pass_ : Pass
+        Open; archive and entries become visible with its commit.
+    units : sequence of Unit
+        All units of the site; what they say under [exports] must agree.
+    paths : iterable of Path
+        Exports, or folders of which all exports are meant.
+    settle : timedelta
+        A file changed more recently is left for the next pass.
+    progress : callable or None
+        Told the bytes read and the bytes to read, after each export.
+
+    Returns
+    -------
+    IntakeResult
+    """
+    asked = _asked(units)
+    files, outcomes = _plan(pass_, asked, _found(paths), settle)
+    archive = Archive(pass_, asked.tags.union(*(export.asked["tags"] for export in pass_.exports())))
+    taken: list[tuple[_File, Account]] = []
+    done, total = 0, sum(file.seen.size for file in files)
+    for file in files:
+        became = _read(pass_, archive, asked, file)
+        if isinstance(became, Account):
+            taken.append((file, became))
+        else:
+            outcomes.append(became)
+        done += file.seen.size
+        if progress is not None:
+            progress(done, total)
+    archive.finish()
+    outcomes += [_enter(pass_, asked, file, account, archive.merged) for file, account in taken]
+    _amend(pass_, archive.merged, {file.number for file, _ in taken})
+    touched = {unit.key: spans_of(archive.merged.touched, _tags(unit)) for unit in units}
+    return IntakeResult(tuple(sorted(outcomes, key=_by_name)), touched, _notes(pass_, asked))
+
+
+def _asked(units: Sequence[Unit]) -> _Asked:
+    """What the units ask together; an export can be read in one way only."""
+    said = {
+        unit.key: replace(unit.exports, time_zone=unit.exports.time_zone or unit.time_zone) for unit in units
+    }
+    first, *others = said
+    for other in others:
+        if said[other] != said[first]:
+            raise StoreError(
+                f"units {first} and {other}: [exports] of one says {said[first]}, of the other {said[other]}",
+                remedy="One store reads an export one way: make them agree, or use two stores.",
+            )
+    if SITE in said:
+        raise StoreError(
+            f"unit {SITE}: the store keeps its archive by that name", remedy="Rename the unit file."
+        )
+    return _Asked(frozenset().union(*(_tags(unit) for unit in units)), said[first])
+
+
+def _tags(unit: Unit) -> frozenset[str]:
+    return frozenset(instrument.tag for instrument in unit.instruments if instrument.tag is not None)
+
+
+def _found(paths: Iterable[Path]) -> list[Path]:
+    """The files meant, each once, by name."""
+    found: dict[Path, Path] = {}
+    for path in paths:
+        if not path.exists():
+            raise ExportError(f"{path}: there is no such file or folder", remedy="Check the name.")
+        inside = [p for p in path.iterdir() if p.name.lower().endswith(SUFFIXES)] if path.is_dir() else [path]
+        found |= {file.resolve(): file for file in inside if not file.is_dir()}
+    return sorted(found.values(), key=lambda path: (path.name, str(path)))
+
+
+def _plan(
+    pass_: Pass, asked: _Asked, paths: Iterable[Path], settle: timedelta
+) -> tuple[list[_File], list[Outcome]]:
+    """Which files to read, by number in the ledger, and what is already known of the others."""
+    known = {export.sha256: export for export in pass_.exports()}
+    number = 1 + max((export.number for export in known.values()), default=0)
+    files: dict[str, _File] = {}
+    outcomes: list[Outcome] = []
+    for path in paths:
+        seen = _look(pass_, path, settle)
+        if isinstance(seen, Outcome):
+            outcomes.append(seen)
+        elif seen.sha256 in files:
+            twin = files[seen.sha256].path.name
+            outcomes.append(Outcome(path.name, "taken already", f"has the same content as {twin}"))
+        else:
+            chosen = _choose(asked, path, seen, number, known.get(seen.sha256))
+            if isinstance(chosen, Outcome):
+                outcomes.append(chosen)
+            else:
+                files[seen.sha256] = chosen
+                number += chosen.number == number
+    return sorted(files.values(), key=lambda file: file.number), outcomes
+
+
+def _look(pass_: Pass, path: Path, settle: timedelta) -> Seen | Outcome:
+    """Size, time and content of a file; its content is read only if the others changed."""
+    try:
+        stat = path.stat()
+        if 0 <= time.time() - stat.st_mtime < settle.total_seconds():
+            return Outcome(path.name, "left for the next pass", "was changed a moment ago and may still grow")
+        known = pass_.seen(str(path.resolve()))
+        if known is not None and (known.size, known.mtime_ns) == (stat.st_size, stat.st_mtime_ns):
+            return known
+        fresh = Seen(stat.st_size, stat.st_mtime_ns, parts.sha256_of(path))
+    except OSError as fault:
+        return Outcome(path.name, "left for the next pass", f"cannot be read: {fault.strerror}")
+    pass_.record_seen(str(path.resolve()), fresh)
+    return fresh
+
+
+def _choose(asked: _Asked, path: Path, seen: Seen, number: int, entry: Export | None) -> _File | Outcome:
+    """Read a file, or say why not."""
+    if entry is None:
+        return _File(path, seen, number, asked.tags, asked.tags, None)
+    if entry.status == "set aside":
+        if entry.asked == asked.entry(asked.tags):
+            return Outcome(path.name, "set aside", entry.error)
+        return _File(path, seen, number, asked.tags, asked.tags, None)
+    added = _unasked_then(entry) & asked.tags
+    if not added:
+        return Outcome(path.name, "taken already", f"was taken in on {entry.taken_at} as {entry.name}")
+    return _File(path, seen, entry.number, added.union(entry.asked["tags"]), added, entry)
+
+
+def _unasked_then(entry: Export) -> frozenset[str]:
+    """Tags in an export that nobody asked for when it was taken in."""
+    return frozenset(tag for tag, _ in entry.account.get("unasked_tags", ()))
+
+
+def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> Account | Outcome:
+    """Read one export into the archive, or leave no trace of it there."""
+    try:
+        batches = open_export(
+            file.path, number=file.number, rules=asked.rules, wanted=file.tags, time_zone=None
+        )
+        for readings in batches:
+            archive.add({tag: series for tag, series in readings.items() if tag in file.added})
+    except ExportError as fault:
+        archive.drop()
+        return _left(file) or _set_aside(pass_, asked, file, str(fault))
+    left = _left(file)
+    if left is not None:
+        archive.drop()
+        return left
+    archive.keep()
+    return batches.account()
+
+
+def _left(file: _File) -> Outcome | None:
+    """Whether a file was changed while it was being read."""
+    try:
+        stat = file.path.stat()
+        same = (stat.st_size, stat.st_mtime_ns) == (file.seen.size, file.seen.mtime_ns)
+    except OSError:
+        same = False
+    words = "was changed while it was being read"
+    return None if same else Outcome(file.path.name, "left for the next pass", words)
+
+
+def _set_aside(pass_: Pass, asked: _Asked, file: _File, error: str) -> Outcome:
+    """Enter a file that cannot be read; one that could be read once keeps its entry."""
+    if file.before is None:
+        pass_.record_export(_entry(pass_, file, asked, status="set aside", error=error, account={}))
+    return Outcome(file.path.name, "set aside", error)
+
+
+def _enter(pass_: Pass, asked: _Asked, file: _File, account: Account, merged: Merged) -> Outcome:
+    """Enter a file that was taken in, with what became of its readings in the archive."""
+    earlier = file.before.account if file.before is not None else {}
+    settled = account.settled(
+        superseded=earlier.get("superseded", 0) + merged.superseded[file.number],
+        duplicates=earlier.get("duplicates", 0) + merged.duplicates[file.number],
+    )
+    told = json.loads(json.dumps(asdict(settled)))  # lists, as they come back from the ledger
+    pass_.record_export(_entry(pass_, file, asked, status="taken", error="", account=told))
+    return Outcome(file.path.name, "taken", settled.describe()[0], settled)
+
+
+def _entry(
+    pass_: Pass, file: _File, asked: _Asked, *, status: str, error: str, account: Mapping[str, Any]
+) -> Export:
+    """The ledger's entry of a file."""
+    return Export(
+        number=file.number,
+        sha256=file.seen.sha256,
+        name=file.path.name,
+        size=file.seen.size,
+        taken_at=database.now(),
+        status=status,
+        error=error,
+        asked=asked.entry(file.tags),
+        account=account,
+        made_by=pass_.number,
+    )
+
+
+def _amend(pass_: Pass, merged: Merged, entered: set[int]) -> None:
+    """Move readings of earlier exports that lost to this pass to where they now belong in their accounts."""
+    for export in pass_.exports():
+        superseded, duplicates = merged.superseded[export.number], merged.duplicates[export.number]
+        if export.number not in entered and superseded + duplicates:
+            account = {
+                **export.account,
+                "accepted": export.account["accepted"] - superseded - duplicates,
+                "superseded": export.account["superseded"] + superseded,
+                "duplicates": export.account["duplicates"] + duplicates,
+            }
+            pass_.record_export(replace(export, account=account))
+
+
+def _notes(pass_: Pass, asked: _Asked) -> tuple[str, ...]:
+    """What the archive lacks or holds otherwise than the units ask now."""
+    taken = [export for export in pass_.exports() if export.status == "taken"]
+    lacking = [export.name for export in taken if _unasked_then(export) & asked.tags]
+    rules = asked.entry(())["rules"]
+    otherwise = [export.name for export in taken if export.asked["rules"] != rules]
+    notes = []
+    if lacking:
+        notes.append(f"{_names(lacking)}: holds tags asked for only since; give it to a pass again")
+    if otherwise:
+        notes.append(f"{_names(otherwise)}: was read by other [exports] rules; take all into a new store")
+    return tuple(notes)
+
+
+def _names(names: Sequence[str]) -> str:
+    """A list of names that stays readable."""
+    more = f" and {len(names) - NAMES_SHOWN} more" if len(names) > NAMES_SHOWN else ""
+    return ", ".join(names[:NAMES_SHOWN]) + more
+
+
+def _by_name(outcome: Outcome) -> str:
+    return outcome.name
