@@ -7,13 +7,15 @@ it, when the operating condition it begins with changed, or when the unit file c
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, fields, replace
 from datetime import timedelta
 
 import numpy as np
 import pyarrow as pa
+from numpy.typing import NDArray
 
+from ingest.archive import SITE, STAGE, Span
 from ingest.cells import (
     DOWN,
     NOT_KNOWN,
@@ -29,13 +31,13 @@ from ingest.parts import month_edges, month_of, times_us
 from ingest.passes import Pass
 from ingest.readings import Readings, read_months
 from ingest.snapshot import Snapshot
+from monitor.layout import table_of
 from monitor.months import Month, Plan, work
 
 METHOD = "1"  # to be raised when the same readings and unit file give other numbers: all months become due
 PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored months were worked out with
 DERIVED = ("cells", "states", "figures-")
 _US = timedelta(microseconds=1)
-Span = tuple[int, int]  # first and last instant [us UTC], both included
 Progress = Callable[[str, int, int], None]
 
 
@@ -48,7 +50,9 @@ class Worked:
     solved: int = 0
 
 
-def catch_up(pass_: Pass, before: Snapshot, plan: Plan, touched: Span | None, progress: Progress) -> Worked:
+def catch_up(
+    pass_: Pass, before: Snapshot, plan: Plan, touched: Sequence[Span], progress: Progress
+) -> Worked:
     """Work out every month of a unit that is due and write it into the pass.
 
     Parameters
@@ -59,8 +63,8 @@ def catch_up(pass_: Pass, before: Snapshot, plan: Plan, touched: Span | None, pr
         The store as the last pass left it.
     plan : Plan
         Of the unit.
-    touched : tuple of int, optional
-        First and last time of the readings that came in or changed [us UTC].
+    touched : sequence of tuple of int
+        Spans first <= t < last in which readings of the unit came in or changed [us UTC], ascending.
     progress : callable
         Told the unit, months done and months due.
 
@@ -69,12 +73,17 @@ def catch_up(pass_: Pass, before: Snapshot, plan: Plan, touched: Span | None, pr
     Worked
     """
     unit = plan.unit.key
-    record = _record(plan, pass_.view())
-    if record is None:
+    known = before.months(unit, "cells")
+    anew = not known or _mark(plan) != _mark_of(before, unit)
+    if not (anew or touched):
         return Worked()
-    anew = _mark(plan) != _mark_of(before, unit)
+    record = _record(plan, pass_.view(), () if anew else known, touched)
     if anew:
         _forget(pass_, unit)
+        start = pa.array([0], pa.timestamp("us", "UTC"))
+        pass_.write(unit, PLAN_STAGE, PLAN_MONTH, pa.table({"start": start, "plan": [_mark(plan)]}))
+    if record is None:
+        return Worked()
     due = sorted(record.months if anew else _touched(plan, record, before, touched))
     worked = Worked()
     while due:
@@ -86,11 +95,7 @@ def catch_up(pass_: Pass, before: Snapshot, plan: Plan, touched: Span | None, pr
         following = next((later for later in record.months if later > month), None)
         if following and following not in due and _begins_otherwise(pass_, before, unit, following):
             due.insert(0, following)
-    if worked.months:
-        progress(unit, len(worked.months), len(worked.months))
-    if anew:
-        start = pa.array([0], pa.timestamp("us", "UTC"))
-        pass_.write(unit, PLAN_STAGE, PLAN_MONTH, pa.table({"start": start, "plan": [_mark(plan)]}))
+    progress(unit, len(worked.months), len(worked.months))
     return worked
 
 
@@ -109,41 +114,61 @@ class _Record:
         return first, max(first, min(after, self.last_us)), after
 
 
-def _record(plan: Plan, view: Snapshot) -> _Record | None:
-    """Tell what time the readings cover; None without readings."""
-    read = view.months(plan.unit.key, "readings")
+def _record(plan: Plan, view: Snapshot, known: Sequence[str], touched: Sequence[Span]) -> _Record | None:
+    """Tell what time the readings of a unit cover, given months that are known to have some."""
+    new = {month for first, last in touched for month in _months_of(first, last)}
+    inner = {*known, *new} if known else set()
+
+    def holds(month: str) -> bool:
+        inside = bool(known) and known[0] <= month <= known[-1]
+        return month in inner if inside else bool(_readings(plan, view, *month_edges(month)))
+
+    read = [month for month in view.months(SITE, STAGE) if holds(month)]
     if not read:
         return None
-    first, last = (
-        function(
-            times_us(view.read(plan.unit.key, "readings", first=edges[0], last=edges[1], columns=["time"]))
-        )
-        for function, edges in ((np.min, month_edges(read[0])), (np.max, month_edges(read[-1])))
-    )
+    first = min(int(series.time[0]) for series in _readings(plan, view, *month_edges(read[0])).values())
+    last = max(int(series.time[-1]) for series in _readings(plan, view, *month_edges(read[-1])).values())
     # The window that ends with a month belongs to the next one, whether that has readings or not.
     ended = {month_of(month_edges(month)[1]) for month in read if month_edges(month)[1] <= last}
-    return _Record(int(first) // plan.cell_us * plan.cell_us, int(last), tuple(sorted({*read, *ended})))
+    return _Record(first // plan.cell_us * plan.cell_us, last, tuple(sorted({*read, *ended})))
 
 
-def _touched(plan: Plan, record: _Record, before: Snapshot, touched: Span | None) -> Iterator[str]:
+def _months_of(first: int, last: int) -> Iterator[str]:
+    """List the months that share an instant with first <= t < last."""
+    month = month_of(first)
+    while month_edges(month)[0] < last:
+        yield month
+        month = month_of(month_edges(month)[1])
+
+
+def _touched(plan: Plan, record: _Record, before: Snapshot, touched: Sequence[Span]) -> set[str]:
     """List the months whose cells or windows the new readings can change."""
-    if touched is None:
-        return
-    low, high = touched[0] - reach(plan.unit) // _US, touched[1] + look_back(plan.unit) // _US
+    ahead, behind = reach(plan.unit) // _US, look_back(plan.unit) // _US
+    spans = [(first - ahead, last + behind) for first, last in touched]
     known = before.months(plan.unit.key, "cells")
-    if known:
-        old_first, old_last = (
-            times_us(before.read(plan.unit.key, "cells", first=edges[0], last=edges[1], columns=["start"]))[
-                place
-            ]
-            for place, edges in ((0, month_edges(known[0])), (-1, month_edges(known[-1])))
-        )
-        low = min(low, int(old_last)) if touched[1] > old_last else low
-        high = max(high, int(old_first)) if touched[0] < old_first else high
-    for month in record.months:
-        first, after = month_edges(month)
-        if first <= high + plan.lead_us and after >= low:
-            yield month
+    first, last = (_starts(before, plan.unit.key, month) for month in (known[0], known[-1]))
+    # Where the record grew at either end there are cells that were not there before.
+    spans += [(record.first_us, int(first[0])), (int(last[-1]) + plan.cell_us, record.last_us)]
+    due = {
+        month
+        for month in record.months
+        for low, high in spans
+        if low < high and month_edges(month)[0] <= high + plan.lead_us and month_edges(month)[1] >= low
+    }
+    behind_new = {month_of(month_edges(month)[1]) for month in due - set(known)}
+    return due | (behind_new & set(record.months))
+
+
+def _starts(view: Snapshot, unit: str, month: str) -> NDArray[np.int64]:
+    """Read the cell starts of a month [us UTC]."""
+    first, last = month_edges(month)
+    return times_us(view.read(unit, "cells", first=first, last=last, columns=["start"]))
+
+
+def _readings(plan: Plan, view: Snapshot, first: int, last: int) -> Readings:
+    """Read the readings of a unit with first <= t < last; tags without any are not there."""
+    tags = [one.tag for one in plan.unit.instruments if one.tag is not None]
+    return read_months(view.paths(SITE, STAGE, first=first, last=last), tags, first, last)
 
 
 def _work(pass_: Pass, plan: Plan, record: _Record, month: str) -> Month:
@@ -151,9 +176,7 @@ def _work(pass_: Pass, plan: Plan, record: _Record, month: str) -> Month:
     unit, view = plan.unit, pass_.view()
     first, last, after = record.edges(month)
     since, until = first - look_back(unit) // _US, last + reach(unit) // _US + 1
-    tags = [one.tag for one in unit.instruments if one.tag is not None]
-    files = view.paths(unit.key, "readings", first=since, last=until)
-    readings: Readings = read_months(files, tags, since, until)
+    readings = _readings(plan, view, since, until)
     carried = _carried_at(view, unit.key, first)
     return work(
         plan, readings, (first, last, after), before=_cells_before(view, plan, first), carried=carried
@@ -212,7 +235,7 @@ def _write(pass_: Pass, unit: str, month: str, made: Month) -> None:
     for stage in gone - made.stages.keys():
         pass_.write(unit, stage, month, pa.table({}))
     for stage, frame in made.stages.items():
-        pass_.write(unit, stage, month, pa.Table.from_pandas(frame.reset_index(), preserve_index=False))
+        pass_.write(unit, stage, month, table_of(frame))
 
 
 def _forget(pass_: Pass, unit: str) -> None:

@@ -11,16 +11,14 @@ import socket
 import sys
 from collections.abc import Iterable, Sequence
 from dataclasses import asdict
+from datetime import timedelta
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import click
 
-from ingest.errors import OutletError
+from ingest.errors import ExportError, OutletError
 from monitor.page.launch import DEFAULT_PORT, command
-
-if TYPE_CHECKING:
-    from monitor.run import PassResult
 
 FINE, YOURS, STOPPED = (
     0,
@@ -102,7 +100,8 @@ def demo(folder: Path, days: int, no_page: bool, port: int, as_json: bool) -> in
         _must_be_free(port)
     click.echo(f"Making {days} days of an invented plant in {folder} ...", err=True)
     made = exports.make(folder, days=days)
-    code = _take_in([exports.UNIT_FILE], folder / "store", made.exports, as_json)
+    # What was written a moment ago is whole: nothing else writes into this folder.
+    code = _take_in([exports.UNIT_FILE], folder / "store", made.exports, as_json, settle=timedelta(0))
     return code if no_page else _serve(folder / "store", [exports.UNIT_FILE], port)
 
 
@@ -112,19 +111,38 @@ def demo(folder: Path, days: int, no_page: bool, port: int, as_json: bool) -> in
 def check(file: Path, as_json: bool) -> None:
     """Judge a unit FILE: all its faults, or what its instruments let you see and check."""
     from ingest.unitfile import load
-    from monitor.judge import judge, lines
+    from monitor.judge import judge
+    from monitor.telling import judged
 
     found = judge(load(file))
-    _print(asdict(found), lines(found), as_json=as_json)
+    _print(asdict(found), judged(found), as_json=as_json)
+
+
+@outlet.command()
+@click.argument("export", type=_file)
+@click.option("--unit", "unit_file", type=_file, required=True, help="Unit file.")
+@_json
+def describe(export: Path, unit_file: Path, as_json: bool) -> None:
+    """Show how an EXPORT would be read: dialect, first rows, account. Nothing is stored."""
+    from ingest.exports import describe as described
+    from ingest.unitfile import load
+    from monitor.telling import described as told
+
+    unit = load(unit_file)
+    tags = frozenset(one.tag for one in unit.instruments if one.tag is not None)
+    if not export.is_file():
+        raise ExportError(f"{export}: there is no such file", remedy="Check the name.")
+    found = described(export, rules=unit.exports, wanted=tags, time_zone=unit.time_zone)
+    _print(asdict(found), told(found, unit), as_json=as_json)
 
 
 @outlet.command()
 @_units
 @_store
 @_json
-@click.argument("exports", type=_file, nargs=-1, required=True)
+@click.argument("exports", type=click.Path(path_type=Path), nargs=-1, required=True)
 def run(unit_files: Sequence[Path], store: Path, exports: Sequence[Path], as_json: bool) -> int:
-    """Take EXPORTS in and bring figures and episodes up to date, all at once or not at all."""
+    """Take EXPORTS (files or folders) in, then bring figures and episodes up to date."""
     return _take_in(unit_files, store, exports, as_json)
 
 
@@ -155,17 +173,21 @@ def verify(store: Path, as_json: bool) -> int:
     return YOURS if findings else FINE
 
 
-def _take_in(unit_files: Sequence[Path], store: Path, exports: Sequence[Path], as_json: bool) -> int:
+def _take_in(
+    unit_files: Sequence[Path], store: Path, exports: Sequence[Path], as_json: bool, **settings: timedelta
+) -> int:
     """Run one pass and tell what it did; an export that was set aside makes the exit code 2."""
     from ingest.unitfile import load
     from monitor.progress import Bar
-    from monitor.run import lines, run_pass
+    from monitor.run import run_pass
+    from monitor.telling import passed
 
+    units = [load(file) for file in unit_files]
     with Bar() as bar:
-        result: PassResult = run_pass([load(file) for file in unit_files], store, exports, progress=bar)
-    _print(asdict(result), lines(result), as_json=as_json)
+        result = run_pass(units, store, exports, progress=bar, **settings)
+    _print(asdict(result), passed(result), as_json=as_json)
     for one in result.set_aside:
-        click.echo(one.error, err=True)
+        click.echo(one.words, err=True)
     return YOURS if result.set_aside else FINE
 
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -79,27 +78,3 @@ def judge(unit: Unit) -> Judgement:
         figures=tuple(figure.name for figure in plan.figures),
         watches=tuple(watch.name for watch in unit.watches),
     )
-
-
-def lines(found: Judgement) -> Iterator[str]:
-    """Tell a judgement in words, line by line.
-
-    Parameters
-    ----------
-    found : Judgement
-        Of one unit.
-
-    Yields
-    ------
-    str
-    """
-    yield f"{found.name} [{found.unit}]: no faults"
-    yield f"streams        {', '.join(found.streams)}"
-    yield f"balance        {found.flows} flows, {found.balances} balances, {found.readings} readings"
-    yield f"freedom        {found.freedom} readings more than the flows need"
-    yield f"checked        {', '.join(found.checked) or 'none: no reading can be checked by the others'}"
-    for name in found.unchecked:
-        yield f"not checked    {name}; without it unseen: {', '.join(found.lost_with[name]) or 'nothing'}"
-    yield f"unseen         {', '.join(found.unseen) or 'nothing: every flow is determined'}"
-    yield f"figures        {', '.join(found.figures)}"
-    yield f"watches        {', '.join(found.watches) or 'none'}"

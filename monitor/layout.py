@@ -1,9 +1,10 @@
-"""How states and figures stand in the store: one flat column per quantity, and back again.
+r"""How states and figures stand in the store: one flat column per quantity, and back again.
 
 | stage | index | columns |
 |---|---|---|
-| states | start | `flow <stream>: <species>` [kmol/h], `adjustment <instrument>`, `adjustment_sd <instrument>`, objective, freedom, status, iterations |
-| figures-<window> | end | `<figure> \\| <mode> \\| <field>` |
+| states | start | `flow <stream>: <species>` [kmol/h], `adjustment <instrument>`, `adjustment_sd <instrument>`, |
+| | | objective, freedom, status, iterations |
+| figures-<window> | end | `<figure> \| <mode> \| <field>` |
 """
 
 from __future__ import annotations
@@ -13,6 +14,7 @@ from datetime import timedelta
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from ingest.balance import Problem
@@ -102,9 +104,13 @@ def flat(figures: pd.DataFrame) -> pd.DataFrame:
     DataFrame
         The same rows; columns `<figure> | <mode> | <field>`.
     """
-    names = [BAR.join(column) for column in figures.columns]
-    short = {name: np.float32 for name, kind in zip(names, figures.dtypes, strict=True) if kind == np.float64}
-    return figures.set_axis(names, axis=1).astype(short)
+    columns = {}
+    for column, series in figures.items():
+        values = series.to_numpy()
+        columns[BAR.join(map(str, column))] = (
+            values.astype(np.float32) if values.dtype == np.float64 else values
+        )
+    return pd.DataFrame(dict(zip(names, short, strict=True)), index=figures.index)
 
 
 def unflat(frame: pd.DataFrame) -> pd.DataFrame:
@@ -120,8 +126,29 @@ def unflat(frame: pd.DataFrame) -> pd.DataFrame:
     DataFrame
         Columns (figure, mode, field).
     """
-    levels = pd.MultiIndex.from_tuples([tuple(name.split(BAR)) for name in frame.columns], names=FIGURE_LEVELS)
+    levels = pd.MultiIndex.from_tuples(
+        [tuple(name.split(BAR)) for name in frame.columns], names=FIGURE_LEVELS
+    )
     return frame.set_axis(levels, axis=1)
+
+
+def table_of(frame: pd.DataFrame) -> pa.Table:
+    """Turn a frame into the table that the store keeps: its index as first column, NaN as NaN.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        Index of instants (UTC) with a name.
+
+    Returns
+    -------
+    pyarrow.Table
+    """
+    label = pa.array(pd.DatetimeIndex(frame.index).as_unit("us").asi8, pa.int64()).cast(
+        pa.timestamp("us", "UTC")
+    )
+    columns = {str(name): pa.array(column.to_numpy()) for name, column in frame.items()}
+    return pa.table({str(frame.index.name): label, **columns})
 
 
 def utc_index(time_us: NDArray[np.int64], name: str) -> pd.DatetimeIndex:

@@ -1,0 +1,153 @@
+"""One pass through everything: exports into readings, each unit's due months, its episodes; one commit."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from datetime import datetime, timedelta
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from ingest.intake import SETTLE, Outcome, take_in
+from ingest.ledger import Store
+from ingest.passes import Pass
+from ingest.snapshot import Snapshot
+from ingest.unit import Unit
+from monitor.catchup import Worked, catch_up
+from monitor.drift import unit_episodes
+from monitor.layout import BAR, figure_stage, unflat
+from monitor.months import plan_of
+from monitor.windows import MODES
+
+Progress = Callable[[str, int, int], None]
+
+
+@dataclass(frozen=True, slots=True)
+class OpenEpisode:
+    """An episode not yet cleared; `side` is 'low' or 'high', `limit` in the figure's unit, `raised` UTC."""
+
+    watch: str
+    side: str
+    limit: float
+    priority: str
+    raised: datetime
+
+
+@dataclass(frozen=True, slots=True)
+class UnitResult:
+    """What a pass did for one unit; `raised` counts all its episodes, `open` are those not yet cleared."""
+
+    unit: str
+    time_zone: str
+    months: tuple[str, ...]
+    cells: int
+    solved: int
+    raised: int
+    open: tuple[OpenEpisode, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class PassResult:
+    """What a pass did: each export with its account, each unit, notes, processor time by step [s]."""
+
+    number: int
+    exports: tuple[Outcome, ...]
+    units: tuple[UnitResult, ...]
+    notes: tuple[str, ...]
+    processor_s: dict[str, float]
+
+    @property
+    def set_aside(self) -> tuple[Outcome, ...]:
+        """Give the exports that could not be read."""
+        return tuple(one for one in self.exports if one.status == "set aside")
+
+
+def run_pass(
+    units: Sequence[Unit],
+    store: Path,
+    exports: Sequence[Path],
+    *,
+    progress: Progress,
+    settle: timedelta = SETTLE,
+) -> PassResult:
+    """Take exports in and bring every unit up to date: all of it becomes visible at once, or nothing does.
+
+    Parameters
+    ----------
+    units : sequence of Unit
+        All units of the store.
+    store : Path
+        Folder; made if it is not there.
+    exports : sequence of Path
+        Files or folders.
+    progress : callable
+        Told what is being worked on, steps done, steps in all.
+    settle : timedelta
+        An export changed more recently is left for the next pass.
+
+    Returns
+    -------
+    PassResult
+    """
+    plans = [plan_of(unit) for unit in units]
+    with Store(store).begin() as pass_:
+        clock = [time.process_time()]
+        before = pass_.view()
+        taken = take_in(pass_, units, exports, settle=settle, progress=lambda *at: progress("exports", *at))
+        clock.append(time.process_time())
+        worked = [catch_up(pass_, before, plan, taken.touched[plan.unit.key], progress) for plan in plans]
+        clock.append(time.process_time())
+        told = tuple(_tell(pass_, plan.unit, one) for plan, one in zip(plans, worked, strict=True))
+        clock.append(time.process_time())
+    steps = dict(zip(("exports", "months", "episodes"), np.diff(clock).round(3).tolist(), strict=True))
+    return PassResult(pass_.number, taken.outcomes, told, taken.notes, steps)
+
+
+def episodes_of(view: Snapshot, unit: Unit) -> pd.DataFrame:
+    """Find the episodes of a unit in the stored figures; the whole record is looked at.
+
+    Parameters
+    ----------
+    view : Snapshot
+        With figures and cells of the same pass.
+    unit : Unit
+        Gives the watches.
+
+    Returns
+    -------
+    DataFrame
+        As `drift.unit_episodes` gives it.
+    """
+    codes = view.read(unit.key, "cells", columns=["operating"]).column("operating")
+    frames = {}
+    for window in sorted({watch.window for watch in unit.watches}):
+        watched = [watch for watch in unit.watches if watch.window == window]
+        names = [BAR.join((w.figure, MODES[w.steady], f)) for w in watched for f in ("value", "half_width")]
+        table = view.read(unit.key, figure_stage(window), columns=["end", *dict.fromkeys(names)])
+        frames[window] = unflat(table.to_pandas(ignore_metadata=True).set_index("end"))
+    return unit_episodes(unit, frames, codes.to_numpy().astype(np.int8))
+
+
+def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
+    """Bring a unit's episodes up to date and tell what became of it."""
+    view = pass_.view()
+    if view.months(unit.key, "cells"):
+        pass_.replace_episodes(unit.key, episodes_of(view, unit))
+    episodes = pass_.view().episodes(unit.key)
+    still: Any = episodes[episodes["cleared"].isna()] if len(episodes) else episodes
+    return UnitResult(
+        unit=unit.key,
+        time_zone=unit.time_zone,
+        months=worked.months,
+        cells=worked.cells,
+        solved=worked.solved,
+        raised=len(episodes),
+        open=tuple(
+            OpenEpisode(one.watch, one.side, one.limit, one.priority, one.raised.to_pydatetime())
+            for one in still.itertuples()
+        ),
+    )
