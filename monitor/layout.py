@@ -1,9 +1,9 @@
-r"""How states and figures stand in the store: one flat column per quantity, and back again.
+rr"""How states and figures stand in the store: one flat column per quantity, and back again.
 
 | stage | index | columns |
 |---|---|---|
-| states | start | `flow <stream>: <species>` [kmol/h], `adjustment <instrument>`, `adjustment_sd <instrument>`, |
-| | | objective, freedom, status, iterations |
+| states | start | `flow <stream>: <species>` [kmol/h], `adjustment <instrument>`, |
+| | | `adjustment_sd <instrument>`, objective, freedom, status, iterations |
 | figures-<window> | end | `<figure> \| <mode> \| <field>` |
 """
 
@@ -104,12 +104,9 @@ def flat(figures: pd.DataFrame) -> pd.DataFrame:
     DataFrame
         The same rows; columns `<figure> | <mode> | <field>`.
     """
-    columns = {}
-    for column, series in figures.items():
-        values = series.to_numpy()
-        columns[BAR.join(map(str, column))] = (
-            values.astype(np.float32) if values.dtype == np.float64 else values
-        )
+    names = [BAR.join(levels) for levels in figures.columns.to_list()]
+    arrays = [series.to_numpy() for _, series in figures.items()]
+    short = [one.astype(np.float32) if one.dtype == np.float64 else one for one in arrays]
     return pd.DataFrame(dict(zip(names, short, strict=True)), index=figures.index)
 
 
