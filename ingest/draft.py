@@ -111,8 +111,8 @@ def _open_channels(analyzer: Entry, draft: Draft) -> list[Problem]:
         own, faults = read_table("analyzer.channel", table, place)
         channel = _channel(analyzer, own, species)
         draft.many["instrument"].append(channel)
-        known = rows("analyzer")
-        faults += [missing(known[key], channel.at(key)) for key in ("kind", "unit") if channel.lacks(key)]
+        if channel.lacks("unit"):
+            faults.append(missing(rows("analyzer")["unit"], channel.at("unit")))
         problems += faults
     return problems
 
@@ -123,9 +123,9 @@ def _channel(analyzer: Entry, own: Entry, species: str) -> Entry:
     values = {"dead_time": timedelta(0), "species": (species,), **inherited, **own.values}
     if name := analyzer.get("name"):
         values |= {"name": f"{name} {species}", "analyzer": name}
-    stated = own.values.keys() | own.refused
+    stated = own.values.keys() | own.told
     places = {key: analyzer.at(key) for key in rows("analyzer") if key not in stated | {"name", "channel"}}
-    return Entry(own.place, values, places, analyzer.refused - own.values.keys() | own.refused)
+    return Entry(own.place, values, places, (analyzer.told - own.values.keys()) | own.told)
 
 
 def _read_formulas(draft: Draft) -> list[Problem]:

@@ -166,7 +166,7 @@ def _keys_go_with_the_kind(entry: Entry, _draft: Draft) -> Iterator[Problem]:
 
 def _a_reading_comes_from_somewhere(entry: Entry, _draft: Draft) -> Iterator[Problem]:
     """A reading has either a tag or a declared value."""
-    if entry.lacks("tag") and entry.lacks("value"):
+    if entry.lacks("tag") and entry.lacks("value") and entry.lacks("analyzer"):
         what, remedy = (
             "has neither tag nor value",
             'write tag = "..." of the historian, or value = a constant',

@@ -17,9 +17,10 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError, available_timezones
 
 from ingest import quantities
 from ingest.errors import OutletError, Problem
-from ingest.unit import KINDS, PRIORITIES, REACTORS, SAMPLINGS
+from ingest.unit import FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, SAMPLINGS
 
 BASES = ("dry", "wet", "as analysed")
+ANALYZED = (*FRACTION_KINDS, "volume fraction", "species flow")
 QUALITIES = ("words", "opc ua", "opc da")
 
 
@@ -75,15 +76,20 @@ _INSTRUMENT = (
 )  # fmt: skip
 
 
+_SHARED: tuple[str, ...] = ("unit", "basis", "left_out", "random", "systematic", "range")
+_SHARED += ("cycle", "dead_time", "max_age", "sampling")
+_EITHER = ("unit", "random", "systematic", "cycle", "max_age", "sampling")
+
+
 def _again(section: str, names: Iterable[str]) -> tuple[Key, ...]:
-    """Repeat rows of the instrument for analyzers and channels, where none is needed by itself."""
-    return tuple(
-        replace(row, section=section, needed="", default=None) for row in _INSTRUMENT if row.key in set(names)
-    )
+    """Repeat rows of the instrument for analyzers and channels: what one does not state, the other may."""
+    again = []
+    for row in (row for row in _INSTRUMENT if row.key in names):
+        needed = "at the analyzer or each channel" if row.key in _EITHER else row.needed
+        example = '"mol%"' if row.key == "unit" else row.example
+        again.append(replace(row, section=section, needed=needed, example=example, default=None))
+    return tuple(again)
 
-
-_COMMON: tuple[str, ...] = ("kind", "unit", "stream", "basis", "left_out", "random", "systematic", "range")
-_COMMON += ("cycle", "dead_time", "max_age", "sampling")
 
 TABLE: tuple[Key, ...] = (
     Key("unit", "name", "text", "name of the reactor as people say it", '"Unit 2"', "always"),
@@ -105,9 +111,13 @@ TABLE: tuple[Key, ...] = (
     Key("uncertainty", "relative_pct", "number", "part in percent of the reading", "0.5", default=0.0, low=0, high=100),
     Key("uncertainty", "floor", "number", "part in the unit of the reading", "0.002", default=0.0, low=0),
     Key("analyzer", "name", "text", "name of the analyzer; its instruments are called name and species", '"AI-220"', "always"),
-    *_again("analyzer", _COMMON),
+    Key("analyzer", "stream", "text", "stream that the sample is taken from", '"outlet"', "always"),
+    Key("analyzer", "kind", "choice", "what the readings are", '"mole fraction"', "always", choices=ANALYZED),
+    *_again("analyzer", _SHARED),
     Key("analyzer", "channel", "channels", "tag of each species, or a table of what differs for it", '{ oxygen = "AI-220.O2" }', "always"),
-    *_again("analyzer.channel", ("tag", "species", *_COMMON)),
+    Key("analyzer.channel", "tag", "text", "historian tag of the channel", '"AI-220.O2"', "always"),
+    Key("analyzer.channel", "species", "texts", "species counted together; left out, the one the channel is named for", '["oxygen"]'),
+    *_again("analyzer.channel", _SHARED),
     Key("shared", "name", "text", "name of the common error", '"AI-220 span"', "always"),
     Key("shared", "instruments", "texts", "instruments it moves together", '["FI-201", "FI-203"]', "unless analyzer is stated"),
     Key("shared", "analyzer", "text", "analyzer whose channels it moves together", '"AI-220"', "unless instruments is stated"),
@@ -141,7 +151,7 @@ class Entry:
     place: str
     values: dict[str, Any] = field(default_factory=dict)
     places: dict[str, str] = field(default_factory=dict)  # where it is not place.key
-    refused: frozenset[str] = frozenset()
+    told: frozenset[str] = frozenset()  # keys that are refused or missing, and were told so
 
     def get(self, key: str) -> Any:
         """Give a value, or None when it is absent or was refused."""
@@ -152,8 +162,8 @@ class Entry:
         return self.places.get(key, f"{self.place}.{key}")
 
     def lacks(self, key: str) -> bool:
-        """Tell whether a key was not written at all, so that a refused value is not told twice."""
-        return key not in self.values and key not in self.refused
+        """Tell whether a key is absent and nobody was told, so that one fault is told once."""
+        return key not in self.values and key not in self.told
 
 
 def rows(section: str) -> dict[str, Key]:
@@ -225,10 +235,10 @@ def read_table(section: str, table: object, place: str) -> tuple[Entry, list[Pro
     for row in known.values():
         if row.key in table or row.default is not None:
             faults = _read_value(row, table.get(row.key, row.default), entry)
-            entry.refused |= {row.key} if faults else set()
-            problems += faults
-        elif row.needed == "always":
-            problems.append(missing(row, f"{place}.{row.key}"))
+        else:
+            faults = [missing(row, f"{place}.{row.key}")] if row.needed == "always" else []
+        entry.told |= {row.key} if faults else set()
+        problems += faults
     return entry, problems
 
 
@@ -323,13 +333,25 @@ def _duration(value: object, row: Key) -> Any:
     span = quantities.duration(value)
     if not row.low <= span.total_seconds() <= row.high:
         raise OutletError(
-            f"must be {_span(row.low)} to {_span(row.high)}, got {quantities.duration_words(span)}",
+            f"must be {span_words(row.low)} to {span_words(row.high)}, got {quantities.duration_words(span)}",
             remedy=f"write for example {row.key} = {row.example}",
         )
     return span
 
 
-def _span(seconds: float) -> str:
+def span_words(seconds: float) -> str:
+    """Say the bound of a time span.
+
+    Parameters
+    ----------
+    seconds : float
+        As in the table [s].
+
+    Returns
+    -------
+    str
+        For example '30 d'.
+    """
     return quantities.duration_words(timedelta(seconds=seconds))
 
 

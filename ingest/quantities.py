@@ -61,7 +61,7 @@ REFERENCES = {
     "0 degC, 101.325 kPa": "DIN 1343",
     "15 degC, 101.325 kPa": "ISO 13443",
     "60 degF, 14.696 psia": "customary in the United States",
-    "0 degC, 100 kPa": "IUPAC standard state of gases",
+    "0 degC, 100 kPa": "IUPAC standard temperature and pressure, 1982",
     "20 degC, 101.325 kPa": "",
     "25 degC, 101.325 kPa": "",
 }

@@ -1,0 +1,141 @@
+# ruff: noqa: E501 -- sentences of a document stand whole
+"""The reference of unit file keys, made from the program's own tables.
+
+After a change of the tables write it anew from the top of the repository:
+`python -m tests.keys_reference > config/README.md`
+"""
+
+from __future__ import annotations
+
+import sys
+
+from ingest import keys, quantities
+from ingest.instrumentrules import KIND_RULES
+from ingest.keys import Key
+
+HEADINGS = {
+    "unit": "[unit]",
+    "chemistry": "[chemistry]",
+    "stream": "[[stream]]",
+    "instrument": "[[instrument]]",
+    "uncertainty": "uncertainty",
+    "analyzer": "[[analyzer]]",
+    "analyzer.channel": "[analyzer.channel]",
+    "shared": "[[shared]]",
+    "operating": "[operating]",
+    "catalyst": "[catalyst]",
+    "watch": "[[watch]]",
+    "exports": "[exports]",
+}
+START = """# The unit file
+
+A unit file (TOML) describes one reactor. `demo.toml` in this folder is a whole example. `outlet check` tells all faults
+of a file at once, each with its key and what to write. Sections in double brackets may stand several times. Nothing is
+guessed: a key without a default that is needed has to be there.
+
+Time spans are a number and s, min, h or d in quotes: `"10min"`, `"8h"`. Formulas are symbols, counts and round brackets,
+fractions allowed: `"C4H8"`, `"(C2H5)2O"`, `"CH1.8O0.5N0.2"`; molar masses use the IUPAC/CIAAW 2021 abridged atomic
+weights.
+"""
+ABOUT = {
+    "instrument": "Anything that gives a reading about a stream. Which keys it needs depends on its kind, see below.",
+    "uncertainty": "What `random` and `systematic` hold. The standard uncertainty of a reading is the sum of both parts;"
+    " `{}` states zero, and one of the two has to be more.",
+    "analyzer": "Several readings of one sample. Each channel becomes an instrument called analyzer and species,"
+    " such as `AI-220 oxygen`. What the analyzer states holds for all channels that do not state it themselves.",
+    "analyzer.channel": "One line for each species: its tag, or a table with `tag` and whatever differs from the"
+    " analyzer. A channel that counts several species together names them in `species`.",
+    "shared": "A systematic error that moves several instruments together, such as the span of an analyzer.",
+    "operating": "How the load tells whether the reactor is down, starting, turned down or running.",
+    "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"
+    " inside by `deadband` for `off_delay` ends it.",
+    "exports": "What the exports themselves do not tell.",
+}
+
+
+def reference() -> str:
+    """The whole of config/README.md."""
+    sections = [_section(name, heading) for name, heading in HEADINGS.items()]
+    return "\n".join([START, *sections, _kinds(), _references()])
+
+
+def _section(name: str, heading: str) -> str:
+    lines = [f"## {heading}", ""]
+    if name in ABOUT:
+        lines += [ABOUT[name], ""]
+    lines += ["| key | value | needed | meaning | example |", "|---|---|---|---|---|"]
+    lines += [_row(row) for row in keys.rows(name).values()]
+    return "\n".join([*lines, ""])
+
+
+def _row(row: Key) -> str:
+    cells = (f"`{row.key}`", _value(row), _needed(row), row.sentence, f"`{row.key} = {row.example}`")
+    return f"| {' | '.join(cells)} |"
+
+
+def _value(row: Key) -> str:
+    if row.choices:
+        return "one of " + ", ".join(f'"{word}"' for word in row.choices)
+    form = {
+        "uncertainty": "table, see uncertainty",
+        "texts": "list of texts",
+        "durations": "list of time spans",
+    }
+    form |= {
+        "duration": "time span",
+        "pair": "two numbers",
+        "zone": "IANA time zone",
+        "moment": "date and time",
+    }
+    form |= {"formulas": "table of texts", "channels": "table"}
+    return form.get(row.form, row.form) + _bounds(row)
+
+
+def _bounds(row: Key) -> str:
+    if row.low == float("-inf"):
+        return ""
+    if row.form.startswith("duration"):
+        return f", {keys.span_words(row.low)} to {keys.span_words(row.high)}"
+    return f", {row.low:g} to {row.high:g}" if row.high < float("inf") else f", {row.low:g} or more"
+
+
+def _needed(row: Key) -> str:
+    if row.needed:
+        return row.needed
+    if row.default is None or row.default == []:
+        return "no"
+    words = row.default if isinstance(row.default, str) else str(row.default).lower().replace("'", "")
+    return f"no; {words}"
+
+
+def _kinds() -> str:
+    lines = ["## Kinds of instrument and their units", ""]
+    lines += [
+        "A bare % is refused. ppm means mol per million mol. Pressures are absolute unless the unit says gauge"
+    ]
+    lines += [
+        "(`kPa gauge`, `barg`, `psig`). Other units are understood where they have one meaning only, such as"
+    ]
+    lines += ["`t/day`, `mmHg` or `MMscfd`.", ""]
+    lines += ["| kind | needs | may have | common units |", "|---|---|---|---|"]
+    for kind, rule in KIND_RULES.items():
+        units = quantities.fitting("mole fraction" if kind == "volume fraction" else kind).replace("'", "")
+        needs, may = (", ".join(f"`{key}`" for key in group) for group in (rule.needs, rule.may))
+        lines.append(f"| {kind} | {needs} | {may} | {units or 'any'} |")
+    return "\n".join([*lines, ""])
+
+
+def _references() -> str:
+    lines = ["## Reference conditions", ""]
+    lines += [
+        "A volume flow states the temperature and absolute pressure that its cubic metre or cubic foot is at;"
+    ]
+    lines += ["the gas is taken as ideal. Any such pair is read; these are the usual ones:", ""]
+    lines += ["| reference | source | kmol in 1 m3 |", "|---|---|---|"]
+    for text, source in quantities.REFERENCES.items():
+        lines.append(f'| `"{text}"` | {source} | {quantities.kmol_per_m3(text):.7f} |')
+    return "\n".join([*lines, ""])
+
+
+if __name__ == "__main__":
+    sys.stdout.write(reference())
