@@ -1,4 +1,4 @@
-rr"""How states and figures stand in the store: one flat column per quantity, and back again.
+r"""How states and figures stand in the store: one flat column per quantity, and back again.
 
 | stage | index | columns |
 |---|---|---|
