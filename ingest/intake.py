@@ -29,7 +29,10 @@ Progress = Callable[[int, int], None]  # bytes done, bytes in all
 
 @dataclass(frozen=True, slots=True)
 class Outcome:
-    """What became of one file: `words` says it in one line; `account` is None unless it was read now."""
+    """What became of one file.
+
+    `words` says it in one line, an error in two; `account` is None unless the file was taken in now.
+    """
 
     name: str
     status: Status
