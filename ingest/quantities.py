@@ -71,7 +71,7 @@ _PER = {"h": "/h", "d": "/day", "m": "/min"}
 _GAUGE = re.compile(r"^(.+?)\s?(?:\bgauge|\(g\)|(?<=psi|bar|kPa|MPa)g)$")
 _ABSOLUTE = re.compile(r"^(.+?)\s?(?:\babs(?:olute)?|\(a\)|(?<=psi|bar|kPa|MPa)a)$")
 _REFERENCE = re.compile(r"^([\d.]+) ?(degC|degF|K), ?([\d.]+) ?([A-Za-z]+)$")
-_DURATION = re.compile(r"^(\d+(?:\.\d+)?) ?(s|min|h|d)$")
+_DURATION = re.compile(r"^(\d{1,7}(?:\.\d{1,6})?) ?(s|min|h|d)$")
 _SECONDS = {"s": 1, "min": 60, "h": 3600, "d": 86400}
 
 
@@ -231,7 +231,7 @@ def _pressure(text: str, atmosphere: str | None) -> Scale:
 
 def _atmosphere_kpa(atmosphere: str) -> float:
     """Read the atmospheric pressure of the site."""
-    match = re.match(r"^([\d.]+) ?(.+)$", atmosphere.strip())
+    match = re.match(r"^([\d.]+) ?([A-Za-z].*)$", atmosphere.strip())
     kpa = _number(match[1], atmosphere) * _pressure(match[2], None).to_base if match else 0.0
     if not 50 <= kpa <= 110:
         raise OutletError(
@@ -349,4 +349,4 @@ def duration_words(span: timedelta) -> str:
         length = timedelta(seconds=_SECONDS[unit])
         if span >= least and span % length == timedelta(0):
             return f"{span // length} {unit}"
-    return f"{span.total_seconds():g} s"
+    return f"{span.total_seconds():.15g} s"
