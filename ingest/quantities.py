@@ -71,7 +71,7 @@ _PER = {"h": "/h", "d": "/day", "m": "/min"}
 _GAUGE = re.compile(r"^(.+?)\s?(?:\bgauge|\(g\)|(?<=psi|bar|kPa|MPa)g)$")
 _ABSOLUTE = re.compile(r"^(.+?)\s?(?:\babs(?:olute)?|\(a\)|(?<=psi|bar|kPa|MPa)a)$")
 _REFERENCE = re.compile(r"^([\d.]+) ?(degC|degF|K), ?([\d.]+) ?([A-Za-z]+)$")
-_DURATION = re.compile(r"^(\d{1,7}(?:\.\d{1,6})?) ?(s|min|h|d)$")
+_DURATION = re.compile(r"^(\d{1,9}(?:\.\d{1,6})?) ?(s|min|h|d)$")
 _SECONDS = {"s": 1, "min": 60, "h": 3600, "d": 86400}
 
 
