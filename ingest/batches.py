@@ -163,7 +163,8 @@ class Batches:
             ]
             self._leave(spare)
         small = len(known) < 2**15  # 16 bits sort faster
-        return np.array([*table, _NAMELESS], np.int16 if small else np.int32)[codes], known
+        lookup: Places = np.array([*table, _NAMELESS], np.int16 if small else np.int32)
+        return lookup[codes], known
 
     def _leave(self, spare: list[tuple[str, int]]) -> None:
         """Count readings of tags nobody asked for."""

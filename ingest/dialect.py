@@ -224,7 +224,7 @@ def decide_separator(export: str, lines: Sequence[str], first_row: int) -> str:
         raise ExportError(
             f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
         )
-    fits = [s for s, w in splits.items() if 2 * w[1:].count(w[0]) > len(w) - 1]
+    fits = [s for s, w in splits.items() if 2 * w[1:].count(w[0]) >= len(w) - 1]
     fits = [s for s in fits if _roles(fields(lines[0], s), frozenset())["time"]] or fits
     if len(fits) == 1:
         return fits[0]
@@ -250,7 +250,12 @@ def fields(line: str, separator: str) -> list[str]:
     list of str
         Without the blanks around each.
     """
-    return [name.strip() for name in next(csv.reader([line], delimiter=separator), [])]
+    if '"' not in line:
+        return [name.strip() for name in line.split(separator)]
+    try:
+        return [name.strip() for name in next(csv.reader([line], delimiter=separator), [])]
+    except csv.Error:  # a stray carriage return, or a field beyond all measure
+        return [line]
 
 
 def decide_layout(place: str, header: Sequence[str], wanted: Collection[str], look: Look) -> Layout:
@@ -450,7 +455,7 @@ def decide_numbers(place: str, columns: Sequence[int], look: Look, rules: Export
     """
     missing = frozenset(word.strip().casefold() for word in (*MISSING_WORDS, *rules.missing_words))
     grouped = ""
-    for block in look(columns):
+    for block in look(columns) if columns else ():
         written = [column for column in block if is_text(column.type)]
         if not written:
             return Numbers(".", missing)

@@ -110,7 +110,7 @@ def blocks(path: Path, codec: str) -> Iterator[tuple[int, bytes]]:
             _refuse_long_line(path, row + data.count(b"\n"))
         if cut:
             yield row, _checked(path, row, data[:cut])
-            row += data.count(b"\n", 0, cut)
+            row += int(np.count_nonzero(np.frombuffer(data, np.uint8, cut) == _LF))
     if rest:
         yield row, _checked(path, row, rest + b"\n")
 
@@ -132,17 +132,24 @@ def screened(row: int, data: bytes, separator: str) -> Lines:
     Lines
         Blank lines are no rows and go without mention; the others are told as faults.
     """
-    rows = np.arange(row, row + data.count(b"\n"))
-    returns = data.count(b"\r")
-    clean = b'"' not in data and returns == data.count(b"\r\n") and not _may_hold_blank(data)
-    if clean:
-        return Lines(data, rows)
     raw = np.frombuffer(data, np.uint8)
-    starts = np.append(0, np.flatnonzero(raw == _LF)[:-1] + 1)
+    ends = np.flatnonzero(raw == _LF)
+    rows = np.arange(row, row + len(ends))
+    starts = np.append(0, ends[:-1] + 1)
+    blank = bool(np.any(raw[starts] <= _SPACE))  # perhaps: a closer look follows
+    if not blank and _whole_line_ends(data, raw, ends) and _well_quoted(data, raw, ord(separator)):
+        return Lines(data, rows)
+    return _sifted(data, raw, starts, rows, ord(separator))
+
+
+def _sifted(
+    data: bytes, raw: NDArray[np.uint8], starts: NDArray[np.int64], rows: NDArray[np.int64], separator: int
+) -> Lines:
+    """A block without its blank and doubtful lines."""
     stray = np.zeros(len(raw), np.int32)
     stray[:-1] = (raw[:-1] == _CR) & (raw[1:] != _LF)
     broken = np.add.reduceat(stray, starts) > 0
-    misquoted = _misquoted(raw, starts, ord(separator)) & ~broken
+    misquoted = _misquoted(raw, starts, separator) & ~broken
     blank = np.add.reduceat((raw > _SPACE).astype(np.int32), starts) == 0
     leave = broken | misquoted | blank
     lengths = np.diff(starts, append=len(raw))
@@ -205,21 +212,39 @@ def _misquoted(raw: NDArray[np.uint8], starts: NDArray[np.int64], separator: int
     at = np.flatnonzero(quote)
     line = np.searchsorted(starts, at, side="right") - 1
     nth = np.arange(len(at)) - (np.cumsum(counts) - counts)[line]
-    opens = nth % 2 == 0
-    before = np.where(at > 0, raw[at - 1], _LF)
-    after = raw[at + 1]
-    fits = np.where(
-        opens,
-        (before == separator) | (before == _LF) | (before == _QUOTE),
-        (after == separator) | (after == _LF) | (after == _CR) | (after == _QUOTE),
-    )
+    beside = np.where(nth % 2 == 0, np.where(at > 0, raw[at - 1], _LF), raw[at + 1])
+    fits = _ends_field(beside, separator)
     wrong: NDArray[np.bool_] = counts % 2 == 1
     wrong[line[~fits]] = True
     return wrong
 
 
-def _may_hold_blank(data: bytes) -> bool:
-    return data[:1] in b" \t\r\n" or any(pair in data for pair in (b"\n\n", b"\n\r", b"\n ", b"\n\t"))
+def _well_quoted(data: bytes, raw: NDArray[np.uint8], separator: int) -> bool:
+    """Whether all quotes of a block open and close with their field, on their line."""
+    if b'"' not in data:
+        return True
+    at = np.flatnonzero((raw == _QUOTE) | (raw == _LF))
+    quote = raw[at] == _QUOTE
+    line_end = np.flatnonzero(~quote)
+    if np.any((line_end - np.arange(len(line_end))) % 2):  # quotes before each line end
+        return False
+    at = at[quote]
+    before = np.where(at[0::2] > 0, raw[at[0::2] - 1], _LF)
+    return bool(np.all(_ends_field(before, separator)) and np.all(_ends_field(raw[at[1::2] + 1], separator)))
+
+
+def _ends_field(byte: NDArray[np.uint8], separator: int) -> NDArray[np.bool_]:
+    """Whether a quote beside this byte is at the edge of a field, or one of a pair that means a quote."""
+    table = np.zeros(256, np.bool_)
+    table[[separator, _LF, _CR, _QUOTE]] = True
+    return table[byte]
+
+
+def _whole_line_ends(data: bytes, raw: NDArray[np.uint8], ends: NDArray[np.int64]) -> bool:
+    """Whether carriage returns stand before line feeds only."""
+    if b"\r" not in data:
+        return True
+    return bool(np.count_nonzero(raw == _CR) == np.count_nonzero(raw[np.maximum(ends - 1, 0)] == _CR))
 
 
 def _decoded(path: Path, codec: str) -> Iterator[bytes]:
@@ -235,11 +260,15 @@ def _decoded(path: Path, codec: str) -> Iterator[bytes]:
                     remedy="Export shorter spans of time into several files.",
                 )
             yield chunk if codec == "utf-8" else _transcoded(path, decoder, chunk)
+    if codec != "utf-8":
+        yield _transcoded(path, decoder, b"", final=True)
 
 
-def _transcoded(path: Path, decoder: codecs.IncrementalDecoder, chunk: bytes) -> bytes:
+def _transcoded(
+    path: Path, decoder: codecs.IncrementalDecoder, chunk: bytes, *, final: bool = False
+) -> bytes:
     try:
-        return decoder.decode(chunk).encode()
+        return decoder.decode(chunk, final).encode()
     except UnicodeError as error:
         raise ExportError(
             f"{path.name}: is not the text it begins as ({error})", remedy="Save the export as UTF-8."

@@ -235,8 +235,7 @@ def _begin(path: Path) -> tuple[TextFile, str]:
     """Encoding, separator and header."""
     with opened(path) as raw:
         codec, encoding = decide_encoding(path.name, raw.read(BLOCK))
-    row, data = next(blocks(path, codec))
-    lines = [(row + i, line.rstrip("\r")) for i, line in enumerate(_first(data)) if line.strip()]
+    lines = _first_lines(path, codec)
     if not lines:
         raise ExportError(f"{path.name}: holds blank lines only", remedy="Export it again.")
     header_row, header = lines[0]
@@ -254,9 +253,15 @@ def _begin(path: Path) -> tuple[TextFile, str]:
     return TextFile(path, codec, separator, tuple(fields(header, separator)), header_row), encoding
 
 
-def _first(data: bytes) -> list[str]:
-    """The first lines of a block, and enough blank ones before them to find a header at all."""
-    return data.decode().split("\n", _FIRST_LINES)[:_FIRST_LINES]
+def _first_lines(path: Path, codec: str) -> list[tuple[int, str]]:
+    """The header and the first rows, blank lines left out, each with its number."""
+    lines: list[tuple[int, str]] = []
+    for row, data in blocks(path, codec):
+        head = data.decode().split("\n", _FIRST_LINES)[:_FIRST_LINES]
+        lines += [(row + i, line.rstrip("\r")) for i, line in enumerate(head) if line.strip()]
+        if len(lines) > 1:
+            break
+    return lines
 
 
 def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int, Any]:

@@ -60,6 +60,10 @@ class Numbers:
             column = column.dictionary_decode()
         if is_text(column.type):
             return self._from_text(column)
+        if pa.types.is_decimal(column.type):
+            column = column.cast(
+                pa.string()
+            )  # Arrow's own way from decimal to float is off in the last digit
         value = floats(single(column.cast(pa.float64())))
         reason = np.where(np.isinf(value), INFINITE, 0).astype(np.int8)
         return Values(value, reason)

@@ -1,0 +1,135 @@
+"""Processor seconds and peak memory of reading one reactor-year in each format.
+
+`python tests/bench/bench_exports.py [share of a year, default 1.0]`; each format in its own process.
+"""
+
+from __future__ import annotations
+
+import resource
+import subprocess
+import sys
+import tempfile
+import time
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.csv as pcsv
+import pyarrow.parquet as pq
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
+
+from ingest.exports import fingerprint, open_export
+from ingest.readings import Series, by_month, join, write_month
+from ingest.unit import ExportRules
+
+TAGS = [f"AI-{i:03}.PV" for i in range(24)]
+ROWS = 525_600
+BLOCK = 20_000
+
+
+def made(first: int, count: int) -> pa.Table:
+    """One-minute rows from the first on."""
+    rng = np.random.default_rng(first)
+    times = np.datetime64("2026-01-01T00:00:00", "s") + np.arange(first, first + count) * np.timedelta64(
+        60, "s"
+    )
+    values = rng.normal(50, 1, (count, len(TAGS))).round(3)
+    stamps = pa.array(times).cast(pa.timestamp("s", "UTC"))
+    return pa.table({"time": stamps, **{tag: values[:, i] for i, tag in enumerate(TAGS)}})
+
+
+def melted(wide: pa.Table) -> pa.Table:
+    """The same readings in long form, sorted by time."""
+    values = np.column_stack([wide[tag].to_numpy() for tag in TAGS]).ravel()
+    codes = np.tile(np.arange(len(TAGS), dtype=np.int32), len(wide))
+    return pa.table(
+        {
+            "time": pa.array(np.repeat(wide["time"].to_numpy(), len(TAGS))).cast(pa.timestamp("s", "UTC")),
+            "tag": pa.DictionaryArray.from_arrays(codes, TAGS),
+            "value": values,
+            "quality": pa.repeat(pa.scalar("Good"), len(values)),
+        }
+    )
+
+
+def spoilt(wide: pa.Table) -> pa.Table:
+    """One cell in each block that is no number."""
+    text = wide[TAGS[0]].cast(pa.string()).to_pylist()
+    text[len(text) // 2] = "12,3x"
+    return wide.set_column(1, TAGS[0], pa.array(text))
+
+
+def as_local(wide: pa.Table) -> pa.Table:
+    """Times without offset, day first."""
+    text = pa.compute.strftime(wide["time"].cast(pa.timestamp("s")), format="%d.%m.%Y %H:%M")
+    return wide.set_column(0, "time", text)
+
+
+FORMATS = {
+    "wide.parquet": lambda wide: wide,
+    "long.parquet": melted,
+    "wide.csv": lambda wide: wide,
+    "spoilt.csv": spoilt,
+    "local.csv": as_local,
+    "long.csv": melted,
+}
+
+
+def write(folder: Path, name: str, rows: int) -> Path:
+    """The whole year in one format, written block by block."""
+    path = folder / name
+    writer = None
+    for first in range(0, rows, BLOCK):
+        table = FORMATS[name](made(first, min(BLOCK, rows - first)))
+        if writer is None:
+            kind = pq.ParquetWriter if name.endswith("parquet") else pcsv.CSVWriter
+            writer = kind(path, table.schema)
+        writer.write_table(table)
+    assert writer is not None
+    writer.close()
+    return path
+
+
+def read(path: Path) -> str:
+    """Read, join and write by month; what it took."""
+    begin = time.process_time()
+    rules = ExportRules("UTC", (), None)
+    batches = open_export(path, number=1, rules=rules, wanted=frozenset(TAGS), time_zone=None)
+    pieces: dict[str, dict[str, list[Series]]] = {}
+    for readings in batches:
+        for month, tags in by_month(readings).items():
+            for tag, series in tags.items():
+                pieces.setdefault(month, {}).setdefault(tag, []).append(series)
+    reading = time.process_time() - begin
+    for month in list(pieces):
+        joined = {tag: join(parts)[0] for tag, parts in pieces.pop(month).items()}
+        write_month(path.with_name(f"{month}.month"), joined)
+    whole = time.process_time() - begin
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
+    hashed = time.process_time()
+    fingerprint(path)
+    hashed = time.process_time() - hashed
+    account = batches.account()
+    size = path.stat().st_size / 1e6
+    return (
+        f"{path.name:13} {size:4.0f} MB: read {reading:.2f} s, with months written {whole:.2f} s,"
+        f" hash {hashed:.2f} s, peak {peak:.0f} MB, {account.accepted} accepted, {account.rejected} rejected"
+    )
+
+
+def main() -> None:
+    """Make the files in a temporary folder and read each in a new process."""
+    share = float(sys.argv[1]) if len(sys.argv) > 1 else 1.0
+    with tempfile.TemporaryDirectory() as folder:
+        for name in FORMATS:
+            path = write(Path(folder), name, int(ROWS * share))
+            subprocess.run([sys.executable, __file__, "--read", str(path)], check=True)
+            path.unlink()
+
+
+if __name__ == "__main__":
+    if sys.argv[1:2] == ["--read"]:
+        sys.stdout.write(read(Path(sys.argv[2])) + "\n")
+    else:
+        main()
