@@ -101,17 +101,23 @@ def catch_up(
 
 @dataclass(frozen=True, slots=True)
 class _Record:
-    """The time that readings cover: start of the first cell, end of the last [us UTC], months with work."""
+    """The time that readings cover: first cell start and end of the cells [us UTC], months with readings."""
 
     first_us: int
     last_us: int
-    months: tuple[str, ...]
+    read: tuple[str, ...]
+
+    @property
+    def months(self) -> tuple[str, ...]:
+        """Give the months with work: the last window of a month stands in the next one, read or not."""
+        ended = {month_of(month_edges(one)[1]) for one in self.read if month_edges(one)[1] <= self.last_us}
+        return tuple(sorted({*self.read, *ended}))
 
     def edges(self, month: str) -> tuple[int, int, int]:
         """Give first cell start, end of the cells and end of a month [us UTC]."""
         first, after = month_edges(month)
         first = max(first, self.first_us)
-        return first, max(first, min(after, self.last_us)), after
+        return first, max(first, min(after, self.last_us)) if month in self.read else first, after
 
 
 def _record(plan: Plan, view: Snapshot, known: Sequence[str], touched: Sequence[Span]) -> _Record | None:
@@ -128,9 +134,7 @@ def _record(plan: Plan, view: Snapshot, known: Sequence[str], touched: Sequence[
         return None
     first = min(int(series.time[0]) for series in _readings(plan, view, *month_edges(read[0])).values())
     last = max(int(series.time[-1]) for series in _readings(plan, view, *month_edges(read[-1])).values())
-    # The window that ends with a month belongs to the next one, whether that has readings or not.
-    ended = {month_of(month_edges(month)[1]) for month in read if month_edges(month)[1] <= last}
-    return _Record(first // plan.cell_us * plan.cell_us, last, tuple(sorted({*read, *ended})))
+    return _Record(first // plan.cell_us * plan.cell_us, last, tuple(read))
 
 
 def _months_of(first: int, last: int) -> Iterator[str]:
