@@ -1,0 +1,234 @@
+"""The command line as a person meets it: exit codes, two-line errors, JSON, real files."""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import socket
+import subprocess
+import sys
+import time
+import urllib.request
+from collections.abc import Iterator
+from pathlib import Path
+
+import pytest
+
+from demo_data.exports import UNIT_FILE
+from monitor.progress import line
+from tests.source import ROOT
+
+ENVIRONMENT = {**os.environ, "PYTHONPATH": str(ROOT), "OPENBLAS_NUM_THREADS": "1", "NO_COLOR": "1"}
+
+
+def outlet(*words: str | Path, folder: Path) -> subprocess.CompletedProcess[str]:
+    command = [sys.executable, "-m", "monitor", *(str(word) for word in words)]
+    return subprocess.run(command, cwd=folder, capture_output=True, text=True, check=False, env=ENVIRONMENT)
+
+
+@pytest.fixture(scope="module")
+def plant(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, dict[str, object]]:
+    """A folder in which `outlet demo` was run, and what it said."""
+    folder = tmp_path_factory.mktemp("plant")
+    done = outlet("demo", "--no-page", "--days", "21", "--json", folder=folder)
+    assert done.returncode == 0, done.stderr
+    return folder, json.loads(done.stdout)
+
+
+def test_the_demo_tells_in_json_what_became_of_every_export_and_unit(plant: tuple[Path, dict[str, object]]):
+    _, said = plant
+    assert set(said) == {"number", "exports", "units", "notes", "processor_s"}
+    assert [one["status"] for one in said["exports"]] == ["taken"] * 3
+    (unit,) = said["units"]
+    assert unit["unit"] == "demo"
+    assert unit["cells"] == 21 * 144
+
+
+def test_the_demo_again_finds_everything_taken_already(plant: tuple[Path, dict[str, object]]):
+    folder, _ = plant
+    done = outlet("demo", "--no-page", "--days", "21", folder=folder)
+    assert done.returncode == 0
+    assert done.stdout.count("taken already") == 3
+    assert "demo: nothing new" in done.stdout
+
+
+def test_no_bar_is_drawn_where_nobody_watches(plant: tuple[Path, dict[str, object]]):
+    folder, _ = plant
+    done = outlet("demo", "--no-page", "--days", "21", folder=folder)
+    assert done.stderr == "Making 21 days of an invented plant in demo-plant ...\n"
+
+
+def test_a_good_unit_file_is_judged(tmp_path: Path):
+    done = outlet("check", UNIT_FILE, "--json", folder=tmp_path)
+    said = json.loads(done.stdout)
+    assert done.returncode == 0
+    # By hand: 2 + 2 + 1 flows in, 11 out; balances C, H, O and the inerts nitrogen and isobutane; readings
+    # are 4 flow meters, 2 declared contents and 10 channels; 16 - 5 = 11 unknowns, 5 readings left over.
+    assert (said["flows"], said["balances"], said["readings"], said["freedom"]) == (16, 5, 16, 5)
+    assert said["unseen"] == []
+
+
+def test_what_goes_unseen_without_two_meters_is_told(tmp_path: Path):
+    text = UNIT_FILE.read_text(encoding="utf-8")
+    kept = text.split("[[instrument]]")
+    # The analyzer is dry: without the meters of steam and of the wet outlet nothing tells the water that
+    # passes through. 14 readings then fix 10 of the 11 unknowns.
+    fewer = [part for part in kept if '"FI-203"' not in part and '"FI-210"' not in part]
+    assert len(fewer) == len(kept) - 2
+    file = tmp_path / "fewer.toml"
+    file.write_text("[[instrument]]".join(fewer), encoding="utf-8")
+    done = outlet("check", file, "--json", folder=tmp_path)
+    said = json.loads(done.stdout)
+    assert said["freedom"] == 4
+    assert "steam: water" in said["unseen"]
+
+
+def test_a_bad_unit_file_tells_all_its_faults_and_exits_with_2(tmp_path: Path):
+    file = tmp_path / "line3.toml"
+    text = UNIT_FILE.read_text(encoding="utf-8")
+    file.write_text(
+        text.replace("deadband", "deadbnd", 1).replace('"8h"', '"8 hours long"', 1), encoding="utf-8"
+    )
+    done = outlet("check", file, folder=tmp_path)
+    assert done.returncode == 2
+    first, *rest = done.stderr.splitlines()
+    assert first == f"{file}: 2 problems"
+    assert any("did you mean 'deadband'?" in text for text in rest)
+    assert done.stdout == ""
+
+
+@pytest.mark.parametrize(
+    ("words", "what"),
+    [
+        (("run", "--unit", "no.toml", "x.csv"), "no.toml"),
+        (("run", "--unit", UNIT_FILE, "x.csv"), "x.csv: there is no such file or folder"),
+        (("describe", "x.csv", "--unit", UNIT_FILE), "x.csv: there is no such file"),
+        (("verify", "--store", "nowhere"), "nowhere: there is no store here"),
+        (("verify", "--stroe", "nowhere"), "outlet verify: No such option"),
+        (("vrify",), "outlet: No such command 'vrify'"),
+        (("demo", "--days", "3"), "outlet demo: Invalid value for '--days'"),
+    ],
+    ids=lambda value: " ".join(map(str, value)) if isinstance(value, tuple) else None,
+)
+def test_what_the_user_can_mend_is_told_in_two_lines_and_exits_with_2(
+    words: tuple[str | Path, ...], what: str, tmp_path: Path
+):
+    done = outlet(*words, folder=tmp_path)
+    assert done.returncode == 2
+    told = done.stderr.splitlines()
+    assert told[0].startswith(what)
+    assert told[-1].startswith("  ")
+    assert "Traceback" not in done.stderr
+    assert len(told) == 2 or told[0].endswith("problem")
+
+
+def test_a_fault_of_ours_shows_its_traceback_and_exits_with_1(tmp_path: Path):
+    script = (
+        "import sys, click, monitor.cli as cli\n"
+        "cli.outlet.add_command(click.command('boom')(lambda: 1 / 0))\n"
+        "sys.argv = ['outlet', 'boom']\n"
+        "cli.main()\n"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", script],
+        cwd=tmp_path,
+        capture_output=True,
+        text=True,
+        check=False,
+        env=ENVIRONMENT,
+    )
+    assert done.returncode == 1
+    assert done.stderr.splitlines()[-1] == "ZeroDivisionError: division by zero"
+
+
+def test_an_export_set_aside_makes_the_exit_code_2_and_the_others_are_taken(
+    plant: tuple[Path, dict[str, object]], tmp_path: Path
+):
+    good = sorted(plant[0].glob("demo-plant/larkmoor-1*"))[0]
+    broken = tmp_path / "broken.csv"
+    broken.write_text("no time here\n1\n", encoding="utf-8")
+    os.utime(broken, (1, 1))  # long since at rest
+    done = outlet("run", "--unit", UNIT_FILE, broken, good, folder=tmp_path)
+    assert done.returncode == 2
+    assert f"{good.name}: taken;" in done.stdout
+    assert done.stderr.startswith("broken.csv")
+    assert len(done.stderr.splitlines()) == 2
+
+
+def test_describe_shows_dialect_rows_and_account_and_stores_nothing(
+    plant: tuple[Path, dict[str, object]], tmp_path: Path
+):
+    export = sorted(plant[0].glob("demo-plant/larkmoor-2*"))[0]
+    done = outlet("describe", export, "--unit", UNIT_FILE, folder=tmp_path)
+    assert done.returncode == 0, done.stderr
+    for words in ("semicolon", "Decimal mark: comma", "day first", "FI-201.PV", "accepted"):
+        assert words in done.stdout
+    assert list(tmp_path.iterdir()) == []
+    said = json.loads(outlet("describe", export, "--unit", UNIT_FILE, "--json", folder=tmp_path).stdout)
+    assert said["account"]["accepted"] > 0
+
+
+def test_verify_names_the_part_that_was_changed(plant: tuple[Path, dict[str, object]], tmp_path: Path):
+    good = sorted(plant[0].glob("demo-plant/larkmoor-1*"))[0]
+    assert outlet("run", "--unit", UNIT_FILE, good, folder=tmp_path).returncode == 0
+    assert outlet("verify", folder=tmp_path).returncode == 0
+    part = sorted((tmp_path / "outlet-store/demo").glob("cells-*.parquet"))[-1]
+    whole = bytearray(part.read_bytes())
+    whole[len(whole) // 2] ^= 1
+    part.write_bytes(whole)
+    done = outlet("verify", "--json", folder=tmp_path)
+    assert done.returncode == 2
+    assert [one["file"] for one in json.loads(done.stdout)["findings"]] == [f"demo/{part.name}"]
+
+
+@pytest.fixture
+def port() -> int:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        return int(probe.getsockname()[1])
+
+
+@pytest.fixture
+def page(plant: tuple[Path, dict[str, object]], port: int) -> Iterator[subprocess.Popen[bytes]]:
+    command = [sys.executable, "-m", "monitor", "page", "--unit", str(UNIT_FILE)]
+    command += ["--store", "demo-plant/store", "--port", str(port)]
+    with subprocess.Popen(
+        command, cwd=plant[0], env=ENVIRONMENT, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL
+    ) as server:
+        yield server
+        server.kill()
+
+
+def test_the_page_is_served_to_this_computer_until_it_is_interrupted(
+    page: subprocess.Popen[bytes], port: int
+):
+    answer = None
+    for _ in range(300):
+        try:
+            with urllib.request.urlopen(f"http://127.0.0.1:{port}/", timeout=5) as reply:
+                answer = reply.status
+                break
+        except OSError:
+            assert page.poll() is None, "the server ended by itself"
+            time.sleep(0.1)
+    assert answer == 200
+    page.send_signal(signal.SIGINT)
+    page.wait(timeout=20)
+
+
+def test_a_port_in_use_is_told_before_any_work(tmp_path: Path):
+    with socket.socket() as taken:
+        taken.bind(("127.0.0.1", 0))
+        taken.listen()
+        done = outlet("demo", "--port", str(taken.getsockname()[1]), folder=tmp_path)
+    assert done.returncode == 2
+    assert "Address already in use" in done.stderr
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_line_of_progress_tells_the_time_left_from_the_pace_so_far():
+    # 3 of 12 in 3 s: 9 s for the other 9; 3 of 12 of 24 marks are 6.
+    assert line("line3", 3, 12, passed_s=3.0) == f"line3  {'#' * 6}{'.' * 18}  3 of 12, 0:09 left"
+    assert line("line3", 0, 12, passed_s=0.0) == f"line3  {'.' * 24}  0 of 12"
+    assert line("line3", 0, 0, passed_s=0.0) == f"line3  {'.' * 24}  0 of 0"
