@@ -11,12 +11,13 @@ and projection on the balance), from memory; JCGM 100:2008 for the uncertainties
 from __future__ import annotations
 
 from dataclasses import dataclass, fields, replace
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from ingest import systems, tangent
-from ingest.balance import Problem, Sight, determined, null_space, sight
+from ingest.balance import Problem, determined, null_space, sight
 from ingest.cells import OPERATING, Cells
 from ingest.instruments import Measured, measured
 from ingest.tangent import Geometry, Point
@@ -152,14 +153,14 @@ def solve(problem: Problem, readings: Measured, rows: Floats | None = None) -> S
     """
     wanted = np.zeros((0, len(problem.state))) if rows is None else rows
     found = _empty(problem, readings, wanted)
-    for places, present in _patterns(np.isfinite(readings.reading)):
-        view = sight(problem, present)
-        if view.rank == 0:
+    patterns = [(places, sight(problem, present), present) for places, present in _patterns(readings)]
+    seeing = [places for places, view, _ in patterns if view.rank]
+    if seeing:
+        live = np.sort(np.concatenate(seeing))
+        _write(found, live, _bounded(problem, readings.take(live), wanted))
+    for places, view, present in patterns:
+        if not view.rank:
             found.status[places] = UNSEEN if present.any() else NO_READINGS
-            continue
-        for start in range(0, len(places), BLOCK):
-            place = places[start : start + BLOCK]
-            _write(found, place, _bounded(problem, readings.take(place), wanted, view))
         found.flow[np.ix_(~view.seen, places)] = np.nan
         found.value[np.ix_(~determined(wanted @ problem.basis, view.blind), places)] = np.nan
     return found
@@ -201,7 +202,12 @@ def _write(whole: Solution, place: Places, part: Solution) -> None:
         getattr(whole, field.name)[..., place] = getattr(part, field.name)
 
 
-def _patterns(flags: Flags) -> list[tuple[Places, Flags]]:
+def _patterns(readings: Measured) -> list[tuple[Places, Flags]]:
+    """Group cells by which readings are there: [(places, present)]."""
+    return _alike(np.isfinite(readings.reading))
+
+
+def _alike(flags: Flags) -> list[tuple[Places, Flags]]:
     """Group columns that are alike: [(places, column)]."""
     packed = np.packbits(flags, axis=0)
     _, first, group = np.unique(packed, axis=1, return_index=True, return_inverse=True)
@@ -210,13 +216,13 @@ def _patterns(flags: Flags) -> list[tuple[Places, Flags]]:
     return [(place, flags[:, first[i]]) for i, place in enumerate(np.split(order, edges)) if len(place)]
 
 
-def _bounded(problem: Problem, readings: Measured, rows: Floats, view: Sight) -> Solution:
-    """Solve cells of one pattern; flows that come out negative are held at zero, and let go if pushed up.
+def _bounded(problem: Problem, readings: Measured, rows: Floats) -> Solution:
+    """Solve cells; flows that come out negative are held at zero, and let go if the readings push them up.
 
     That holds for flows which no reading tells too: where none of their free values is possible, the bound
     itself tells something about the others.
     """
-    found = _settled(problem, readings, rows, view)
+    found = _settled(problem, readings, rows)
     held = np.zeros(found.flow.shape, dtype=bool)
     freed = np.zeros_like(held)
     for _ in range(len(problem.state)):
@@ -227,12 +233,10 @@ def _bounded(problem: Problem, readings: Measured, rows: Floats, view: Sight) ->
             break
         held = (held | low) & ~lifted
         freed |= lifted
-        for group, pattern in _patterns(held[:, changed]):
+        for group, pattern in _alike(held[:, changed]):
             narrow = replace(problem, basis=problem.basis @ null_space(problem.basis[pattern]))
             place = changed[group]
-            part = readings.take(place)
-            inner = sight(narrow, np.isfinite(part.reading[:, 0]))
-            _write(found, place, _settled(narrow, part, rows, replace(inner, seen=view.seen)))
+            _write(found, place, _settled(narrow, readings.take(place), rows))
     return found
 
 
@@ -250,7 +254,7 @@ def _lifted(problem: Problem, readings: Measured, flow: Floats, held: Flags) -> 
     shared = _shared_errors(point)
     miss = point.reading - point.prediction - np.einsum("mst,st->mt", point.loading, shared)
     uphill = -tangent.along(geometry, point, point.weight * miss)
-    for group, pattern in _patterns(held):
+    for group, pattern in _alike(held):
         if pattern.any():
             multiplier = np.linalg.lstsq(problem.basis[pattern].T, uphill[:, group], rcond=None)[0]
             lifted[np.ix_(pattern, group)] = multiplier < -ZERO_SLOPE * np.abs(uphill[:, group]).max(axis=0)
@@ -265,16 +269,50 @@ def _shared_errors(point: Point) -> Floats:
     return systems.solve(systems.factor(matrix)[0], right)
 
 
-def _settled(problem: Problem, readings: Measured, rows: Floats, view: Sight) -> Solution:
-    """Iterate cells of one pattern on one basis to rest and judge what came out."""
+class _Job(NamedTuple):
+    """Cells that can be iterated together: all that see every direction, or those of one pattern."""
+
+    places: Places
+    rank: int | None  # None: all directions of q are seen
+    freedom: NDArray[np.int16]  # (t,)
+    redundant: Flags  # (m, t)
+
+
+def _jobs(problem: Problem, readings: Measured) -> list[_Job]:
+    """Split cells into jobs of at most BLOCK cells."""
+    views = [(places, sight(problem, present)) for places, present in _patterns(readings)]
+    freedom = np.zeros(readings.reading.shape[1], dtype=np.int16)
+    redundant = np.zeros(readings.reading.shape, dtype=bool)
+    for places, view in views:
+        freedom[places] = view.freedom
+        redundant[:, places] = view.redundant[:, None]
+    full = [places for places, view in views if not view.blind.size]
+    whole: list[tuple[Places, int | None]] = [(np.sort(np.concatenate(full)), None)] if full else []
+    partly = [(places, view.rank) for places, view in views if view.blind.size]
+    return [
+        _Job(place, rank, freedom[place], redundant[:, place])
+        for places, rank in [*whole, *partly]
+        for place in np.split(places, range(BLOCK, len(places), BLOCK))
+    ]
+
+
+def _settled(problem: Problem, readings: Measured, rows: Floats) -> Solution:
+    """Iterate cells on one basis to rest and judge what came out."""
     geometry = tangent.geometry_of(problem)
-    rank = view.rank if view.rank < geometry.unknowns else None
-    q, shared, iterations, still = _iterate(geometry, readings, rank)
-    flow = problem.basis @ q
+    found = _empty(problem, readings, rows)
+    for job in _jobs(problem, readings):
+        _write(found, job.places, _at_rest(geometry, readings.take(job.places), rows, job))
+    return found
+
+
+def _at_rest(geometry: Geometry, readings: Measured, rows: Floats, job: _Job) -> Solution:
+    """Iterate the cells of one job to rest and judge what came out."""
+    q, shared, iterations, still = _iterate(geometry, readings, job.rank)
+    flow = geometry.problem.basis @ q
     point = tangent.point_at(geometry, flow, readings)
-    inverse, sound = tangent.covariance(geometry, point, rank)
+    inverse, sound = tangent.covariance(geometry, point, job.rank)
     good = still & sound
-    adjustment, spread = _adjustments(geometry, point, inverse, view)
+    adjustment, spread = _adjustments(geometry, point, inverse, job.redundant)
     rest = point.reading - point.prediction - np.einsum("mst,st->mt", point.loading, shared)
     objective = (point.weight * rest**2).sum(axis=0) + (shared**2).sum(axis=0)
     return Solution(
@@ -282,7 +320,7 @@ def _settled(problem: Problem, readings: Measured, rows: Floats, view: Sight) ->
         adjustment=np.where(good, adjustment, np.nan),
         adjustment_sd=np.where(good, spread, np.nan),
         objective=np.where(good, objective, np.nan),
-        freedom=np.full(len(good), view.freedom, dtype=np.int16),
+        freedom=job.freedom,
         status=np.where(good, SOLVED, NOT_CONVERGED).astype(np.int8),
         iterations=iterations,
         value=np.where(good, rows @ flow, np.nan),
@@ -290,13 +328,15 @@ def _settled(problem: Problem, readings: Measured, rows: Floats, view: Sight) ->
     )
 
 
-def _adjustments(geometry: Geometry, point: Point, inverse: Floats, view: Sight) -> tuple[Floats, Floats]:
+def _adjustments(
+    geometry: Geometry, point: Point, inverse: Floats, redundant: Flags
+) -> tuple[Floats, Floats]:
     """Give adjustments and the standard deviation they should have, arrays (m, t)."""
     present = point.weight > 0
     own = 1.0 / np.where(present, point.weight, 1.0) + (point.loading**2).sum(axis=1)
     left = np.clip(1.0 - tangent.prediction_variance(geometry, point, inverse) / own, 0.0, 1.0)
     adjustment = (point.prediction - point.reading) / np.sqrt(own)
-    spread = np.where(view.redundant[:, None], np.sqrt(left), 0.0)
+    spread = np.where(redundant, np.sqrt(left), 0.0)
     return np.where(present, adjustment, np.nan), np.where(present, spread, np.nan)
 
 
