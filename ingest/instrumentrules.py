@@ -183,7 +183,7 @@ def _a_tag_has_its_timing(entry: Entry, _draft: Draft) -> Iterator[Problem]:
     for key in _OF_TAGGED:
         if entry.get("tag") is not None and entry.lacks(key):
             yield missing(rows("instrument")[key], entry.at(key))
-        if entry.get("value") is not None and key in entry.values:
+        if entry.get("value") is not None and entry.get("tag") is None and key in entry.values:
             yield Problem(entry.at(key), "a declared value has no timing", "remove it")
     cycle, max_age = entry.get("cycle"), entry.get("max_age")
     if cycle and max_age and max_age < cycle:

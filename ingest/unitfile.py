@@ -49,7 +49,7 @@ def load(path: Path | str) -> Unit:
         With every fault found, each with its key and what to write.
     """
     file = Path(path)
-    document = _parse(file)
+    document = parse(file)
     read, problems = draft.read(document)
     if not _STEM.fullmatch(file.stem):
         problems.insert(
@@ -73,8 +73,24 @@ def keys() -> tuple[Key, ...]:
     return table.TABLE
 
 
-def _parse(file: Path) -> dict[str, Any]:
-    """Read the TOML text; an unreadable file is one fault of its own."""
+def parse(file: Path) -> dict[str, Any]:
+    """Read the TOML text; an unreadable file is one fault of its own.
+
+    Parameters
+    ----------
+    file : Path
+        UTF-8, with or without a byte order mark.
+
+    Returns
+    -------
+    dict
+        What the file holds, not judged.
+
+    Raises
+    ------
+    UnitFileError
+        Not there, not UTF-8, or not TOML.
+    """
     try:
         return tomllib.loads(file.read_bytes().decode("utf-8-sig"))
     except OSError as error:

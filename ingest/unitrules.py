@@ -155,15 +155,15 @@ def _all_read(streams: Sequence[Entry]) -> bool:
 def _carried(draft: Draft, direction: str) -> set[str]:
     """Give the species that streams of one direction hold."""
     streams = [entry for entry in draft.many["stream"] if entry.get("direction") == direction]
-    return {name for entry in streams for name in entry.get("species")}
+    return {name for entry in streams for name in entry.get("species") or ()}
 
 
 def _what_enters_can_leave(draft: Draft) -> Iterator[Problem]:
     """Products leave, the key reactant enters and leaves, inerts and every element do both."""
-    if not _all_read(draft.many["stream"]):
-        return
-    entry = draft.chemistry
     sides = {"in": _carried(draft, "in"), "out": _carried(draft, "out")}
+    if not _all_read(draft.many["stream"]) or not all(sides.values()):
+        return  # told by another rule
+    entry = draft.chemistry
     wants = [("key_reactant", "in"), ("key_reactant", "out"), ("wanted", "out"), ("unwanted", "out")]
     for key, side in [*wants, ("inert", "in"), ("inert", "out")]:
         value = entry.get(key) or ()
@@ -177,7 +177,7 @@ def _what_enters_can_leave(draft: Draft) -> Iterator[Problem]:
     elements = {side: {e for n in names if n in known for e, _ in known[n]} for side, names in sides.items()}
     for side, other in (("in", "out"), ("out", "in")) if None not in draft.atoms.values() else ():
         for symbol in sorted(elements[side] - elements[other]):
-            what = f"_reacting species hold {symbol} only in streams that go {side}"
+            what = f"reacting species hold {symbol} only in streams that go {side}"
             yield Problem("stream", what, f"add a species with {symbol} to a stream that goes {other}")
 
 
