@@ -263,7 +263,9 @@ def _gas(unit: Unit, instrument: Instrument, value: Floats) -> list[tuple[Floats
         at = names.index(name)
         helper, own = unit.instruments[at], value[:, at]
         parts = (_own([one], own[None])[0] * helper.to_base for one in (helper.random, helper.systematic))
-        found.append(((own + helper.offset) * helper.to_base, *parts))
+        state = (own + helper.offset) * helper.to_base
+        # A gas at no pressure or at 0 K is a meter out of order.
+        found.append((np.where(state > 0, state, np.nan), *parts))
     return found
 
 
