@@ -13,6 +13,8 @@ from ingest.keys import Entry, missing, nearest, read_table, rows
 
 ONCE = ("unit", "chemistry", "operating", "catalyst", "exports")
 MANY = ("stream", "instrument", "analyzer", "shared", "watch")
+# Sums are called so; a species of that name could not be told from them.
+RESERVED = ("all unwanted", "unseen")
 _NEEDED = ("unit", "chemistry", "stream")
 
 
@@ -33,15 +35,35 @@ class Draft:
         return self.once["chemistry"]
 
     def names(self, section: str) -> list[str]:
-        """List the stated names of a repeated section."""
+        """List the stated names of a repeated section.
+
+        Parameters
+        ----------
+        section : str
+            One of `MANY`.
+        """
         return [entry.values["name"] for entry in self.many[section] if entry.get("name")]
 
     def find(self, section: str, name: object) -> Entry | None:
-        """Give the first entry of that name, or None."""
+        """Give the first entry of that name, or None.
+
+        Parameters
+        ----------
+        section : str
+            One of `MANY`.
+        name : object
+            What was written where a name belongs; None finds nothing.
+        """
         return next((entry for entry in self.many[section] if name and entry.get("name") == name), None)
 
     def waters(self, species: Sequence[str]) -> tuple[str, ...]:
-        """Give those of the species whose formula is water's."""
+        """Give those of the species whose formula is that of water.
+
+        Parameters
+        ----------
+        species : sequence of str
+            Names of species.
+        """
         water = chemistry.atoms("H2O")
         return tuple(name for name in species if self.atoms.get(name) == water)
 
@@ -134,6 +156,8 @@ def _read_formulas(draft: Draft) -> list[Problem]:
     for name, formula in (draft.chemistry.get("species") or {}).items():
         place = f"chemistry.species.{name}"
         draft.atoms[name] = None
+        if name in RESERVED:
+            problems.append(Problem(place, "is what the program calls a sum", "choose another name"))
         if not isinstance(formula, str):
             problems.append(
                 Problem(place, f"{formula!r} is not a formula in quotes", 'write it as water = "H2O"')

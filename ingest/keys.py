@@ -154,15 +154,33 @@ class Entry:
     told: frozenset[str] = frozenset()  # keys that are refused or missing, and were told so
 
     def get(self, key: str) -> Any:
-        """Give a value, or None when it is absent or was refused."""
+        """Give a value, or None when it is absent or was refused.
+
+        Parameters
+        ----------
+        key : str
+            Key of this table.
+        """
         return self.values.get(key)
 
     def at(self, key: str) -> str:
-        """Give the dotted place of a key."""
+        """Give the dotted place of a key.
+
+        Parameters
+        ----------
+        key : str
+            Key of this table, written or not.
+        """
         return self.places.get(key, f"{self.place}.{key}")
 
     def lacks(self, key: str) -> bool:
-        """Tell whether a key is absent and nobody was told, so that one fault is told once."""
+        """Tell whether a key is absent and nobody was told, so that one fault is told once.
+
+        Parameters
+        ----------
+        key : str
+            Key of this table.
+        """
         return key not in self.values and key not in self.told
 
 

@@ -160,6 +160,10 @@ BAD = {
         with_edit('nitrogen = "N2"', "nitrogen = 28"),
         "chemistry.species.nitrogen", "28 is not a formula in quotes", 'write it as water = "H2O"',
     ),
+    "a species named like a sum": (
+        DEMO.replace('"acetic acid"', '"all unwanted"'),
+        "chemistry.species.all unwanted", "is what the program calls a sum", "choose another name",
+    ),
     "a role for an undeclared species": (
         with_edit('wanted = "methacrolein"', 'wanted = "metacrolein"'),
         "chemistry.wanted", "'metacrolein' is no declared species", "did you mean 'methacrolein'?",

@@ -122,8 +122,10 @@ def test_a_species_flow_in_mass_becomes_kilomoles_by_its_own_molar_mass(tmp_path
 
 def test_a_flow_ratio_divides_one_stream_by_another(tmp_path: Path):
     ratio = '[[instrument]]\nname = "FFI-1"\ntag = "FFI-1"\nkind = "flow ratio"\nstream = "air"\n'
-    rest = 'per_stream = "steam"\nunit = "mol/mol"\nrandom = {}\nsystematic = { relative_pct = 1 }\ncycle = "1min"\nmax_age = "5min"\n'
-    text = with_edit("[[analyzer]]", f'{ratio}{rest}sampling = "held"\n\n[[analyzer]]')
+    rest = 'per_stream = "steam"\nunit = "mol/mol"\nrandom = {}\nsystematic = { floor = 0.1 }\n'
+    text = with_edit(
+        "[[analyzer]]", f'{ratio}{rest}cycle = "1min"\nmax_age = "5min"\nsampling = "held"\n\n[[analyzer]]'
+    )
     found = instrument(loaded(tmp_path, text), "FFI-1")
     assert (found.stream, found.per_stream, found.to_base) == ("air", "steam", 1.0)
 
