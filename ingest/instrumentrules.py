@@ -199,6 +199,10 @@ def _the_unit_fits(entry: Entry, draft: Draft) -> Iterator[Problem]:
     kind, unit, value = entry.get("kind"), entry.get("unit"), entry.get("value")
     if kind is None or unit is None or (kind == "volume flow" and entry.get("reference") is None):
         return  # each told by another rule
+    conditions = list(_conditions(entry))
+    if conditions:
+        yield from conditions
+        return
     try:
         to_base = scale_of(entry, draft).to_base
     except OutletError as error:
@@ -210,6 +214,16 @@ def _the_unit_fits(entry: Entry, draft: Draft) -> Iterator[Problem]:
         yield Problem(entry.at("value"), what, "mend value or range")
     if value is not None and is_fraction(entry) and not 0 <= value * to_base <= 1:
         yield Problem(entry.at("value"), f"{value:g} {unit} is no fraction", "mend value or unit")
+
+
+def _conditions(entry: Entry) -> Iterator[Problem]:
+    """Reference conditions and atmosphere can be read, or are told at their own key."""
+    for key, read in (("reference", quantities.kmol_per_m3), ("atmosphere", quantities.atmosphere_kpa)):
+        try:
+            if key in entry.values:
+                read(entry.get(key))
+        except OutletError as error:
+            yield Problem(entry.at(key), error.what, error.remedy)
 
 
 def _what_it_names_is_there(entry: Entry, draft: Draft) -> Iterator[Problem]:

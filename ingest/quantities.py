@@ -226,11 +226,27 @@ def _pressure(text: str, atmosphere: str | None) -> Scale:
             f"'{text}' is a gauge pressure of no stated atmosphere",
             remedy='write atmosphere = "101.325 kPa" with the mean pressure of the site',
         )
-    return Scale(factor, offset=_atmosphere_kpa(atmosphere) / factor)
+    return Scale(factor, offset=atmosphere_kpa(atmosphere) / factor)
 
 
-def _atmosphere_kpa(atmosphere: str) -> float:
-    """Read the atmospheric pressure of the site."""
+def atmosphere_kpa(atmosphere: str) -> float:
+    """Read the atmospheric pressure of the site [kPa absolute].
+
+    Parameters
+    ----------
+    atmosphere : str
+        Number and unit of an absolute pressure: '101.3 kPa'.
+
+    Returns
+    -------
+    float
+        Between 50 and 110 kPa.
+
+    Raises
+    ------
+    OutletError
+        Not a pressure, or none that a site on land has.
+    """
     match = re.match(r"^([\d.]+) ?([A-Za-z].*)$", atmosphere.strip())
     kpa = _number(match[1], atmosphere) * _pressure(match[2], None).to_base if match else 0.0
     if not 50 <= kpa <= 110:

@@ -300,7 +300,7 @@ BAD = {
     ),
     "a reference in words": (
         with_edit('reference = "0 degC, 101.325 kPa"', 'reference = "normal"'),
-        "instrument[FI-202].unit", "'normal' states no temperature and pressure", "(ISO 13443)",
+        "instrument[FI-202].reference", "'normal' states no temperature and pressure", "(ISO 13443)",
     ),
     "a bare percent": (
         after("[[analyzer]]", 'unit = "mol%"', 'unit = "%"'),
@@ -313,6 +313,14 @@ BAD = {
     "a gauge pressure of no stated atmosphere": (
         with_edit('unit = "kPa" # absolute', 'unit = "kPa gauge"'),
         "instrument[PI-211].unit", "gauge pressure of no stated atmosphere", 'atmosphere = "101.325 kPa"',
+    ),
+    "an atmosphere that is none": (
+        with_edit('unit = "kPa" # absolute', 'unit = "kPa gauge"\natmosphere = "sea level"'),
+        "instrument[PI-211].atmosphere", "'sea level' is no atmospheric pressure", 'atmosphere = "101.325 kPa"',
+    ),
+    "an atmosphere beside an absolute pressure": (
+        with_edit('unit = "kPa" # absolute', 'unit = "kPa"\natmosphere = "101.325 kPa"'),
+        "instrument[PI-211].unit", "'kPa' is absolute", "remove atmosphere",
     ),
     "a declared value outside its range": (
         after(DECLARED, "value = 20.95", "value = 20.95\nrange = [0, 1]"),
