@@ -216,7 +216,8 @@ def nearest(word: str, allowed: Iterable[str]) -> str:
         "did you mean 'x'?", or "write one of ...".
     """
     known = list(allowed)
-    close = get_close_matches(word, known, n=1)
+    within = [name for name in known if word.lower() in name.lower()] if word else []
+    close = get_close_matches(word, known, n=1) or within
     if close:
         return f"did you mean '{close[0]}'?"
     return f"write one of {', '.join(repr(name) for name in known)}" if known else "none is declared"

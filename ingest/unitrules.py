@@ -87,6 +87,7 @@ def _time_fits(draft: Draft) -> Iterator[Problem]:
             f"{quantities.duration_words(cell)} divides neither an hour nor a day into whole cells",
             'write for example cell = "10min"',
         )
+        return  # windows are judged by a cell that can stand
     for window in windows:
         if window % cell:
             words = quantities.duration_words(window)

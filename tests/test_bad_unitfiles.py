@@ -117,7 +117,7 @@ BAD = {
         "analyzer[AI-220].dead_time", "must be 0 s to 7 d, got 40 d", 'write for example dead_time = "4min"',
     ),
     "a cell that divides neither hour nor day": (
-        with_edit('cell = "10min"', 'cell = "7min"\nwindows = ["7min", "56min"]').replace('window = "8h"', 'window = "56min"'),
+        with_edit('cell = "10min"', 'cell = "7min"'),
         "unit.cell", "7 min divides neither an hour nor a day", 'write for example cell = "10min"',
     ),
     "a window that is no whole number of cells": (
@@ -411,6 +411,10 @@ BAD = {
     "a figure that is none": (
         with_edit('figure = "yield on feed"', 'figure = "yield on fed"'),
         "watch[1].figure", "'yield on fed' is no figure of this unit", "did you mean 'yield on feed'?",
+    ),
+    "a figure by the first word of its name": (
+        with_edit('figure = "carbon closure"', 'figure = "yield"'),
+        "watch[3].figure", "'yield' is no figure of this unit", "did you mean 'yield on feed'?",
     ),
     "a figure of a species that is not unwanted": (
         more(WATCH.replace("conversion", "share of isobutane")),
