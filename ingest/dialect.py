@@ -8,7 +8,8 @@ from __future__ import annotations
 
 import codecs
 import csv
-from collections.abc import Callable, Collection, Iterator, Sequence
+import re
+from collections.abc import Collection, Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
@@ -17,11 +18,10 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from ingest.columns import flags, single
+from ingest.columns import Look, flags, matches, single
 from ingest.errors import ExportError
 from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US, PATTERNS, Clock
-from ingest.unit import ExportRules
-from ingest.values import MISSING_WORDS, Numbers, is_text, quality_of_word, texts, whole
+from ingest.values import Numbers, is_text, texts
 
 MOST_COLUMNS = 5_000
 SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
@@ -35,14 +35,8 @@ ROLES = {
     "quality": ("quality", "status", "quality code", "status code", "qualität"),
 }
 
-_GROUPED = r"^\s*[+\-\x{2212}]?[1-9]\d{0,2},\d{3}\s*$"  # 1,234: a decimal comma, or a mark between thousands
-_POINT = r"^\s*[+\-\x{2212}]?\d*\.\d+([eE][+-]?\d+)?\s*$"
-_COMMA = r"^\s*[+\-\x{2212}]?\d*,\d+([eE][+-]?\d+)?\s*$"
 _EPOCH = {"epoch s": r"^\s*\d{9,10}([.,]\d+)?\s*$", "epoch ms": r"^\s*\d{12,13}([.,]\d+)?\s*$"}
 _STATED = r"(Z|[+-]\d{2}(:?\d{2})?)\s*$"
-
-Look = Callable[[Sequence[int]], Iterator[Any]]
-"""Given places of columns, the columns of one block after another until the export ends."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -330,23 +324,18 @@ def _holds_times(column: Any) -> bool:
         return False
     if pa.types.is_timestamp(column.type):
         return True
-    return is_text(column.type) and max(_matches(column, p) for p in PATTERNS.values()) > len(column) / 2
+    return is_text(column.type) and max(matches(column, p) for p in PATTERNS.values()) > len(column) / 2
 
 
-def _matches(column: Any, pattern: str) -> int:
-    """How many texts match."""
-    return int(np.count_nonzero(flags(pc.match_substring_regex(column, pattern))))
-
-
-def decide_clock(place: str, column: int, look: Look, zone: str | None) -> Clock:
+def decide_clock(place: str, column: tuple[int, str], look: Look, zone: str | None) -> Clock:
     """Find how the export writes time.
 
     Parameters
     ----------
     place : str
-        `file` or `file:row` of the first row, for the error.
-    column : int
-        Where the times stand.
+        `file` or `file:row` of the header, for the error.
+    column : tuple of int and str
+        Where the times stand, and the column's name.
     look : callable
         Gives columns.
     zone : str or None
@@ -357,39 +346,46 @@ def decide_clock(place: str, column: int, look: Look, zone: str | None) -> Clock
     Clock
         With `zone` set where it is needed.
     """
-    times = single(next(look([column]), [pa.array([], pa.string())])[0])
+    at, name = column
+    times = single(next(look([at]), [pa.array([], pa.string())])[0])
     if pa.types.is_timestamp(times.type):
         offset = times.type.tz is not None
-        return Clock("timestamp", offset, None if offset else _zone(place, zone), 6)
+        return Clock("timestamp", offset, None if offset else _zone(place, zone, name), 6)
     if not is_text(times.type):
         return _clock_of_numbers(place, times)
-    form, matches = _form(place, times)
+    form, count = _form(place, times)
     if form in EPOCHS:
         return Clock(form, offset=True, zone=None, fraction=0)
     if form != "year first":
-        form = _date_order(place, (block[0] for block in look([column])))
-    offset = 2 * _matches(times, rf"\d{_STATED}") > matches
-    digits = 9 if _matches(times, r"[.,]\d{7,9}\D*$") else 6
-    return Clock(form, offset, None if offset else _zone(place, zone), digits)
+        form = _date_order(place, (block[0] for block in look([at])))
+    offset = 2 * matches(times, rf"\d{_STATED}") > count
+    digits = 9 if matches(times, r"[.,]\d{7,9}\D*$") else 6
+    return Clock(form, offset, None if offset else _zone(place, zone, name), digits)
 
 
 def _form(place: str, times: Any) -> tuple[str, int]:
-    """The form that more than half of the first block's times have, and how many."""
-    counts = {form: _matches(times, pattern) for form, pattern in {**PATTERNS, **_EPOCH}.items()}
-    form = max(counts, key=lambda name: counts[name])
-    if 2 * counts[form] > len(times) - _matches(times, r"^\s*$"):
-        return form, counts[form]
+    """The form that most of the first block's times have, and how many; no text has two of these forms."""
+    forms = {**PATTERNS, **_EPOCH}
+    counts = {form: matches(times, forms[form]) for form in forms if form != "month first"}
+    counts["day first"] = max(counts["day first"], matches(times, forms["month first"]))
+    second, first = sorted(counts, key=lambda name: counts[name])[-2:]
+    if counts[first] > counts[second]:
+        return first, counts[first]
     sample = next((text for text in texts(times) if text.strip()), "")
-    raise ExportError(
-        f"{place}: {sample!r} is no known form of time", remedy="Export times as 2026-03-29T01:30Z."
-    )
+    said = "is one of several forms of time" if counts[first] else "is no known form of time"
+    raise ExportError(f"{place}: {sample!r} {said}", remedy="Export times as 2026-03-29T01:30Z.")
 
 
-def _zone(place: str, zone: str | None) -> str:
-    """The stated zone, if there is such a zone."""
+def _zone(place: str, zone: str | None, name: str) -> str:
+    """The stated zone, if there is such a zone and the column's name does not speak against it."""
     remedy = "Set time_zone under [exports], e.g. 'Europe/Berlin' or 'UTC'."
     if zone is None:
         raise ExportError(f"{place}: times state no offset, and no time zone is stated", remedy=remedy)
+    if {"utc", "gmt"} & set(re.findall(r"[a-z]+", name.casefold())) and zone not in ("UTC", "Etc/UTC", "GMT"):
+        raise ExportError(
+            f"{place}: the column {name!r} does not hold times of the stated zone {zone!r}",
+            remedy="Set time_zone under [exports] to 'UTC'.",
+        )
     try:
         return ZoneInfo(zone).key
     except (ZoneInfoNotFoundError, ValueError) as error:
@@ -398,13 +394,14 @@ def _zone(place: str, zone: str | None) -> str:
 
 def _clock_of_numbers(place: str, column: Any) -> Clock:
     """Seconds and milliseconds since 1970 cannot be mistaken for one another between 1990 and 2100."""
-    number = pc.drop_null(column).cast(pa.float64(), safe=False)
+    numeric = pa.types.is_integer(column.type) or pa.types.is_floating(column.type)
+    number = pc.drop_null(column).cast(pa.float64(), safe=False) if numeric else pa.array([], pa.float64())
     for form, us in EPOCHS.items():
         within = pc.and_(pc.greater_equal(number, EARLIEST_US / us), pc.less(number, LATEST_US / us))
         if 2 * np.count_nonzero(flags(within)) > len(number):
             return Clock(form, offset=True, zone=None, fraction=0)
     raise ExportError(
-        f"{place}: the numbers in the time column are no seconds or milliseconds since 1970",
+        f"{place}: what stands in the time column ({column.type}) is no seconds or milliseconds since 1970",
         remedy="Export times as 2026-03-29T01:30Z.",
     )
 
@@ -414,8 +411,7 @@ def _date_order(place: str, columns: Iterator[Any]) -> str:
     sample = ""
     for column in columns:
         day, month = (
-            _matches(column, rf"^\s*{p}")
-            for p in (r"(1[3-9]|[23]\d)[-/.]\d", r"\d+[-/.](1[3-9]|[23]\d)[-/.]")
+            matches(column, rf"^\s*{p}") for p in (r"(1[3-9]|[23]\d)[-/.]\d", r"\d+[-/.](1[3-9]|[23]\d)[-/.]")
         )
         if day and month:
             raise ExportError(
@@ -432,102 +428,3 @@ def _date_order(place: str, columns: Iterator[Any]) -> str:
         f" but {year}-{first:0>2}-{second:0>2} month first, and no date in the file tells which",
         remedy="Export times as 2026-03-29T01:30Z, or a span that holds a day after the 12th.",
     )
-
-
-def decide_numbers(place: str, columns: Sequence[int], look: Look, rules: ExportRules) -> Numbers:
-    """Find the decimal mark: the first number that can be read in one way only tells.
-
-    Parameters
-    ----------
-    place : str
-        `file` or `file:row`, for the error.
-    columns : sequence of int
-        Columns of values.
-    look : callable
-        Gives columns.
-    rules : ExportRules
-        Further words for "no value".
-
-    Returns
-    -------
-    Numbers
-        Whole numbers only: with a decimal point.
-    """
-    missing = frozenset(word.strip().casefold() for word in (*MISSING_WORDS, *rules.missing_words))
-    grouped = ""
-    for block in look(columns) if columns else ():
-        written = [column for column in block if is_text(column.type)]
-        if not written:
-            return Numbers(".", missing)
-        point = sum(_matches(c, _POINT) for c in written)
-        either = sum(_matches(c, _GROUPED) for c in written)
-        comma = sum(_matches(c, _COMMA) for c in written) - either
-        if point != comma:
-            return Numbers("." if point > comma else ",", missing)
-        if either and not grouped:
-            grouped = next(t for c in written for t in texts(c.filter(pc.match_substring_regex(c, _GROUPED))))
-    if grouped:
-        raise ExportError(
-            f"{place}: {grouped!r} is {grouped.replace(',', '.')} with a decimal comma but"
-            f" {grouped.replace(',', '')} with marks between thousands, and no number tells which",
-            remedy="Export with a decimal point and without marks between thousands.",
-        )
-    return Numbers(".", missing)
-
-
-def decide_quality(place: str, column: int | None, look: Look, rules: ExportRules) -> str | None:
-    """Find how the export writes quality, unless the unit file says it.
-
-    Parameters
-    ----------
-    place : str
-        `file` or `file:row`, for the error.
-    column : int or None
-        The quality column.
-    look : callable
-        Gives columns.
-    rules : ExportRules
-        Its `quality` stands above what is found.
-
-    Returns
-    -------
-    str or None
-        A key of values.QUALITY_FORMS; None without a quality column.
-    """
-    if column is None:
-        return None
-    if rules.quality is not None:
-        return rules.quality
-    seen: set[str] = set()
-    for block in look([column]):
-        seen |= {text.strip() for text in texts(single(block[0]).unique())} - {""}
-        forms = _quality_forms(seen)
-        if len(forms) == 1:
-            return forms[0]
-        if forms:
-            break
-    if not seen:
-        return "words"
-    sample = ", ".join(repr(text) for text in sorted(seen)[:4])
-    raise ExportError(
-        f"{place}: qualities such as {sample} may be words, OPC UA status codes (0 is good)"
-        " or OPC DA qualities (0 is bad)",
-        remedy="Set quality under [exports] to 'words', 'opc ua' or 'opc da'.",
-    )
-
-
-def _quality_forms(seen: Collection[str]) -> list[str]:
-    """The forms for which there is something that no other form could mean.
-
-    OPC UA codes keep their meaning in the upper 16 of 32 bits, OPC DA qualities have 16 bits in all with good
-    and uncertain in 0xC0. Small numbers without those bits mean something else in each house.
-    """
-    codes = [code for code in map(whole, seen) if code is not None]
-    forms = []
-    if any(quality_of_word(text) is not None for text in seen):
-        forms.append("words")
-    if any(code < 0 or code >= 2**16 for code in codes):
-        forms.append("opc ua")
-    if any(0 < code < 2**16 and code & 0xC0 in (0x40, 0xC0) for code in codes):
-        forms.append("opc da")
-    return forms

@@ -15,16 +15,15 @@ import pyarrow.parquet as pq
 from ingest import lines
 from ingest.dialect import (
     Dialect,
+    Layout,
     decide_clock,
     decide_layout,
-    decide_numbers,
-    decide_quality,
 )
 from ingest.errors import ExportError
 from ingest.lines import Block
 from ingest.textfiles import value_columns
 from ingest.unit import ExportRules
-from ingest.values import is_text
+from ingest.values import decide_numbers, decide_quality, is_text
 
 MAGIC = b"PAR1"
 _ROWS = 1 << 16  # read at a time
@@ -51,7 +50,7 @@ class ParquetExport:
             One per column; dictionaries as what they stand for.
         """
         for block in parquet_blocks(self, columns):
-            yield [_decoded(block.columns[i]) for i in columns]
+            yield [_spread(block.columns[i]) for i in columns]
 
 
 @contextmanager
@@ -97,8 +96,8 @@ def open_parquet(
     file = ParquetExport(path, header)
     layout = decide_layout(path.name, header, wanted or (), file.look)
     values = value_columns(header, layout, wanted)
-    _refuse_types(path, values)
-    clock = decide_clock(path.name, layout.time, file.look, zone)
+    _refuse_types(path, layout, values)
+    clock = decide_clock(path.name, (layout.time, header[layout.time]), file.look, zone)
     numbers = decide_numbers(path.name, values, file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
     return file, Dialect("", "", header, 0, layout, clock, numbers, quality)
@@ -125,7 +124,8 @@ def parquet_blocks(file: ParquetExport, columns: Sequence[int]) -> Iterator[Bloc
         for batch in raw.iter_batches(batch_size=_ROWS, columns=names, use_threads=False):
             rows = np.arange(row, row + batch.num_rows)
             row += batch.num_rows
-            yield Block(rows, {i: batch.column(name) for i, name in zip(columns, names, strict=True)})
+            read = zip(columns, names, strict=True)
+            yield Block(rows, {i: _plain(batch.column(name)) for i, name in read})
 
 
 def _refuse_size(export: str, about: Any, columns: int) -> None:
@@ -140,23 +140,29 @@ def _refuse_size(export: str, about: Any, columns: int) -> None:
         )
 
 
-def _refuse_types(path: Path, columns: Sequence[int]) -> None:
+def _refuse_types(path: Path, layout: Layout, values: Sequence[int]) -> None:
+    """Values are numbers or text, tags and qualities whole numbers or text."""
     with _opened(path) as raw:
         schema = raw.schema_arrow
-    for i in columns:
+    names = [i for i in (layout.tag, layout.quality) if i is not None]
+    for i in (*values, *names):
         kind = schema.field(i).type
         inner = kind.value_type if pa.types.is_dictionary(kind) else kind
-        if not (
-            is_text(inner)
-            or pa.types.is_floating(inner)
-            or pa.types.is_integer(inner)
-            or pa.types.is_decimal(inner)
-        ):
+        fits = is_text(inner) or pa.types.is_integer(inner) or pa.types.is_floating(inner)
+        if not fits and not (i in values and pa.types.is_decimal(inner)):
             raise ExportError(
-                f"{path.name} [{schema.field(i).name}]: values of type {kind} are no numbers",
-                remedy="Export values as numbers or text.",
+                f"{path.name} [{schema.field(i).name}]: neither numbers nor text but {kind}",
+                remedy="Export values as numbers, tags and qualities as text.",
             )
 
 
-def _decoded(column: Any) -> Any:
+def _plain(column: Any) -> Any:
+    """A column in one of the types that are read: dictionaries hold text, text is plain."""
+    kind = column.type
+    if pa.types.is_dictionary(kind) and not is_text(kind.value_type):
+        return column.dictionary_decode()
+    return column.cast(pa.string()) if pa.types.is_string_view(kind) else column
+
+
+def _spread(column: Any) -> Any:
     return column.dictionary_decode() if pa.types.is_dictionary(column.type) else column

@@ -202,7 +202,7 @@ def by_month(readings: Readings) -> dict[str, Readings]:
     found: dict[str, Readings] = {}
     for tag, series in readings.items():
         for month, which in _months(series.time):
-            found.setdefault(month, {})[tag] = series if which is None else series.take(which)
+            found.setdefault(month, {})[tag] = series.take(which)
     return dict(sorted(found.items()))
 
 
@@ -282,15 +282,21 @@ def _contest(old: Series, new: Series) -> tuple[NDArray[np.bool_], NDArray[np.bo
     return stays, ~repeats, int(np.count_nonzero(repeats))
 
 
-def _months(time: NDArray[np.int64]) -> list[tuple[str, NDArray[np.bool_] | None]]:
-    """The months that occur and which readings lie in each; None means all of them."""
+def _months(time: NDArray[np.int64]) -> list[tuple[str, Any]]:
+    """The months that occur and which readings lie in each: a slice where they lie together, else a mask."""
     if len(time) == 0:
         return []
     first, last = (np.datetime64(int(t), "us").astype("datetime64[M]") for t in (time.min(), time.max()))
     if first == last:
-        return [(str(first), None)]
+        return [(str(first), slice(None))]
     edges = np.arange(first, last + 2)
-    place = np.searchsorted(edges.astype("datetime64[us]").astype(np.int64), time, side="right") - 1
+    edges_us = edges.astype("datetime64[us]").astype(np.int64)
+    if np.all(time[1:] >= time[:-1]):  # the usual case; slices keep what the tags of a wide export share
+        cuts = np.searchsorted(time, edges_us).tolist()
+        return [
+            (str(edges[k]), slice(*cuts[k : k + 2])) for k in range(len(edges) - 1) if cuts[k] < cuts[k + 1]
+        ]
+    place = np.searchsorted(edges_us, time, side="right") - 1
     return [(str(edges[k]), place == k) for k in np.unique(place)]
 
 

@@ -18,8 +18,6 @@ from ingest.dialect import (
     decide_clock,
     decide_encoding,
     decide_layout,
-    decide_numbers,
-    decide_quality,
     decide_separator,
     fields,
 )
@@ -27,6 +25,7 @@ from ingest.errors import ExportError
 from ingest.lines import BLOCK, Block, Lines, blocks, opened, screened, wrong_columns
 from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US
 from ingest.unit import ExportRules
+from ingest.values import decide_numbers, decide_quality
 
 _WORDS = pa.dictionary(pa.int32(), pa.string())
 _FIRST_LINES = 50  # what the separator is judged by
@@ -84,7 +83,7 @@ class TextFile:
             Rows.
         types : dict of int to pyarrow.DataType
             The columns wanted.
-        **convert
+        **convert : Any
             Further settings of pyarrow.csv.ConvertOptions.
 
         Returns
@@ -166,7 +165,7 @@ def open_text(
             f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
         )
     layout = decide_layout(place, file.header, wanted or (), file.look)
-    clock = decide_clock(f"{path.name}:{file.header_row + 1}", layout.time, file.look, zone)
+    clock = decide_clock(place, (layout.time, file.header[layout.time]), file.look, zone)
     numbers = decide_numbers(path.name, value_columns(file.header, layout, wanted), file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
     return file, Dialect(
@@ -193,7 +192,8 @@ def value_columns(header: Sequence[str], layout: Layout, wanted: Collection[str]
     """
     if layout.value is not None:
         return [layout.value]
-    return [i for i, name in enumerate(header) if i != layout.time and (wanted is None or name in wanted)]
+    asked = {name for name in header if name} if wanted is None else wanted
+    return [i for i, name in enumerate(header) if i != layout.time and name in asked]
 
 
 def text_blocks(file: TextFile, dialect: Dialect, columns: Sequence[int]) -> Iterator[Block]:

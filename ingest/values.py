@@ -1,8 +1,12 @@
-"""Values and qualities as exports write them: numbers, words for "no value", quality words and codes."""
+"""Values and qualities as exports write them: numbers, words for "no value", quality words and codes.
+
+Which of the ways an export uses is found from what has one meaning only, and refused where nothing tells.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+import re
+from collections.abc import Callable, Collection, Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -12,8 +16,10 @@ import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from ingest.account import INFINITE, NUMBER, QUALITY
-from ingest.columns import coded, flags, floats, present, single
+from ingest.columns import Look, coded, flags, floats, matches, present, single
+from ingest.errors import ExportError
 from ingest.readings import BAD, GOOD, UNCERTAIN, UNKNOWN
+from ingest.unit import ExportRules
 
 MISSING_WORDS = ("bad", "no data", "-", "#n/a", "err", "")  # whatever their capitals; common practice
 
@@ -23,6 +29,10 @@ NUMBERS = {
 }
 _NOT_FINITE = r"^[+-]?(inf|infinity|nan)$"
 _MINUS = "\u2212"
+
+_GROUPED = r"^\s*[+\-\x{2212}]?[1-9]\d{0,2},\d{3}\s*$"  # 1,234: a decimal comma, or a mark between thousands
+_POINT = r"^\s*[+\-\x{2212}]?\d*\.\d+([eE][+-]?\d+)?\s*$"
+_COMMA = r"^\s*[+\-\x{2212}]?\d*,\d+([eE][+-]?\d+)?\s*$"
 
 Codes = NDArray[np.int8]
 
@@ -64,9 +74,14 @@ class Numbers:
             column = column.cast(
                 pa.string()
             )  # Arrow's own way from decimal to float is off in the last digit
-        value = floats(single(column.cast(pa.float64())))
+        value = self._emptied(floats(single(column.cast(pa.float64()))))
         reason = np.where(np.isinf(value), INFINITE, 0).astype(np.int8)
         return Values(value, reason)
+
+    def _emptied(self, value: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Nothing in place of a number that stands for "no value", however many zeros follow its point."""
+        codes = [float(w) for w in (word.replace(",", ".") for word in self.missing) if _is_number(w)]
+        return np.where(np.isin(value, codes), np.nan, value) if codes else value
 
     def _from_text(self, column: Any) -> Values:
         text = pc.replace_substring(pc.utf8_trim_whitespace(column), _MINUS, "-")
@@ -77,7 +92,11 @@ class Numbers:
         value = floats(single(pc.replace_substring(number, self.decimal, ".").cast(pa.float64())))
         odd = flags(pc.match_substring_regex(small, _NOT_FINITE)) | np.isinf(value)
         reason = np.where(missing | flags(fits) & ~odd, 0, np.where(odd, INFINITE, NUMBER)).astype(np.int8)
-        return Values(value, np.where(missing, np.int8(0), reason))
+        return Values(self._emptied(value), np.where(missing, np.int8(0), reason))
+
+
+def _is_number(text: str) -> bool:
+    return re.fullmatch(NUMBERS["."], text) is not None
 
 
 def is_text(kind: Any) -> bool:
@@ -227,3 +246,102 @@ def texts(words: Any) -> Iterable[str]:
         Nothing in place of null.
     """
     return ("" if word is None else str(word) for word in words.to_pylist())
+
+
+def decide_numbers(place: str, columns: Sequence[int], look: Look, rules: ExportRules) -> Numbers:
+    """Find the decimal mark: the first number that can be read in one way only tells.
+
+    Parameters
+    ----------
+    place : str
+        `file` or `file:row`, for the error.
+    columns : sequence of int
+        Columns of values.
+    look : callable
+        Gives columns.
+    rules : ExportRules
+        Further words for "no value".
+
+    Returns
+    -------
+    Numbers
+        Whole numbers only: with a decimal point.
+    """
+    missing = frozenset(word.strip().casefold() for word in (*MISSING_WORDS, *rules.missing_words))
+    grouped = ""
+    for block in look(columns) if columns else ():
+        written = [column for column in block if is_text(column.type)]
+        if not written:
+            return Numbers(".", missing)
+        point = sum(matches(c, _POINT) for c in written)
+        either = sum(matches(c, _GROUPED) for c in written)
+        comma = sum(matches(c, _COMMA) for c in written) - either
+        if point != comma:
+            return Numbers("." if point > comma else ",", missing)
+        if either and not grouped:
+            grouped = next(t for c in written for t in texts(c.filter(pc.match_substring_regex(c, _GROUPED))))
+    if grouped:
+        raise ExportError(
+            f"{place}: {grouped!r} is {grouped.replace(',', '.')} with a decimal comma but"
+            f" {grouped.replace(',', '')} with marks between thousands, and no number tells which",
+            remedy="Export with a decimal point and without marks between thousands.",
+        )
+    return Numbers(".", missing)
+
+
+def decide_quality(place: str, column: int | None, look: Look, rules: ExportRules) -> str | None:
+    """Find how the export writes quality, unless the unit file says it.
+
+    Parameters
+    ----------
+    place : str
+        `file` or `file:row`, for the error.
+    column : int or None
+        The quality column.
+    look : callable
+        Gives columns.
+    rules : ExportRules
+        Its `quality` stands above what is found.
+
+    Returns
+    -------
+    str or None
+        A key of values.QUALITY_FORMS; None without a quality column.
+    """
+    if column is None:
+        return None
+    if rules.quality is not None:
+        return rules.quality
+    seen: set[str] = set()
+    for block in look([column]):
+        seen |= {text.strip() for text in texts(single(block[0]).unique())} - {""}
+        forms = _quality_forms(seen)
+        if len(forms) == 1:
+            return forms[0]
+        if forms:
+            break
+    if not seen:
+        return "words"
+    sample = ", ".join(repr(text) for text in sorted(seen)[:4])
+    raise ExportError(
+        f"{place}: qualities such as {sample} may be words, OPC UA status codes (0 is good)"
+        " or OPC DA qualities (0 is bad)",
+        remedy="Set quality under [exports] to 'words', 'opc ua' or 'opc da'.",
+    )
+
+
+def _quality_forms(seen: Collection[str]) -> list[str]:
+    """The forms for which there is something that no other form could mean.
+
+    OPC UA codes keep their meaning in the upper 16 of 32 bits, OPC DA qualities have 16 bits in all with good
+    and uncertain in 0xC0. Small numbers without those bits mean something else in each house.
+    """
+    codes = [code for code in map(whole, seen) if code is not None]
+    forms = []
+    if any(quality_of_word(text) is not None for text in seen):
+        forms.append("words")
+    if any(code < 0 or code >= 2**16 for code in codes):
+        forms.append("opc ua")
+    if any(0 < code < 2**16 and code & 0xC0 in (0x40, 0xC0) for code in codes):
+        forms.append("opc da")
+    return forms

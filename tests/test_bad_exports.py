@@ -196,13 +196,13 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "no zone": (
         "x.csv",
         b"time,A\n2026-01-01T00:00,1\n",
-        r"x\.csv:2: times state no offset, and no time zone",
+        r"x\.csv:1: times state no offset, and no time zone",
         "Set time_zone",
     ),
     "a strange zone": (
         "x.csv",
         b"time,A\n2026-01-01T00:00,1\n",
-        r"x\.csv:2: there is no time zone 'Mars/Olympus'",
+        r"x\.csv:1: there is no time zone 'Mars/Olympus'",
         "Set time_zone",
     ),
     "ambiguous dates": (
@@ -220,7 +220,13 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "words for times": (
         "x.csv",
         b"time,A\nMonday,1\n",
-        r"x\.csv:2: 'Monday' is no known form of time",
+        r"x\.csv:1: 'Monday' is no known form of time",
+        "Export times",
+    ),
+    "two forms of time": (
+        "x.csv",
+        b"time,A\n2026-01-01T00:00Z,1\n1767225600,1\n",
+        r"x\.csv:1: '2026-01-01T00:00Z' is one of several forms of time",
         "Export times",
     ),
     "two-digit years": (
@@ -422,14 +428,14 @@ def test_parquet_without_zone_is_refused_unless_one_is_stated(tmp_path: Path):
 def test_parquet_values_that_are_no_numbers_are_refused(tmp_path: Path):
     path = _parquet(tmp_path, time=pa.array([MOMENT]), A=pa.array([{"deep": 1.5}]))
     with pytest.raises(
-        ExportError, match=r"x\.parquet \[A\]: values of type struct<deep: double> are no numbers"
+        ExportError, match=r"x\.parquet \[A\]: neither numbers nor text but struct<deep: double>"
     ):
         opened(path, wanted=ASKED)
 
 
 def test_parquet_times_that_are_small_numbers_are_refused(tmp_path: Path):
     path = _parquet(tmp_path, time=pa.array([1, 2, 3]), A=pa.array([1.5, 1.5, 1.5]))
-    with pytest.raises(ExportError, match=r"the numbers in the time column are no seconds"):
+    with pytest.raises(ExportError, match=r"in the time column \(int64\) is no seconds"):
         opened(path, wanted=ASKED)
 
 
@@ -472,3 +478,34 @@ def test_a_word_added_to_the_unit_file_is_no_fault_any_more(tmp_path: Path):
     text = cell(LONG, 9, 2, "n.a.")
     _, account = read(saved(tmp_path, text), rules=ExportRules(None, ("N.A.",), None))
     assert (account.rejected, account.bad) == (0, 7)
+
+
+@pytest.mark.parametrize("zone", ["Europe/Berlin", "Asia/Tokyo"])
+def test_a_time_column_that_says_utc_is_not_read_in_another_zone(tmp_path: Path, zone: str):
+    path = saved(tmp_path, "time (UTC),A\n2026-01-01 00:00,1\n")
+    with pytest.raises(ExportError, match=r"'time \(UTC\)' does not hold times of the stated zone") as caught:
+        opened(path, zone=zone)
+    assert caught.match("Set time_zone under .exports. to 'UTC'")
+    readings, _ = read(path, zone="UTC", wanted=ASKED)
+    assert readings["A"].time.tolist() == [1_767_225_600_000_000]  # 2026-01-01: 20,454 days x 86,400 s
+
+
+@pytest.mark.parametrize("column", [pa.array([True]), pa.array([[1]]), pa.array([MOMENT.date()])])
+def test_parquet_times_of_other_types_are_refused(tmp_path: Path, column: pa.Array):
+    path = _parquet(tmp_path, time=column, A=pa.array([1.5]))
+    with pytest.raises(ExportError, match=r"x\.parquet: what stands in the time column \("):
+        opened(path, wanted=ASKED)
+
+
+def test_parquet_tags_that_are_no_text_are_refused(tmp_path: Path):
+    path = _parquet(tmp_path, time=pa.array([MOMENT]), tag=pa.array([[1]]), value=pa.array([1.5]))
+    with pytest.raises(ExportError, match=r"x\.parquet \[tag\]: neither numbers nor text but list"):
+        opened(path, wanted=ASKED)
+
+
+def test_a_column_without_name_is_nobodys_tag(tmp_path: Path):
+    path = saved(tmp_path, "time,A,\n2026-01-01T00:00Z,1,\n")
+    for wanted in (ASKED, None):
+        readings, account = read(path, wanted=wanted)
+        assert list(readings) == ["A"]
+        assert account.unasked_tags == (("", 1),)

@@ -14,7 +14,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from ingest import lines
-from ingest.dialect import Dialect, decide_encoding, decide_numbers, decide_quality, decide_separator
+from ingest.dialect import Dialect, decide_encoding, decide_separator
 from ingest.errors import ExportError
 from ingest.timestamps import Clock, localised, resolved
 from ingest.unit import ExportRules
@@ -22,6 +22,8 @@ from ingest.values import (
     MISSING_WORDS,
     NUMBERS,
     Numbers,
+    decide_numbers,
+    decide_quality,
     quality_of_opc_da,
     quality_of_opc_ua,
     quality_of_word,

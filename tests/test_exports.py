@@ -186,6 +186,37 @@ def test_long_parquet_with_whole_numbers_and_codes(tmp_path: Path):
     assert_true(readings, rounded, quality=GOOD)
 
 
+@pytest.mark.parametrize("written", ["-9999", "-9999.0", "-9999.000"])
+def test_a_number_that_stands_for_no_value_is_bad_however_it_is_written(tmp_path: Path, written: str):
+    rules = ExportRules(None, ("-9999",), None)
+    for text in (f"time,A\n2026-01-01T00:00Z,{written}\n", f"time,A\n2026-01-01T00:00Z,{written}\nx,1\n"):
+        readings, _ = read(saved(tmp_path, text), rules=rules, wanted=("A",))
+        assert readings["A"].quality.tolist() == [BAD]
+    times = pa.array([datetime(2026, 1, 1, tzinfo=UTC)])
+    pq.write_table(pa.table({"time": times, "A": pa.array([float(written)])}), tmp_path / "x.parquet")
+    readings, _ = read(tmp_path / "x.parquet", rules=rules, wanted=("A",))
+    assert readings["A"].quality.tolist() == [BAD]
+
+
+@pytest.mark.parametrize(
+    "times",
+    [
+        lambda t: pa.array([iso_z(x) for x in t]),
+        lambda t: pa.array([iso_z(x) for x in t]).dictionary_encode(),
+        lambda t: pa.array([iso_z(x) for x in t]).cast(pa.string_view()),
+        lambda t: pa.array(t, pa.timestamp("ms", "UTC")).dictionary_encode(),
+        lambda t: pa.array([micros(x) // 1000 for x in t], pa.int64()),
+        lambda t: pa.array([micros(x) / 1e6 for x in t], pa.float64()),
+    ],
+    ids=["text", "dictionary", "view", "dictionary of stamps", "whole milliseconds", "seconds"],
+)
+def test_parquet_gives_the_same_readings_whatever_the_type_of_the_times(tmp_path: Path, times):
+    truth = made_truth()
+    columns = {tag: pa.array(truth.values[:, i], from_pandas=True) for i, tag in enumerate(TAGS)}
+    pq.write_table(pa.table({"time": times(truth.times), **columns}), tmp_path / "x.parquet")
+    assert_true(read(tmp_path / "x.parquet")[0], truth)
+
+
 def _changed(text: str, row: int, column: int, cell: str) -> str:
     rows = [line.split(",") for line in text.splitlines()]
     rows[row - 1][column] = cell
