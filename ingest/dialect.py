@@ -420,7 +420,8 @@ def _date_order(place: str, columns: Iterator[Any]) -> str:
             )
         if day or month:
             return "day first" if day else "month first"
-        sample = sample or next((text for text in texts(column) if text.strip()), "")
+        dates = column.filter(pc.match_substring_regex(column, PATTERNS["day first"]))
+        sample = sample or next(iter(texts(dates)), "")
     first, second, *rest = sample.strip().replace("/", ".").replace("-", ".").split(".")
     year = rest[0][:4]
     raise ExportError(

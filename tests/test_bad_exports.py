@@ -10,6 +10,8 @@ from pathlib import Path
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from ingest import lines
 from ingest.account import (
@@ -208,6 +210,12 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "ambiguous dates": (
         "x.csv",
         b"time,A\n03/04/2026 10:00,1\n",
+        r"'03/04/2026 10:00' is 2026-04-03 day first but 2026-03-04 month first",
+        "after the 12th",
+    ),
+    "ambiguous dates below a stray line": (
+        "x.csv",
+        b"time,A\nplant B,1\n03/04/2026 10:00,1\n03/05/2026 10:00,1\n",
         r"'03/04/2026 10:00' is 2026-04-03 day first but 2026-03-04 month first",
         "after the 12th",
     ),
@@ -509,3 +517,45 @@ def test_a_column_without_name_is_nobodys_tag(tmp_path: Path):
         readings, account = read(path, wanted=wanted)
         assert list(readings) == ["A"]
         assert account.unasked_tags == (("", 1),)
+
+
+PIECES = [
+    b'"',
+    b"\n",
+    b"\r",
+    b",",
+    b";",
+    b"\0",
+    b"bad",
+    b"inf",
+    b"\xff",
+    b"2026-10-25 02:30",
+    b"",
+    b"time",
+    b"1e400",
+]
+MENDED = [WIDE[:3000], LONG[:3000], wide_text(made_truth(60), separator=";", decimal=",")]
+
+
+@given(
+    st.sampled_from(MENDED),
+    st.lists(
+        st.tuples(st.integers(0, 2900), st.integers(0, 40), st.sampled_from(PIECES)), min_size=1, max_size=8
+    ),
+    st.sampled_from([1 << 20, 300]),
+)
+@settings(suppress_health_check=[HealthCheck.function_scoped_fixture], deadline=None)
+def test_whatever_stands_in_a_file_it_is_refused_in_words_or_counted_to_the_last_reading(
+    tmp_path: Path, text: str, cuts: list[tuple[int, int, bytes]], block: int
+):
+    raw = bytearray(text.encode())
+    for start, length, piece in cuts:
+        raw[start : start + length] = piece
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(lines, "BLOCK", block)
+        said = "export.csv"
+        try:
+            read(saved(tmp_path, bytes(raw)), zone="Europe/Berlin")  # asserts that the account adds up
+        except ExportError as error:
+            said = error.what
+    assert said.startswith("export.csv")
