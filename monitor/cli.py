@@ -62,6 +62,9 @@ def main() -> None:
     except click.ClickException as error:
         click.echo(_two_lines(error), err=True)
         code = YOURS
+    except BrokenPipeError:  # the reader of our output, such as `head`, has seen enough
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        code = FINE
     except (click.Abort, KeyboardInterrupt):
         click.echo("Stopped. The store holds the last pass that was finished.", err=True)
         code = STOPPED
@@ -75,8 +78,19 @@ def _two_lines(error: click.ClickException) -> str:
     return f"{path}: {error.format_message()}\n  See '{path} --help'."
 
 
+def _version(context: click.Context, _: click.Parameter, asked: bool) -> None:
+    """Print the version, installed or not, and end."""
+    if asked:
+        from ingest.database import program_version
+
+        click.echo(f"outlet {program_version()}")
+        context.exit()
+
+
 @click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
-@click.version_option(package_name="outlet-selectivity-monitor")
+@click.option(
+    "--version", is_flag=True, is_eager=True, expose_value=False, callback=_version, help="Show it."
+)
 def outlet() -> None:
     """Conversion, selectivity and yield of a reactor, reconciled from historian exports.
 
@@ -105,7 +119,10 @@ def demo(folder: Path, days: int, no_page: bool, port: int, as_json: bool) -> in
     if not no_page:
         _must_be_free(port)
     click.echo(f"Making {days} days of an invented plant in {folder} ...", err=True)
-    made = exports.make(folder, days=days)
+    try:
+        made = exports.make(folder, days=days)
+    except OSError as fault:
+        raise OutletError(f"{folder}: {fault.strerror}", remedy="Give another --folder.") from fault
     # What was written a moment ago is whole: nothing else writes into this folder.
     code = _take_in([exports.UNIT_FILE], folder / "store", made.exports, as_json, settle=timedelta(0))
     return code if no_page else _serve(folder / "store", [exports.UNIT_FILE], port)

@@ -217,6 +217,28 @@ def test_the_page_is_served_to_this_computer_until_it_is_interrupted(
     page.wait(timeout=20)
 
 
+def test_a_folder_that_cannot_be_written_is_told(tmp_path: Path):
+    (tmp_path / "file").write_text("in the way", encoding="utf-8")
+    done = outlet("demo", "--no-page", "--folder", "file/plant", folder=tmp_path)
+    assert done.returncode == 2
+    assert done.stderr.splitlines()[1:] == ["file/plant: Not a directory", "  Give another --folder."]
+
+
+def test_a_reader_that_has_seen_enough_is_no_fault(plant: tuple[Path, dict[str, object]]):
+    command = f"'{sys.executable}' -m monitor check '{UNIT_FILE}' | true; echo ${{PIPESTATUS[0]}}"
+    done = subprocess.run(
+        ["bash", "-c", command], cwd=plant[0], capture_output=True, text=True, check=False, env=ENVIRONMENT
+    )
+    assert done.stderr == ""
+    assert done.stdout == "0\n"
+
+
+def test_the_version_is_shown_whether_installed_or_not(tmp_path: Path):
+    done = outlet("--version", folder=tmp_path)
+    assert done.returncode == 0
+    assert done.stdout.startswith("outlet ")
+
+
 def test_a_port_in_use_is_told_before_any_work(tmp_path: Path):
     with socket.socket() as taken:
         taken.bind(("127.0.0.1", 0))
