@@ -195,7 +195,7 @@ def time_scale(first: pd.Timestamp, last: pd.Timestamp, zone: str, *, title: boo
         The channel without its field.
     """
     places = ticks(first, last, zone, most=9)
-    names = sorted({wording.zone_name(t.to_pydatetime(), zone) for t in (first, last)})
+    names = dict.fromkeys(wording.zone_name(t.to_pydatetime(), zone) for t in (first, last))
     # The label is looked up by the instant, so that no formatter can put it into another zone.
     table = {str(pd.Timestamp(at).value // 10**6): label for at, label in places}
     axis: Spec = {

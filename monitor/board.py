@@ -287,12 +287,12 @@ def _told(row: Mapping[Hashable, Any], figure: Figure | None) -> Told:
 
 
 def worst_first(episodes: pd.DataFrame) -> pd.DataFrame:
-    """Order open episodes: by priority, then by the share of the limit they went beyond it, then by age.
+    """Order open episodes: suppressed ones last, by priority, by the share of the limit beyond it, by age.
 
     Parameters
     ----------
     episodes : DataFrame
-        One row per episode: priority, cleared, worst, limit, raised.
+        One row per episode: suppressed, priority, cleared, worst, limit, raised.
 
     Returns
     -------
@@ -302,8 +302,8 @@ def worst_first(episodes: pd.DataFrame) -> pd.DataFrame:
     still = episodes[episodes["cleared"].isna()]
     rank = still["priority"].map(PRIORITY_RANK).fillna(len(PRIORITY_RANK))
     beyond = -(still["worst"] - still["limit"]).abs() / still["limit"].abs().clip(lower=1e-12)
-    order = pd.DataFrame({"rank": rank, "beyond": beyond, "raised": still["raised"]})
-    return still.loc[order.sort_values(["rank", "beyond", "raised"]).index]
+    order = still[["suppressed", "raised"]].assign(rank=rank, beyond=beyond)
+    return still.loc[order.sort_values(["suppressed", "rank", "beyond", "raised"]).index]
 
 
 def marked(

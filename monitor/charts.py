@@ -18,6 +18,8 @@ from monitor.axes import Ink, Spec, frame_spec, microseconds, plant_time, time_s
 from monitor.series import Envelope, envelope
 
 MOST_MARKS = 1_200  # of one line: a week of 10-min cells point by point
+ROOM_PX = 24
+WORDS_PX = 120  # a plot lower than this has no room for the words of an episode
 
 
 @dataclass(frozen=True, slots=True)
@@ -161,10 +163,12 @@ def _value_axis(line: pd.DataFrame, panel: Panel) -> Spec:
     shown = shown[np.isfinite(shown)]
     low, high = (float(shown.min()), float(shown.max())) if shown.size else (0.0, 1.0)
     air = 0.08 * (high - low) or max(abs(high) * 0.01, 0.5)
+    # The bar of an episode and a limit's word need room above the highest rule.
+    top = max(air, (high - low) * ROOM_PX / (panel.height - ROOM_PX)) if len(panel.episodes) else air
     return {
         "type": "quantitative",
         "title": None,
-        "scale": {"zero": False, "nice": False, "domain": [low - air, high + air]},
+        "scale": {"zero": False, "nice": False, "domain": [low - air, high + top]},
         "axis": {"tickCount": 4, "minExtent": 46, "maxExtent": 46, "ticks": False, "labelPadding": 6},
     }
 
@@ -302,13 +306,13 @@ def _episode_layers(panel: Panel) -> list[Spec]:
         },
         {
             "data": {"name": "episodes"},
-            "transform": [{"filter": "datum.room"}],
+            "transform": [{"filter": f"datum.room && {panel.height} >= {WORDS_PX}"}],
             "mark": {
-                "type": "text", "color": panel.ink.alarm_text, "align": "left", "baseline": "top",
-                "dx": 3, "fontSize": 12, "clip": True,
+                "type": "text", "color": panel.ink.alarm_text, "align": "right", "baseline": "top",
+                "dx": -4, "fontSize": 12, "clip": True,
             },
             "encoding": {
-                "x": {"field": "start", "type": "temporal"},
+                "x": {"field": "end", "type": "temporal"},
                 "y": {"value": 10},
                 "text": {"field": "word"},
             },
@@ -439,6 +443,7 @@ def adjustment_strip(table: pd.DataFrame, ink: Ink) -> Chart:
         "type": "quantitative",
         "scale": {"domain": [-reach, reach], "nice": False},
         "title": "adjustment in standard uncertainties",
+        "axis": {"tickCount": 7},
     }
     tip = [
         {"field": "instrument", "title": "instrument"},
@@ -471,7 +476,11 @@ def adjustment_strip(table: pd.DataFrame, ink: Ink) -> Chart:
     out = shown.loc[shown["word"] == "stands out", "instrument"].tolist()
     said = f"{', '.join(out)} stand out" if out else "none stands out"
     alt = f"Mean adjustment of {len(shown)} instruments in their standard uncertainties: {said}."
-    spec = frame_spec(ink) | {"height": {"step": 26}, "data": {"name": "adjusted"}, "layer": layers}
+    spec = frame_spec(ink) | {
+        "height": 26 * max(len(shown), 1),
+        "data": {"name": "adjusted"},
+        "layer": layers,
+    }
     return Chart(spec, {"adjusted": shown}, alt)
 
 

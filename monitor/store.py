@@ -9,9 +9,15 @@ from pathlib import Path
 import pandas as pd
 import pyarrow as pa
 
+from ingest.balance import problem_of
+from ingest.cells import cells_from_frame
 from ingest.ledger import Store
+from ingest.unit import Unit
+from monitor.amounts import amounts_of
+from monitor.axes import microseconds
+from monitor.figures import figures_of
 from monitor.layout import BAR, figure_stage, instrument_frame, unflat
-from monitor.windows import FIELDS
+from monitor.windows import FIELDS, SPAN_FIELDS, window_at
 
 NEXT = timedelta(microseconds=1)  # the store reads up to, not including
 EPISODE_TIMES = ("raised", "cleared", "worst_at")
@@ -176,6 +182,32 @@ def objective(folder: Path, unit: str, span: tuple[datetime, datetime]) -> pd.Da
     return _frame(table, "start", *columns)
 
 
+def sums(folder: Path, unit: Unit, span: tuple[datetime, datetime]) -> pd.DataFrame:
+    """Work out once more, from the stored cells, what the figures of one span are a ratio of.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    span : tuple of datetime
+        From the first cell start to before the second, zone-aware.
+
+    Returns
+    -------
+    DataFrame
+        As `windows.window_at` gives it; empty when there are no cells.
+    """
+    table = Store(folder).read(unit.key, "cells", first=span[0], last=span[1])
+    if not table.num_rows:
+        return pd.DataFrame(columns=list(SPAN_FIELDS))
+    cells = cells_from_frame(unit, _frame(table, "start"))
+    _, amounts = amounts_of(unit, problem_of(unit), cells)
+    edges = microseconds(pd.DatetimeIndex(span))
+    return window_at(unit, amounts, figures_of(unit, amounts.names), int(edges[0]), int(edges[1]))
+
+
 def episodes(folder: Path, unit: str) -> pd.DataFrame:
     """Give all episodes of a unit.
 
@@ -197,7 +229,7 @@ def episodes(folder: Path, unit: str) -> pd.DataFrame:
     words = {name: pd.Series(dtype=object) for name in ("watch", "figure", "side", "priority")}
     numbers = {name: pd.Series(dtype=float) for name in ("limit", "worst")}
     times = {name: pd.Series(dtype="datetime64[us, UTC]") for name in EPISODE_TIMES}
-    return pd.DataFrame({**words, **numbers, **times})
+    return pd.DataFrame({**words, **numbers, **times, "suppressed": pd.Series(dtype=bool)})
 
 
 def last_export(folder: Path) -> datetime | None:

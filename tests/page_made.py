@@ -1,4 +1,4 @@
-"""A store for the page, made in seconds: the demo plant's unit file with invented figures that do what a test needs."""
+"""A store for the page, made in seconds: the demo plant's unit with invented figures a test needs."""
 
 from __future__ import annotations
 
@@ -23,8 +23,8 @@ from monitor.windows import FIELDS, MODES, REASONS
 DEMO = Path(__file__).parents[1] / "config" / "demo.toml"
 RUNNING, DOWN = OPERATING.index("running"), OPERATING.index("down")
 LEVELS = {
-    "conversion": (91.4, 0.25), "selectivity on converted": (83.6, 0.5), "yield on feed": (76.6, 0.45),
-    "overall selectivity to all unwanted": (4.12, 0.13), "carbon closure": (99.6, 1.1),
+    "conversion": (95.5, 0.1), "selectivity on converted": (86.5, 0.25), "yield on feed": (82.6, 0.28),
+    "overall selectivity to all unwanted": (1.43, 0.023), "carbon closure": (99.6, 1.1),
     "hydrogen closure": (100.4, 1.6), "oxygen closure": (98.9, 2.2), "converted closure": (98.7, 2.4),
 }  # fmt: skip
 
@@ -112,11 +112,13 @@ def episode_frame(start: pd.DatetimeIndex) -> pd.DataFrame:
     hours = [pd.Timedelta(hours=h) for h in (5, 30, 24, 2, 27)]
     return pd.DataFrame(
         {
-            "watch": ["yield on feed", "carbon closure"], "figure": ["yield on feed", "carbon closure"],
-            "window": [pd.Timedelta(hours=8)] * 2, "side": ["low", "high"], "limit": [76.0, 103.0],
+            "watch": ["yield on feed 8 h", "carbon closure 8 h"],
+            "figure": ["yield on feed", "carbon closure"],
+            "window": [pd.Timedelta(hours=8)] * 2, "side": ["low", "high"], "limit": [81.0, 103.0],
             "priority": ["high", "low"], "raised": [last - hours[0], last - hours[1]],
             "cleared": pd.to_datetime([pd.NaT, last - hours[2]], utc=True),
-            "worst": [74.6, 104.2], "worst_at": [last - hours[3], last - hours[4]],
+            "suppressed": [False, False], "worst": [79.9, 104.2],
+            "worst_at": [last - hours[3], last - hours[4]],
         }
     )  # fmt: skip
 

@@ -20,9 +20,12 @@ def main() -> None:
     pages = [st.Page(view, title=title, url_path=path, default=path == "now") for title, path, view in VIEWS]
     chosen = st.navigation(pages, position="hidden")
     shell.style()
-    key = shell.header(pages, chosen)
+    key, place = shell.header()
     if key is not None:
-        chosen.run()
+        try:
+            chosen.run()
+        finally:
+            shell.links(place, pages, chosen, key)
     shell.cautions()
 
 

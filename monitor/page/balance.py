@@ -12,9 +12,9 @@ from ingest.unit import Unit
 from monitor import board, charts, witnesses, wording
 from monitor.charts import Panel
 from monitor.figures import Figure
-from monitor.page import data, details, shell
+from monitor.page import data, details, shell, spans
 
-SPANS = {"24 h": timedelta(hours=24), "7 d": timedelta(days=7), "30 d": timedelta(days=30)}
+Shown = tuple[pd.Timestamp, pd.Timestamp]
 DAY = timedelta(hours=24)
 CLOSURE_HEIGHT, FIT_HEIGHT = 130, 170
 FIT_MARKS = 200  # cell by cell it is noise; least and greatest are drawn all the same
@@ -27,27 +27,29 @@ def view() -> None:
     if known is None:
         shell.nothing_yet()
         return
-    chosen = st.segmented_control(
-        "Span", list(SPANS), default="7 d", required=True, key="span", bind="query-params"
-    )
-    _body(unit.key, SPANS.get(str(chosen), SPANS["7 d"]))
+    spans.pick()
+    first, last = spans.chosen(unit, known)
+    if first >= last:
+        shell.ends_before_it_begins()
+        return
+    _body(unit.key, (first, last))
 
 
 @st.fragment(run_every=shell.REFRESH)
-def _body(key: str, length: timedelta) -> None:
+def _body(key: str, span: Shown) -> None:
     unit = data.units()[key]
     known = data.span(unit)
     if known is None:
         return
     left, right = st.columns([1, 1], gap="large")
     with left:
-        _closures(unit, known, length)
-        _fit(unit, known, length)
+        _closures(unit, span)
+        _fit(unit, span)
     with right:
         _instruments(unit, known)
 
 
-def _closures(unit: Unit, known: data.Span, length: timedelta) -> None:
+def _closures(unit: Unit, span: Shown) -> None:
     """Raw closures with their interval."""
     shell.write(
         "<h2>Raw closures</h2><p class='quiet'>Out over in by readings alone, before anything was adjusted, "
@@ -56,14 +58,13 @@ def _closures(unit: Unit, known: data.Span, length: timedelta) -> None:
     )
     found = [figure for name, figure in data.figures(unit).items() if name.endswith("closure")]
     for index, figure in enumerate(found):
-        _closure(unit, figure, known, length, lowest=index == len(found) - 1)
+        _closure(unit, figure, span, lowest=index == len(found) - 1)
 
 
-def _closure(unit: Unit, figure: Figure, known: data.Span, length: timedelta, *, lowest: bool) -> None:
-    first = known.last - length
-    panel = details.panel(unit, figure, board.watch_on(unit, figure.name), first, known.last, steady=False)
+def _closure(unit: Unit, figure: Figure, span: Shown, *, lowest: bool) -> None:
+    panel = details.panel(unit, figure, board.watch_on(unit, figure.name), *span, steady=False)
     panel = panel.resized(CLOSURE_HEIGHT, axis=lowest, brush=False)
-    frame = data.figure(unit, board.SHIFT, (figure.name, board.MODES[0]), first, known.last)
+    frame = data.figure(unit, board.SHIFT, (figure.name, board.MODES[0]), *span)
     details.heading(figure, _verdict(frame, figure))
     line = charts.drawn(frame, panel)
     if line["mean"].notna().any():
@@ -84,9 +85,9 @@ def _verdict(frame: pd.DataFrame, figure: Figure) -> str:
     return f"{wording.amount(value, half, figure.unit)}  {shape} {words}"
 
 
-def _fit(unit: Unit, known: data.Span, length: timedelta) -> None:
+def _fit(unit: Unit, span: Shown) -> None:
     """How well all readings of a cell fit one balance."""
-    frame = data.fit(unit, known.last - length, known.last)
+    frame = data.fit(unit, *span)
     share = witnesses.judged(frame)
     said = (
         "no cell can be judged"
@@ -97,11 +98,11 @@ def _fit(unit: Unit, known: data.Span, length: timedelta) -> None:
         f"<h2>Fit of the balance</h2><p class='quiet'>Sum of squared adjustments over degrees of freedom, "
         f"cell by cell. Dashed: what chi-square allows in 95 % of cells. In this span {said}.</p>"
     )
-    spans = data.operating(unit, known.last - length, known.last)
+    conditions = data.operating(unit, *span)
     panel = Panel(
-        title="objective per degree of freedom", unit="", first=known.last - length, last=known.last,
+        title="objective per degree of freedom", unit="", first=span[0], last=span[1],
         zone=unit.time_zone, ink=shell.ink(), height=FIT_HEIGHT,
-        shaded=board.shaded(spans, steady=False, zone=unit.time_zone),
+        shaded=board.shaded(conditions, steady=False, zone=unit.time_zone),
     )  # fmt: skip
     line = charts.drawn(frame, panel, most=FIT_MARKS)
     if line["mean"].notna().any():

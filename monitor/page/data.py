@@ -109,6 +109,34 @@ def _now(what: str, *arguments: Any) -> Any:
     return _read(str(site()[0]), version() or "", what, arguments)
 
 
+@st.cache_data(max_entries=KEPT, show_spinner=False)
+def _sums(folder: str, version: str, key: str, span: tuple[datetime, datetime], _unit: Unit) -> Frame:
+    """Sums of one span at one version of the store; the unit file's identity is part of `key`."""
+    del version, key
+    return store.sums(Path(folder), _unit, span)
+
+
+def sums(unit: Unit, window: timedelta) -> Frame:
+    """Give what the figures of the newest window are a ratio of.
+
+    Parameters
+    ----------
+    unit : Unit
+        One reactor.
+    window : timedelta
+        Length.
+
+    Returns
+    -------
+    DataFrame
+        Index (figure, mode), columns as in `windows.SPAN_FIELDS`; empty when nothing is there.
+    """
+    known = span(unit)
+    edges = (known.last - window, known.last) if known else None
+    key = f"{unit.key} {[_identity(path) for path in site()[1]]}"
+    return _sums(str(site()[0]), version() or "", key, edges, unit) if edges else pd.DataFrame()
+
+
 def span(unit: Unit) -> Span | None:
     """Give the time that the store knows of a unit.
 

@@ -11,7 +11,7 @@ import streamlit as st
 
 from ingest.unit import Unit, Watch
 from monitor import board, wording
-from monitor.board import MODES, Reading, Row
+from monitor.board import MODES, SHIFT, Reading, Row
 from monitor.charts import Panel
 from monitor.figures import Figure
 from monitor.page import data, shell
@@ -95,22 +95,37 @@ def popover(unit: Unit, row: Row, known: data.Span) -> None:
         Time that the store knows.
     """
     with st.popover(f"**{row.figure.label}**", type="tertiary", key=f"how {row.figure.name}"):
-        shell.write(_definition(row.figure) + _table(unit, row) + _limits(row) + _end(unit, known))
+        sums = _amounts(unit, row)
+        shell.write(_definition(row.figure, sums) + _table(unit, row) + _limits(row) + _end(unit, known))
 
 
-def _definition(figure: Figure) -> str:
-    numerator = _sum(figure.numerator)
-    denominator = _sum(figure.denominator) if figure.denominator else "running hours"
+def _definition(figure: Figure, sums: tuple[str, str] = ("", "")) -> str:
+    """What the figure is a ratio of, with the sums themselves where they are known."""
     facts = {
         "definition": figure.definition,
-        "numerator": numerator,
-        "denominator": denominator,
-        "factor": f"{figure.scale:.6g} ({figure.unit})",
+        "numerator": _sum(figure.numerator) + sums[0],
+        "denominator": _sum(figure.denominator) + sums[1]
+        if figure.denominator
+        else "running hours" + sums[1],
+        "value": f"{figure.scale:.6g} times numerator over denominator [{figure.unit}]",
         "half-width": "95 %; random part over independent results, calibration part undivided",
     }
-    return (
-        "<dl>" + "".join(f"<dt>{name}</dt><dd>{escape(text)}</dd>" for name, text in facts.items()) + "</dl>"
-    )
+    rows = "".join(f"<dt>{name}</dt><dd>{escape(text)}</dd>" for name, text in facts.items())
+    return f"<dl>{rows}</dl>"
+
+
+def _amounts(unit: Unit, row: Row) -> tuple[str, str]:
+    """Numerator and denominator of the shift's window in numbers."""
+    table, place = data.sums(unit, SHIFT), (row.figure.name, board.mode_of(row.watch))
+    if place not in table.index:
+        return "", ""
+    units = ("kmol", "kmol") if row.figure.denominator else ("t", "h")
+    found = [float(table[field].loc[place]) for field in ("numerator", "denominator")]
+    said = [
+        f" = {wording.amount(amount, float('nan'), unit)}" if pd.notna(amount) else ""
+        for amount, unit in zip(found, units, strict=True)
+    ]
+    return said[0], said[1]
 
 
 def _sum(weights: Mapping[str, float]) -> str:
@@ -118,12 +133,14 @@ def _sum(weights: Mapping[str, float]) -> str:
     parts = [
         name if weight == 1 else f"{weight:+.4g} times {name}" for name, weight in weights.items() if weight
     ]
-    return "sum over the window of " + " ".join(parts)
+    return " ".join(parts)
 
 
 def _table(unit: Unit, row: Row) -> str:
     """Every window in both modes with its coverage."""
-    heads = "".join(f"<th scope='col'>{mode}</th><th scope='col'>coverage</th>" for mode in MODES)
+    heads = "".join(
+        f"<th scope='col'>{mode}</th><th scope='col' class='wide'>coverage</th>" for mode in MODES
+    )
     lines = "".join(
         f"<tr><th scope='row'>{wording.window(window)}</th>"
         + "".join(_two(row.readings.get((window, mode)), row.figure.unit) for mode in MODES)
@@ -135,7 +152,7 @@ def _table(unit: Unit, row: Row) -> str:
 
 def _two(reading: Reading | None, unit: str) -> str:
     covered = f"{100 * reading.coverage:.0f} %" if reading and pd.notna(reading.coverage) else "\u2013"
-    return f"<td>{value(reading, unit)}</td><td>{covered}</td>"
+    return f"<td>{value(reading, unit)}</td><td class='wide'>{covered}</td>"
 
 
 def _limits(row: Row) -> str:

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import math
 from datetime import datetime, timedelta
 from html import escape
+from typing import Any
 
 import pandas as pd
 import streamlit as st
@@ -13,6 +15,7 @@ from monitor import board, charts, wording
 from monitor.board import MODES, SHIFT, Reading, Row
 from monitor.figures import Figure
 from monitor.page import data, details, shell
+from monitor.wording import Told
 
 RECENT = timedelta(hours=48)
 STRIP_HEIGHT = 80
@@ -29,12 +32,13 @@ def view() -> None:
         return
     _freshness(unit, known)
     _episodes(unit, known)
-    rows = _rows(unit, known)
-    if all(one.standing.kind == "missing" for one in rows) and _never_ran(unit, known):
+    if _never_ran(unit, known):
         shell.empty(
             "The unit never ran in the time taken in.",
-            "Figures begin with the first running cell; check [operating] in the unit file if it did run.",
+            "Figures begin with the first running cell; if it did run, look at [operating] in the unit file.",
         )
+        return
+    rows = _rows(unit, known)
     for index, one in enumerate(rows):
         _draw_row(unit, one, known, last=index == len(rows) - 1)
 
@@ -85,18 +89,22 @@ def _episodes(unit: Unit, known: data.Span) -> None:
         last = f"; the last one ended {_at(ended, unit, known.last)}" if ended is not None else ""
         shell.write(f"<p>\u25cf No limit of {_count(len(unit.watches), 'watch')} is crossed{last}.</p>")
         return
-    lines = []
-    for tale, one in zip(board.told(still, figures), still.itertuples(), strict=True):
-        now = _watched(unit, str(one.watch), str(one.figure))
-        value, half = (now.value, now.half_width) if now else (float("nan"), float("nan"))
-        said = wording.episode(
-            tale, value=value, half_width=half, now=known.last.to_pydatetime(), zone=unit.time_zone
-        )
-        shape = wording.SHAPES["below" if tale.side == "low" else "above"]
-        lines.append(
-            f'<li><span class="alarm">{shape} {escape(str(one.priority))} priority</span> {escape(said)}</li>'
-        )
+    tales = board.told(still, figures)
+    lines = [_episode(unit, tale, row, known) for tale, (_, row) in zip(tales, still.iterrows(), strict=True)]
     shell.write(f"<h2>{_count(len(lines), 'open episode')}, worst first</h2><ol>{''.join(lines)}</ol>")
+
+
+def _episode(unit: Unit, tale: Told, row: pd.Series[Any], known: data.Span) -> str:
+    """One open episode in words; one that is suppressed by design stays visible as such."""
+    now = _watched(unit, str(row["watch"]), str(row["figure"]))
+    value, half = (now.value, now.half_width) if now else (math.nan, math.nan)
+    end = known.last.to_pydatetime()
+    said = escape(wording.episode(tale, value=value, half_width=half, now=end, zone=unit.time_zone))
+    if bool(row["suppressed"]):
+        words = "suppressed by design while the unit does not run steadily"
+        return f"<li class='calm'>{wording.SHAPES['missing']} {words}: {said}</li>"
+    shape = wording.SHAPES["below" if tale.side == "low" else "above"]
+    return f"<li><span class='alarm'>{shape} {escape(str(row['priority']))} priority</span> {said}</li>"
 
 
 def _count(count: int, noun: str) -> str:

@@ -90,12 +90,13 @@ font-size:.95rem}
 [data-testid=stMain] .stHorizontalBlock,[data-testid=stMain] [data-testid=stLayoutWrapper]>div{row-gap:.3rem}}
 .o ol{list-style:none;margin:0;padding:0}
 .o ol li{padding:.35rem 0 .35rem .9rem;border-left:4px solid var(--o-alarm);margin:.35rem 0}
+.o ol li.calm{border-left-color:var(--o-grid);color:var(--o-quiet)}
 .o .foot{border-top:1px solid var(--o-grid);margin-top:1rem;padding-top:.6rem;font-size:.85rem;
 color:var(--o-quiet);max-width:75rem}
 .o .foot p{font-size:.85rem}
 .o .empty{border-left:4px solid var(--o-grid);padding:.5rem 1rem;margin:1rem 0;max-width:50rem}
 .o code{font-size:.9em}
-.stMultiSelect [data-baseweb=tag]{background-color:var(--o-tag);color:#fff}
+.stMultiSelect [data-testid=stMultiSelectTagsContainer] [data-tag]{background-color:var(--o-tag);color:#fff}
 @media print{.stAppHeader,.stPopover,[data-testid=stPageLink]{display:none}}
 """
 
@@ -134,35 +135,48 @@ def draw(chart: Chart, key: str, **more: Any) -> Any:
     return st.vega_lite_chart(None, spec, theme=None, width="stretch", key=key, alt=chart.alt, **more)
 
 
-def header(pages: Sequence[Any], chosen: Any) -> str | None:
-    """Draw the unit's name, the links to all views, and the choice of unit where there are several.
-
-    Parameters
-    ----------
-    pages : sequence of Page
-        All views.
-    chosen : Page
-        The one shown.
+def header() -> tuple[str | None, Any]:
+    """Draw the unit's name, the choice of unit where there are several, and a place for the links.
 
     Returns
     -------
     str or None
         Key of the unit; None when a unit file cannot be read, which is then told.
+    container
+        For `links`.
     """
     try:
         units = data.units()
     except OutletError as error:
         empty("The unit file cannot be read.", str(error))
-        return None
+        return None, st.container()
     with st.container(horizontal=True, vertical_alignment="center", gap="medium"):
         key = _choice(units)
         write(f"<h1>{escape(units[key].name)}</h1>")
-        carried = {name: st.query_params.get_all(name) for name in CARRIED if name in st.query_params}
-        for page in pages:
-            here = page.title == chosen.title
-            label = f"**{page.title}**" if here else page.title
-            st.page_link(page, label=label, query_params={**carried, "unit": [key]}, width="content")
-    return key
+        place = st.container(horizontal=True, gap="medium", width="content")
+    return key, place
+
+
+def links(place: Any, pages: Sequence[Any], chosen: Any, key: str) -> None:
+    """Draw the links to all views; each keeps what the address of this one says.
+
+    Parameters
+    ----------
+    place : container
+        From `header`; filled last, when the view has written its choices into the address.
+    pages : sequence of Page
+        All views.
+    chosen : Page
+        The one shown.
+    key : str
+        Of the unit.
+    """
+    kept = st.session_state.get("kept", {})
+    kept = kept | {name: st.query_params.get_all(name) for name in CARRIED if name in st.query_params}
+    st.session_state["kept"] = kept
+    for page in pages:
+        label = f"**{page.title}**" if page.title == chosen.title else page.title
+        place.page_link(page, label=label, query_params={**kept, "unit": [key]}, width="content")
 
 
 def _choice(units: dict[str, Unit]) -> str:
@@ -205,9 +219,13 @@ def nothing_yet() -> None:
     """Say that the store is empty, and how to fill it."""
     empty(
         "Nothing has been taken in yet.",
-        "Run `outlet run` on the folder of exports, or leave `outlet follow` running: the figures appear "
-        "here within half a minute of the first pass.",
+        "Run `outlet run` on the folder of exports: the figures appear here within half a minute.",
     )
+
+
+def ends_before_it_begins() -> None:
+    """Say that a typed span is the wrong way round."""
+    empty("The span ends before it begins.", "Choose an end that is later than the beginning.")
 
 
 def clock() -> datetime:
