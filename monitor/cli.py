@@ -62,9 +62,6 @@ def main() -> None:
     except click.ClickException as error:
         click.echo(_two_lines(error), err=True)
         code = YOURS
-    except BrokenPipeError:  # the reader of our output, such as `head`, has seen enough
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        code = FINE
     except (click.Abort, KeyboardInterrupt):
         click.echo("Stopped. The store holds the last pass that was finished.", err=True)
         code = STOPPED
