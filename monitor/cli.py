@@ -20,11 +20,8 @@ import click
 from ingest.errors import ExportError, OutletError
 from monitor.page.launch import DEFAULT_PORT, command
 
-FINE, YOURS, STOPPED = (
-    0,
-    2,
-    130,
-)  # exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C
+# Exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C.
+FINE, YOURS, STOPPED = 0, 2, 130
 DEMO_DAYS = 60
 # Below three weeks the export with local dates holds no day after the 12th, and could be read two ways.
 LEAST_DEMO_DAYS = 21

@@ -17,7 +17,7 @@ from ingest import keys
 from ingest.unitfile import load
 from monitor.cli import outlet
 from monitor.months import plan_of
-from tests.source import PACKAGES, ROOT
+from tests.source import PACKAGES, ROOT, sources
 from tests.test_layers import ORDER
 
 DOCUMENTS = ("README.md", "DEVELOPERS.md", "config/README.md")
@@ -64,6 +64,12 @@ def test_no_document_shows_a_command_or_an_option_that_is_gone():
         assert command in outlet.commands, f"{name}: outlet {command}"
         flags = set(re.findall(r"--[a-z-]+", rest))
         assert flags <= options_of(outlet.commands[command]) | {"--help"}, f"{name}: outlet {command}{rest}"
+
+
+def test_no_message_of_the_program_names_a_command_that_is_gone():
+    for source in sources():
+        for command in re.findall(r"[`']outlet ([a-z][a-z-]*)", source.text):
+            assert command in outlet.commands, f"{source.place}: outlet {command}"
 
 
 def test_every_figure_stands_in_the_readme_and_none_that_is_gone():

@@ -74,6 +74,7 @@ ORDER = (
     "monitor.page.data",
     "monitor.page.shell",
     "monitor.page.details",
+    "monitor.page.spans",
     "monitor.page.now",
     "monitor.page.trend",
     "monitor.page.balance",

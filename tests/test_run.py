@@ -19,6 +19,7 @@ from ingest.ledger import Store
 from ingest.readings import Series, by_month, join, write_month
 from ingest.unit import Unit, Watch
 from ingest.unitfile import load
+from monitor import months
 from monitor.amounts import amounts_of
 from monitor.catchup import Worked, catch_up
 from monitor.drift import unit_episodes
@@ -166,6 +167,19 @@ def test_months_do_not_show_in_the_figures(whole: Path):
         np.testing.assert_allclose(
             stored.to_numpy(float), direct[stored.columns].to_numpy(float), rtol=2**-22, atol=1e-9
         )
+
+
+def test_the_size_of_a_piece_does_not_show_in_the_figures(
+    whole: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+):
+    # 37 cells: months and their leads are cut into some twenty pieces, none of which ends with a day.
+    unit = unit_made()
+    monkeypatch.setattr(months, "PIECE", 37)
+    arrive(tmp_path, unit, readings_made(unit))
+    for window in unit.windows:
+        direct, cut_up = (stored_figures(folder, unit, window) for folder in (whole, tmp_path))
+        assert (cut_up.index == direct.index).all()
+        np.testing.assert_allclose(cut_up.to_numpy(float), direct.to_numpy(float), rtol=2**-22, atol=1e-9)
 
 
 def test_each_cell_has_one_state_and_one_row_of_each_window(whole: Path):
