@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 from datetime import timedelta
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -19,6 +20,8 @@ from monitor.series import Envelope, envelope
 
 MOST_MARKS = 1_200  # of one line: a week of 10-min cells point by point
 ROOM_PX = 24
+DASHED: Spec = {"strokeDash": [6, 4], "strokeWidth": 1.5}
+BROKEN: Spec = {"invalid": "break-paths-show-path-domains"}  # a hole stays a hole
 WORDS_PX = 120  # a plot lower than this has no room for the words of an episode
 
 
@@ -142,7 +145,7 @@ def trend(line: pd.DataFrame, panel: Panel) -> Chart:
     """
     layers = [
         *_shaded_layers(panel), _band(panel), _extremes(panel), *_rule_layers(panel),
-        _line(panel), *_episode_layers(panel), *_hover_layers(line, panel),
+        _line(panel), *_episode_layers(panel), _hover(line, panel),
     ]  # fmt: skip
     spec = frame_spec(panel.ink) | {"height": panel.height, "layer": layers}
     data = {
@@ -173,41 +176,38 @@ def _value_axis(line: pd.DataFrame, panel: Panel) -> Spec:
     }
 
 
+def _layer(data: str, mark: Spec, encoding: Spec, **more: Any) -> Spec:
+    """One layer on a named data set, cut at the frame."""
+    return {"data": {"name": data}, "mark": {"clip": True, **mark}, "encoding": encoding, **more}
+
+
+def _fixed(mark: Spec, encoding: Spec) -> Spec:
+    """One mark that needs no data."""
+    return {"data": {"values": [{}]}, "mark": mark, "encoding": encoding}
+
+
+def _at(field: str) -> Spec:
+    """The time channel of every layer but the one that carries the axis."""
+    return {"field": field, "type": "temporal"}
+
+
 def _band(panel: Panel) -> Spec:
     """The 95 % band; the layer that carries the domain has no x2, or the domain would be lost."""
-    return {
-        "data": {"name": "line"},
-        "mark": {"type": "area", "color": panel.ink.series, "opacity": 0.16, "clip": True},
-        "encoding": {
-            "x": {"field": "time", **time_scale(panel.first, panel.last, panel.zone, title=panel.axis)},
-            "y": {"field": "band_low"},
-            "y2": {"field": "band_high"},
-        },
-    }
+    x = {"field": "time", **time_scale(panel.first, panel.last, panel.zone, title=panel.axis)}
+    encoding = {"x": x, "y": {"field": "band_low"}, "y2": {"field": "band_high"}}
+    return _layer("line", {"type": "area", "color": panel.ink.series, "opacity": 0.16}, encoding)
 
 
 def _extremes(panel: Panel) -> Spec:
     """Least to greatest of each bucket, so that no spike is lost in the mean."""
-    return {
-        "data": {"name": "line"},
-        "mark": {"type": "area", "color": panel.ink.series, "opacity": 0.38, "clip": True},
-        "encoding": {
-            "x": {"field": "time", "type": "temporal"},
-            "y": {"field": "low"},
-            "y2": {"field": "high"},
-        },
-    }
+    encoding = {"x": _at("time"), "y": {"field": "low"}, "y2": {"field": "high"}}
+    return _layer("line", {"type": "area", "color": panel.ink.series, "opacity": 0.38}, encoding)
 
 
 def _line(panel: Panel) -> Spec:
-    layer: Spec = {
-        "data": {"name": "line"},
-        "mark": {
-            "type": "line", "color": panel.ink.series, "strokeWidth": 1.8, "strokeCap": "round",
-            "clip": True, "invalid": "break-paths-show-path-domains",
-        },
-        "encoding": {"x": {"field": "time", "type": "temporal"}, "y": {"field": "mean"}},
-    }  # fmt: skip
+    """The mean; a brush must sit on this layer."""
+    style = {"type": "line", "color": panel.ink.series, "strokeWidth": 1.8, "strokeCap": "round", **BROKEN}
+    layer = _layer("line", style, {"x": _at("time"), "y": {"field": "mean"}})
     if panel.brush:
         mark = {"fill": panel.ink.series, "fillOpacity": 0.15, "stroke": panel.ink.series}
         select = {"type": "interval", "encodings": ["x"], "mark": mark}
@@ -219,13 +219,8 @@ def _rule_layers(panel: Panel) -> list[Spec]:
     """Limits as dashed rules with their words, the reference as a thin solid one."""
     rules: list[Spec] = []
     if panel.reference is not None:
-        rules.append(
-            {
-                "data": {"values": [{}]},
-                "mark": {"type": "rule", "color": panel.ink.quiet, "strokeWidth": 1},
-                "encoding": {"y": {"datum": panel.reference}},
-            }
-        )
+        mark = {"type": "rule", "color": panel.ink.quiet, "strokeWidth": 1}
+        rules.append(_fixed(mark, {"y": {"datum": panel.reference}}))
     for side, limit in (("low", panel.low), ("high", panel.high)):
         if limit is not None:
             rules.extend(_limit(side, limit, panel))
@@ -234,118 +229,63 @@ def _rule_layers(panel: Panel) -> list[Spec]:
 
 def _limit(side: str, limit: float, panel: Panel) -> list[Spec]:
     """One limit: a dashed rule, its word at the left edge on the inner side of the rule."""
-    return [
-        {
-            "data": {"values": [{}]},
-            "mark": {"type": "rule", "color": panel.ink.alarm, "strokeDash": [6, 4], "strokeWidth": 1.5},
-            "encoding": {"y": {"datum": limit}},
-        },
-        {
-            "data": {"values": [{}]},
-            "mark": {
-                "type": "text", "text": f"{side} {wording.plain(limit)}", "color": panel.ink.alarm_text,
-                "align": "left", "baseline": "bottom" if side == "low" else "top",
-                "dx": 4, "dy": -3 if side == "low" else 4, "fontSize": 12,
-            },
-            "encoding": {"x": {"value": 0}, "y": {"datum": limit}},
-        },
-    ]  # fmt: skip
+    base, shift = ("bottom", -3) if side == "low" else ("top", 4)
+    word = {"type": "text", "text": f"{side} {wording.plain(limit)}", "color": panel.ink.alarm_text}
+    place = {"align": "left", "baseline": base, "dx": 4, "dy": shift, "fontSize": 12}
+    y = {"y": {"datum": limit}}
+    rule = {"type": "rule", "color": panel.ink.alarm, **DASHED}
+    return [_fixed(rule, y), _fixed({**word, **place}, {"x": {"value": 0}, **y})]
 
 
-def _span_encoding() -> Spec:
-    return {"x": {"field": "start", "type": "temporal"}, "x2": {"field": "end"}}
+def _span(low_px: float, high_px: float) -> Spec:
+    """From start to end of a span, between two heights."""
+    return {"x": _at("start"), "x2": {"field": "end"}, "y": {"value": low_px}, "y2": {"value": high_px}}
 
 
 def _shaded_layers(panel: Panel) -> list[Spec]:
     """Time that does not count, as a grey field with its word where there is room for it."""
-    span = {**_span_encoding(), "y": {"value": 0}, "y2": {"value": panel.height}}
     tip = [{"field": "word", "title": "unit"}, {"field": "text", "title": "time"}]
+    field = {"type": "rect", "color": panel.ink.shade, "opacity": 0.2}
+    word = {"type": "text", "color": panel.ink.quiet, "baseline": "top", "fontSize": 12}
+    place = {"x": _at("middle"), "y": {"value": panel.height / 2}, "text": {"field": "word"}}
     return [
-        {
-            "data": {"name": "shaded"},
-            "mark": {"type": "rect", "color": panel.ink.shade, "opacity": 0.2, "clip": True},
-            "encoding": {**span, "tooltip": tip},
-        },
-        {
-            "data": {"name": "shaded"},
-            "transform": [{"filter": "datum.room"}],
-            "mark": {
-                "type": "text",
-                "color": panel.ink.quiet,
-                "baseline": "top",
-                "fontSize": 12,
-                "clip": True,
-            },
-            "encoding": {
-                "x": {"field": "middle", "type": "temporal"},
-                "y": {"value": panel.height / 2},
-                "text": {"field": "word"},
-            },
-        },
+        _layer("shaded", field, {**_span(0, panel.height), "tooltip": tip}),
+        _layer("shaded", word, place, transform=[{"filter": "datum.room"}]),
     ]
 
 
 def _episode_layers(panel: Panel) -> list[Spec]:
     """Episodes as a bar along the top edge, from raised to cleared, with their word."""
-    color = panel.ink.alarm
+    tip = [{"field": "text", "title": "episode"}]
+    bar, field = ({"type": "rect", "color": panel.ink.alarm, "opacity": part} for part in (0.95, 0.09))
+    word = {"type": "text", "color": panel.ink.alarm_text, "align": "right", "baseline": "top"}
+    place = {"x": _at("end"), "y": {"value": 10}, "text": {"field": "word"}}
+    room = [{"filter": f"datum.room && {panel.height} >= {WORDS_PX}"}]
     return [
-        {
-            "data": {"name": "episodes"},
-            "mark": {"type": "rect", "color": color, "opacity": 0.95, "clip": True},
-            "encoding": {
-                **_span_encoding(),
-                "y": {"value": 0},
-                "y2": {"value": 6},
-                "tooltip": [{"field": "text", "title": "episode"}],
-            },
-        },
-        {
-            "data": {"name": "episodes"},
-            "mark": {"type": "rect", "color": color, "opacity": 0.09, "clip": True},
-            "encoding": {**_span_encoding(), "y": {"value": 0}, "y2": {"value": panel.height}},
-        },
-        {
-            "data": {"name": "episodes"},
-            "transform": [{"filter": f"datum.room && {panel.height} >= {WORDS_PX}"}],
-            "mark": {
-                "type": "text", "color": panel.ink.alarm_text, "align": "right", "baseline": "top",
-                "dx": -4, "fontSize": 12, "clip": True,
-            },
-            "encoding": {
-                "x": {"field": "end", "type": "temporal"},
-                "y": {"value": 10},
-                "text": {"field": "word"},
-            },
-        },
-    ]  # fmt: skip
+        _layer("episodes", bar, {**_span(0, 6), "tooltip": tip}),
+        _layer("episodes", field, _span(0, panel.height)),
+        _layer("episodes", {**word, "dx": -4, "fontSize": 12}, place, transform=room),
+    ]
 
 
-def _hover_layers(line: pd.DataFrame, panel: Panel) -> list[Spec]:
+def _hover(line: pd.DataFrame, panel: Panel) -> Spec:
     """A point that follows the pointer and tells time, value and half-width."""
     form = f".{_places(line)}f"
     unit = f" [{panel.unit}]" if panel.unit else ""
-    tip = [
-        {"field": "when", "title": "plant time"},
-        {"field": "mean", "title": f"{panel.title}{unit}", "format": form},
-        {"field": "half_width", "title": "half-width (95 %)", "format": form},
-        {"field": "low", "title": "least", "format": form},
-        {"field": "high", "title": "greatest", "format": form},
-    ]
+    named = {
+        "mean": f"{panel.title}{unit}", "half_width": "half-width (95 %)", "low": "least", "high": "greatest",
+    }  # fmt: skip
+    tip: list[Spec] = [{"field": "when", "title": "plant time"}]
+    tip += [{"field": field, "title": title, "format": form} for field, title in named.items()]
     select = {"type": "point", "on": "pointermove", "nearest": True, "clear": "pointerout"}
-    return [
-        {
-            "data": {"name": "line"},
-            "params": [{"name": "near", "select": select}],
-            "transform": [{"filter": "isValid(datum.mean)"}],
-            "mark": {"type": "point", "filled": True, "size": 60, "color": panel.ink.series},
-            "encoding": {
-                "x": {"field": "time", "type": "temporal"},
-                "y": {"field": "mean"},
-                "opacity": {"condition": {"param": "near", "empty": False, "value": 1}, "value": 0},
-                "tooltip": tip,
-            },
-        }
-    ]
+    shown = {"condition": {"param": "near", "empty": False, "value": 1}, "value": 0}
+    return _layer(
+        "line",
+        {"type": "point", "filled": True, "size": 60, "color": panel.ink.series},
+        {"x": _at("time"), "y": {"field": "mean"}, "opacity": shown, "tooltip": tip},
+        params=[{"name": "near", "select": select}],
+        transform=[{"filter": "isValid(datum.mean)"}],
+    )
 
 
 def _places(line: pd.DataFrame) -> int:
@@ -405,14 +345,8 @@ def fit(line: pd.DataFrame, bound: pd.DataFrame, panel: Panel) -> Chart:
     """
     both = pd.concat([line, bound.drop(columns="half_width")], ignore_index=True)
     chart = trend(line, panel)
-    dashed = {
-        "data": {"name": "bound"},
-        "mark": {
-            "type": "line", "interpolate": "step-after", "color": panel.ink.alarm, "strokeDash": [6, 4],
-            "strokeWidth": 1.5, "clip": True, "invalid": "break-paths-show-path-domains",
-        },
-        "encoding": {"x": {"field": "time", "type": "temporal"}, "y": {"field": "mean"}},
-    }  # fmt: skip
+    style = {"type": "line", "interpolate": "step-after", "color": panel.ink.alarm, **DASHED, **BROKEN}
+    dashed = _layer("bound", style, {"x": _at("time"), "y": {"field": "mean"}})
     layers = [*chart.spec["layer"], dashed]
     spec = chart.spec | {"layer": layers, "encoding": {"y": _value_axis(both, panel)}}
     return Chart(spec, chart.data | {"bound": bound}, chart.alt)

@@ -123,8 +123,8 @@ def draw(chart: Chart, key: str, **more: Any) -> Any:
         Specification and data sets.
     key : str
         Of the widget.
-    **more
-        Handed on.
+    more : object
+        Handed on to the widget.
 
     Returns
     -------
