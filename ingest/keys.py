@@ -22,6 +22,8 @@ from ingest.unit import FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, SAMPLINGS
 BASES = ("dry", "wet", "as analysed")
 ANALYZED = (*FRACTION_KINDS, "volume fraction", "species flow")
 QUALITIES = ("words", "opc ua", "opc da")
+DATE_ORDERS = ("day first", "month first")
+DECIMALS = (",", ".")
 
 
 @dataclass(frozen=True, slots=True)
@@ -141,6 +143,8 @@ TABLE: tuple[Key, ...] = (
     Key("exports", "time_zone", "zone", "zone of time stamps that state no offset", '"Europe/Berlin"'),
     Key("exports", "missing_words", "texts", "words in the value column that mean no reading", '["No Data"]', default=[]),
     Key("exports", "quality", "choice", "what the quality column holds, where it does not tell by itself", '"words"', choices=QUALITIES),
+    Key("exports", "date_order", "choice", "order of dates such as 03/04/2026, where a file does not tell by itself", '"day first"', choices=DATE_ORDERS),
+    Key("exports", "decimal", "choice", "decimal mark of numbers such as 1,234, where a file does not tell by itself", '","', choices=DECIMALS),
 )  # fmt: skip
 
 

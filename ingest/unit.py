@@ -129,6 +129,8 @@ class ExportRules:
     time_zone: str | None
     missing_words: tuple[str, ...]
     quality: str | None  # 'words', 'opc ua', 'opc da' or None (found out)
+    date_order: str | None = None  # 'day first', 'month first' or None (found out)
+    decimal: str | None = None  # ',', '.' or None (found out)
 
 
 @dataclass(frozen=True, slots=True)

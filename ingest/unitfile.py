@@ -127,7 +127,11 @@ def _build(read: Draft, key: str) -> Unit:
         windows=tuple(sorted(unit.get("windows"))),
         least_coverage=unit.get("least_coverage"),
         exports=ExportRules(
-            exports.get("time_zone"), exports.get("missing_words") or (), exports.get("quality")
+            time_zone=exports.get("time_zone"),
+            missing_words=exports.get("missing_words") or (),
+            quality=exports.get("quality"),
+            date_order=exports.get("date_order"),
+            decimal=exports.get("decimal"),
         ),
     )
 
