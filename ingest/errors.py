@@ -34,6 +34,7 @@ class OutletError(Exception):
     """
 
     def __init__(self, what: str, *, remedy: str) -> None:
+        """Keep the fault and its remedy apart."""
         super().__init__(what)
         self.what = what
         self.remedy = remedy
@@ -55,6 +56,7 @@ class UnitFileError(OutletError):
     """
 
     def __init__(self, file: str, problems: Sequence[Problem]) -> None:
+        """List one problem a line under the file's name."""
         count = f"{len(problems)} problem{'s' if len(problems) != 1 else ''}"
         lines = [f"  {p.where}: {p.what}; {p.remedy}" for p in problems]
         super().__init__("\n".join([f"{file}: {count}", *lines]), remedy="Mend the keys named above.")

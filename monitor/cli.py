@@ -20,6 +20,9 @@ import click
 from ingest.errors import ExportError, OutletError
 from monitor.page.launch import DEFAULT_PORT, command
 
+# Matrices here are small: more threads of the linear algebra cost twice the processor time and no less time.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 # Exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C.
 FINE, YOURS, STOPPED = 0, 2, 130
 DEMO_DAYS = 60

@@ -27,27 +27,31 @@ Progress = Callable[[str, int, int], None]
 
 
 @dataclass(frozen=True, slots=True)
-class OpenEpisode:
-    """An episode not yet cleared; `side` is 'low' or 'high', `limit` in the figure's unit, `raised` UTC."""
+class Episode:
+    """One episode; `side` is 'low' or 'high', limit and worst in the figure's unit, times UTC.
+
+    `cleared` is None while it is open.
+    """
 
     watch: str
     side: str
     limit: float
     priority: str
     raised: datetime
+    cleared: datetime | None
+    worst: float
 
 
 @dataclass(frozen=True, slots=True)
 class UnitResult:
-    """What a pass did for one unit; `raised` counts all its episodes, `open` are those not yet cleared."""
+    """What a pass did for one unit, and every episode it has."""
 
     unit: str
     time_zone: str
     months: tuple[str, ...]
     cells: int
     solved: int
-    raised: int
-    open: tuple[OpenEpisode, ...]
+    episodes: tuple[Episode, ...]
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,16 +142,17 @@ def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
     if view.months(unit.key, "cells"):
         pass_.replace_episodes(unit.key, episodes_of(view, unit))
     episodes = pass_.view().episodes(unit.key)
-    still: Any = episodes[episodes["cleared"].isna()] if len(episodes) else episodes
     return UnitResult(
         unit=unit.key,
         time_zone=unit.time_zone,
         months=worked.months,
         cells=worked.cells,
         solved=worked.solved,
-        raised=len(episodes),
-        open=tuple(
-            OpenEpisode(one.watch, one.side, one.limit, one.priority, one.raised.to_pydatetime())
-            for one in still.itertuples()
-        ),
+        episodes=tuple(_episode(one) for one in episodes.itertuples()),
     )
+
+
+def _episode(row: Any) -> Episode:
+    cleared = None if pd.isna(row.cleared) else row.cleared.to_pydatetime()
+    raised = row.raised.to_pydatetime()
+    return Episode(row.watch, row.side, row.limit, row.priority, raised, cleared, row.worst)

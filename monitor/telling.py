@@ -8,7 +8,7 @@ from ingest.exports import Description
 from ingest.unit import Unit
 from monitor import wording
 from monitor.judge import Judgement
-from monitor.run import OpenEpisode, PassResult
+from monitor.run import Episode, PassResult
 
 
 def judged(found: Judgement) -> Iterator[str]:
@@ -80,11 +80,12 @@ def passed(result: PassResult) -> Iterator[str]:
     for unit in result.units:
         months = f"worked out {', '.join(unit.months)}" if unit.months else "nothing new"
         solved = f" ({unit.cells} cells, {unit.solved} of them solved)" if unit.cells else ""
-        yield f"{unit.unit}: {months}{solved}; {unit.raised} episodes so far, {len(unit.open)} open"
-        yield from (f"  {_open(one, unit.time_zone)}" for one in unit.open)
+        still = [one for one in unit.episodes if one.cleared is None]
+        yield f"{unit.unit}: {months}{solved}; {len(unit.episodes)} episodes so far, {len(still)} open"
+        yield from (f"  {_open(one, unit.time_zone)}" for one in still)
 
 
-def _open(episode: OpenEpisode, zone: str) -> str:
+def _open(episode: Episode, zone: str) -> str:
     """Tell an open episode."""
     side = "below" if episode.side == "low" else "above"
     since = wording.local_time(episode.raised, zone)

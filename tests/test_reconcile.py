@@ -7,12 +7,12 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from ingest.unitfile import load
 from scipy.optimize import minimize
 
 from ingest.balance import problem_of
 from ingest.instruments import Measured
 from ingest.reconcile import NO_READINGS, SOLVED, STATUS, UNSEEN, solve
+from ingest.unitfile import load
 from tests.balances_made import made_flows, predicted
 
 UNIT = load(Path("config/demo.toml"))
@@ -20,7 +20,7 @@ PROBLEM = problem_of(UNIT)
 
 
 def measured(flow, *, seed=None, relative=0.01, shared=0.004) -> Measured:
-    """Readings of the flows with 1 % random error on each (none without a seed) and a shared span on gases."""
+    """Readings of the flows, 1 % random error on each (none without a seed), a span error on the gases."""
     exact = predicted(PROBLEM, flow)
     noise = 0.0 if seed is None else relative * np.random.default_rng(seed).standard_normal(exact.shape)
     loading = np.zeros((len(exact), 1, exact.shape[1]))
@@ -66,7 +66,7 @@ def test_two_hundred_random_cells_with_missing_readings_agree_with_scipys_slsqp(
 
 
 def _difference(readings, found, t):
-    """Largest difference of seen flows to SLSQP's, relative to the flow, traces to a millionth of the total."""
+    """Largest difference of seen flows to SLSQP's, relative to the flow or to a thousandth of the total."""
     best = _by_slsqp(readings, t)
     seen = np.isfinite(found.flow[:, t])
     size = np.maximum(np.abs(best), 1e-3 * np.abs(best).sum())

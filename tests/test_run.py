@@ -309,7 +309,7 @@ def test_the_stored_episodes_are_those_of_the_stored_figures(
     codes = Store(store).read(unit.key, "cells", columns=["operating"]).column("operating").to_numpy()
     direct = unit_episodes(watched, {timedelta(hours=8): figures}, codes.astype(np.int8))
     assert len(direct) > 0
-    assert result.units[0].raised == len(direct)
+    assert len(result.units[0].episodes) == len(direct)
     pd.testing.assert_frame_equal(Store(store).snapshot().episodes(unit.key), direct)
     go(unit, store, plant[1])
 
