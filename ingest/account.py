@@ -3,13 +3,14 @@
 One unit of account for both layouts: a row of a long export holds one reading, a row of a wide export as
 many readings as the header names tags, whatever became of the row. A row whose columns cannot be told
 apart counts as rejected with all its readings; else a reading whose tag nobody asked for counts as unasked,
-whatever stands in it; else it is accepted or rejected for one reason.
+whatever stands in it; else a blank cell of a wide export counts as empty, whatever its time; else the reading
+is accepted or rejected for one reason.
 """
 
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -34,29 +35,39 @@ TEXT = 120  # characters kept of each
     INFINITE,
     QUALITY,
 ) = range(13)
-_ONE_LINE = "Export without line breaks inside a field."
-_WITH_OFFSET = "Export every time with its offset from UTC."
-_NUMBER = "Add the word to missing_words under [exports], or mend the number."
+_FILE = "under [exports] in the unit file"
+_ONE_LINE = "Close every quote, and export without line breaks inside a field."
+_WITH_OFFSET = "Export every time with its offset from UTC, as 2026-03-29T01:30Z."
 REASONS: tuple[tuple[str, str], ...] = (
     ("accepted", ""),
     (
         "has another number of columns than the header",
-        "Quote fields that hold the separator, or mend the row.",
+        "Export numbers with a decimal point or columns with semicolons; mend a row that is cut short.",
     ),
     ("has a quote that does not open and close with its field", _ONE_LINE),
     ("has a carriage return inside the row", _ONE_LINE),
-    ("is not a time", "Write times like the other rows of the file."),
-    ("is a time without offset among times that have one", _WITH_OFFSET),
-    ("lies outside the years 1990 to 2099", "Mend the clock or the row."),
-    ("is a time that the clock skipped", f"Mend time_zone under [exports]. {_WITH_OFFSET}"),
-    ("is in the hour that comes twice, and the order of rows does not tell which", _WITH_OFFSET),
-    ("names no tag", "Give each row its tag."),
-    ("is not a number", _NUMBER),
-    ("is not finite", _NUMBER),
     (
-        "is no known quality",
-        "Mend quality under [exports] ('words', 'opc ua' or 'opc da'), or mend the code.",
+        "is not a time",
+        "Write the time like those of the other rows; a row of units or sums may stay, it is left out.",
     ),
+    ("is a time without offset among times that have one", _WITH_OFFSET),
+    ("lies outside the years 1990 to 2099", "Mend the time."),
+    (
+        "is a time that the clock skipped when summer time began",
+        f"Set time_zone {_FILE} to the zone that the export is written in. Or: {_WITH_OFFSET}",
+    ),
+    (
+        "lies in the hour that comes twice when summer time ends, and the order of rows does not tell which",
+        _WITH_OFFSET,
+    ),
+    ("names no tag", "Give each row its tag."),
+    (
+        "is not a number",
+        f"If it stands for no value, add it to missing_words {_FILE};"
+        " else export plain numbers, without units or marks between thousands.",
+    ),
+    ("is no finite number", f"Leave such cells blank, or (CSV) add the word to missing_words {_FILE}."),
+    ("is no known quality", f"Set quality {_FILE} to 'words', 'opc ua' or 'opc da', or mend the code."),
 )
 
 
@@ -90,9 +101,10 @@ class Evidence:
 class Account:
     """What became of each reading of one export.
 
-    `readings = accepted + superseded + duplicates + rejected + unasked`. `bad` and `unknown` are those of
-    the readings taken from the file that have bad quality or no stated quality. `rejections` holds (reason's
-    place in REASONS, readings); `unasked_tags` (tag, readings).
+    `readings = accepted + superseded + duplicates + rejected + unasked + empty`. `empty` are blank cells of a
+    wide export: nothing was stored for that tag at that time. `bad` and `unknown` are those of the readings
+    taken from the file that have bad quality or no stated quality. `rejections` holds (reason's place in
+    REASONS, readings); `unasked_tags` (tag, readings).
     """
 
     export: str
@@ -104,6 +116,7 @@ class Account:
     superseded: int
     duplicates: int
     unasked: int
+    empty: int
     rejections: tuple[tuple[int, int], ...]
     evidence: tuple[Evidence, ...]
     unasked_tags: tuple[tuple[str, int], ...]
@@ -117,7 +130,7 @@ class Account:
     def adds_up(self) -> bool:
         """Tell whether every reading is in exactly one place of the account."""
         return self.readings == (
-            self.accepted + self.superseded + self.duplicates + self.rejected + self.unasked
+            self.accepted + self.superseded + self.duplicates + self.rejected + self.unasked + self.empty
         )
 
     def settled(self, *, superseded: int, duplicates: int) -> Account:
@@ -148,18 +161,26 @@ class Account:
         tuple of str
             Counts first, then the first rows of each fault with what to do.
         """
-        counts = (
-            f"{self.rows} rows with {self.readings} readings: {self.accepted} accepted"
-            f" ({self.bad} of bad quality, {self.unknown} of unstated quality as read),"
-            f" {self.superseded} superseded, {self.duplicates} duplicates,"
-            f" {self.rejected} rejected, {self.unasked} of tags nobody asked for."
-        )
-        lines = [counts]
+        lines = [f"{self.rows} rows, {self.readings} readings: {', '.join(self._counts())}."]
         for reason, count in self.rejections:
             what, remedy = REASONS[reason]
-            lines.append(f"{count} rejected: {what}. {remedy}")
+            lines.append(f"{count} rejected: the row or cell {what}. {remedy}")
             lines += [f"  {e.describe(self.export)}" for e in self.evidence if e.reason == reason]
         return tuple(lines)
+
+    def _counts(self) -> Iterator[str]:
+        """What became of the readings; places of the account without a reading are left out."""
+        taken = ((self.bad, "of bad quality"), (self.unknown, "without a stated quality"))
+        of_these = ", ".join(f"{count} {words}" for count, words in taken if count)
+        yield f"{self.accepted} accepted" + (f" (as read: {of_these})" if of_these else "")
+        others = (
+            (self.empty, f"cell{'s' if self.empty != 1 else ''} left blank"),
+            (self.superseded, "superseded by a later row or file"),
+            (self.duplicates, "known already"),
+            (self.unasked, "of tags that no unit file names"),
+        )
+        yield from (f"{count} {words}" for count, words in others if count)
+        yield f"{self.rejected} rejected"
 
 
 @dataclass(slots=True)
@@ -172,6 +193,7 @@ class Tally:
     accepted: int = 0
     bad: int = 0
     unknown: int = 0
+    empty: int = 0
     unasked: Counter[str] = field(default_factory=Counter)
     rejections: Counter[int] = field(default_factory=Counter)
     evidence: list[Evidence] = field(default_factory=list)
@@ -254,6 +276,7 @@ class Tally:
             superseded=0,
             duplicates=0,
             unasked=self.unasked.total(),
+            empty=self.empty,
             rejections=tuple(sorted(self.rejections.items())),
             evidence=tuple(sorted(self.evidence, key=lambda e: (e.reason, e.row))),
             unasked_tags=tuple(sorted(self.unasked.items())),

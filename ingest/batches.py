@@ -102,16 +102,20 @@ class Batches:
         return {header[i]: self._column(header[i], block, i, stamps) for i in asked}
 
     def _column(self, tag: str, block: Block, place: int, stamps: Stamps) -> Series:
-        """One tag of a wide block."""
+        """One tag of a wide block; where its cell is blank nothing was stored, and there is no reading."""
         values = self.dialect.numbers.read(block.columns[place])
         reason = _either(stamps.reason, values.reason)
+        if values.blank.any():
+            reason = np.where(values.blank, np.int8(ACCEPTED), reason)
+            self.tally.empty += int(np.count_nonzero(values.blank))
         self.tally.reject(reason, block.rows, lambda _: tag, self._text(block, place))
         series = self._series(stamps.time, values.value, _unstated(values.value), block.rows)
+        fine = (reason == ACCEPTED) & ~values.blank
         if stamps.doubled.any():
-            self._put_aside(tag, series.take(stamps.doubled & (reason == ACCEPTED)))
-        elif not reason.any():
+            self._put_aside(tag, series.take(stamps.doubled & fine))
+        elif fine.all():
             return self._accept(series)
-        return self._accept(series.take(~stamps.doubled & (reason == ACCEPTED)))
+        return self._accept(series.take(~stamps.doubled & fine))
 
     def _long(self, block: Block) -> Readings:
         layout = self.dialect.layout

@@ -13,8 +13,8 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import DTypeLike, NDArray
 
-Look = Callable[[Sequence[int]], Iterator[Any]]
-"""Given places of columns, the columns of one block after another until the export ends."""
+Look = Callable[[Sequence[int]], Iterator[tuple[NDArray[np.int64], list[Any]]]]
+"""Given places of columns, one block after another until the export ends: its rows' numbers, its columns."""
 
 
 def single(column: Any) -> Any:
@@ -133,6 +133,26 @@ def coded(array: Any) -> tuple[NDArray[np.int32], Any]:
     where = array.indices.cast(pa.int32())
     codes = plain(where, np.int32)
     return (np.where(present(where), codes, np.int32(-1)) if where.null_count else codes), array.dictionary
+
+
+def first_match(texts: Any, pattern: str) -> tuple[int, str] | None:
+    """Find the first text that matches a pattern.
+
+    Parameters
+    ----------
+    texts : pyarrow.StringArray
+        Null matches nothing.
+    pattern : str
+        Regular expression of RE2.
+
+    Returns
+    -------
+    tuple of int and str, or None
+        Its place, and the text without the blanks around it.
+    """
+    found = flags(pc.match_substring_regex(texts, pattern))
+    at = int(np.argmax(found)) if found.any() else -1
+    return None if at < 0 else (at, texts[at].as_py().strip())
 
 
 def matches(texts: Any, pattern: str) -> int:

@@ -9,23 +9,22 @@ from __future__ import annotations
 import codecs
 import csv
 import re
-from collections.abc import Collection, Iterator, Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NoReturn
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from ingest.columns import Look, flags, matches, single
+from ingest.columns import Look, first_match, flags, matches, single
 from ingest.errors import ExportError
 from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US, PATTERNS, Clock
-from ingest.values import Numbers, is_text, texts
+from ingest.values import MARKS, Numbers, is_text
 
 MOST_COLUMNS = 5_000
 SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
-MARKS = {".": "point", ",": "comma"}
 
 # Names of columns, small letters, blanks for _ - and so on; common practice, no source.
 ROLES = {
@@ -35,7 +34,19 @@ ROLES = {
     "quality": ("quality", "status", "quality code", "status code", "qualität"),
 }
 
+_QUALITIES = {
+    "words": "in words",
+    "opc ua": "as OPC UA status codes (0 is good)",
+    "opc da": "as OPC DA qualities (192 is good)",
+}
+_NO_TEXT = (
+    (b"PK\3\4", "a spreadsheet or zip file", "Export as CSV text (or .csv.gz) or as Parquet."),
+    (b"\x1f\x8b", "a gz file without .gz in its name", "Rename it so that it ends in .csv.gz."),
+)
 _EPOCH = {"epoch s": r"^\s*\d{9,10}([.,]\d+)?\s*$", "epoch ms": r"^\s*\d{12,13}([.,]\d+)?\s*$"}
+_DAY, _MONTH = r"(1[3-9]|2\d|3[01])", r"(0?[1-9]|1[0-2])"
+_ORDERS = {"day first": rf"^\s*{_DAY}[-/.]{_MONTH}[-/.]\d", "month first": rf"^\s*{_MONTH}[-/.]{_DAY}[-/.]\d"}
+_NOTHING = (np.zeros(0, np.int64), [pa.array([], pa.string())])  # what a file without blocks shows
 _STATED = r"(Z|[+-]\d{2}(:?\d{2})?)\s*$"
 
 
@@ -114,13 +125,15 @@ class Dialect:
         return (f"Times are {form}, without offset: read as clock time of {self.clock.zone}.",)
 
     def _of_values(self) -> tuple[str, ...]:
-        words = ", ".join(repr(word) for word in sorted(self.numbers.missing))
-        quality = "No quality column: quality unknown, usable."
+        words = ", ".join(repr(word) for word in sorted(self.numbers.missing - {""}))
+        blank = "bad quality" if self.layout.is_long else "nothing was stored then, no reading"
+        quality = "No quality column: every number counts as usable."
         if self.quality is not None and self.layout.quality is not None:
-            quality = f"Quality in '{self.header[self.layout.quality]}', by {self.quality}."
+            quality = f"Quality in '{self.header[self.layout.quality]}', {_QUALITIES[self.quality]}."
         return (
             f"Decimal mark: {MARKS[self.numbers.decimal]}.",
-            f"Bad quality instead of a value, whatever the capitals: {words}.",
+            f"Blank cells: {blank}.",
+            f"Words that mean bad quality, whatever their capitals: {words}.",
             quality,
         )
 
@@ -144,12 +157,9 @@ def decide_encoding(export: str, head: bytes) -> tuple[str, str]:
     """
     if not head.strip():
         raise ExportError(f"{export}: is empty", remedy="Export it again; an empty file holds no reading.")
-    for begins, what in (
-        (b"PK\3\4", "a spreadsheet or zip file"),
-        (b"\x1f\x8b", "a gz file without .gz in its name"),
-    ):
+    for begins, what, remedy in _NO_TEXT:
         if head.startswith(begins):
-            raise ExportError(f"{export}: is {what}", remedy="Export as CSV text (or .csv.gz) or as Parquet.")
+            raise ExportError(f"{export}: is {what}", remedy=remedy)
     if head.startswith(codecs.BOM_UTF8):
         return "utf-8-sig", "UTF-8 with byte order mark"
     if head.startswith((codecs.BOM_UTF16_LE, codecs.BOM_UTF16_BE)) and not head.startswith(
@@ -212,7 +222,8 @@ def decide_separator(export: str, lines: Sequence[str], first_row: int) -> str:
     if not splits:
         raise ExportError(
             f"{place}: the header {lines[0][:60]!r} names one column only",
-            remedy="Export with one header row, separated by comma, semicolon, tab or bar.",
+            remedy="Export with the names of the columns, separated by comma, semicolon, tab or bar,"
+            " in the first line.",
         )
     if len(lines) == 1:
         raise ExportError(
@@ -280,8 +291,9 @@ def decide_layout(place: str, header: Sequence[str], wanted: Collection[str], lo
     found = [header[i] for i in (*tag, *value, *quality)]
     if found or len(header) < 2:
         raise ExportError(
-            f"{place}: unknown layout: columns {', '.join(map(repr, found or header))}",
-            remedy="Export long (time, tag, value, quality) or wide (time and one column per tag).",
+            f"{place}: columns {', '.join(map(repr, found or header))} are neither a long nor a wide export",
+            remedy="Name the columns of a long export time, tag, value and (if there is one) quality,"
+            " those of a wide one time and the tags.",
         )
     return Layout(time)
 
@@ -308,7 +320,7 @@ def _roles(header: Sequence[str], wanted: Collection[str]) -> dict[str, list[int
 
 def _time_column(place: str, header: Sequence[str], named: list[int], look: Look) -> int:
     """The column called so, else the only one that holds times."""
-    found = named or [i for i in range(len(header)) if _holds_times(next(look([i]), [None])[0])]
+    found = named or [i for i in range(len(header)) if _holds_times(next(look([i]), _NOTHING)[1][0])]
     if len(found) == 1:
         return found[0]
     if found:
@@ -320,26 +332,38 @@ def _time_column(place: str, header: Sequence[str], named: list[int], look: Look
 
 
 def _holds_times(column: Any) -> bool:
-    if column is None or len(column) == 0:
+    if len(column) == 0:
         return False
     if pa.types.is_timestamp(column.type):
         return True
     return is_text(column.type) and max(matches(column, p) for p in PATTERNS.values()) > len(column) / 2
 
 
-def decide_clock(place: str, column: tuple[int, str], look: Look, zone: str | None) -> Clock:
+def decide_clock(
+    export: str,
+    header_row: int,
+    column: tuple[int, str],
+    look: Look,
+    *,
+    zone: str | None,
+    date_order: str | None,
+) -> Clock:
     """Find how the export writes time.
 
     Parameters
     ----------
-    place : str
-        `file` or `file:row` of the header, for the error.
+    export : str
+        Its name, for the error.
+    header_row : int
+        Number of the header line; 0 in Parquet.
     column : tuple of int and str
         Where the times stand, and the column's name.
     look : callable
         Gives columns.
     zone : str or None
         Zone of times without offset; None where nobody stated one.
+    date_order : str or None
+        'day first' or 'month first' for a file that does not tell; None where nobody stated one.
 
     Returns
     -------
@@ -347,23 +371,25 @@ def decide_clock(place: str, column: tuple[int, str], look: Look, zone: str | No
         With `zone` set where it is needed.
     """
     at, name = column
-    times = single(next(look([at]), [pa.array([], pa.string())])[0])
+    place = f"{export}:{header_row}" if header_row else export
+    rows, (times,) = next(look([at]), _NOTHING)
+    times = single(times)
     if pa.types.is_timestamp(times.type):
         offset = times.type.tz is not None
         return Clock("timestamp", offset, None if offset else _zone(place, zone, name), 6)
     if not is_text(times.type):
         return _clock_of_numbers(place, times)
-    form, count = _form(place, times)
+    form, count = _form(export, rows, times)
     if form in EPOCHS:
         return Clock(form, offset=True, zone=None, fraction=0)
     if form != "year first":
-        form = _date_order(place, (block[0] for block in look([at])))
+        form = _date_order(export, at, look, date_order)
     offset = 2 * matches(times, rf"\d{_STATED}") > count
     digits = 9 if matches(times, r"[.,]\d{7,9}\D*$") else 6
     return Clock(form, offset, None if offset else _zone(place, zone, name), digits)
 
 
-def _form(place: str, times: Any) -> tuple[str, int]:
+def _form(export: str, rows: Any, times: Any) -> tuple[str, int]:
     """The form that most of the first block's times have, and how many; no text has two of these forms."""
     forms = {**PATTERNS, **_EPOCH}
     counts = {form: matches(times, forms[form]) for form in forms if form != "month first"}
@@ -371,20 +397,21 @@ def _form(place: str, times: Any) -> tuple[str, int]:
     second, first = sorted(counts, key=lambda name: counts[name])[-2:]
     if counts[first] > counts[second]:
         return first, counts[first]
-    sample = next((text for text in texts(times) if text.strip()), "")
-    said = "is one of several forms of time" if counts[first] else "is no known form of time"
-    raise ExportError(f"{place}: {sample!r} {said}", remedy="Export times as 2026-03-29T01:30Z.")
+    at, text = first_match(times, r"\S") or (0, "")
+    said = "is one of several forms of time in this file" if counts[first] else "is no known form of time"
+    row = int(rows[at]) if len(rows) else 1
+    raise ExportError(f"{export}:{row}: {text!r} {said}", remedy="Export times as 2026-03-29T01:30Z.")
 
 
 def _zone(place: str, zone: str | None, name: str) -> str:
     """The stated zone, if there is such a zone and the column's name does not speak against it."""
-    remedy = "Set time_zone under [exports], e.g. 'Europe/Berlin' or 'UTC'."
+    remedy = "Set time_zone under [exports] in the unit file, e.g. to 'Europe/Berlin' or 'UTC'."
     if zone is None:
         raise ExportError(f"{place}: times state no offset, and no time zone is stated", remedy=remedy)
     if {"utc", "gmt"} & set(re.findall(r"[a-z]+", name.casefold())) and zone not in ("UTC", "Etc/UTC", "GMT"):
         raise ExportError(
             f"{place}: the column {name!r} does not hold times of the stated zone {zone!r}",
-            remedy="Set time_zone under [exports] to 'UTC'.",
+            remedy="Set time_zone under [exports] to 'UTC' in the unit file.",
         )
     try:
         return ZoneInfo(zone).key
@@ -406,26 +433,45 @@ def _clock_of_numbers(place: str, column: Any) -> Clock:
     )
 
 
-def _date_order(place: str, columns: Iterator[Any]) -> str:
-    """Day first or month first: whichever the first number above 12 allows."""
-    sample = ""
-    for column in columns:
-        day, month = (
-            matches(column, rf"^\s*{p}") for p in (r"(1[3-9]|[23]\d)[-/.]\d", r"\d+[-/.](1[3-9]|[23]\d)[-/.]")
+def _date_order(export: str, at: int, look: Look, stated: str | None) -> str:
+    """Day first or month first: whichever the first dates with a number above 12 allow, else as stated."""
+    unclear = (0, "")
+    for rows, (column,) in look([at]):
+        told = {order: first_match(column, pattern) for order, pattern in _ORDERS.items()}
+        found = {order: (int(rows[m[0]]), m[1]) for order, m in told.items() if m}
+        if len(found) > 1 or found.keys() - {stated or next(iter(found), "")}:
+            _refuse_order(export, found, stated)
+        if found:
+            return next(iter(found))
+        first = first_match(column, PATTERNS["day first"])
+        unclear = unclear if unclear[0] or not first else (int(rows[first[0]]), first[1])
+    if stated is None:
+        _refuse_either_order(export, *unclear)
+    return stated
+
+
+def _refuse_order(export: str, found: dict[str, tuple[int, str]], stated: str | None) -> NoReturn:
+    """The dates contradict the stated order, or one another."""
+    others = {order: shown for order, shown in found.items() if order != stated}
+    order, (row, text) = next(iter(others.items()))
+    what = f"{export}:{row}: {text!r} can only be {order}"
+    if stated is not None:
+        raise ExportError(
+            f"{what}, but date_order = {stated!r} is stated",
+            remedy="Mend or remove date_order under [exports] in the unit file.",
         )
-        if day and month:
-            raise ExportError(
-                f"{place}: some dates can only be day first, others only month first",
-                remedy="Export times as 2026-03-29T01:30Z.",
-            )
-        if day or month:
-            return "day first" if day else "month first"
-        dates = column.filter(pc.match_substring_regex(column, PATTERNS["day first"]))
-        sample = sample or next(iter(texts(dates)), "")
-    first, second, *rest = sample.strip().replace("/", ".").replace("-", ".").split(".")
+    _, (other_row, other) = list(others.items())[1]
+    raise ExportError(
+        f"{what}, but {other!r} in row {other_row} can only be the other way round",
+        remedy="Export times as 2026-03-29T01:30Z.",
+    )
+
+
+def _refuse_either_order(export: str, row: int, text: str) -> NoReturn:
+    first, second, *rest = text.replace("/", ".").replace("-", ".").split(".")
     year = rest[0][:4]
     raise ExportError(
-        f"{place}: {sample.strip()!r} is {year}-{second:0>2}-{first:0>2} day first"
+        f"{export}:{row}: {text!r} is {year}-{second:0>2}-{first:0>2} day first"
         f" but {year}-{first:0>2}-{second:0>2} month first, and no date in the file tells which",
-        remedy="Export times as 2026-03-29T01:30Z, or a span that holds a day after the 12th.",
+        remedy="Write date_order = 'day first' or 'month first' under [exports] in the unit file.",
     )

@@ -132,9 +132,11 @@ def _asked(units: Sequence[Unit]) -> _Asked:
     }
     first, *others = said
     for other in others:
-        if said[other] != said[first]:
+        one, two = asdict(said[first]), asdict(said[other])
+        for key in (key for key in one if one[key] != two[key]):
             raise StoreError(
-                f"units {first} and {other}: [exports] of one says {said[first]}, of the other {said[other]}",
+                f"units {first} and {other}: exports.{key} is {_said(one[key])} in {first}"
+                f" but {_said(two[key])} in {other}",
                 remedy="One store reads an export one way: make them agree, or use two stores.",
             )
     if SITE in said:
@@ -142,6 +144,13 @@ def _asked(units: Sequence[Unit]) -> _Asked:
             f"unit {SITE}: the store keeps its archive by that name", remedy="Rename the unit file."
         )
     return _Asked(frozenset().union(*(_tags(unit) for unit in units)), said[first])
+
+
+def _said(value: str | tuple[str, ...] | None) -> str:
+    """What a unit file says under a key, in words."""
+    if not value:
+        return "not stated"
+    return repr(value) if isinstance(value, str) else ", ".join(map(repr, value))
 
 
 def _tags(unit: Unit) -> frozenset[str]:
@@ -310,7 +319,10 @@ def _notes(pass_: Pass, asked: _Asked) -> tuple[str, ...]:
     if lacking:
         notes.append(f"{_names(lacking)}: holds tags asked for only since; give it to a pass again")
     if otherwise:
-        notes.append(f"{_names(otherwise)}: was read by other [exports] rules; take all into a new store")
+        notes.append(
+            f"{_names(otherwise)}: was read by other rules under [exports] than those stated now;"
+            " to read all alike, take every export into a new store"
+        )
     return tuple(notes)
 
 

@@ -271,7 +271,8 @@ def _transcoded(
         return decoder.decode(chunk, final).encode()
     except UnicodeError as error:
         raise ExportError(
-            f"{path.name}: is not the text it begins as ({error})", remedy="Save the export as UTF-8."
+            f"{path.name}: does not stay the text that it begins as ({error})",
+            remedy="Export it again, as UTF-8.",
         ) from error
 
 

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
+from numpy.typing import NDArray
 
 from ingest import lines
 from ingest.dialect import (
@@ -36,7 +37,7 @@ class ParquetExport:
     path: Path
     header: tuple[str, ...]
 
-    def look(self, columns: Sequence[int]) -> Iterator[list[Any]]:
+    def look(self, columns: Sequence[int]) -> Iterator[tuple[NDArray[np.int64], list[Any]]]:
         """Show columns, some rows at a time.
 
         Parameters
@@ -46,11 +47,13 @@ class ParquetExport:
 
         Yields
         ------
-        list of pyarrow.Array
+        numpy.ndarray of int64 (n,)
+            Numbers of the rows in the file.
+        list of pyarrow.Array (n,)
             One per column; dictionaries as what they stand for.
         """
         for block in parquet_blocks(self, columns):
-            yield [_spread(block.columns[i]) for i in columns]
+            yield block.rows, [_spread(block.columns[i]) for i in columns]
 
 
 @contextmanager
@@ -97,7 +100,8 @@ def open_parquet(
     layout = decide_layout(path.name, header, wanted or (), file.look)
     values = value_columns(header, layout, wanted)
     _refuse_types(path, layout, values)
-    clock = decide_clock(path.name, (layout.time, header[layout.time]), file.look, zone)
+    time = (layout.time, header[layout.time])
+    clock = decide_clock(path.name, 0, time, file.look, zone=zone, date_order=rules.date_order)
     numbers = decide_numbers(path.name, values, file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
     return file, Dialect("", "", header, 0, layout, clock, numbers, quality)
@@ -141,7 +145,7 @@ def _refuse_size(export: str, about: Any, columns: int) -> None:
 
 
 def _refuse_types(path: Path, layout: Layout, values: Sequence[int]) -> None:
-    """Values are numbers or text, tags and qualities whole numbers or text."""
+    """Values are numbers or text, tags and qualities whole numbers or text; a column of nulls may be any."""
     with _opened(path) as raw:
         schema = raw.schema_arrow
     names = [i for i in (layout.tag, layout.quality) if i is not None]
@@ -149,7 +153,7 @@ def _refuse_types(path: Path, layout: Layout, values: Sequence[int]) -> None:
         kind = schema.field(i).type
         inner = kind.value_type if pa.types.is_dictionary(kind) else kind
         fits = is_text(inner) or pa.types.is_integer(inner) or pa.types.is_floating(inner)
-        if not fits and not (i in values and pa.types.is_decimal(inner)):
+        if not fits and not (i in values and (pa.types.is_decimal(inner) or pa.types.is_null(inner))):
             raise ExportError(
                 f"{path.name} [{schema.field(i).name}]: neither numbers nor text but {kind}",
                 remedy="Export values as numbers, tags and qualities as text.",
@@ -157,10 +161,12 @@ def _refuse_types(path: Path, layout: Layout, values: Sequence[int]) -> None:
 
 
 def _plain(column: Any) -> Any:
-    """A column in one of the types that are read: dictionaries hold text, text is plain."""
+    """A column in a type that is read: dictionaries hold text, text is plain, nulls alone are numbers."""
     kind = column.type
     if pa.types.is_dictionary(kind) and not is_text(kind.value_type):
         return column.dictionary_decode()
+    if pa.types.is_null(kind):
+        return column.cast(pa.float64())
     return column.cast(pa.string()) if pa.types.is_string_view(kind) else column
 
 

@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pyarrow.csv as pcsv
+from numpy.typing import NDArray
 
 from ingest.columns import plain, present, single
 from ingest.dialect import (
@@ -56,7 +57,7 @@ class TextFile:
                 lines = Lines(lines.data[lines.data.index(b"\n") + 1 :], lines.rows[1:], lines.faults)
             yield lines
 
-    def look(self, columns: Sequence[int]) -> Iterator[list[Any]]:
+    def look(self, columns: Sequence[int]) -> Iterator[tuple[NDArray[np.int64], list[Any]]]:
         """Show columns as text, block by block.
 
         Parameters
@@ -66,13 +67,15 @@ class TextFile:
 
         Yields
         ------
-        list of pyarrow.Array
+        numpy.ndarray of int64 (n,)
+            Numbers of the rows in the file.
+        list of pyarrow.Array (n,)
             One per column.
         """
         for lines in self.lines():
             block = self.parse(lines, dict.fromkeys(columns, pa.string()))
             if block is not None and len(block.rows):
-                yield [single(block.columns[i]) for i in columns]
+                yield block.rows, [single(block.columns[i]) for i in columns]
 
     def parse(self, lines: Lines, types: dict[int, Any], **convert: Any) -> Block | None:
         """Split lines into columns of given types.
@@ -165,7 +168,8 @@ def open_text(
             f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
         )
     layout = decide_layout(place, file.header, wanted or (), file.look)
-    clock = decide_clock(place, (layout.time, file.header[layout.time]), file.look, zone)
+    time = (layout.time, file.header[layout.time])
+    clock = decide_clock(path.name, file.header_row, time, file.look, zone=zone, date_order=rules.date_order)
     numbers = decide_numbers(path.name, value_columns(file.header, layout, wanted), file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
     return file, Dialect(
@@ -277,14 +281,14 @@ def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int
 
 
 def _settings(dialect: Dialect) -> dict[str, Any]:
-    """Words for "no value" become null at once, as they are and in the usual capitals."""
-    words = {
-        form
-        for word in dialect.numbers.missing
-        for form in (word, word.upper(), word.title(), word.capitalize())
-    }
+    """Words for "no value" become null at once, as they are and in the usual capitals.
+
+    A wide export needs its nulls for blank cells: there a block with words is read as text.
+    """
+    words = dialect.numbers.missing if dialect.layout.is_long else frozenset({""})
+    forms = {form for word in words for form in (word, word.upper(), word.title(), word.capitalize())}
     return {
-        "null_values": sorted(words),
+        "null_values": sorted(forms),
         "timestamp_parsers": [pcsv.ISO8601],
         "decimal_point": dialect.numbers.decimal,
     }

@@ -8,7 +8,7 @@ from __future__ import annotations
 import re
 from collections.abc import Callable, Collection, Iterable, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NoReturn
 
 import numpy as np
 import pyarrow as pa
@@ -16,13 +16,14 @@ import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from ingest.account import INFINITE, NUMBER, QUALITY
-from ingest.columns import Look, coded, flags, floats, matches, present, single
+from ingest.columns import Look, coded, first_match, flags, floats, matches, present, single
 from ingest.errors import ExportError
 from ingest.readings import BAD, GOOD, UNCERTAIN, UNKNOWN
 from ingest.unit import ExportRules
 
 MISSING_WORDS = ("bad", "no data", "-", "#n/a", "err", "")  # whatever their capitals; common practice
 
+MARKS = {".": "point", ",": "comma"}
 NUMBERS = {
     ".": r"^[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?$",
     ",": r"^[+-]?(\d+,?\d*|,\d+)([eE][+-]?\d+)?$",
@@ -39,10 +40,11 @@ Codes = NDArray[np.int8]
 
 @dataclass(frozen=True, slots=True)
 class Values:
-    """(n,) values, NaN where there is none, and a place in account.REASONS for each."""
+    """(n,) values, NaN where there is none; a place in account.REASONS for each; which cells are blank."""
 
     value: NDArray[np.float64]
     reason: Codes
+    blank: NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,7 +78,7 @@ class Numbers:
             )  # Arrow's own way from decimal to float is off in the last digit
         value = self._emptied(floats(single(column.cast(pa.float64()))))
         reason = np.where(np.isinf(value), INFINITE, 0).astype(np.int8)
-        return Values(value, reason)
+        return Values(value, reason, ~present(column))
 
     def _emptied(self, value: NDArray[np.float64]) -> NDArray[np.float64]:
         """Nothing in place of a number that stands for "no value", however many zeros follow its point."""
@@ -86,13 +88,14 @@ class Numbers:
     def _from_text(self, column: Any) -> Values:
         text = pc.replace_substring(pc.utf8_trim_whitespace(column), _MINUS, "-")
         small = pc.utf8_lower(text)
-        missing = flags(pc.is_in(small, pa.array(sorted(self.missing), small.type))) | ~present(text)
+        blank = flags(pc.equal(small, "")) | ~present(text)
+        missing = flags(pc.is_in(small, pa.array(sorted(self.missing), small.type))) | blank
         fits = pc.match_substring_regex(text, NUMBERS[self.decimal])
         number = pc.if_else(pc.and_(fits, pa.array(~missing)), text, pa.scalar(None, text.type))
         value = floats(single(pc.replace_substring(number, self.decimal, ".").cast(pa.float64())))
         odd = flags(pc.match_substring_regex(small, _NOT_FINITE)) | np.isinf(value)
         reason = np.where(missing | flags(fits) & ~odd, 0, np.where(odd, INFINITE, NUMBER)).astype(np.int8)
-        return Values(self._emptied(value), np.where(missing, np.int8(0), reason))
+        return Values(self._emptied(value), np.where(missing, np.int8(0), reason), blank)
 
 
 def _is_number(text: str) -> bool:
@@ -248,45 +251,73 @@ def texts(words: Any) -> Iterable[str]:
     return ("" if word is None else str(word) for word in words.to_pylist())
 
 
-def decide_numbers(place: str, columns: Sequence[int], look: Look, rules: ExportRules) -> Numbers:
-    """Find the decimal mark: the first number that can be read in one way only tells.
+def decide_numbers(export: str, columns: Sequence[int], look: Look, rules: ExportRules) -> Numbers:
+    """Find the decimal mark: the first block with numbers that can be read in one way only tells.
 
     Parameters
     ----------
-    place : str
-        `file` or `file:row`, for the error.
+    export : str
+        Its name, for the error.
     columns : sequence of int
         Columns of values.
     look : callable
         Gives columns.
     rules : ExportRules
-        Further words for "no value".
+        Further words for "no value", and the mark of a file that does not tell.
 
     Returns
     -------
     Numbers
-        Whole numbers only: with a decimal point.
+        Whole numbers only: with the mark of the rules, else with a decimal point.
     """
     missing = frozenset(word.strip().casefold() for word in (*MISSING_WORDS, *rules.missing_words))
-    grouped = ""
-    for block in look(columns) if columns else ():
+    unclear: list[tuple[int, str]] = []
+    for rows, block in look(columns) if columns else ():
         written = [column for column in block if is_text(column.type)]
         if not written:
             return Numbers(".", missing)
-        point = sum(matches(c, _POINT) for c in written)
-        either = sum(matches(c, _GROUPED) for c in written)
-        comma = sum(matches(c, _COMMA) for c in written) - either
-        if point != comma:
-            return Numbers("." if point > comma else ",", missing)
-        if either and not grouped:
-            grouped = next(t for c in written for t in texts(c.filter(pc.match_substring_regex(c, _GROUPED))))
-    if grouped:
-        raise ExportError(
-            f"{place}: {grouped!r} is {grouped.replace(',', '.')} with a decimal comma but"
-            f" {grouped.replace(',', '')} with marks between thousands, and no number tells which",
-            remedy="Export with a decimal point and without marks between thousands.",
-        )
-    return Numbers(".", missing)
+        mark = _mark(written, settled=rules.decimal is not None)
+        if mark is not None and rules.decimal in (None, mark):
+            return Numbers(mark, missing)
+        if mark is not None:
+            _refuse_mark(export, *_shown(rows, written, _COMMA if mark == "," else _POINT)[0], mark)
+        unclear = unclear or _shown(rows, written, _GROUPED)
+    if unclear and rules.decimal is None:
+        _refuse_either_mark(export, *unclear[0])
+    return Numbers(rules.decimal or ".", missing)
+
+
+def _mark(columns: Sequence[Any], *, settled: bool) -> str | None:
+    """The decimal mark that most numbers show; `settled`: a comma is no mark between thousands."""
+    point, comma = (sum(matches(c, pattern) for c in columns) for pattern in (_POINT, _COMMA))
+    if not settled:
+        comma -= sum(matches(c, _GROUPED) for c in columns)
+    return None if point == comma else "." if point > comma else ","
+
+
+def _shown(rows: NDArray[np.int64], columns: Sequence[Any], pattern: str) -> list[tuple[int, str]]:
+    """Row and text of the first cell of each column that matches a pattern, the topmost first."""
+    found = (first_match(column, pattern) for column in columns)
+    return sorted((int(rows[match[0]]), match[1]) for match in found if match)
+
+
+def _refuse_mark(export: str, row: int, text: str, mark: str) -> NoReturn:
+    stated = "." if mark == "," else ","
+    raise ExportError(
+        f"{export}:{row}: {text!r} has a {MARKS[mark]}, which no number has with decimal = {stated!r}",
+        remedy="Mend or remove decimal under [exports] in the unit file,"
+        " or export without marks between thousands.",
+    )
+
+
+def _refuse_either_mark(export: str, row: int, text: str) -> NoReturn:
+    meant = text.replace(",", ".")
+    raise ExportError(
+        f"{export}:{row}: {text!r} is {meant} with a decimal comma but"
+        f" {text.replace(',', '')} with marks between thousands, and no number tells which",
+        remedy=f"If {meant} is meant, write decimal = ',' under [exports] in the unit file;"
+        " else export without marks between thousands.",
+    )
 
 
 def decide_quality(place: str, column: int | None, look: Look, rules: ExportRules) -> str | None:
@@ -313,8 +344,8 @@ def decide_quality(place: str, column: int | None, look: Look, rules: ExportRule
     if rules.quality is not None:
         return rules.quality
     seen: set[str] = set()
-    for block in look([column]):
-        seen |= {text.strip() for text in texts(single(block[0]).unique())} - {""}
+    for _, (qualities,) in look([column]):
+        seen |= {text.strip() for text in texts(single(qualities).unique())} - {""}
         forms = _quality_forms(seen)
         if len(forms) == 1:
             return forms[0]
@@ -326,7 +357,7 @@ def decide_quality(place: str, column: int | None, look: Look, rules: ExportRule
     raise ExportError(
         f"{place}: qualities such as {sample} may be words, OPC UA status codes (0 is good)"
         " or OPC DA qualities (0 is bad)",
-        remedy="Set quality under [exports] to 'words', 'opc ua' or 'opc da'.",
+        remedy="Set quality under [exports] in the unit file to 'words', 'opc ua' or 'opc da'.",
     )
 
 

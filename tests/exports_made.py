@@ -49,7 +49,7 @@ def number(value: float, *, decimal: str = ".", missing: str = "") -> str:
 
 
 def wide_text(
-    truth: Truth, *, write: Write = iso_z, separator: str = ",", decimal: str = ".", missing: str = ""
+    truth: Truth, *, write: Write = iso_z, separator: str = ",", decimal: str = ".", missing: str = "Bad"
 ) -> str:
     rows = [separator.join(["time", *TAGS])]
     for time, values in zip(truth.times, truth.values, strict=True):
@@ -79,7 +79,7 @@ def wide_parquet(path: Path, truth: Truth, *, unit: str = "us", zone: str | None
     times = pa.array([t.replace(tzinfo=None) for t in truth.times], pa.timestamp(unit)).cast(
         pa.timestamp(unit, zone)
     )
-    columns = {tag: pa.array(truth.values[:, i], from_pandas=True) for i, tag in enumerate(TAGS)}
+    columns = {tag: pa.array(truth.values[:, i]) for i, tag in enumerate(TAGS)}  # NaN, not null
     pq.write_table(pa.table({"time": times, **columns}), path)
 
 

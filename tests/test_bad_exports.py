@@ -156,7 +156,7 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
         "x.csv",
         b"Dear all\nplease find\n",
         r"x\.csv:1: the header 'Dear all' names one",
-        "header row",
+        "in the first line",
     ),
     "no time column": ("x.csv", b"A,B\n1,2\n3,4\n", r"x\.csv:1: no time column", "Name the column"),
     "two time columns": (
@@ -174,20 +174,20 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "a tag column without values": (
         "x.csv",
         b"time,tag,A\n2026-01-01,B,1\n",
-        r"x\.csv:1: unknown layout: columns 'tag'",
-        "Export long",
+        r"x\.csv:1: columns 'tag' are neither a long nor a wide export",
+        "Name the columns",
     ),
     "values without tags": (
         "x.csv",
         b"time,value\n2026-01-01,1\n",
-        r"x\.csv:1: unknown layout: columns 'value'",
-        "Export long",
+        r"x\.csv:1: columns 'value' are neither a long nor a wide export",
+        "Name the columns",
     ),
     "one quality for many tags": (
         "x.csv",
         b"time,A,quality\n2026-01-01,1,Good\n",
-        r"unknown layout: columns 'quality'",
-        "Export long",
+        r"columns 'quality' are neither a long nor a wide export",
+        "Name the columns",
     ),
     "all rows of other width": (
         "x.csv",
@@ -210,31 +210,31 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "ambiguous dates": (
         "x.csv",
         b"time,A\n03/04/2026 10:00,1\n",
-        r"'03/04/2026 10:00' is 2026-04-03 day first but 2026-03-04 month first",
-        "after the 12th",
+        r"x\.csv:2: '03/04/2026 10:00' is 2026-04-03 day first but 2026-03-04 month first",
+        r"Write date_order = 'day first' or 'month first' under \[exports\]",
     ),
     "ambiguous dates below a stray line": (
         "x.csv",
         b"time,A\nplant B,1\n03/04/2026 10:00,1\n03/05/2026 10:00,1\n",
-        r"'03/04/2026 10:00' is 2026-04-03 day first but 2026-03-04 month first",
-        "after the 12th",
+        r"x\.csv:3: '03/04/2026 10:00' is 2026-04-03 day first but 2026-03-04 month first",
+        r"Write date_order = 'day first' or 'month first' under \[exports\]",
     ),
     "contradicting dates": (
         "x.csv",
         b"time,A\n13/04/2026,1\n04/13/2026,1\n",
-        "some dates can only be day first",
+        r"x\.csv:2: '13/04/2026' can only be day first, but '04/13/2026' in row 3 can only be the other way",
         "Export times",
     ),
     "words for times": (
         "x.csv",
         b"time,A\nMonday,1\n",
-        r"x\.csv:1: 'Monday' is no known form of time",
+        r"x\.csv:2: 'Monday' is no known form of time",
         "Export times",
     ),
     "two forms of time": (
         "x.csv",
         b"time,A\n2026-01-01T00:00Z,1\n1767225600,1\n",
-        r"x\.csv:1: '2026-01-01T00:00Z' is one of several forms of time",
+        r"x\.csv:2: '2026-01-01T00:00Z' is one of several forms of time",
         "Export times",
     ),
     "two-digit years": (
@@ -246,8 +246,8 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "comma or thousands": (
         "x.csv",
         b"time;A\n2026-01-01T00:00Z;1,234\n",
-        r"'1,234' is 1\.234 with a decimal comma but 1234",
-        "decimal point",
+        r"x\.csv:2: '1,234' is 1\.234 with a decimal comma but 1234",
+        r"If 1\.234 is meant, write decimal = ',' under \[exports\]",
     ),
     "quality 0 only": (
         "x.csv",
@@ -279,7 +279,7 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
         "x.csv",
         gzip.compress(ANY.encode()),
         r"x\.csv: is a gz file without",
-        r"\.csv\.gz",
+        r"Rename it so that it ends in \.csv\.gz",
     ),
     "text called gz": ("x.csv.gz", ANY.encode(), r"x\.csv\.gz: the gz file is damaged", "again"),
     "gz cut short": (
@@ -309,8 +309,8 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "UTF-16 cut in a character": (
         "x.csv",
         ANY.encode("utf-16") + b"\x00\xd8",
-        r"x\.csv: is not the text it begins as",
-        "Save the export as UTF-8",
+        r"x\.csv: does not stay the text that it begins as",
+        "Export it again, as UTF-8",
     ),
     "carriage returns alone": (
         "x.csv",

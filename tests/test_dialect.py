@@ -43,7 +43,11 @@ from tests.exports_made import (
 
 def shown(*blocks: list[str]):
     """A column of text that is handed out block by block."""
-    return lambda _: ([pa.array(block, pa.string())] for block in blocks)
+    ends = np.cumsum([len(block) for block in blocks])
+    parts = [
+        (np.arange(e - len(b), e) + 2, [pa.array(b, pa.string())]) for b, e in zip(blocks, ends, strict=True)
+    ]
+    return lambda _: iter(parts)
 
 
 @pytest.mark.parametrize(
@@ -176,25 +180,28 @@ SENTENCES = {
         "Wide: times in 'time', one column for each of 3 tags.",
         "Times are calendar times, year first, without offset: read as clock time of Europe/Berlin.",
         "Decimal mark: comma.",
-        "Bad quality instead of a value, whatever the capitals:"
-        " '', '#n/a', '-', 'bad', 'err', 'no data', 'offline'.",
-        "No quality column: quality unknown, usable.",
+        "Blank cells: nothing was stored then, no reading.",
+        "Words that mean bad quality, whatever their capitals:"
+        " '#n/a', '-', 'bad', 'err', 'no data', 'offline'.",
+        "No quality column: every number counts as usable.",
     ),
     "long": (
         "Text in UTF-8, separated by comma; line 1 names the columns.",
         "Long: times in 'time', tags in 'tag', values in 'value'.",
         "Times are calendar times, year first, with their offset from UTC.",
         "Decimal mark: point.",
-        "Bad quality instead of a value, whatever the capitals: '', '#n/a', '-', 'bad', 'err', 'no data'.",
-        "Quality in 'quality', by opc da.",
+        "Blank cells: bad quality.",
+        "Words that mean bad quality, whatever their capitals: '#n/a', '-', 'bad', 'err', 'no data'.",
+        "Quality in 'quality', as OPC DA qualities (192 is good).",
     ),
     "Parquet": (
         "Parquet.",
         "Wide: times in 'time', one column for each of 3 tags.",
         "Times are time stamps, with their offset from UTC.",
         "Decimal mark: point.",
-        "Bad quality instead of a value, whatever the capitals: '', '#n/a', '-', 'bad', 'err', 'no data'.",
-        "No quality column: quality unknown, usable.",
+        "Blank cells: nothing was stored then, no reading.",
+        "Words that mean bad quality, whatever their capitals: '#n/a', '-', 'bad', 'err', 'no data'.",
+        "No quality column: every number counts as usable.",
     ),
 }
 
@@ -235,7 +242,8 @@ def test_a_number_is_the_same_whether_its_block_is_clean_or_not(value: float, fo
 def test_what_is_taken_for_a_number_is_one_to_python_too(text: str):
     for mark in NUMBERS:
         read = Numbers(mark, frozenset()).read(pa.array([text]))
-        if read.reason[0] == 0:
+        assert read.blank[0] == (not text.strip())
+        if read.reason[0] == 0 and not read.blank[0]:
             assert read.value[0] == float(text.replace(",", "."))
             assert mark == "," or "," not in text
 

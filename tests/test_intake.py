@@ -397,12 +397,16 @@ def test_other_rules_for_exports_than_those_an_export_was_read_by_are_told(store
     take(store, day)
     result = take(store, day, units=(unit_of("FI-1", "FI-2", time_zone="Europe/Berlin"),))
     assert statuses(result) == {"day.csv": "taken already"}
-    assert result.notes == ("day.csv: was read by other [exports] rules; take all into a new store",)
+    assert result.notes == (
+        "day.csv: was read by other rules under [exports] than those stated now;"
+        " to read all alike, take every export into a new store",
+    )
 
 
 def test_units_that_would_read_one_export_in_two_ways_are_refused(store, day):
     units = (unit_of("FI-1", key="north"), unit_of("FI-2", key="south", time_zone="Europe/Berlin"))
-    with pytest.raises(StoreError, match=r"units north and south: \[exports\] of one says"):
+    says = r"exports\.time_zone is 'UTC' in north but 'Europe/Berlin' in south"
+    with pytest.raises(StoreError, match=says):
         take(store, day, units=units)
 
 

@@ -60,6 +60,22 @@ def spoilt(wide: pa.Table) -> pa.Table:
     return wide.set_column(1, TAGS[0], pa.array(text))
 
 
+def joined(wide: pa.Table) -> pa.Table:
+    """Half of the tags have a reading each 6 min only; their other cells are blank."""
+    blank = pa.array(np.arange(len(wide)) % 6 != 0)
+    for tag in TAGS[::2]:
+        column = pa.compute.if_else(blank, pa.scalar(None, pa.float64()), wide[tag])
+        wide = wide.set_column(wide.column_names.index(tag), tag, column)
+    return wide
+
+
+def worded(wide: pa.Table) -> pa.Table:
+    """One cell in each block holds a word for no value."""
+    text = wide[TAGS[0]].cast(pa.string()).to_pylist()
+    text[len(text) // 2] = "Bad"
+    return wide.set_column(1, TAGS[0], pa.array(text))
+
+
 def as_local(wide: pa.Table) -> pa.Table:
     """Times without offset, day first."""
     text = pa.compute.strftime(wide["time"].cast(pa.timestamp("s")), format="%d.%m.%Y %H:%M")
@@ -70,6 +86,9 @@ FORMATS = {
     "wide.parquet": lambda wide: wide,
     "long.parquet": melted,
     "wide.csv": lambda wide: wide,
+    "joined.parquet": joined,
+    "joined.csv": joined,
+    "worded.csv": worded,
     "spoilt.csv": spoilt,
     "local.csv": as_local,
     "long.csv": melted,
