@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.csv as pcsv
 from numpy.typing import NDArray
 
@@ -28,6 +29,7 @@ from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US
 from ingest.unit import ExportRules
 from ingest.values import decide_numbers, decide_quality
 
+_LF, _CR = b"\n\r"
 _WORDS = pa.dictionary(pa.int32(), pa.string())
 _FIRST_LINES = 50  # what the separator is judged by
 _PATIENCE = 8  # blocks that must be read as text before the quick way is given up
@@ -217,22 +219,45 @@ def text_blocks(file: TextFile, dialect: Dialect, columns: Sequence[int]) -> Ite
     Block
         Time column and values as text wherever anything in the block is not a clean time or number.
     """
-    quick, text = _types(dialect, columns, quick=True), _types(dialect, columns, quick=False)
-    settings = _settings(dialect)
+    text = _types(dialect, columns, quick=False)
     spoilt = 0
     for lines in file.lines():
-        block = file.parse(lines, quick, **settings) if spoilt < _PATIENCE else None
-        if block is None or not _clean(block, dialect, columns):
-            spoilt += 1
-            block = file.parse(lines, text)
-        else:
-            spoilt = 0
+        block = _quick(file, dialect, columns, lines) if spoilt < _PATIENCE else None
+        spoilt = spoilt + 1 if block is None else 0
+        block = file.parse(lines, text) if block is None else block
         if block is None:
             raise ExportError(
                 f"{file.path.name}:{lines.rows[0]}: the rows from here on cannot be split into columns",
                 remedy="Export as CSV text with one row per line.",
             )
         yield block
+
+
+def _quick(file: TextFile, dialect: Dialect, columns: Sequence[int], lines: Lines) -> Block | None:
+    """A block with its values as numbers; None where it is not clean.
+
+    Null can mean one thing only: in a wide block that has blank cells it means these, and a word is not
+    clean; else it means a word, and becomes NaN.
+    """
+    blanks = not dialect.layout.is_long and _holds_blanks(lines.data, ord(file.separator))
+    words = frozenset({""}) if blanks else dialect.numbers.missing
+    block = file.parse(lines, _types(dialect, columns, quick=True), **_settings(dialect, words))
+    if block is None or not _clean(block, dialect, columns):
+        return None
+    if not blanks:
+        worded = (i for i in columns if block.columns[i].null_count)
+        block.columns.update({i: pc.fill_null(block.columns[i], np.nan) for i in worded})
+    return block
+
+
+def _holds_blanks(data: bytes, separator: int) -> bool:
+    """Whether there is a cell with nothing in it: a separator or a line's edge beside another, or quotes."""
+    raw = np.frombuffer(data, np.uint8)
+    mark = raw == separator
+    edge = mark | (raw == _LF) | (raw == _CR)
+    return bool(
+        mark[:1].any() or (mark[:-1] & edge[1:]).any() or (edge[:-1] & mark[1:]).any() or b'""' in data
+    )
 
 
 def _begin(path: Path) -> tuple[TextFile, str]:
@@ -280,12 +305,8 @@ def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int
     return types | {i: _WORDS for i in (layout.tag, layout.quality) if i is not None}
 
 
-def _settings(dialect: Dialect) -> dict[str, Any]:
-    """Words for "no value" become null at once, as they are and in the usual capitals.
-
-    A wide export needs its nulls for blank cells: there a block with words is read as text.
-    """
-    words = dialect.numbers.missing if dialect.layout.is_long else frozenset({""})
+def _settings(dialect: Dialect, words: Collection[str]) -> dict[str, Any]:
+    """Some words become null at once, as they are and in the usual capitals."""
     forms = {form for word in words for form in (word, word.upper(), word.title(), word.capitalize())}
     return {
         "null_values": sorted(forms),
