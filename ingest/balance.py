@@ -6,6 +6,7 @@ basis Z of its null space, `n = Z q` closes every balance to rounding whatever q
 
 from __future__ import annotations
 
+from collections.abc import Container
 from dataclasses import dataclass
 
 import numpy as np
@@ -127,7 +128,7 @@ def problem(
 
 
 def problem_of(unit: Unit) -> Problem:
-    """Give the problem of a unit: one row per element of the reacting species, one per inert species.
+    """Give the problem of a unit: for each node one row per element and per inert species, or per species.
 
     Parameters
     ----------
@@ -149,7 +150,8 @@ def problem_of(unit: Unit) -> Problem:
     if not found.basis.shape[1] or held:
         raise BalanceError(
             f"{unit.key}: the balance forces {', '.join(held) or 'every flow'} to zero",
-            remedy="Name the species in a stream of the other direction too, or take it out of `inert`.",
+            remedy="Name the species in a stream of the other direction too, at every node that it passes, "
+            "or take it out of `inert`.",
         )
     return found
 
@@ -166,7 +168,7 @@ def state_of(unit: Unit) -> tuple[tuple[str, str], ...]:
 
 
 def sign_of(unit: Unit, state: tuple[tuple[str, str], ...]) -> Floats:
-    """Give +1 for flows into the envelope and -1 for flows out of it, array (N,).
+    """Give +1 for flows into the envelope, -1 for flows out of it and 0 for those inside, array (N,).
 
     Parameters
     ----------
@@ -175,12 +177,29 @@ def sign_of(unit: Unit, state: tuple[tuple[str, str], ...]) -> Floats:
     state : tuple of (stream, species)
         The state axis.
     """
+    sign = {"in": 1.0, "out": -1.0, "inner": 0.0}
     direction = {stream.name: stream.direction for stream in unit.streams}
-    return np.array([1.0 if direction[stream] == "in" else -1.0 for stream, _ in state])
+    return np.array([sign[direction[stream]] for stream, _ in state])
+
+
+def sign_around(unit: Unit, state: tuple[tuple[str, str], ...], nodes: Container[str | None]) -> Floats:
+    """Give +1 for flows into a group of nodes, -1 for flows out of it and 0 for all others, array (N,).
+
+    Parameters
+    ----------
+    unit : Unit
+        With nodes.
+    state : tuple of (stream, species)
+        The state axis.
+    nodes : container of str
+        Names of the group's nodes; a flow between two of them is inside.
+    """
+    sign = {one.name: float(one.target in nodes) - float(one.source in nodes) for one in unit.streams}
+    return np.array([sign[stream] for stream, _ in state])
 
 
 def conservation_of(unit: Unit, state: tuple[tuple[str, str], ...]) -> Floats:
-    """Give the conservation rows of a unit, array (r, N), `in` minus `out`.
+    """Give the conservation rows of a unit, array (r, N), `in` minus `out`, the nodes one below the other.
 
     Parameters
     ----------
@@ -189,12 +208,22 @@ def conservation_of(unit: Unit, state: tuple[tuple[str, str], ...]) -> Floats:
     state : tuple of (stream, species)
         The state axis.
     """
-    atoms = {one.name: dict(one.atoms) for one in unit.species if not one.inert}
+    if not unit.nodes:
+        return _kept(unit, state, reacts=True) * sign_of(unit, state)
+    parts = [
+        _kept(unit, state, reacts=node.reacts) * sign_around(unit, state, (node.name,)) for node in unit.nodes
+    ]
+    return np.vstack(parts)
+
+
+def _kept(unit: Unit, state: tuple[tuple[str, str], ...], *, reacts: bool) -> Floats:
+    """Give what a node keeps, as weights on flows: elements and inert species, or every species."""
+    atoms = {one.name: dict(one.atoms) for one in unit.species if reacts and not one.inert}
     elements = sorted({element for held in atoms.values() for element in held})
-    inert = [one.name for one in unit.species if one.inert]
     kept = [[atoms.get(name, {}).get(element, 0.0) for _, name in state] for element in elements]
-    kept += [[1.0 if name == tie else 0.0 for _, name in state] for tie in inert]
-    return np.array(kept) * sign_of(unit, state)
+    ties = [one.name for one in unit.species if one.name not in atoms]
+    kept += [[1.0 if name == tie else 0.0 for _, name in state] for tie in ties]
+    return np.array(kept)
 
 
 def sight(problem: Problem, present: NDArray[np.bool_]) -> Sight:

@@ -8,11 +8,12 @@ from datetime import timedelta
 from typing import Any
 
 from ingest import chemistry
+from ingest.chemistry import Atoms
 from ingest.errors import OutletError, Problem
 from ingest.keys import Entry, missing, nearest, read_table, rows
 
 ONCE = ("unit", "chemistry", "operating", "catalyst", "exports")
-MANY = ("stream", "instrument", "analyzer", "shared", "watch")
+MANY = ("node", "stream", "instrument", "analyzer", "shared", "watch")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")
 _NEEDED = ("unit", "chemistry", "stream")
@@ -27,7 +28,7 @@ class Draft:
 
     once: dict[str, Entry]
     many: dict[str, list[Entry]]
-    atoms: dict[str, chemistry.Atoms | None] = field(default_factory=dict)
+    atoms: dict[str, Atoms | None] = field(default_factory=dict)
 
     @property
     def chemistry(self) -> Entry:
@@ -66,6 +67,11 @@ class Draft:
         """
         water = chemistry.atoms("H2O")
         return tuple(name for name in species if self.atoms.get(name) == water)
+
+    def reacting(self) -> dict[str, Atoms]:
+        """Give the composition of every species that is not inert and whose formula could be read."""
+        inert = self.chemistry.get("inert") or ()
+        return {name: atoms for name, atoms in self.atoms.items() if atoms and name not in inert}
 
 
 def read(document: Mapping[str, Any]) -> tuple[Draft, list[Problem]]:
@@ -168,6 +174,31 @@ def _read_formulas(draft: Draft) -> list[Problem]:
         except OutletError as error:
             problems.append(Problem(place, error.what, error.remedy))
     return problems
+
+
+def direction_of(stream: Entry) -> str | None:
+    """Give where a stream goes, seen from the envelope.
+
+    Parameters
+    ----------
+    stream : Entry
+        A stream.
+
+    Returns
+    -------
+    str or None
+        'in', 'out' or 'inner' by its nodes, else as stated; None where that could not be read.
+    """
+    if stream.told & {"from", "to"}:
+        return None
+    joins = stream.get("from") is not None, stream.get("to") is not None
+    by_nodes: dict[tuple[bool, bool], str] = {
+        (False, True): "in",
+        (True, False): "out",
+        (True, True): "inner",
+    }
+    stated: str | None = stream.get("direction")
+    return by_nodes.get(joins, stated)
 
 
 def undeclared(

@@ -17,7 +17,7 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError, available_timezones
 
 from ingest import quantities
 from ingest.errors import OutletError, Problem
-from ingest.unit import FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, SAMPLINGS
+from ingest.unit import FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, ROLES, SAMPLINGS
 
 BASES = ("dry", "wet", "as analysed")
 ANALYZED = (*FRACTION_KINDS, "volume fraction", "species flow")
@@ -106,9 +106,14 @@ TABLE: tuple[Key, ...] = (
     Key("chemistry", "inert", "texts", "species that take no part", '["nitrogen"]', default=[]),
     Key("chemistry", "key_element", "text", "element that yield and shares count", '"C"', default="C"),
     Key("chemistry", "species", "formulas", "formula of each species", '{ water = "H2O" }', "always"),
+    Key("node", "name", "text", "name of the node, unique in the file", '"separator"', "always"),
+    Key("node", "reacts", "yes or no", "true: a reactor, elements balance; false: each species does", "false", "always"),
     Key("stream", "name", "text", "name of the stream, unique in the file", '"outlet"', "always"),
-    Key("stream", "direction", "choice", "into the envelope or out of it", '"in"', "always", choices=("in", "out")),
+    Key("stream", "direction", "choice", "into the envelope or out of it", '"in"', "unless nodes are stated", choices=("in", "out")),
+    Key("stream", "from", "text", "node it comes from; left out, it comes from outside", '"separator"', "with nodes, unless it comes from outside"),
+    Key("stream", "to", "text", "node it goes to; left out, it goes outside", '"mixer"', "with nodes, unless it goes outside"),
     Key("stream", "species", "texts", "every species the stream may hold", '["oxygen", "nitrogen"]', "always"),
+    Key("stream", "role", "choice", "what the recycle ratio counts it as: recycle over fresh feed, in moles", '"recycle"', choices=ROLES),
     *_INSTRUMENT,
     Key("uncertainty", "relative_pct", "number", "part in percent of the reading", "0.5", default=0.0, low=0, high=100),
     Key("uncertainty", "floor", "number", "part in the unit of the reading", "0.002", default=0.0, low=0),

@@ -18,6 +18,7 @@ KINDS = (*BALANCE_KINDS, *AUXILIARY_KINDS)
 SAMPLINGS = ("held", "interpolated", "mean at end", "mean at start")
 PRIORITIES = ("high", "medium", "low")
 REACTORS = ("well-mixed", "packed bed", "batch")
+ROLES = ("fresh feed", "recycle")
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,12 +33,27 @@ class Species:
 
 
 @dataclass(frozen=True, slots=True)
+class Node:
+    """A part of the unit that balances by itself: by element where it reacts, else by species."""
+
+    name: str
+    reacts: bool
+
+
+@dataclass(frozen=True, slots=True)
 class Stream:
-    """A flow crossing the envelope; `direction` is 'in' or 'out'; species in state order."""
+    """A flow into the envelope, out of it or inside it; species in state order.
+
+    `direction` is 'in', 'out' or 'inner'. `source` and `target` name the nodes it joins; None is the
+    outside, and both are None in a unit that is one node without a name. `role` is one of ROLES or None.
+    """
 
     name: str
     direction: str
     species: tuple[str, ...]
+    source: str | None = None
+    target: str | None = None
+    role: str | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -156,3 +172,4 @@ class Unit:
     windows: tuple[timedelta, ...]
     least_coverage: float
     exports: ExportRules
+    nodes: tuple[Node, ...] = ()  # none: the whole unit is one node that reacts

@@ -18,6 +18,7 @@ from ingest.keys import Entry, Key
 from ingest.unit import (
     ExportRules,
     Instrument,
+    Node,
     Operating,
     SharedError,
     Species,
@@ -117,7 +118,15 @@ def _build(read: Draft, key: str) -> Unit:
         unwanted=chemical.get("unwanted"),
         key_element=chemical.get("key_element"),
         streams=tuple(
-            Stream(e.get("name"), e.get("direction"), e.get("species")) for e in read.many["stream"]
+            Stream(
+                e.get("name"),
+                draft.direction_of(e) or "",
+                e.get("species"),
+                source=e.get("from"),
+                target=e.get("to"),
+                role=e.get("role"),
+            )
+            for e in read.many["stream"]
         ),
         instruments=tuple(_instrument(entry, read) for entry in read.many["instrument"]),
         shared=tuple(_shared(entry, read) for entry in read.many["shared"]),
@@ -133,6 +142,7 @@ def _build(read: Draft, key: str) -> Unit:
             date_order=exports.get("date_order"),
             decimal=exports.get("decimal"),
         ),
+        nodes=tuple(Node(e.get("name"), e.get("reacts")) for e in read.many["node"]),
     )
 
 

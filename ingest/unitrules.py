@@ -6,34 +6,18 @@ A rule looks only at values that passed the table of keys, so that one fault is 
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator
 from datetime import timedelta
 
-from ingest import chemistry, instrumentrules, quantities
-from ingest.draft import Draft, twice, undeclared
+from ingest import chemistry, instrumentrules, noderules, quantities
+from ingest.draft import Draft, direction_of, twice, undeclared
 from ingest.errors import Problem
 from ingest.keys import Entry
 from ingest.unit import AUXILIARY_KINDS
 
 HOUR = timedelta(hours=1)
 DAY = timedelta(days=1)
-
-
-def _reacting(draft: Draft) -> dict[str, chemistry.Atoms]:
-    """Give the composition of every species that is not declared inert and whose formula could be read.
-
-    Parameters
-    ----------
-    draft : Draft
-        The file.
-
-    Returns
-    -------
-    dict
-        Species name to atoms, in the order of the file.
-    """
-    inert = draft.chemistry.get("inert") or ()
-    return {name: atoms for name, atoms in draft.atoms.items() if atoms and name not in inert}
+PER_PASS = ("conversion", "selectivity on converted", "yield on feed")
 
 
 def figure_names(draft: Draft) -> tuple[str, ...]:
@@ -51,7 +35,7 @@ def figure_names(draft: Draft) -> tuple[str, ...]:
     """
     entry = draft.chemistry
     wanted, unwanted = entry.get("wanted"), entry.get("unwanted") or ()
-    compositions = _reacting(draft)
+    compositions = draft.reacting()
     carriers = [name for name in unwanted if entry.get("key_element") in dict(compositions.get(name, ()))]
     elements = chemistry.elements_of(list(compositions.values()))
     return (
@@ -65,12 +49,14 @@ def figure_names(draft: Draft) -> tuple[str, ...]:
         *(f"make of {name}" for name in (wanted, *unwanted)),
         "specific consumption fed",
         "specific consumption consumed",
+        *(f"{name} per pass" for name in PER_PASS if draft.many["node"]),
+        *(["recycle ratio"] if any(entry.get("role") for entry in draft.many["stream"]) else []),
     )
 
 
 def _names_are_unique(draft: Draft) -> Iterator[Problem]:
     """Names are unique in their section, and every tag belongs to one instrument."""
-    for section in ("stream", "instrument", "analyzer", "shared"):
+    for section in ("node", "stream", "instrument", "analyzer", "shared"):
         yield from twice(draft.many[section], "name", "give each its own name")
     yield from twice(draft.many["instrument"], "tag", "give each instrument its own tag")
 
@@ -139,34 +125,42 @@ def _streams_hold_species(draft: Draft) -> Iterator[Problem]:
         yield from undeclared(entry, "species", entry.get("species") or (), draft.atoms, "declared species")
         if entry.get("species") == ():
             yield Problem(entry.at("species"), "holds no species", "name every species the stream may hold")
-    for direction in ("in", "out"):
-        if streams and not any(entry.get("direction") in (direction, None) for entry in streams):
-            yield Problem("stream", f"no stream goes {direction}", f'write direction = "{direction}" for one')
+    remedies = {"in": 'write direction = "in" for one', "out": 'write direction = "out" for one'}
+    if draft.many["node"]:
+        remedies = {"in": "write to without from for one", "out": "write from without to for one"}
+    for direction, remedy in remedies.items():
+        if streams and not any(direction_of(entry) in (direction, None) for entry in streams):
+            yield Problem("stream", f"no stream goes {direction}", remedy)
     held = {name for entry in streams for name in entry.get("species") or ()}
     for name in draft.atoms:
-        if _all_read(streams) and name not in held:
+        if noderules.all_read(draft) and name not in held:
             yield Problem(f"chemistry.species.{name}", "is in no stream", "add it to a stream or remove it")
-
-
-def _all_read(streams: Sequence[Entry]) -> bool:
-    """Tell whether every stream's direction and species could be read, so that absence means something."""
-    return bool(streams) and all(entry.get("direction") and entry.get("species") for entry in streams)
 
 
 def _carried(draft: Draft, direction: str) -> set[str]:
     """Give the species that streams of one direction hold."""
-    streams = [entry for entry in draft.many["stream"] if entry.get("direction") == direction]
+    streams = [entry for entry in draft.many["stream"] if direction_of(entry) == direction]
     return {name for entry in streams for name in entry.get("species") or ()}
 
 
 def _what_enters_can_leave(draft: Draft) -> Iterator[Problem]:
-    """Products leave, the key reactant enters and leaves, inerts and every element do both."""
+    """Products leave, the key reactant enters and leaves, inerts and every element do both.
+
+    Behind a separator the key reactant may all be recycled; the reactor is then judged by itself.
+    """
     sides = {"in": _carried(draft, "in"), "out": _carried(draft, "out")}
-    if not _all_read(draft.many["stream"]) or not all(sides.values()):
+    if not noderules.all_read(draft) or not all(sides.values()):
         return  # told by another rule
     entry = draft.chemistry
-    wants = [("key_reactant", "in"), ("key_reactant", "out"), ("wanted", "out"), ("unwanted", "out")]
-    for key, side in [*wants, ("inert", "in"), ("inert", "out")]:
+    wants = [
+        ("key_reactant", "in"),
+        ("wanted", "out"),
+        ("unwanted", "out"),
+        ("inert", "in"),
+        ("inert", "out"),
+    ]
+    wants += [] if draft.many["node"] else [("key_reactant", "out")]
+    for key, side in wants:
         value = entry.get(key) or ()
         for name in (value,) if isinstance(value, str) else value:
             if name in draft.atoms and name not in sides[side]:
@@ -174,7 +168,7 @@ def _what_enters_can_leave(draft: Draft) -> Iterator[Problem]:
                 yield Problem(
                     entry.at(key), what, f"add it to the species of a stream that goes {side}, or mend {key}"
                 )
-    known = _reacting(draft)
+    known = draft.reacting()
     elements = {side: {e for n in names if n in known for e, _ in known[n]} for side, names in sides.items()}
     for side, other in (("in", "out"), ("out", "in")) if None not in draft.atoms.values() else ():
         for symbol in sorted(elements[side] - elements[other]):
@@ -294,6 +288,7 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _roles_are_declared,
     _key_element_is_carried,
     _names_are_unique,
+    *noderules.RULES,
     _streams_hold_species,
     _what_enters_can_leave,
     _instruments_hold,

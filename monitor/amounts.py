@@ -12,7 +12,7 @@ from datetime import timedelta
 import numpy as np
 from numpy.typing import NDArray
 
-from ingest.balance import Problem, sign_of, state_of
+from ingest.balance import Problem, sign_around, sign_of, state_of
 from ingest.cells import Cells
 from ingest.instruments import Measured, balance_instruments, measured
 from ingest.reconcile import States, reconcile
@@ -141,4 +141,21 @@ def _reconciled_rows(unit: Unit, state: tuple[tuple[str, str], ...]) -> dict[str
     made = [one.name for one in unit.species if not one.inert and one.name != unit.key_reactant]
     rows |= {f"made {name}": flows[name] * out for name in made}
     unwanted = sum((flows[name] for name in unit.unwanted), np.zeros(len(state)))
-    return rows | {"made all unwanted": unwanted * out}
+    return rows | {"made all unwanted": unwanted * out} | _loop_rows(unit, state, key)
+
+
+def _loop_rows(unit: Unit, state: tuple[tuple[str, str], ...], key: Floats) -> dict[str, Floats]:
+    """Give what the figures of a unit with nodes need besides.
+
+    What is consumed and made around the reactor is what is consumed and made around the whole unit, since
+    the other nodes keep every species; only what is fed differs.
+    """
+    rows: dict[str, Floats] = {}
+    if unit.nodes:
+        reactor = [node.name for node in unit.nodes if node.reacts]
+        rows[f"fed {unit.key_reactant} per pass"] = key * (sign_around(unit, state, reactor) > 0)
+    for name, role in (("fresh feed", "fresh feed"), ("recycled", "recycle")):
+        streams = [stream.name for stream in unit.streams if stream.role == role]
+        if streams:
+            rows[name] = np.array([float(stream in streams) for stream, _ in state])
+    return rows

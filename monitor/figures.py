@@ -8,7 +8,7 @@ running hour. Nothing here judges: too little data, a gap or a doubtful denomina
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -71,8 +71,10 @@ def figures_of(unit: Unit, amount_names: Sequence[str]) -> tuple[Figure, ...]:
     names = tuple(amount_names)
     have = set(names)
     species = {one.name: one for one in unit.species}
+    of_the_feed = _of_the_feed(unit, species, names)
     table = [
-        *_of_the_feed(unit, species, names),
+        *(_around(one, "the whole unit") if unit.nodes else one for one in of_the_feed),
+        *_per_pass(unit, of_the_feed, names),
         *_selectivities(unit, names),
         *_shares(unit, species, names),
         *_closures(unit, names),
@@ -237,6 +239,49 @@ def _of_the_feed(unit: Unit, species: Mapping[str, Species], names: tuple[str, .
             names,
         ),
     ]
+
+
+def _per_pass(unit: Unit, of_the_feed: Sequence[Figure], names: tuple[str, ...]) -> list[Figure]:
+    """Give conversion, selectivity and yield around the reactor alone, and the recycle ratio.
+
+    Selectivity is the same around both, since nothing but the reactor reacts; it stands beside its two
+    companions so that nobody has to know.
+    """
+    fed, fed_per_pass = f"fed {unit.key_reactant}", f"fed {unit.key_reactant} per pass"
+    if not unit.nodes:
+        return []
+    passes = [
+        replace(
+            _around(whole, "the reactor alone"),
+            name=f"{whole.name} per pass",
+            label=f"{whole.label}, per pass",
+            denominator={fed_per_pass if name == fed else name: 1.0 for name in whole.denominator or ()},
+        )
+        for whole in of_the_feed
+    ]
+    fresh, recycle = (_said(unit, role) for role in ("fresh feed", "recycle"))
+    ratio = Figure(
+        "recycle ratio",
+        f"Recycle ratio, {recycle} over {fresh}",
+        "mol/mol",
+        {"recycled": 1.0},
+        {"fresh feed": 1.0},
+        1.0,
+        f"Moles of recycle ({recycle}) per mole of fresh feed ({fresh}), all species together.",
+        None,
+        names,
+    )
+    return [*passes, ratio]
+
+
+def _around(figure: Figure, what: str) -> Figure:
+    """Say in its definition what a figure is drawn around."""
+    return replace(figure, definition=f"Around {what}: {figure.definition[0].lower()}{figure.definition[1:]}")
+
+
+def _said(unit: Unit, role: str) -> str:
+    """Name the streams of one role in a sentence."""
+    return " and ".join(stream.name for stream in unit.streams if stream.role == role)
 
 
 def _selectivities(unit: Unit, names: tuple[str, ...]) -> list[Figure]:

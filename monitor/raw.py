@@ -28,7 +28,7 @@ class Rates:
 
 
 def closed_elements(unit: Unit) -> tuple[str, ...]:
-    """Give the elements whose raw closure can be told: every reacting carrier in every stream is read.
+    """Give the elements whose raw closure can be told: every reacting carrier in or out is read.
 
     A carrier is read when an instrument is on it, or when it is the one species of its stream without an
     instrument and the stream's samples still hold it (then it is the remainder).
@@ -40,7 +40,8 @@ def closed_elements(unit: Unit) -> tuple[str, ...]:
     """
     atoms = {one.name: dict(one.atoms) for one in unit.species if not one.inert}
     elements = sorted({element for held in atoms.values() for element in held})
-    flows = [(stream.name, name) for stream in unit.streams for name in stream.species]
+    crossing = [stream for stream in unit.streams if stream.direction != "inner"]
+    flows = [(stream.name, name) for stream in crossing for name in stream.species]
     return tuple(
         element
         for element in elements

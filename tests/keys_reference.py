@@ -16,6 +16,7 @@ from ingest.keys import Key
 HEADINGS = {
     "unit": "[unit]",
     "chemistry": "[chemistry]",
+    "node": "[[node]]",
     "stream": "[[stream]]",
     "instrument": "[[instrument]]",
     "uncertainty": "uncertainty",
@@ -38,6 +39,11 @@ fractions allowed: `"C4H8"`, `"(C2H5)2O"`, `"CH1.8O0.5N0.2"`; molar masses use t
 weights.
 """
 ABOUT = {
+    "node": "A part of the unit that balances by itself: a mixer, a reactor, a separator. A file without nodes is one"
+    " reactor. With nodes, conversion and yield are those of the whole unit, recycle inside; `per pass` stands beside"
+    " those around the reactor alone.",
+    "stream": "A flow into the unit, out of it or between two nodes. Without nodes it states its `direction`; with nodes"
+    " `from` and `to` take the place of that, and the outside is not named: a feed has only `to`, a product only `from`.",
     "instrument": "Anything that gives a reading about a stream. Which keys it needs depends on its kind, see below.",
     "uncertainty": "What `random` and `systematic` hold. The standard uncertainty of a reading is the sum of both parts;"
     " `{}` states zero, and one of the two has to be more.",

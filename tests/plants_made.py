@@ -46,17 +46,21 @@ def unit_text(
     streams: Mapping[str, tuple[str, Sequence[str]]],
     seen: Sequence[Seen],
     chemistry: str,
+    nodes: str = "",
 ) -> str:
-    """A unit file with one held instrument per reading, 0.5 % each; tags T0, T1 ..."""
+    """A unit file with one held instrument per reading, 0.5 % each; tags T0, T1 ...
+
+    A stream says 'in' or 'out', or where the text of `nodes` has some, 'from > to' and any role: '> mixer'.
+    """
     parts = [
         '[unit]\nname = "made"\ntime_zone = "UTC"\ncell = "10min"\nreactor = "well-mixed"\n',
         f"[chemistry]\n{chemistry}\n[chemistry.species]",
         *(f'"{name}" = "{formula}"' for name, formula in species.items()),
+        nodes,
     ]
-    for name, (direction, held) in streams.items():
-        parts.append(
-            f'[[stream]]\nname = "{name}"\ndirection = "{direction}"\nspecies = {json.dumps(list(held))}'
-        )
+    for name, (way, held) in streams.items():
+        lines = _joins(way) if ">" in way else f'direction = "{way}"'
+        parts.append(f'[[stream]]\nname = "{name}"\n{lines}\nspecies = {json.dumps(list(held))}')
     for number, one in enumerate(seen):
         counted = f'species = ["{one.species}"]\nbasis = "wet"\n' if one.species else ""
         counted = counted.replace('basis = "wet"\n', "") if one.kind == "species flow" else counted
@@ -67,6 +71,13 @@ def unit_text(
             'cycle = "10min"\nmax_age = "30min"\nsampling = "held"'
         )
     return "\n".join(parts) + "\n"
+
+
+def _joins(way: str) -> str:
+    """The keys of 'from > to, role'."""
+    ends, _, role = way.partition(",")
+    values = zip(("from", "to", "role"), (*ends.split(">"), role), strict=True)
+    return "\n".join(f'{key} = "{value.strip()}"' for key, value in values if value.strip())
 
 
 def export_text(values: Sequence[float]) -> str:

@@ -18,6 +18,7 @@ ORDER = (
     "ingest.keys",
     "ingest.draft",
     "ingest.instrumentrules",
+    "ingest.noderules",
     "ingest.unitrules",
     "ingest.unitfile",
     "ingest.columns",
