@@ -53,6 +53,7 @@ class Batches:
     first_us: int | None = None  # the first and last time down the file that have one meaning only
     last_us: int | None = None
     doubled: dict[str, list[Series]] = field(default_factory=dict)
+    shared: list[Series] = field(default_factory=list)  # rows of a wide export in hours that come twice
 
     def __iter__(self) -> Iterator[Readings]:
         """Give the readings batch by batch in the order of the file; hours that come twice come last."""
@@ -95,6 +96,10 @@ class Batches:
 
     def _wide(self, block: Block) -> Readings:
         stamps = self._stamps(block)
+        if stamps.doubled.any():
+            none = np.full(len(block.rows), np.nan)
+            rows = self._series(stamps.time, none, _unstated(none), block.rows)
+            self.shared.append(rows.take(stamps.doubled))
         header, layout = self.dialect.header, self.dialect.layout
         asked = value_columns(header, layout, self.wanted)
         for i in set(range(len(header))) - {layout.time, *asked}:
@@ -216,11 +221,17 @@ class Batches:
         return lambda i, reason: block.columns[about.get(reason, value)][i].as_py()
 
     def _resolved(self, tag: str, series: Series) -> Series:
-        """One tag's readings in hours that come twice, once the whole file is known."""
-        told, time = np.zeros(len(series), np.bool_), series.time
+        """One tag's readings in hours that come twice, once the whole file is known.
+
+        All rows of a wide export tell the order, whichever of their cells are blank.
+        """
+        rows = concatenated(self.shared) if self.shared else series
+        told, time = np.zeros(len(rows), np.bool_), rows.time
         zone, first, last = self.dialect.clock.zone, self.first_us, self.last_us
         if zone is not None and first is not None and last is not None and first != last:
-            time, told = resolved(series.time, zone, ascending=first < last)
+            time, told = resolved(rows.time, zone, ascending=first < last)
+        at = np.searchsorted(rows.row, series.row)
+        time, told = time[at], told[at]
         reason = np.where(told, ACCEPTED, TWICE).astype(np.int8)
         self.tally.reject(
             reason, series.row, lambda _: tag, lambda i, _: series.time[i].astype("datetime64[us]").item()
