@@ -26,8 +26,6 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 # Exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C.
 FINE, YOURS, STOPPED = 0, 2, 130
 DEMO_DAYS = 60
-# Below three weeks the export with local dates holds no day after the 12th, and could be read two ways.
-LEAST_DEMO_DAYS = 21
 
 _file = click.Path(dir_okay=False, path_type=Path)
 _folder = click.Path(file_okay=False, path_type=Path)
@@ -101,7 +99,7 @@ def outlet() -> None:
 )
 @click.option(
     "--days",
-    type=click.IntRange(LEAST_DEMO_DAYS, DEMO_DAYS),
+    type=click.IntRange(1, DEMO_DAYS),
     default=DEMO_DAYS,
     show_default=True,
     help="Days of exports.",

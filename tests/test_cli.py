@@ -53,6 +53,18 @@ def test_the_demo_again_finds_everything_taken_already(plant: tuple[Path, dict[s
     assert "demo: nothing new" in done.stdout
 
 
+# Of one day and of ten, no date of the long export lies after the 12th: the unit file tells their order.
+@pytest.mark.parametrize(("days", "files"), [(1, 1), (10, 3), (25, 3)])
+def test_a_demo_of_any_length_is_taken_in_to_the_last_reading(days: int, files: int, tmp_path: Path):
+    done = outlet("demo", "--no-page", "--days", str(days), "--json", folder=tmp_path)
+    assert done.returncode == 0, done.stderr
+    said = json.loads(done.stdout)
+    assert [one["status"] for one in said["exports"]] == ["taken"] * files
+    assert [one["account"]["rejections"] for one in said["exports"]] == [[]] * files
+    (unit,) = said["units"]
+    assert unit["cells"] == days * 144
+
+
 def test_no_bar_is_drawn_where_nobody_watches(plant: tuple[Path, dict[str, object]]):
     folder, _ = plant
     done = outlet("demo", "--no-page", "--days", "21", folder=folder)
@@ -107,7 +119,7 @@ def test_a_bad_unit_file_tells_all_its_faults_and_exits_with_2(tmp_path: Path):
         (("verify", "--store", "nowhere"), "nowhere: there is no store here"),
         (("verify", "--stroe", "nowhere"), "outlet verify: No such option"),
         (("vrify",), "outlet: No such command 'vrify'"),
-        (("demo", "--days", "3"), "outlet demo: Invalid value for '--days'"),
+        (("demo", "--days", "0"), "outlet demo: Invalid value for '--days'"),
     ],
     ids=lambda value: " ".join(map(str, value)) if isinstance(value, tuple) else None,
 )
