@@ -14,6 +14,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from ingest import lines
+from ingest.batches import Batches
 from ingest.dialect import Dialect, decide_encoding, decide_separator
 from ingest.errors import ExportError
 from ingest.timestamps import Clock, localised, resolved
@@ -109,6 +110,98 @@ def test_the_decimal_mark_is_told_by_the_first_number_with_one_meaning():
 def test_a_comma_that_may_part_thousands_is_refused_with_both_readings(text: str):
     with pytest.raises(ExportError, match=r"with a decimal comma but .* with marks between thousands"):
         decimal([text], ["7"])
+
+
+def stated(mark: str, *blocks: list[str]) -> Numbers:
+    return decide_numbers("x.csv", [1], shown(*blocks), ExportRules(None, (), None, decimal=mark))
+
+
+def test_a_stated_decimal_mark_settles_what_no_number_tells():
+    comma = stated(",", ["1,234"], ["7"])
+    assert comma.read(pa.array(["1,234", "7"])).value.tolist() == [1.234, 7.0]
+    assert stated(",", ["1", "2"]).decimal == ","
+    assert stated(".", ["1", "2"]).decimal == "."
+    assert stated(",", ["7"], ["2,5"]).decimal == ","
+    assert stated(".", ["1.234"]).decimal == "."
+
+
+@pytest.mark.parametrize(
+    ("mark", "blocks", "says"),
+    [
+        (",", (["7", "2.5"],), r"x\.csv:3: '2\.5' has a point, which no number has with decimal = ','"),
+        (",", (["7"], ["1.234"]), r"x\.csv:3: '1\.234' has a point"),
+        (".", (["7", "2,5"],), r"x\.csv:3: '2,5' has a comma, which no number has with decimal = '\.'"),
+        (".", (["1,234"], ["7"]), r"x\.csv:2: '1,234' has a comma"),
+    ],
+)
+def test_an_export_that_contradicts_the_stated_decimal_mark_is_refused_with_a_row(
+    mark: str, blocks: tuple[list[str], ...], says: str
+):
+    with pytest.raises(ExportError, match=says) as caught:
+        stated(mark, *blocks)
+    assert caught.match("Mend or remove decimal under \\[exports\\] in the unit file")
+
+
+def test_numbers_that_are_no_text_have_no_mark_to_contradict(tmp_path: Path):
+    wide_parquet(tmp_path / "x.parquet", made_truth())
+    rules = ExportRules(None, (), None, decimal=",")
+    (readings,) = opened(tmp_path / "x.parquet", rules=rules)
+    np.testing.assert_array_equal(readings["FI-1.PV"].value, made_truth().values[:, 0])
+
+
+def dated(folder: Path, *dates: str, order: str | None) -> Batches:
+    text = "\n".join(["time,A", *(f"{date} 10:00,1" for date in dates), ""])
+    rules = ExportRules("UTC", (), None, date_order=order)
+    return opened(saved(folder, text), rules=rules, wanted=("A",))
+
+
+@pytest.mark.parametrize(("order", "day"), [("day first", "2026-04-03"), ("month first", "2026-03-04")])
+def test_a_stated_order_settles_dates_that_could_be_either(tmp_path: Path, order: str, day: str):
+    (readings,) = dated(tmp_path, "03/04/2026", order=order)
+    assert readings["A"].time[0] == micros(datetime.fromisoformat(f"{day}T10:00Z"))
+
+
+@pytest.mark.parametrize(("date", "order"), [("13/04/2026", "day first"), ("04/13/2026", "month first")])
+def test_dates_that_tell_their_order_need_none_stated_and_agree_with_the_right_one(
+    tmp_path: Path, date: str, order: str
+):
+    for told in (None, order):
+        (readings,) = dated(tmp_path, "04/04/2026", date, order=told)
+        assert readings["A"].time[1] == micros(datetime(2026, 4, 13, 10, tzinfo=UTC))
+
+
+@pytest.mark.parametrize(
+    ("dates", "order", "says"),
+    [
+        (("03/04/2026", "04/13/2026"), "day first", r":3: '04/13/2026 10:00' can only be month first"),
+        (("03/04/2026", "13/04/2026"), "month first", r":3: '13/04/2026 10:00' can only be day first"),
+        (("13/04/2026", "04/13/2026"), "day first", r":3: '04/13/2026 10:00' can only be month first"),
+    ],
+)
+def test_dates_that_contradict_the_stated_order_are_refused_with_a_row(
+    tmp_path: Path, dates: tuple[str, ...], order: str, says: str
+):
+    with pytest.raises(ExportError, match=f"{says}, but date_order = '{order}' is stated") as caught:
+        dated(tmp_path, *dates, order=order)
+    assert caught.match("Mend or remove date_order under \\[exports\\] in the unit file")
+
+
+def test_a_date_far_down_the_file_still_contradicts_the_stated_order(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+):
+    monkeypatch.setattr(lines, "BLOCK", 20)
+    with pytest.raises(ExportError, match=r":9: '04/13/2026 10:00' can only be month first"):
+        dated(tmp_path, *["03/04/2026"] * 7, "04/13/2026", order="day first")
+
+
+def test_a_date_that_is_none_tells_no_order(tmp_path: Path):
+    batches = dated(tmp_path, "03/04/2026", "31/31/2026", order="day first")
+    assert batches.dialect.clock.form == "day first"
+
+
+def test_a_stated_order_leaves_dates_with_the_year_first_alone(tmp_path: Path):
+    (readings,) = dated(tmp_path, "2026-03-04", order="month first")
+    assert readings["A"].time[0] == micros(datetime(2026, 3, 4, 10, tzinfo=UTC))
 
 
 def quality(*blocks: list[str], rules: ExportRules = NO_RULES) -> str | None:
