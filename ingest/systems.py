@@ -25,20 +25,19 @@ def factor(matrix: Floats) -> tuple[Floats, NDArray[np.bool_]]:
     Returns
     -------
     factor : array (K, K, t)
-        Zero above the diagonal. An unsound system gets a pivot of one and must not be used.
+        Zero above the diagonal. An unsound system gets the unit matrix, which must not be used.
     sound : array (t,) of bool
     """
-    lower = np.tril(matrix.transpose(2, 0, 1)).transpose(1, 2, 0).copy()
-    size = len(lower)
-    least = SMALLEST_PIVOT * lower[np.arange(size), np.arange(size)]
-    sound = np.ones(lower.shape[2], dtype=bool)
-    for j in range(size):
-        good = lower[j, j] > np.maximum(least[j], 0)
+    lower = np.zeros_like(matrix)
+    sound = np.ones(matrix.shape[2], dtype=bool)
+    for j in range(len(matrix)):
+        column = matrix[j:, j] - np.einsum("ikt,kt->it", lower[j:, :j], lower[j, :j])
+        good = column[0] > np.maximum(SMALLEST_PIVOT * matrix[j, j], 0)
         sound &= good
-        lower[j, j] = np.sqrt(np.where(good, lower[j, j], 1.0))
-        lower[j + 1 :, j] /= lower[j, j]
-        for i in range(j + 1, size):
-            lower[i, j + 1 : i + 1] -= lower[i, j] * lower[j + 1 : i + 1, j]
+        lower[j, j] = np.sqrt(np.where(good, column[0], 1.0))
+        np.divide(column[1:], lower[j, j], out=lower[j + 1 :, j])
+    if not sound.all():
+        lower[..., ~sound] = np.eye(len(matrix))[..., None]
     return lower, sound
 
 
@@ -54,11 +53,11 @@ def solve(lower: Floats, right: Floats) -> Floats:
     """
     x = right.copy()
     for j in range(len(x)):
+        x[j] -= np.einsum("kt,kt->t", lower[j, :j], x[:j])
         x[j] /= lower[j, j]
-        x[j + 1 :] -= lower[j + 1 :, j] * x[j]
     for j in reversed(range(len(x))):
+        x[j] -= np.einsum("kt,kt->t", lower[j + 1 :, j], x[j + 1 :])
         x[j] /= lower[j, j]
-        x[:j] -= lower[j, :j] * x[j]
     return x
 
 
@@ -70,14 +69,13 @@ def invert(lower: Floats) -> Floats:
     lower : array (K, K, t)
         Cholesky factors.
     """
-    size, _, count = lower.shape
-    root = np.zeros_like(lower)  # the inverse of L, column by column
-    for j in range(size):
-        root[j, j] = 1.0 / lower[j, j]
-        for i in range(j + 1, size):
-            root[i, j] = -np.einsum("kt,kt->t", lower[i, j:i], root[j:i, j]) / lower[i, i]
-    inverse = np.empty((size, size, count))
-    for i in range(size):
-        for j in range(i + 1):
-            inverse[i, j] = inverse[j, i] = np.einsum("kt,kt->t", root[i:, i], root[i:, j])
+    root = np.zeros_like(lower)  # the inverse of L, row by row
+    for i in range(len(lower)):
+        root[i, i] = 1.0 / lower[i, i]
+        row = np.einsum("kt,kjt->jt", lower[i, :i], root[:i, :i])
+        np.multiply(row, -root[i, i], out=root[i, :i])
+    inverse = np.empty_like(lower)
+    for i in range(len(lower)):
+        np.einsum("kt,kjt->jt", root[i:, i], root[i:, : i + 1], out=inverse[i, : i + 1])
+        inverse[:i, i] = inverse[i, :i]
     return inverse

@@ -48,6 +48,10 @@ class Point(NamedTuple):
     reading: Floats  # (m, t), 0 where missing
     loading: Floats  # (m, s, t), 0 where missing
 
+    def take(self, which: Flags) -> Point:
+        """Give some of the cells only."""
+        return Point(*(part[..., which] for part in self))
+
 
 def geometry_of(problem: Problem) -> Geometry:
     """Give the constants of a problem.
@@ -77,15 +81,31 @@ def point_at(geometry: Geometry, flow: Floats, readings: Measured) -> Point:
         Base readings of the same t cells.
     """
     present = np.isfinite(readings.reading)
-    least = SMALLEST_DENOMINATOR * (np.abs(flow).sum(axis=0) + 1e-300)
-    below = np.where(geometry.ratio, np.fmax(geometry.problem.denominator @ flow, least), 1.0)
-    return Point(
-        prediction=(geometry.problem.numerator @ flow) / below,
-        below=below,
+    still = Point(
+        prediction=np.zeros_like(readings.reading),
+        below=np.ones_like(readings.reading),
         weight=np.where(present, 1.0 / np.where(present, readings.variance, 1.0), 0.0),
         reading=np.where(present, readings.reading, 0.0),
         loading=np.where(present[:, None], readings.loading, 0.0),
     )
+    return moved(geometry, still, flow)
+
+
+def moved(geometry: Geometry, point: Point, flow: Floats) -> Point:
+    """Predict the readings of the same cells at other flows.
+
+    Parameters
+    ----------
+    geometry : Geometry
+        Constants of the balance.
+    point : Point
+        The cells.
+    flow : array (N, t)
+        Molar flows [kmol/h].
+    """
+    least = SMALLEST_DENOMINATOR * (np.abs(flow).sum(axis=0) + 1e-300)
+    below = np.where(geometry.ratio, np.fmax(geometry.problem.denominator @ flow, least), 1.0)
+    return point._replace(prediction=(geometry.problem.numerator @ flow) / below, below=below)
 
 
 def along(geometry: Geometry, point: Point, lean: Floats) -> Floats:
@@ -163,10 +183,16 @@ def step(geometry: Geometry, point: Point, shared: Floats, rank: int | None) -> 
     miss = point.reading - point.prediction - np.einsum("mst,st->mt", point.loading, shared)
     matrix, right = normal(geometry, point), slope(geometry, point, miss, shared)
     if rank is None:
-        return systems.solve(systems.factor(matrix)[0], right)
+        return _solved(matrix, right)
     space = _space(geometry, point, rank)
-    inner = np.linalg.solve(_within(space, matrix), space.transpose(0, 2, 1) @ right.T[..., None])
-    return np.ascontiguousarray((space @ inner)[..., 0].T)
+    inner = np.einsum("tkr,kt->rt", space, right)
+    return np.asarray(np.einsum("tkr,rt->kt", space, _solved(_within(space, matrix), inner)))
+
+
+def _solved(matrix: Floats, right: Floats) -> Floats:
+    """Solve the systems; one that tells nothing gives no step, and its covariance will be found unsound."""
+    lower, sound = systems.factor(matrix)
+    return np.where(sound, systems.solve(lower, right), 0.0)
 
 
 def covariance(geometry: Geometry, point: Point, rank: int | None) -> tuple[Floats, Flags]:
@@ -186,15 +212,16 @@ def covariance(geometry: Geometry, point: Point, rank: int | None) -> tuple[Floa
         lower, sound = systems.factor(matrix)
         return systems.invert(lower), sound
     space = _space(geometry, point, rank)
-    inverse = space @ np.linalg.inv(_within(space, matrix)) @ space.transpose(0, 2, 1)
-    return np.ascontiguousarray(inverse.transpose(1, 2, 0)), np.all(np.isfinite(inverse), axis=(1, 2))
+    lower, sound = systems.factor(_within(space, matrix))
+    inverse = space @ systems.invert(lower).transpose(2, 0, 1) @ space.transpose(0, 2, 1)
+    return np.ascontiguousarray(inverse.transpose(1, 2, 0)), sound
 
 
 def _within(space: Floats, matrix: Floats) -> Floats:
-    """Give the matrices on the seen directions, array (t, r, r)."""
+    """Give the matrices on the seen directions, array (r, r, t)."""
     lower = matrix.transpose(2, 0, 1)
     whole = lower + np.tril(lower, -1).transpose(0, 2, 1)
-    return np.asarray(space.transpose(0, 2, 1) @ whole @ space)
+    return np.ascontiguousarray((space.transpose(0, 2, 1) @ whole @ space).transpose(1, 2, 0))
 
 
 def _space(geometry: Geometry, point: Point, rank: int) -> Floats:
@@ -223,9 +250,23 @@ def prediction_variance(geometry: Geometry, point: Point, inverse: Floats) -> Fl
         Covariance of (q, shared errors).
     """
     a, b = geometry.packed
-    doubled = inverse[a, b] * np.where(a == b, 1.0, 2.0)[:, None]
-    upper, mixed, lower = np.split(geometry.products @ doubled, 3)
+    twice = np.where(a == b, 1.0, 2.0)
+    upper, mixed, lower = np.split((geometry.products * twice) @ inverse[a, b], 3)
     return np.asarray((upper - point.prediction * mixed + point.prediction**2 * lower) / point.below**2)
+
+
+def gradients(geometry: Geometry, point: Point) -> Floats:
+    """Give the change of each reading per unit of (q, shared errors), array (t, m, K).
+
+    Parameters
+    ----------
+    geometry : Geometry
+        Constants of the balance.
+    point : Point
+        Where the gradients are taken.
+    """
+    seen = geometry.upper - point.prediction.T[..., None] * geometry.lower
+    return np.concatenate([seen / point.below.T[..., None], point.loading.transpose(2, 0, 1)], axis=2)
 
 
 def gains(geometry: Geometry, point: Point, inverse: Floats, rows: Floats) -> Floats:
@@ -244,6 +285,10 @@ def gains(geometry: Geometry, point: Point, inverse: Floats, rows: Floats) -> Fl
     """
     k = geometry.unknowns
     spread = np.tensordot(rows @ geometry.problem.basis, inverse[:k], axes=1)
-    seen = geometry.upper @ spread[:, :k] - point.prediction * (geometry.lower @ spread[:, :k])
-    common = np.einsum("mst,pst->pmt", point.loading, spread[:, k:])
-    return np.asarray(point.weight * (seen / point.below + common))
+    # In place: the arrays (p, m, t) are by far the largest of a block.
+    gain = geometry.upper @ spread[:, :k]
+    gain -= point.prediction * (geometry.lower @ spread[:, :k])
+    gain *= point.weight / point.below
+    for s in range(point.loading.shape[1]):
+        gain += point.weight * point.loading[:, s] * spread[:, k + s, None]
+    return np.asarray(gain)

@@ -162,6 +162,17 @@ def test_what_the_readings_present_cannot_tell_is_missing_and_the_rest_is_as_wit
     assert (np.isfinite(found.value[:, 0]) == seen).all()
 
 
+def test_cells_of_which_half_the_readings_are_gone_stop_nobody_and_close_where_they_are_solved():
+    # the law that must hold is the balance; 400 random sets of readings, many of which tell next to nothing
+    readings = without(measured(made_flows(PROBLEM.state, 400, 25), seed=26), 27, share=0.5)
+    found = solve(PROBLEM, readings)
+    full = np.isfinite(found.flow).all(axis=0)
+    assert full.any()
+    assert (found.status[full] == SOLVED).all()
+    total = found.flow[:, full].sum(axis=0)
+    assert (np.abs(PROBLEM.conservation @ found.flow[:, full]) <= 1e-9 * total).all()
+
+
 def test_a_missing_reading_is_no_reading_and_not_a_zero():
     flow = made_flows(PROBLEM.state, 20, 12)
     readings = measured(flow, seed=13)
