@@ -16,7 +16,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-KEPT = 3  # rows kept as evidence for each reason
+KEPT = 3  # rows kept as evidence for each reason, tags named where more were not asked for
 TEXT = 120  # characters kept of each
 
 # Codes of what can be wrong with one reading, in the order of the table below; 0 is nothing.
@@ -161,7 +161,8 @@ class Account:
         tuple of str
             Counts first, then the first rows of each fault with what to do.
         """
-        lines = [f"{self.rows} rows, {self.readings} readings: {', '.join(self._counts())}."]
+        size = f"{_counted(self.rows, 'row')}, {_counted(self.readings, 'reading')}"
+        lines = [f"{size}: {', '.join(self._counts())}."]
         for reason, count in self.rejections:
             what, remedy = REASONS[reason]
             lines.append(f"{count} rejected: the row or cell {what}. {remedy}")
@@ -173,14 +174,21 @@ class Account:
         taken = ((self.bad, "of bad quality"), (self.unknown, "without a stated quality"))
         of_these = ", ".join(f"{count} {words}" for count, words in taken if count)
         yield f"{self.accepted} accepted" + (f" (as read: {of_these})" if of_these else "")
-        others = (
-            (self.empty, f"cell{'s' if self.empty != 1 else ''} left blank"),
-            (self.superseded, "superseded by a later row or file"),
-            (self.duplicates, "known already"),
-            (self.unasked, "of tags that no unit file names"),
-        )
-        yield from (f"{count} {words}" for count, words in others if count)
+        if self.empty:
+            yield f"{_counted(self.empty, 'cell')} left blank"
+        if self.superseded:
+            yield f"{self.superseded} superseded by a later row or file"
+        if self.duplicates:
+            yield f"{self.duplicates} known already"
+        if self.unasked:
+            names = [name or "a column without name" for name, _ in self.unasked_tags]
+            more = f" and {len(names) - KEPT} more" if len(names) > KEPT else ""
+            yield f"{self.unasked} of tags that no unit file names ({', '.join(names[:KEPT])}{more})"
         yield f"{self.rejected} rejected"
+
+
+def _counted(count: int, noun: str) -> str:
+    return f"{count} {noun}" if count == 1 else f"{count} {noun}s"
 
 
 @dataclass(slots=True)

@@ -47,7 +47,9 @@ _EPOCH = {"epoch s": r"^\s*\d{9,10}([.,]\d+)?\s*$", "epoch ms": r"^\s*\d{12,13}(
 _DAY, _MONTH = r"(1[3-9]|2\d|3[01])", r"(0?[1-9]|1[0-2])"
 _ORDERS = {"day first": rf"^\s*{_DAY}[-/.]{_MONTH}[-/.]\d", "month first": rf"^\s*{_MONTH}[-/.]{_DAY}[-/.]\d"}
 _NOTHING = (np.zeros(0, np.int64), [pa.array([], pa.string())])  # what a file without blocks shows
-_STATED = r"(Z|[+-]\d{2}(:?\d{2})?)\s*$"
+_STATED = r"\d[T ]+\d.*(Z|[+-]\d{2}(:?\d{2})?)\s*$"
+_DATE_ALONE = r"^\s*\d{1,4}[-/.]\d{1,2}[-/.]\d{1,4}\s*$"
+_CLOCK_ALONE = r"^\s*\d{1,2}:\d{2}(:\d{2}([.,]\d+)?)?( ?[AaPp][Mm])?\s*$"
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,7 +106,8 @@ class Dialect:
     def _of_layout(self) -> tuple[str, ...]:
         time, layout = self.header[self.layout.time], self.layout
         if layout.tag is None or layout.value is None:
-            return (f"Wide: times in '{time}', one column for each of {self.width} tags.",)
+            tags = f"each of {self.width} tags" if self.width > 1 else "one tag"
+            return (f"Wide: times in '{time}', a column for {tags}.",)
         roles = (layout.time, layout.tag, layout.value, layout.quality)
         spare = [name for i, name in enumerate(self.header) if i not in roles]
         left = (f"Columns not read: {', '.join(spare)}.",) if spare else ()
@@ -285,6 +288,7 @@ def decide_layout(place: str, header: Sequence[str], wanted: Collection[str], lo
     _refuse_header(place, header)
     roles = _roles(header, wanted)
     time = _time_column(place, header, roles["time"], look)
+    _refuse_split_times(place, header, time, look)
     tag, value, quality = (roles[name] for name in ("tag", "value", "quality"))
     if len(tag) == len(value) == 1 and len(quality) <= 1:
         return Layout(time, tag[0], value[0], quality[0] if quality else None)
@@ -292,8 +296,8 @@ def decide_layout(place: str, header: Sequence[str], wanted: Collection[str], lo
     if found or len(header) < 2:
         raise ExportError(
             f"{place}: columns {', '.join(map(repr, found or header))} are neither a long nor a wide export",
-            remedy="Name the columns of a long export time, tag, value and (if there is one) quality,"
-            " those of a wide one time and the tags.",
+            remedy="Long: name the columns time, tag, value and, if there is one, quality."
+            " Wide: name them time and the tags, even if it is one tag only.",
         )
     return Layout(time)
 
@@ -329,6 +333,24 @@ def _time_column(place: str, header: Sequence[str], named: list[int], look: Look
             f"{place}: {names} may each be the time", remedy="Export one time column, named 'time'."
         )
     raise ExportError(f"{place}: no time column", remedy="Name the column of times 'time' or 'timestamp'.")
+
+
+def _refuse_split_times(place: str, header: Sequence[str], time: int, look: Look) -> None:
+    """Dates whose times of day stand in another column would all be read as midnight."""
+    if not _mostly(next(look([time]), _NOTHING)[1][0], _DATE_ALONE):
+        return
+    others = [i for i in range(len(header)) if i != time]
+    shown = next(look(others), (None, []))[1] if others else []
+    for i, column in zip(others, shown, strict=False):
+        if _mostly(column, _CLOCK_ALONE):
+            raise ExportError(
+                f"{place}: the time of day stands in {header[i]!r}, apart from its date in {header[time]!r}",
+                remedy="Export date and time of day in one column, as 2026-03-29T01:30Z.",
+            )
+
+
+def _mostly(column: Any, pattern: str) -> bool:
+    return is_text(column.type) and matches(column, pattern) > len(column) / 2
 
 
 def _holds_times(column: Any) -> bool:
@@ -384,7 +406,7 @@ def decide_clock(
         return Clock(form, offset=True, zone=None, fraction=0)
     if form != "year first":
         form = _date_order(export, at, look, date_order)
-    offset = 2 * matches(times, rf"\d{_STATED}") > count
+    offset = 2 * matches(times, _STATED) > count
     digits = 9 if matches(times, r"[.,]\d{7,9}\D*$") else 6
     return Clock(form, offset, None if offset else _zone(place, zone, name), digits)
 

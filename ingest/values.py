@@ -355,8 +355,8 @@ def decide_quality(place: str, column: int | None, look: Look, rules: ExportRule
         return "words"
     sample = ", ".join(repr(text) for text in sorted(seen)[:4])
     raise ExportError(
-        f"{place}: qualities such as {sample} may be words, OPC UA status codes (0 is good)"
-        " or OPC DA qualities (0 is bad)",
+        f"{place}: nothing tells whether qualities such as {sample} are words, OPC UA status codes"
+        " (0 is good) or OPC DA qualities (0 is bad)",
         remedy="Set quality under [exports] in the unit file to 'words', 'opc ua' or 'opc da'.",
     )
 

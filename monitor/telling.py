@@ -54,9 +54,16 @@ def described(found: Description, unit: Unit) -> Iterator[str]:
     yield found.export
     yield from (f"  {line}" for line in found.dialect)
     for row in found.sample:
-        readings = ", ".join(f"{tag} {value:g} ({quality})" for tag, value, quality in row.readings)
+        readings = ", ".join(_reading(*reading) for reading in row.readings)
         yield f"  row {row.row}: {wording.local_time(wording.utc(row.time_us), unit.time_zone)}: {readings}"
     yield from (f"  {line}" for line in found.account.describe())
+
+
+def _reading(tag: str, value: float, quality: str) -> str:
+    """Tell one reading; a bad one has no value, and a quality that is not stated goes without saying."""
+    if quality == "bad":
+        return f"{tag} bad"
+    return f"{tag} {value:g}" + ("" if quality == "unknown" else f" ({quality})")
 
 
 def passed(result: PassResult) -> Iterator[str]:

@@ -175,25 +175,31 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
         "x.csv",
         b"time,tag,A\n2026-01-01,B,1\n",
         r"x\.csv:1: columns 'tag' are neither a long nor a wide export",
-        "Name the columns",
+        "name the columns time, tag",
     ),
     "values without tags": (
         "x.csv",
         b"time,value\n2026-01-01,1\n",
         r"x\.csv:1: columns 'value' are neither a long nor a wide export",
-        "Name the columns",
+        "name the columns time, tag",
     ),
     "one quality for many tags": (
         "x.csv",
         b"time,A,quality\n2026-01-01,1,Good\n",
         r"columns 'quality' are neither a long nor a wide export",
-        "Name the columns",
+        "name the columns time, tag",
     ),
     "all rows of other width": (
         "x.csv",
         b"time,A,B\n2026-01-01,1,5,2,5\n",
         r"x\.csv:1: the separator cannot be told \(comma: header 3, next row 5",
         "semicolons",
+    ),
+    "the time of day in a column of its own": (
+        "x.csv",
+        b"date,clock,A\n2026-01-01,10:00,1\n2026-01-01,10:01,2\n",
+        r"x\.csv:1: the time of day stands in 'clock', apart from its date in 'date'",
+        "in one column",
     ),
     "no zone": (
         "x.csv",
@@ -258,7 +264,7 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
     "house codes": (
         "x.csv",
         b"time,tag,value,quality\n2026-01-01T00:00Z,A,1,1\n",
-        "qualities such as '1' may be",
+        "nothing tells whether qualities such as '1' are words",
         "Set quality",
     ),
     "two kinds of codes": (

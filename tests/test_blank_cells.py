@@ -116,6 +116,22 @@ def test_blank_cells_in_the_hour_that_comes_twice_hide_no_step_back(tmp_path: Pa
     assert account.empty == 6
 
 
+def test_the_account_is_one_sentence_that_leaves_out_what_is_not_there(tmp_path: Path):
+    text = "time,A,B,C,D,E,F\n2026-03-02T06:00Z,1,,3,4,5,6\n2026-03-02T06:01Z,Bad,,3,4,5,6\n"
+    _, account = read(saved(tmp_path, text), wanted=ASKED)
+    assert account.describe() == (
+        "2 rows, 12 readings: 2 accepted (as read: 1 of bad quality, 1 without a stated quality),"
+        " 2 cells left blank, 8 of tags that no unit file names (C, D, E and 1 more), 0 rejected.",
+    )
+    _, account = read(saved(tmp_path, "time,A\n2026-03-02T06:00Z,x\n"), wanted=ASKED)
+    counts, fault, evidence = account.describe()
+    assert counts == "1 row, 1 reading: 0 accepted, 1 rejected."
+    assert fault.startswith(
+        "1 rejected: the row or cell is not a number. If it stands for no value, add it to"
+    )
+    assert evidence == "  export.csv:2 [A]: 'x' is not a number"
+
+
 CELLS = st.sampled_from(["1.5", "-2", "", " ", '""', "Bad", "no data", "x"])
 
 

@@ -224,7 +224,7 @@ def test_the_quality_form_of_the_unit_file_stands_above_what_is_found():
 
 @pytest.mark.parametrize("block", [["0"], ["1", "2"], ["Good", "192"], ["192", "0x80050000"], ["fine"]])
 def test_qualities_of_two_meanings_or_none_are_refused(block: list[str]):
-    with pytest.raises(ExportError, match=r"may be words, OPC UA status codes \(0 is good\)") as caught:
+    with pytest.raises(ExportError, match=r"are words, OPC UA status codes \(0 is good\)") as caught:
         quality(block)
     assert caught.match("Set quality under \\[exports\\]")
 
@@ -270,7 +270,7 @@ def test_a_tag_that_somebody_asked_for_is_a_tag_whatever_its_name(tmp_path: Path
 SENTENCES = {
     "wide": (
         "Text in UTF-8, separated by semicolon; line 1 names the columns.",
-        "Wide: times in 'time', one column for each of 3 tags.",
+        "Wide: times in 'time', a column for each of 3 tags.",
         "Times are calendar times, year first, without offset: read as clock time of Europe/Berlin.",
         "Decimal mark: comma.",
         "Blank cells: nothing was stored then, no reading.",
@@ -289,7 +289,7 @@ SENTENCES = {
     ),
     "Parquet": (
         "Parquet.",
-        "Wide: times in 'time', one column for each of 3 tags.",
+        "Wide: times in 'time', a column for each of 3 tags.",
         "Times are time stamps, with their offset from UTC.",
         "Decimal mark: point.",
         "Blank cells: nothing was stored then, no reading.",

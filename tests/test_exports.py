@@ -403,6 +403,14 @@ def test_the_zone_of_the_unit_file_stands_above_the_one_handed_over(tmp_path: Pa
     assert readings["A"].time[0] == micros(datetime(2026, 1, 1, 3, tzinfo=UTC))  # Tokyo is 9 h ahead all year
 
 
+@pytest.mark.parametrize("form", ["%Y-%m-%d", "%d-%m-%Y", "%d.%m.%Y"])
+def test_dates_without_a_time_of_day_are_the_zones_midnights(tmp_path: Path, form: str):
+    # Europe/Berlin is an hour ahead of UTC in winter (IANA database)
+    truth = made_truth(20, timedelta(days=1), datetime(2026, 1, 4, 23, tzinfo=UTC))
+    path = saved(tmp_path, wide_text(truth, write=in_berlin(form)))
+    assert_true(read(path, zone="Europe/Berlin")[0], truth)
+
+
 def test_shifting_the_clock_shifts_every_reading(tmp_path: Path):
     truth = made_truth()
     later = Truth([t + timedelta(days=40) for t in truth.times], truth.values)
