@@ -132,7 +132,7 @@ def measure(
         Results by tag. Values are rounded to what the historian keeps.
     """
     draws, *noise = np.random.default_rng(seed).spawn(1 + len(unit.instruments))
-    names = [i.name for i in unit.instruments if i.tag] + [s.name for s in unit.shared]
+    names = [i.name for i in unit.instruments if i.tag and i.kind != "signal"] + [s.name for s in unit.shared]
     drawn = dict(zip(names, draws.standard_normal(len(names)).tolist(), strict=True))
     happened = truth.events if events is None else tuple(events)
     results = {}

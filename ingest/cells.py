@@ -15,17 +15,10 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from ingest.conditions import CONDITIONS, GOOD, MISSING, STALE, SUSPECTS, takes_part
 from ingest.errors import StoreError
 from ingest.readings import Readings, Series, empty
-from ingest.screen import (
-    CONDITIONS,
-    GOOD,
-    MISSING,
-    STALE,
-    STUCK_LOOKS_AHEAD,
-    STUCK_LOOKS_BACK,
-    screened,
-)
+from ingest.screen import looks_ahead, looks_back, screened
 from ingest.unit import Instrument, Operating, Unit
 
 OPERATING = ("running", "starting", "down", "turned down", "not known")
@@ -47,13 +40,13 @@ _US = timedelta(microseconds=1)
 class Cells:
     """One row per cell, one column per instrument of the unit, in its order.
 
-    `value` is NaN unless `condition` is good; `share` is the valid share of the cell either way.
+    `value` is NaN unless `condition` is good or suspect; `share` is the valid share of the cell either way.
     """
 
     start: Times  # (t,) us UTC, a regular grid
     value: Floats  # (t, m) mean in the instrument's own unit
     share: NDArray[np.float32]  # (t, m)
-    condition: Codes  # (t, m) index into screen.CONDITIONS
+    condition: Codes  # (t, m) index into conditions.CONDITIONS
     operating: Codes  # (t,) index into OPERATING
 
 
@@ -130,10 +123,10 @@ def look_back(unit: Unit) -> timedelta:
     Returns
     -------
     timedelta
-        Hold, then the time a silent signal counts as stale, then what stuck needs to be sure.
+        Hold, then the time a silent signal counts as stale, then what the checks need to be sure.
     """
     needs = [
-        (t.hold_us + t.stale_us) * _US + _stuck_cycles(i, STUCK_LOOKS_BACK)
+        (t.hold_us + t.stale_us) * _US + looks_back(unit, i)
         for i in unit.instruments
         if i.tag is not None
         for t in (_timing(i),)
@@ -152,10 +145,10 @@ def reach(unit: Unit) -> timedelta:
     -------
     timedelta
         The cell, then dead time or interval, then the way to the next reading of an interpolated signal,
-        then what stuck needs to be sure.
+        then what the checks need to be sure.
     """
     needs = [
-        (t.shift_us + t.linear * t.hold_us) * _US + _stuck_cycles(i, STUCK_LOOKS_AHEAD)
+        (t.shift_us + t.linear * t.hold_us) * _US + looks_ahead(i)
         for i in unit.instruments
         if i.tag is not None
         for t in (_timing(i),)
@@ -206,7 +199,8 @@ def make_cells(
     -------
     Cells
         A value is NaN where less than LEAST_SHARE of the cell was valid; the condition is then the one
-        that cost most of its time.
+        that cost most of its time. A cell of which LEAST_SHARE was suspect bears that condition and a
+        value.
     """
     start = cell_starts(unit, first_us, last_us)
     grid = _Grid(int(start[0]) if start.size else first_us, unit.cell // _US, start.size)
@@ -367,11 +361,6 @@ def _timing(instrument: Instrument) -> _Timing:
     return _Timing(shift // _US, hold // _US, instrument.max_age // _US, rule.linear)
 
 
-def _stuck_cycles(instrument: Instrument, cycles: int) -> timedelta:
-    """The time that cycles take on a channel that can be found stuck."""
-    return cycles * instrument.cycle if instrument.analyzer is not None else timedelta(0)
-
-
 def _near(unit: Unit, readings: Readings, grid: _Grid) -> Readings:
     """The readings that can have a part in the cells of the grid, for every tag of the unit."""
     first = grid.first_us - look_back(unit) // _US
@@ -435,6 +424,8 @@ def _average(
     series: Series, codes: Codes, pieces: _Pieces, grid: _Grid, linear: bool
 ) -> tuple[Floats, Floats, Codes]:
     """Mean, valid share and condition of every cell for one instrument."""
+    taken = takes_part(codes)
+    doubts, codes = np.where(taken, codes, GOOD), np.where(taken, GOOD, codes)
     codes, here, change = _spans(series.value, codes, pieces.linked, linear)
     signal = here[pieces.reading]
     if linear:
@@ -447,9 +438,20 @@ def _average(
     condition = np.zeros(grid.count, dtype=np.int8)
     poor = np.flatnonzero(valid < LEAST_SHARE * grid.size_us)
     condition[poor] = _dearest(poor, pieces, grid, lost)
+    condition = np.where(condition == GOOD, _doubted(doubts, pieces, grid), condition)
     value = np.full(grid.count, np.nan)
-    np.divide(total, valid, out=value, where=condition == GOOD)
+    np.divide(total, valid, out=value, where=takes_part(condition))
     return value, valid / grid.size_us, condition
+
+
+def _doubted(doubts: Codes, pieces: _Pieces, grid: _Grid) -> Codes:
+    """The suspect condition that most of a cell was in; good where there is none."""
+    found = np.full(grid.count, GOOD, dtype=np.int8)
+    for code in SUSPECTS if doubts.any() else ():
+        mine = np.flatnonzero(doubts[pieces.reading] == code)
+        time = _summed(pieces.cell[mine], pieces.length[mine], grid)
+        found[time >= LEAST_SHARE * grid.size_us] = code
+    return found
 
 
 def _spans(value: Floats, codes: Codes, linked: Flags, linear: bool) -> tuple[Codes, Floats, Floats]:

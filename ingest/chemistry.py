@@ -35,6 +35,9 @@ ATOMIC_WEIGHT_KG_KMOL = {
 ELEMENT_NAMES = {"C": "carbon", "H": "hydrogen", "O": "oxygen", "N": "nitrogen"}  # others go by their symbol
 
 # The parser reads past what it does not know, so a formula has to have this form before it is handed over.
+# Mole fractions: US Standard Atmosphere 1976, table 3 (from memory). Nitrogen over oxygen is 3.73.
+DRY_AIR = {"N2": 0.78084, "O2": 0.20948}
+
 _COUNT = r"(?:[0-9]+(?:\.[0-9]+)?)?"
 _FORMULA = re.compile(rf"(?:[A-Z][a-z]?{_COUNT}|\(|\){_COUNT})+")
 _SIGNS = "+-\u2212"  # the last one is the typographic minus

@@ -16,6 +16,8 @@ ONCE = ("unit", "chemistry", "operating", "catalyst", "exports")
 MANY = ("node", "stream", "instrument", "analyzer", "shared", "watch")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")
+# What is said of an analyzer as a whole, not of each of its channels.
+OF_ANALYZER = ("name", "channel", "status", "certificate", "sum_band", "air_ingress")
 _NEEDED = ("unit", "chemistry", "stream")
 
 
@@ -142,17 +144,29 @@ def _open_channels(analyzer: Entry, draft: Draft) -> list[Problem]:
         if channel.lacks("unit"):
             faults.append(missing(rows("analyzer")["unit"], channel.at("unit")))
         problems += faults
+    if analyzer.get("status"):
+        draft.many["instrument"].append(_status(analyzer))
     return problems
+
+
+def _status(analyzer: Entry) -> Entry:
+    """Make a signal of the status of an analyzer, so that its tag is read and screened like any other."""
+    stated = analyzer.get("status")
+    values = {"kind": "signal", "unit": "-", "sampling": "held", "tag": stated["tag"]}
+    values |= {"max_age": stated["max_age"], "cycle": stated["max_age"]}
+    if name := analyzer.get("name"):
+        values["name"] = f"{name} status"
+    return Entry(f"{analyzer.place}.status", values)
 
 
 def _channel(analyzer: Entry, own: Entry, species: str) -> Entry:
     """Join what an analyzer says of all its channels and what one channel says of itself."""
-    inherited = {key: value for key, value in analyzer.values.items() if key not in ("name", "channel")}
+    inherited = {key: value for key, value in analyzer.values.items() if key not in OF_ANALYZER}
     values = {"dead_time": timedelta(0), "species": (species,), **inherited, **own.values}
     if name := analyzer.get("name"):
         values |= {"name": f"{name} {species}", "analyzer": name}
     stated = own.values.keys() | own.told
-    places = {key: analyzer.at(key) for key in rows("analyzer") if key not in stated | {"name", "channel"}}
+    places = {key: analyzer.at(key) for key in rows("analyzer") if key not in stated | {*OF_ANALYZER}}
     return Entry(own.place, values, places, (analyzer.told - own.values.keys()) | own.told)
 
 

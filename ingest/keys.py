@@ -19,6 +19,7 @@ from ingest import quantities
 from ingest.errors import OutletError, Problem
 from ingest.unit import FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, ROLES, SAMPLINGS
 
+NESTED = ("uncertainty", "status")  # forms that are a table with a section of their own
 BASES = ("dry", "wet", "as analysed")
 ANALYZED = (*FRACTION_KINDS, "volume fraction", "species flow")
 QUALITIES = ("words", "opc ua", "opc da")
@@ -75,11 +76,12 @@ _INSTRUMENT = (
     Key("instrument", "dead_time", "duration", "time from the sample leaving the stream to its time stamp", '"4min"', default="0 s", low=0, high=7 * _DAY),
     Key("instrument", "max_age", "duration", "age at which a result is stale", '"20min"', "with tag", low=1, high=90 * _DAY),
     Key("instrument", "sampling", "choice", "what a stored value says about the time between two", '"held"', "with tag", choices=SAMPLINGS),
+    Key("instrument", "largest_step", "number", "largest change of the true value within one cycle; a larger step is a spike or a doubt", "5.0", low=1e-9),
 )  # fmt: skip
 
 
 _SHARED: tuple[str, ...] = ("unit", "basis", "left_out", "random", "systematic", "range")
-_SHARED += ("cycle", "dead_time", "max_age", "sampling")
+_SHARED += ("cycle", "dead_time", "max_age", "sampling", "largest_step")
 _EITHER = ("unit", "random", "systematic", "cycle", "max_age", "sampling")
 
 
@@ -122,9 +124,17 @@ TABLE: tuple[Key, ...] = (
     Key("analyzer", "kind", "choice", "what the readings are", '"mole fraction"', "always", choices=ANALYZED),
     *_again("analyzer", _SHARED),
     Key("analyzer", "channel", "channels", "tag of each species, or a table of what differs for it", '{ oxygen = "AI-220.O2" }', "always"),
+    Key("analyzer", "status", "status", "tag that tells when results are not of the stream", '{ tag = "AI-220.CAL", calibrating = [1], max_age = "26h" }'),
+    Key("analyzer", "certificate", "numbers", "what the channels read on the calibration gas, and how closely", "{ oxygen = 5.0, nitrogen = 83.0, tolerance_pct = 2 }"),
+    Key("analyzer", "sum_band", "pair", "what all channels add up to, before any normalising", "[98, 102]"),
+    Key("analyzer", "air_ingress", "bands", "least and most nitrogen and oxygen that the stream holds; more of both is air in the sample", "{ nitrogen = [0.3, 0.5], oxygen = [5.0, 6.5] }"),
     Key("analyzer.channel", "tag", "text", "historian tag of the channel", '"AI-220.O2"', "always"),
     Key("analyzer.channel", "species", "texts", "species counted together; left out, the one the channel is named for", '["oxygen"]'),
     *_again("analyzer.channel", _SHARED),
+    Key("status", "tag", "text", "historian tag of the status", '"AI-220.CAL"', "always"),
+    Key("status", "calibrating", "states", "values of the status that mean that results are not of the stream", "[1, 2]", "always"),
+    Key("status", "max_age", "duration", "how long a status stands without a new one; where it is stored on change, the longest rest", '"26h"', "always", low=1, high=90 * _DAY),
+    Key("status", "settle", "duration", "how long after a calibration results are still not of the stream", '"10min"', default="0 s", low=0, high=_DAY),
     Key("shared", "name", "text", "name of the common error", '"AI-220 span"', "always"),
     Key("shared", "instruments", "texts", "instruments it moves together", '["FI-201", "FI-203"]', "unless analyzer is stated"),
     Key("shared", "analyzer", "text", "analyzer whose channels it moves together", '"AI-220"', "unless instruments is stated"),
@@ -291,8 +301,8 @@ def missing(row: Key, place: str) -> Problem:
 def _read_value(row: Key, value: object, entry: Entry) -> list[Problem]:
     """Read the value of one row into the entry; a refused one stays out."""
     place = f"{entry.place}.{row.key}"
-    if row.form == "uncertainty":
-        inner, problems = read_table("uncertainty", value, place)
+    if row.form in NESTED:
+        inner, problems = read_table(row.form, value, place)
         entry.values |= {} if problems else {row.key: inner.values}
         return problems
     try:
@@ -418,6 +428,20 @@ def _named(value: object, row: Key) -> dict[str, Any]:
     return dict(value)
 
 
+def _numbers(value: object, row: Key) -> dict[str, float]:
+    return {name: _number(item, row) for name, item in _named(value, row).items()}
+
+
+def _bands(value: object, row: Key) -> dict[str, tuple[float, float]]:
+    return {name: _pair(item, row) for name, item in _named(value, row).items()}
+
+
+def _states(value: object, row: Key) -> tuple[float, ...]:
+    if not isinstance(value, list) or not value:
+        raise _misfit(value, row, "a list of numbers")
+    return tuple(_number(item, row) for item in value)
+
+
 FORMS: dict[str, Callable[[object, Key], Any]] = {
     "text": _text,
     "texts": _texts,
@@ -430,5 +454,8 @@ FORMS: dict[str, Callable[[object, Key], Any]] = {
     "zone": _zone,
     "yes or no": _yes_no,
     "formulas": _named,
+    "numbers": _numbers,
+    "bands": _bands,
+    "states": _states,
     "channels": _named,
 }

@@ -96,6 +96,21 @@ class Instrument:
     analyzer: str | None  # channels of one analyzer share this name
     pressure: str | None
     temperature: str | None
+    largest_step: float | None = None  # largest true change within one cycle, in own unit
+
+
+@dataclass(frozen=True, slots=True)
+class Analyzer:
+    """What is stated of all channels of an analyzer together; readings in the channels' own unit."""
+
+    name: str
+    status: str | None = None  # signal instrument that tells when results are not of the stream
+    calibrating: tuple[float, ...] = ()  # values of the status that say so
+    settle: timedelta = timedelta(0)  # how much longer results are not of the stream
+    certificate: tuple[tuple[str, float], ...] = ()  # channel and its reading on the calibration gas
+    tolerance: float = 0.0  # of the certificate, as a fraction of each reading
+    sum_band: tuple[float, float] | None = None  # what all channels add up to before any normalising
+    air: tuple[tuple[str, float, float], ...] = ()  # nitrogen, oxygen: channel, least and most in the stream
 
 
 @dataclass(frozen=True, slots=True)
@@ -173,3 +188,4 @@ class Unit:
     least_coverage: float
     exports: ExportRules
     nodes: tuple[Node, ...] = ()  # none: the whole unit is one node that reacts
+    analyzers: tuple[Analyzer, ...] = ()

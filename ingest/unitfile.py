@@ -10,12 +10,13 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
-from ingest import chemistry, draft, instrumentrules, unitrules
+from ingest import analyzerrules, chemistry, draft, instrumentrules, unitrules
 from ingest import keys as table
 from ingest.draft import Draft
 from ingest.errors import Problem, UnitFileError
 from ingest.keys import Entry, Key
 from ingest.unit import (
+    Analyzer,
     ExportRules,
     Instrument,
     Node,
@@ -130,6 +131,7 @@ def _build(read: Draft, key: str) -> Unit:
         ),
         instruments=tuple(_instrument(entry, read) for entry in read.many["instrument"]),
         shared=tuple(_shared(entry, read) for entry in read.many["shared"]),
+        analyzers=tuple(_analyzer(entry, read) for entry in read.many["analyzer"]),
         operating=_operating(read.once["operating"]),
         catalyst_charged=read.once["catalyst"].get("charged"),
         watches=tuple(_watch(entry) for entry in read.many["watch"]),
@@ -182,6 +184,7 @@ def _instrument(entry: Entry, read: Draft) -> Instrument:
         analyzer=entry.get("analyzer"),
         pressure=entry.get("pressure"),
         temperature=entry.get("temperature"),
+        largest_step=entry.get("largest_step"),
     )
 
 
@@ -189,6 +192,24 @@ def _uncertainty(stated: Mapping[str, float] | None) -> Uncertainty:
     """Turn percent into a fraction; only auxiliaries outside the balance may state nothing."""
     part = stated or {}
     return Uncertainty(part.get("relative_pct", 0.0) / 100.0, part.get("floor", 0.0))
+
+
+def _analyzer(entry: Entry, read: Draft) -> Analyzer:
+    """Make what is stated of an analyzer as a whole; its channels go by the names of their instruments."""
+    name, status = entry.get("name"), entry.get("status") or {}
+    certificate = dict(entry.get("certificate") or {})
+    tolerance = certificate.pop("tolerance_pct", 0.0) / 100.0
+    bands = entry.get("air_ingress") or {}
+    return Analyzer(
+        name=name,
+        status=f"{name} status" if status else None,
+        calibrating=status.get("calibrating", ()),
+        settle=status.get("settle", timedelta(0)),
+        certificate=tuple((f"{name} {channel}", reading) for channel, reading in certificate.items()),
+        tolerance=tolerance,
+        sum_band=entry.get("sum_band"),
+        air=tuple((f"{name} {gas}", *bands[gas]) for gas in analyzerrules.gases_of_air(entry, read)),
+    )
 
 
 def _shared(entry: Entry, read: Draft) -> SharedError:

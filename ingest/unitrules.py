@@ -9,7 +9,7 @@ from collections import Counter
 from collections.abc import Callable, Iterator
 from datetime import timedelta
 
-from ingest import chemistry, instrumentrules, noderules, quantities
+from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantities
 from ingest.draft import Draft, direction_of, twice, undeclared
 from ingest.errors import Problem
 from ingest.keys import Entry
@@ -292,6 +292,7 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _streams_hold_species,
     _what_enters_can_leave,
     _instruments_hold,
+    analyzerrules.hold,
     _shared_errors_have_members,
     _load_limits_are_in_order,
     _watches_can_be_judged,

@@ -10,6 +10,8 @@ from __future__ import annotations
 import sys
 
 from ingest import keys, quantities
+from ingest.checks import CHECKS
+from ingest.conditions import CONDITIONS, GOOD
 from ingest.instrumentrules import KIND_RULES
 from ingest.keys import Key
 
@@ -22,6 +24,7 @@ HEADINGS = {
     "uncertainty": "uncertainty",
     "analyzer": "[[analyzer]]",
     "analyzer.channel": "[analyzer.channel]",
+    "status": "status",
     "shared": "[[shared]]",
     "operating": "[operating]",
     "catalyst": "[catalyst]",
@@ -51,6 +54,10 @@ ABOUT = {
     " such as `AI-220 oxygen`. What the analyzer states holds for all channels that do not state it themselves.",
     "analyzer.channel": "One line for each species: its tag, or a table with `tag` and whatever differs from the"
     " analyzer. A channel that counts several species together names them in `species`.",
+    "status": 'What `status` of an analyzer holds: `status = { tag = "AI-220.CAL", calibrating = [1], max_age = "26h" }`.'
+    " While the status has one of the values of `calibrating`, and for `settle` after that, no result takes part. A status"
+    " is the surest sign; a certificate finds the calibration gas by itself, but not one that is like the process gas."
+    " Where no status stands (none came for `max_age`), results are not checked.",
     "shared": "A systematic error that moves several instruments together, such as the span of an analyzer.",
     "operating": "How the load tells whether the reactor is down, starting, turned down or running.",
     "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"
@@ -62,7 +69,7 @@ ABOUT = {
 def reference() -> str:
     """The whole of config/README.md."""
     sections = [_section(name, heading) for name, heading in HEADINGS.items()]
-    return "\n".join([START, *sections, _kinds(), _references()])
+    return "\n".join([START, *sections, _kinds(), _references(), _checks()])
 
 
 def _section(name: str, heading: str) -> str:
@@ -93,7 +100,8 @@ def _value(row: Key) -> str:
         "zone": "IANA time zone",
         "moment": "date and time",
     }
-    form |= {"formulas": "table of texts", "channels": "table"}
+    form |= {"formulas": "table of texts", "channels": "table", "numbers": "table of numbers"}
+    form |= {"bands": "table of two numbers each", "states": "list of numbers", "status": "table, see status"}
     return form.get(row.form, row.form) + _bounds(row)
 
 
@@ -140,6 +148,21 @@ def _references() -> str:
     lines += ["| reference | source | kmol in 1 m3 |", "|---|---|---|"]
     for text, source in quantities.REFERENCES.items():
         lines.append(f'| `"{text}"` | {source} | {quantities.kmol_per_m3(text):.7f} |')
+    return "\n".join([*lines, ""])
+
+
+def _checks() -> str:
+    lines = ["## Checks on readings", ""]
+    lines += [
+        "Each reading is checked before any averaging, in this order. A check has four answers: good, not checked,"
+    ]
+    lines += [
+        "suspect and bad. Bad readings take no part; suspect ones do, and are shown as such. A check whose key is not"
+    ]
+    lines += ["stated is not checked.", "", "| check | suspect | bad | why |", "|---|---|---|---|"]
+    for name, check in CHECKS.items():
+        words = ("" if code == GOOD else CONDITIONS[code] for code in (check.suspect, check.bad))
+        lines.append(f"| {name} | {' | '.join(words)} | {check.why} |")
     return "\n".join([*lines, ""])
 
 

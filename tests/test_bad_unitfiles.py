@@ -266,6 +266,78 @@ BAD = {
         after("[[analyzer]]", 'sampling = "held"', 'sampling = "interpolated"'),
         "analyzer[AI-220].sampling", "a composition is not interpolated", 'write sampling = "held"',
     ),
+    "a largest step of nothing": (
+        with_edit("range = [0, 12000]", "range = [0, 12000]\nlargest_step = 0"),
+        "instrument[FI-201].largest_step", "must be at least 1e-09, got 0", "write for example largest_step = 5.0",
+    ),
+    "a status without its values": (
+        with_edit("calibrating = [1], ", ""),
+        "analyzer[AI-220].status.calibrating", "missing (values of the status", "write calibrating = [1, 2]",
+    ),
+    "a status without its age": (
+        with_edit(', max_age = "26h" }', " }"),
+        "analyzer[AI-220].status.max_age", "missing (how long a status stands", 'write max_age = "26h"',
+    ),
+    "a status value in words": (
+        with_edit("calibrating = [1]", 'calibrating = ["on"]'),
+        "analyzer[AI-220].status.calibrating", "'on' is not a number", "write calibrating = [1, 2]",
+    ),
+    "a status value outside a list": (
+        with_edit("calibrating = [1]", "calibrating = 1"),
+        "analyzer[AI-220].status.calibrating", "1 is not a list of numbers", "write calibrating = [1, 2]",
+    ),
+    "a status that is a tag alone": (
+        with_edit('status = { tag = "AI-220.CAL", calibrating = [1], max_age = "26h" }', 'status = "AI-220.CAL"'),
+        "analyzer[AI-220].status", "'AI-220.CAL' is no table", "write it under [status] or in braces",
+    ),
+    "a status whose tag is that of a channel": (
+        with_edit('tag = "AI-220.CAL"', 'tag = "AI-220.O2"'),
+        "analyzer[AI-220].status.tag", "'AI-220.O2' already belongs to analyzer[AI-220].channel.oxygen", "its own tag",
+    ),
+    "a certificate without tolerance": (
+        with_edit("sum_band = [97, 103]", "certificate = { oxygen = 5, nitrogen = 83 }"),
+        "analyzer[AI-220].certificate.tolerance_pct", "missing (how closely the channels read", "tolerance_pct = 2",
+    ),
+    "a certificate that everything is near to": (
+        with_edit("sum_band = [97, 103]", "certificate = { oxygen = 5, nitrogen = 83, tolerance_pct = 80 }"),
+        "analyzer[AI-220].certificate.tolerance_pct", "must be 0.01 to 50, got 80", "tolerance_pct = 2",
+    ),
+    "a certificate of one channel": (
+        with_edit("sum_band = [97, 103]", "certificate = { oxygen = 5, tolerance_pct = 2 }"),
+        "analyzer[AI-220].certificate", "one channel alone may read so by chance", "name two channels or more",
+    ),
+    "a certificate of what is no channel": (
+        with_edit("sum_band = [97, 103]", "certificate = { oxygen = 5, nitrogn = 83, tolerance_pct = 2 }"),
+        "analyzer[AI-220].certificate", "'nitrogn' is no channel of analyzer[AI-220]", "did you mean 'nitrogen'?",
+    ),
+    "a certificate in words": (
+        with_edit("sum_band = [97, 103]", 'certificate = { oxygen = "5 %", nitrogen = 83, tolerance_pct = 2 }'),
+        "analyzer[AI-220].certificate", "'5 %' is not a number", "write certificate = { oxygen = 5.0",
+    ),
+    "a sum over two units": (
+        after("[analyzer.channel]", 'tag = "AI-220.ACE", range = [0, 2]', 'tag = "AI-220.ACE", unit = "ppm"'),
+        "analyzer[AI-220].sum_band", "adds up channels in mol% and ppm", "give all channels one unit",
+    ),
+    "a sum band the wrong way round": (
+        with_edit("sum_band = [97, 103]", "sum_band = [103, 97]"),
+        "analyzer[AI-220].sum_band", "low 103 is not below high 97", "write the lower number first",
+    ),
+    "air told by nitrogen alone": (
+        with_edit("sum_band = [97, 103]", "air_ingress = { nitrogen = [0, 1] }"),
+        "analyzer[AI-220].air_ingress", "needs the channel of nitrogen (N2) and that of oxygen (O2)", "nitrogen = [0.3, 0.5]",
+    ),
+    "air told by another gas besides": (
+        with_edit("sum_band = [97, 103]", "air_ingress = { nitrogen = [0, 1], oxygen = [0, 1], acetone = [0, 1] }"),
+        "analyzer[AI-220].air_ingress", "each alone, and no other", "oxygen = [5.0, 6.5]",
+    ),
+    "air in a stream that holds as much nitrogen": (
+        with_edit("sum_band = [97, 103]", "air_ingress = { nitrogen = [75, 85], oxygen = [1, 6] }"),
+        "analyzer[AI-220].air_ingress.nitrogen", "air holds 78.08 mol% nitrogen, no more than the stream with 85", "remove air_ingress",
+    ),
+    "a band that is one number": (
+        with_edit("sum_band = [97, 103]", "air_ingress = { nitrogen = 1, oxygen = [1, 6] }"),
+        "analyzer[AI-220].air_ingress", "1 is not a pair of numbers", "write air_ingress = { nitrogen = [0.3, 0.5]",
+    ),
     "a kind that is none": (
         after('name = "TI-205"', 'kind = "temperature"', 'kind = "temprature"'),
         "instrument[TI-205].kind", "'temprature' is not one of its words", "did you mean 'temperature'?",

@@ -29,9 +29,10 @@ from ingest.cells import (
     operating_of,
     reach,
 )
+from ingest.conditions import CONDITIONS
 from ingest.errors import StoreError
 from ingest.readings import BAD, Readings, Series
-from ingest.screen import CONDITIONS, screen
+from ingest.screen import screened
 from ingest.unit import SAMPLINGS, Instrument, Operating, Unit
 from tests.units_made import (
     DAY,
@@ -283,7 +284,7 @@ def standing(instrument: Instrument, series: Series, moment: float) -> tuple[str
     hold = (instrument.cycle if rule.startswith("mean") else instrument.max_age).total_seconds() * 1e6
     age_allowed = instrument.max_age.total_seconds() * 1e6
     begins = series.time - shift.total_seconds() * 1e6
-    codes = [CONDITIONS[c] for c in screen(series, instrument)]
+    codes = [CONDITIONS[c] for c in screened(made_unit(instrument), {str(instrument.tag): series})[0]]
     at = int(np.searchsorted(begins, moment, side="right")) - 1
     if at < 0 or moment - begins[at] >= hold + age_allowed:
         return "missing", np.nan

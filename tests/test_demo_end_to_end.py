@@ -18,6 +18,7 @@ from demo_data import exports
 from ingest.archive import SITE, STAGE
 from ingest.balance import problem_of
 from ingest.cells import cells_from_frame
+from ingest.conditions import CALIBRATING
 from ingest.ledger import Store
 from ingest.unitfile import load
 from monitor.amounts import amounts_of
@@ -99,6 +100,24 @@ def test_the_outage_is_down_time_and_raises_nothing(plant):
     assert hours["yield on feed", "as operated", "value"].isna().all()
     raised = episodes(store, UNIT.key)["raised"]
     assert not ((raised >= inside[0]) & (raised <= inside[1])).any()
+
+
+def test_calibration_is_masked_by_the_status_of_the_analyzer_and_nothing_else_is(plant):
+    # Results reach 6 min into a window before the status holds one back; a cell whole inside is masked.
+    store, truth, _ = plant
+    table = Store(store).read(UNIT.key, "cells")
+    cells = cells_from_frame(UNIT, table.to_pandas(ignore_metadata=True).set_index("start"))
+    channel = [one.name for one in UNIT.instruments].index("AI-220 oxygen")
+    masked = cells.condition[:, channel] == CALIBRATING
+    edges = np.array([[pd.Timestamp(one).timestamp() for one in pair] for pair in truth["calibrations"]])
+    begins, ends = edges[:, :1], edges[:, 1:]
+    start = cells.start / 1e6
+    within = ((start >= begins) & (start + 600 <= ends)).any(axis=0)
+    # A cell touches a window from ten minutes before it, and the gas is held for a cycle after it.
+    near = ((start > begins - 1200) & (start < ends + 600)).any(axis=0)
+    assert within.sum() > 60
+    assert masked[within].all()
+    assert not masked[~near].any()
 
 
 def test_every_reading_of_the_three_dialects_is_accounted_for(plant):

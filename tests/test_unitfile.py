@@ -137,6 +137,34 @@ def test_a_shared_error_of_an_analyzer_holds_all_its_channels_and_no_other_instr
     assert DEMO_UNIT.shared[0].relative == pytest.approx(0.003)
 
 
+def test_a_status_becomes_a_signal_and_what_is_stated_of_an_analyzer_stays_with_it():
+    signal = DEMO_UNIT.instruments[-1]
+    assert (signal.name, signal.kind, signal.tag) == ("AI-220 status", "signal", "AI-220.CAL")
+    assert (signal.max_age, signal.analyzer) == (timedelta(hours=26), None)
+    (analyzer,) = DEMO_UNIT.analyzers
+    assert (analyzer.status, analyzer.calibrating) == ("AI-220 status", (1.0,))
+    assert (analyzer.settle, analyzer.sum_band) == (timedelta(0), (97.0, 103.0))
+
+
+def test_certificate_and_air_name_channels_by_their_instruments_nitrogen_first(tmp_path: Path):
+    stated = (
+        "certificate = { oxygen = 5, nitrogen = 83, tolerance_pct = 2 }\n"
+        "air_ingress = { oxygen = [1, 6], nitrogen = [60, 75] }\n"
+    )
+    (analyzer,) = loaded(tmp_path, with_edit("sum_band = [97, 103]\n", stated)).analyzers
+    assert analyzer.certificate == (("AI-220 oxygen", 5.0), ("AI-220 nitrogen", 83.0))
+    assert (analyzer.tolerance, analyzer.sum_band) == (0.02, None)
+    assert analyzer.air == (("AI-220 nitrogen", 60.0, 75.0), ("AI-220 oxygen", 1.0, 6.0))
+
+
+def test_a_largest_step_may_stand_at_an_instrument_an_analyzer_or_a_channel(tmp_path: Path):
+    text = with_edit("sum_band = [97, 103]", "largest_step = 2.0")
+    text = with_edit('tag = "AI-220.O2"', 'tag = "AI-220.O2", largest_step = 1.5', text)
+    unit = loaded(tmp_path, with_edit("range = [0, 12000]", "range = [0, 12000]\nlargest_step = 300", text))
+    asked = ("FI-201", "FI-202", "AI-220 oxygen", "AI-220 acetone")
+    assert [instrument(unit, name).largest_step for name in asked] == [300.0, None, 1.5, 2.0]
+
+
 def test_a_watch_is_named_by_figure_and_window_unless_it_has_a_name(tmp_path: Path):
     assert DEMO_UNIT.watches[0].name == "yield on feed 8 h"
     unit = loaded(
@@ -199,7 +227,7 @@ def test_every_key_has_a_sentence_an_example_and_a_reader():
     for row in KEYS:
         assert row.sentence, row.name
         assert row.example, row.name
-        assert row.form in {*keys.FORMS, "uncertainty"}, row.name
+        assert row.form in {*keys.FORMS, *keys.NESTED}, row.name
 
 
 @pytest.mark.parametrize("row", KEYS, ids=lambda row: row.name)
