@@ -16,6 +16,8 @@ from numpy.typing import DTypeLike, NDArray
 Look = Callable[[Sequence[int]], Iterator[tuple[NDArray[np.int64], list[Any]]]]
 """Given places of columns, one block after another until the export ends: its rows' numbers, its columns."""
 
+NOTHING = (np.zeros(0, np.int64), [pa.array([], pa.string())])  # one column of a file without blocks
+
 
 def single(column: Any) -> Any:
     """Hold a column's values in one array.

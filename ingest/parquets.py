@@ -14,10 +14,10 @@ import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
 from ingest import lines
+from ingest.clocks import decide_clock
 from ingest.dialect import (
     Dialect,
     Layout,
-    decide_clock,
     decide_layout,
 )
 from ingest.errors import ExportError

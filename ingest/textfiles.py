@@ -13,11 +13,11 @@ import pyarrow.compute as pc
 import pyarrow.csv as pcsv
 from numpy.typing import NDArray
 
+from ingest.clocks import decide_clock
 from ingest.columns import plain, present, single
 from ingest.dialect import (
     Dialect,
     Layout,
-    decide_clock,
     decide_encoding,
     decide_layout,
     decide_separator,
