@@ -8,7 +8,7 @@ from datetime import timedelta
 import numpy as np
 from numpy.typing import NDArray
 
-from ingest.conditions import LARGEST, NOT_CHECKED, PASSED, REFUSED, Codes, Flags
+from ingest.conditions import LARGEST, NOT_CHECKED, PASSED, REFUSED, Codes
 from ingest.readings import BAD, Series
 from ingest.unit import Analyzer, Instrument
 
@@ -17,26 +17,19 @@ _LONG_AGO = np.iinfo(np.int64).min // 2
 _US = timedelta(microseconds=1)
 
 
-def by_status(
-    series: Series, status: Series, analyzer: Analyzer, *, age: timedelta, cycle: timedelta
-) -> Codes:
-    """Refuse the readings of a channel while the status says calibrating, and for the settling time after.
-
-    A result that an export repeats after the status went back is still the one of the calibration gas; it
-    is refused until a new one comes, for a cycle at most.
+def by_status(time: NDArray[np.int64], status: Series, analyzer: Analyzer, age: timedelta) -> Codes:
+    """Refuse what is stamped while the status says calibrating, and for the settling time after.
 
     Parameters
     ----------
-    series : Series
-        n readings of one channel.
+    time : array (n,) of int64
+        Of the results [us UTC].
     status : Series
         The status signal.
     analyzer : Analyzer
         Which values of the status mean that it calibrates.
     age : timedelta
         How long a status stands without a new one.
-    cycle : timedelta
-        Time between results.
 
     Returns
     -------
@@ -45,26 +38,45 @@ def by_status(
     """
     told = status.take((np.abs(status.value) < LARGEST) & (status.quality != BAD))
     if not len(told):
-        return np.full(len(series), NOT_CHECKED, dtype=np.int8)
+        return np.full(time.size, NOT_CHECKED, dtype=np.int8)
     on = np.isin(told.value, analyzer.calibrating)
-    last = np.searchsorted(told.time, series.time, side="right") - 1
-    known = (last >= 0) & (series.time - told.time[last] <= age // _US)
+    last = np.searchsorted(told.time, time, side="right") - 1
+    known = (last >= 0) & (time - told.time[last] <= age // _US)
     ended = np.full(len(told), _LONG_AGO)
     back = np.flatnonzero(on[:-1] & ~on[1:] & (np.diff(told.time) <= age // _US)) + 1
     ended[back] = told.time[back]
-    since = series.time - np.maximum.accumulate(ended)[last]
+    since = time - np.maximum.accumulate(ended)[last]
     off = known & (on[last] | (since < analyzer.settle // _US))
-    off |= _repeated(series, off, cycle // _US)
     return np.select([off, known], [REFUSED, PASSED], NOT_CHECKED).astype(np.int8)
 
 
-def _repeated(series: Series, off: Flags, cycle_us: int) -> Flags:
-    """Find readings that only repeat one taken off the sample, no more than a cycle after it."""
+def repeated(series: Series, answers: Codes, cycle: timedelta) -> Codes:
+    """Refuse what only repeats a result of the calibration gas, for a cycle at most.
+
+    An export goes on showing the last result after the status went back, until there is a new one.
+
+    Parameters
+    ----------
+    series : Series
+        n readings of one channel.
+    answers : array (n,) of int8
+        From `by_status`.
+    cycle : timedelta
+        Time between results.
+
+    Returns
+    -------
+    array (n,) of int8
+    """
+    off = answers == REFUSED
+    if not off.any():
+        return answers
     place = np.arange(off.size)
-    new = np.concatenate([[True], series.value[1:] != series.value[:-1]])[: off.size]
+    new = np.concatenate([[True], series.value[1:] != series.value[:-1]])
     begun = np.maximum.accumulate(np.where(new, place, 0))
     before = np.maximum.accumulate(np.where(off, place, -1))
-    return (before >= begun) & (series.time - series.time[before] <= cycle_us)
+    again = (before >= begun) & (series.time - series.time[before] <= cycle // _US)
+    return np.where(again, REFUSED, answers).astype(np.int8)
 
 
 def by_certificate(values: NDArray[np.float64], members: Sequence[Instrument], analyzer: Analyzer) -> Codes:

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ingest import calibration, samples
-from ingest.channels import Places, common_axis, together
+from ingest.channels import Places, common_axis, places_on, together
 from ingest.conditions import (
     AIR_INGRESS,
     BAD_QUALITY,
@@ -161,6 +161,16 @@ class Seen:
         """Give no answer for any instrument, to begin with."""
         return [None] * len(self.series)
 
+    def channels(self, analyzer: Analyzer) -> list[int]:
+        """Give the places of those channels of an analyzer that have readings.
+
+        Parameters
+        ----------
+        analyzer : Analyzer
+        """
+        held = enumerate(self.unit.instruments)
+        return [at for at, one in held if one.analyzer == analyzer.name and len(self.series[at])]
+
     def sample(self, analyzer: Analyzer) -> Sample | None:
         """Lay the usable results of an analyzer side by side; None where it has no readings.
 
@@ -168,15 +178,15 @@ class Seen:
         ----------
         analyzer : Analyzer
         """
-        held = [(at, one) for at, one in enumerate(self.unit.instruments) if one.analyzer == analyzer.name]
-        there = [(at, one) for at, one in held if len(self.series[at])]
-        if not there:
+        at = self.channels(analyzer)
+        if not at:
             return None
-        at, members = zip(*there, strict=True)
+        members = tuple(self.unit.instruments[place] for place in at)
         series = [self.series[place] for place in at]
         age = max(one.cycle for one in members)
         values, on_axis = together(series, [self.usable(place) for place in at], age)
-        return Sample(at, members, common_axis(series), values, on_axis, len(there) == len(held))
+        whole = len(at) == sum(one.analyzer == analyzer.name for one in self.unit.instruments)
+        return Sample(tuple(at), members, common_axis(series), values, on_axis, whole)
 
     def fold(self, answers: Answers, check: Check) -> None:
         """Take the answers of a check in: the first that refuses a reading names its condition.
@@ -261,13 +271,14 @@ def _calibration(seen: Seen) -> Answers:
 def _by_status(seen: Seen, analyzer: Analyzer) -> Answers:
     """What the status of an analyzer says of the readings of its channels."""
     answers, instruments = seen.unanswered(), seen.unit.instruments
-    signals = [at for at, one in enumerate(instruments) if one.name == analyzer.status]
-    for at, one in enumerate(instruments):
-        for signal in signals if one.analyzer == analyzer.name else ():
-            age = instruments[signal].max_age
-            answers[at] = calibration.by_status(
-                seen.series[at], seen.series[signal], analyzer, age=age, cycle=one.cycle
-            )
+    there = seen.channels(analyzer)
+    for signal in [at for at, one in enumerate(instruments) if one.name == analyzer.status] if there else ():
+        axis = common_axis([seen.series[at] for at in there])
+        told = calibration.by_status(axis, seen.series[signal], analyzer, instruments[signal].max_age)
+        for at in there:
+            series = seen.series[at]
+            mine = told[places_on(axis, series.time)]
+            answers[at] = calibration.repeated(series, mine, instruments[at].cycle)
     return answers
 
 
