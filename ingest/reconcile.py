@@ -360,7 +360,8 @@ def at_rest(problem: Problem, readings: Measured) -> Iterator[Rest]:
     readings : Measured
         Base readings of t cells.
     """
-    for job in _jobs(problem, _groups(problem, readings)):
+    seeing = [group for group in _groups(problem, readings) if group.view.rank]
+    for job in _jobs(problem, seeing):
         yield _rest(readings.take(job.places), job)
 
 
