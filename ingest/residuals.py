@@ -21,7 +21,7 @@ from ingest import tangent
 from ingest.balance import Problem
 from ingest.causes import Causes
 from ingest.instruments import Measured, balance_instruments
-from ingest.reconcile import Rest, at_rest
+from ingest.iteration import Rest, at_rest, groups_of
 from ingest.unit import Unit
 
 Floats = NDArray[np.float64]
@@ -153,18 +153,16 @@ def cell_residuals(problem: Problem, readings: Measured, causes: Causes, cycle: 
         cycle=cycle,
         names=causes.names,
     )
-    for rest in at_rest(problem, readings):
-        kept = rest.places[rest.good & (rest.freedom > 0)]
-        if len(kept):
-            _fill(found, rest, readings, causes, kept)
+    groups = [one for one in groups_of(problem, readings) if one.view.rank and one.view.freedom]
+    for rest in at_rest(problem, readings, groups):
+        _fill(found, rest, readings, causes)
     return found
 
 
-def _fill(
-    found: CellResiduals, rest: Rest, readings: Measured, causes: Causes, kept: NDArray[np.intp]
-) -> None:
+def _fill(found: CellResiduals, rest: Rest, readings: Measured, causes: Causes) -> None:
     """Put the residuals of the sound cells of one job into their place."""
-    inside = np.isin(rest.places, kept)
+    inside = rest.good
+    kept = rest.places[inside]
     root = np.sqrt(rest.point.weight).T[inside]
     lean = root[:, :, None] * tangent.gradients(rest.geometry, rest.point)[inside]
     inverse = np.ascontiguousarray(rest.inverse.transpose(2, 0, 1)[inside])

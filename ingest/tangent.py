@@ -49,7 +49,13 @@ class Point(NamedTuple):
     loading: Floats  # (m, s, t), 0 where missing
 
     def take(self, which: Flags) -> Point:
-        """Give some of the cells only."""
+        """Give some of the cells only.
+
+        Parameters
+        ----------
+        which : array (t,) of bool
+            Those.
+        """
         return Point(*(part[..., which] for part in self))
 
 

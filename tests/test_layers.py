@@ -47,6 +47,7 @@ ORDER = (
     "ingest.balance",
     "ingest.systems",
     "ingest.tangent",
+    "ingest.iteration",
     "ingest.reconcile",
     "ingest.causes",
     "ingest.residuals",
