@@ -66,16 +66,19 @@ class _Rule:
     """How one way of sampling turns a stamp into the span of time for which the value stands."""
 
     ends: bool  # the stamp is the end of the span, not its start
+    about: bool  # the span begins half a cycle before the stamp
     by_cycle: bool  # the span is one cycle long, else at most max_age
     linear: bool  # the value runs straight to the next reading, else it stays
     why: str
 
 
 RULES = {
-    "held": _Rule(False, False, False, "a result is true for its sample; nothing tells what lay between two"),
-    "interpolated": _Rule(False, False, True, "compressed exports keep points only where the slope changes"),
-    "mean at end": _Rule(True, True, False, "the mean of the interval that the stamp closes"),
-    "mean at start": _Rule(False, True, False, "the mean of the interval that the stamp opens"),
+    # From its sample on alone, what is held would lag half a cycle behind the flows it is multiplied with: in
+    # hours with load moves 89 instead of 95 of 100 intervals of the conversion would hold the truth.
+    "held": _Rule(False, True, False, False, "a result is true for its sample, and for what lies next to it"),
+    "interpolated": _Rule(False, False, False, True, "compressed exports keep points where slopes change"),
+    "mean at end": _Rule(True, False, True, False, "the mean of the interval that the stamp closes"),
+    "mean at start": _Rule(False, False, True, False, "the mean of the interval that the stamp opens"),
 }
 
 
@@ -356,8 +359,9 @@ def _matrix(frame: pd.DataFrame, field: str, names: list[str]) -> NDArray[Any]:
 def _timing(instrument: Instrument) -> _Timing:
     """The instrument's times by the rule of its sampling."""
     rule = RULES[instrument.sampling]
-    shift = instrument.dead_time + (instrument.cycle if rule.ends else timedelta(0))
-    hold = instrument.cycle if rule.by_cycle else instrument.max_age
+    before = instrument.cycle / 2 if rule.about else timedelta(0)  # a result's age counts from its sample
+    shift = instrument.dead_time + before + (instrument.cycle if rule.ends else timedelta(0))
+    hold = instrument.cycle if rule.by_cycle else instrument.max_age + before
     return _Timing(shift // _US, hold // _US, instrument.max_age // _US, rule.linear)
 
 

@@ -103,10 +103,22 @@ def test_an_interpolated_signal_is_the_mean_of_straight_lines():
 
 
 def test_a_result_belongs_to_the_time_the_sample_left_the_stream():
-    # Stamped 10 min, 4 min late: true from minute 6 on. First cell (6 x 10 + 4 x 20)/10 = 14.
+    # Stamped 10 min, 4 min late: of a sample of minute 6, and nearest to it from minute 3 on, as the one
+    # before is until then. First cell (3 x 10 + 7 x 20)/10 = 17.
     channel = made_channel("AI-2", "isobutane")
     cells = cells_of(channel, made_series([4, 10, 16, 22], [10, 20, 20, 20]), 20)
-    assert cells.value.tolist() == [[14.0], [20.0]]
+    assert cells.value.tolist() == [[17.0], [20.0]]
+
+
+def test_what_is_held_does_not_lag_behind_a_ramp():
+    # A ramp of 1 a minute, sampled each 6 min, results 4 min late: the mean over a cell of 10 min is that of
+    # the ramp, 5 above its start, but for the steps at both edges of the cell: 3 x 3 / 2 / 10 = 0.45 at
+    # most. If a result stood from its sample on alone, all would lag 3 min, half a cycle.
+    stamps = np.arange(0, 250, 6)
+    cells = cells_of(made_channel("AI-2", "isobutane", high=np.inf), made_series(stamps + 4, stamps), 210)
+    lag = (cells.start - MIDNIGHT) / MINUTE + 5 - cells.value[:, 0]
+    assert abs(lag.mean()) < 1e-9
+    assert abs(lag).max() < 0.5
 
 
 def test_a_dead_time_moves_every_answer_by_just_that():
@@ -128,8 +140,9 @@ def test_a_result_is_held_no_longer_than_its_age_allows_then_stale_then_missing(
 
 
 def test_a_result_is_never_drawn_towards_the_next_one():
-    channel = made_channel("AI-2", "isobutane", dead_time=timedelta(0))
-    assert cells_of(channel, made_series([0, 10], [10, 50]), 20).value[:, 0].tolist() == [10, 50]
+    # Samples of minutes 5 and 15, one each 10 min.
+    channel = made_channel("AI-2", "isobutane", dead_time=timedelta(0), cycle=timedelta(minutes=10))
+    assert cells_of(channel, made_series([5, 15], [10, 50]), 20).value[:, 0].tolist() == [10, 50]
 
 
 def test_a_value_repeated_each_minute_is_the_same_held_signal():
@@ -183,8 +196,8 @@ def test_a_refused_reading_is_not_bridged():
 
 
 def test_a_refused_result_ends_the_one_before():
-    channel = made_channel("AI-2", "isobutane", dead_time=timedelta(0))
-    series = made_series([0, 10, 20], [10.0, np.nan, 30.0])
+    channel = made_channel("AI-2", "isobutane", dead_time=timedelta(0), cycle=timedelta(minutes=10))
+    series = made_series([5, 15, 25], [10.0, np.nan, 30.0])
     cells = cells_of(channel, series, 30)
     assert words(cells) == ["good", "bad quality", "good"]
     assert cells.share[:, 0].tolist() == [1, 0, 1]
@@ -211,9 +224,9 @@ def test_a_frozen_analyzer_is_not_carried_into_averages():
     series = made_series(np.arange(60) + 4, results)
     readings = {"AI-2 n-butane.PV": series, "AI-2 isobutane.PV": series}
     cells = make_cells(unit, readings, MIDNIGHT, MIDNIGHT + HOUR)
-    # The last new result is of minute 12; minutes 18 to 60 repeat it.
+    # The last new result is of minute 12; minutes 18 to 60 repeat it, the first from 15 on.
     assert words(cells, 1) == words(cells, 2) == ["good", "good", *["stuck"] * 4]
-    assert cells.share[:2, 1].tolist() == pytest.approx([1, 0.8])
+    assert cells.share[:2, 1].tolist() == pytest.approx([1, 0.5])
 
 
 def test_a_declared_instrument_always_carries_its_value():
@@ -280,8 +293,10 @@ def test_the_night_the_clocks_go_back_has_every_hour_once():
 def standing(instrument: Instrument, series: Series, moment: float) -> tuple[str, float]:
     """Condition and value at one moment, read off the definitions one reading at a time."""
     rule = instrument.sampling
-    shift = instrument.dead_time + (instrument.cycle if rule == "mean at end" else timedelta(0))
-    hold = (instrument.cycle if rule.startswith("mean") else instrument.max_age).total_seconds() * 1e6
+    back = {"mean at end": instrument.cycle, "held": instrument.cycle / 2}.get(rule, timedelta(0))
+    shift = instrument.dead_time + back
+    age = instrument.max_age + (back if rule == "held" else timedelta(0))
+    hold = (instrument.cycle if rule.startswith("mean") else age).total_seconds() * 1e6
     age_allowed = instrument.max_age.total_seconds() * 1e6
     begins = series.time - shift.total_seconds() * 1e6
     codes = [CONDITIONS[c] for c in screened(made_unit(instrument), {str(instrument.tag): series})[0]]
@@ -311,7 +326,7 @@ def irregular_meter(random: np.random.Generator, sampling: str) -> Instrument:
     return made_instrument(
         sampling=sampling,
         dead_time=timedelta(seconds=int(random.integers(0, 300))),
-        cycle=timedelta(seconds=int(random.integers(60, 300))),
+        cycle=timedelta(seconds=2 * int(random.integers(30, 150))),
         max_age=timedelta(seconds=int(random.integers(200, 700))),
     )
 
@@ -466,8 +481,8 @@ def test_a_reading_changes_no_cell_beyond_its_stated_reach(names: tuple[str, ...
 def test_how_far_readings_must_reach_by_hand():
     # Channel: 20 min held, 20 min stale, six cycles of 6 min; ahead a cell of 10 min, 4 min dead time, three
     # cycles. Meter: 5 min joined, 5 min stale; ahead the cell and 5 min to the next reading.
-    assert look_back(made_unit()) == timedelta(minutes=20 + 20 + 36)
-    assert reach(made_unit()) == timedelta(minutes=10 + 4 + 18)
+    assert look_back(made_unit()) == timedelta(minutes=3 + 20 + 20 + 36)
+    assert reach(made_unit()) == timedelta(minutes=10 + 4 + 3 + 18)
     assert look_back(made_unit(made_instrument())) == timedelta(minutes=5 + 5)
     assert reach(made_unit(made_instrument())) == timedelta(minutes=10 + 5)
 
@@ -656,7 +671,8 @@ def test_an_idle_hour_with_noise_about_zero_is_down_and_leaves_the_ratio_alone()
     minutes = np.arange(24 * 60 + 1)
     idle = (minutes >= 600) & (minutes < 660)
     load = np.where(idle, random.normal(0, 0.5, minutes.size), 100.0)
-    channel = made_channel("AI-1", "isobutane", dead_time=timedelta(0), analyzer=None)
+    minute = {"dead_time": timedelta(0), "cycle": timedelta(minutes=1), "sampling": "mean at start"}
+    channel = made_channel("AI-1", "isobutane", analyzer=None, **minute)
     readings = {
         "FI-1.PV": made_series(minutes, load),
         "AI-1.PV": made_series(minutes, np.where(idle, 34, 86)),

@@ -96,8 +96,8 @@ def test_a_value_that_is_no_number_is_not_checked_and_hides_no_step():
 
 
 def test_a_spike_takes_no_part_in_the_cell_and_a_step_that_stays_does():
-    # 10 minutes of 50 with one reading of 90 in the middle; held, each for its minute: 50 without it.
-    unit = made_unit(made_instrument(largest_step=2.0, sampling="held"), operating=None)
+    # 10 minutes of 50 with one reading of 90 in the middle; each is the mean of its minute: 50 without it.
+    unit = made_unit(made_instrument(largest_step=2.0, sampling="mean at start"), operating=None)
     spiked = by_minute([*[50.0] * 15, 90.0, *[50.0] * 14])
     cells = make_cells(unit, {"FI-1.PV": spiked}, MIDNIGHT, MIDNIGHT + 30 * MINUTE)
     assert cells.value[:, 0].tolist() == [50.0, 50.0, 50.0]
@@ -407,14 +407,14 @@ def test_a_cell_with_every_check_does_not_depend_on_the_chunk_it_was_made_in():
 
 
 def test_how_far_the_checks_look_by_hand():
-    # Channel: 20 min held, 20 min stale; six cycles for stuck, three cycles and a gap of 20 min for steps;
-    # 240 min of a status, 7 min of settling, two cycles beside other channels. The status signal itself:
-    # 240 min held and 240 min stale.
+    # Channel: half a cycle and 20 min held, 20 min stale; six cycles for stuck, three cycles and a gap of
+    # 20 min for steps; 240 min of a status, 7 min of settling, two cycles beside other channels. The status
+    # signal itself: half a minute and 240 min held, 240 min stale.
     unit = everything()
-    own = 20 + 20 + (6 * 6 + 3 * 6 + 20) + 240 + 7 + 2 * 6
-    assert look_back(unit) == timedelta(minutes=max(own, 240 + 240))
-    # A cell of 10 min, 4 min of dead time, three cycles for stuck and two for spikes.
-    assert reach(unit) == timedelta(minutes=10 + 4 + 5 * 6)
+    own = 3 + 20 + 20 + (6 * 6 + 3 * 6 + 20) + 240 + 7 + 2 * 6
+    assert look_back(unit) == timedelta(minutes=max(own, 0.5 + 240 + 240))
+    # A cell of 10 min, 4 min of dead time, half a cycle, three cycles for stuck and two for spikes.
+    assert reach(unit) == timedelta(minutes=10 + 4 + 3 + 5 * 6)
 
 
 def test_checking_changes_no_reading():
