@@ -44,6 +44,7 @@ ORDER = (
     "ingest.screen",
     "ingest.cells",
     "ingest.instruments",
+    "ingest.lag",
     "ingest.balance",
     "ingest.systems",
     "ingest.tangent",
