@@ -66,6 +66,7 @@ RANGE_RULES = {
     "mass flow": _TRANSMITTER,
     "volume flow": _TRANSMITTER,
     "actual volume flow": _TRANSMITTER,
+    "differential pressure flow": _TRANSMITTER,
     "mole fraction": _FRACTION,
     "mass fraction": _FRACTION,
     "species flow": _TRANSMITTER,

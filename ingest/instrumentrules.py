@@ -30,6 +30,9 @@ KIND_RULES = {
     "mass flow": KindRule(("stream",)),
     "volume flow": KindRule(("stream", "reference")),  # a cubic metre of what state is not guessed
     "actual volume flow": KindRule(("stream", "pressure", "temperature")),
+    "differential pressure flow": KindRule(
+        ("stream", "design_molar_mass"), ("reference", "design", "pressure", "temperature")
+    ),
     "mole fraction": _FRACTION,
     "volume fraction": _FRACTION,  # of an ideal gas, the same as the mole fraction
     "mass fraction": _FRACTION,
@@ -86,7 +89,10 @@ def scale_of(entry: Entry, draft: Draft) -> quantities.Scale:
         entry.get("unit"),
         reference=entry.get("reference"),
         atmosphere=entry.get("atmosphere"),
-        molar_mass_kg_kmol=chemistry.molar_mass_kg_kmol(counted) if counted else None,
+        molar_mass_kg_kmol=chemistry.molar_mass_kg_kmol(counted)
+        if counted
+        else entry.get("design_molar_mass"),
+        design=entry.get("design"),
     )
 
 
@@ -217,13 +223,32 @@ def _the_unit_fits(entry: Entry, draft: Draft) -> Iterator[Problem]:
 
 
 def _conditions(entry: Entry) -> Iterator[Problem]:
-    """Reference conditions and atmosphere can be read, or are told at their own key."""
-    for key, read in (("reference", quantities.kmol_per_m3), ("atmosphere", quantities.atmosphere_kpa)):
+    """Reference and design conditions and atmosphere can be read, or are told at their own key."""
+    readers = {"reference": quantities.kmol_per_m3, "atmosphere": quantities.atmosphere_kpa}
+    readers["design"] = quantities.design_kmol_m3
+    flowing = (
+        entry.get("reference") == quantities.FLOWING and entry.get("kind") == "differential pressure flow"
+    )
+    for key, read in readers.items():
         try:
-            if key in entry.values:
+            if key in entry.values and not (flowing and key == "reference"):
                 read(entry.get(key))
         except OutletError as error:
             yield Problem(entry.at(key), error.what, error.remedy)
+
+
+def _a_design_is_compensated(entry: Entry, _draft: Draft) -> Iterator[Problem]:
+    """A differential pressure flow is compensated for pressure and temperature together, or not at all."""
+    if entry.get("kind") != "differential pressure flow":
+        return
+    keys = ("design", "pressure", "temperature")
+    for key in keys:
+        if entry.lacks(key) and any(other in entry.values for other in keys):
+            row = rows("instrument")[key]
+            what = f"missing beside {' and '.join(other for other in keys if other in entry.values)}"
+            yield Problem(entry.at(key), what, f"write {key} = {row.example}, or leave all three out")
+    if entry.get("reference") is not None and entry.get("unit") in quantities.COMMON["mass flow"]:
+        yield Problem(entry.at("reference"), "a mass needs no reference", "remove it, or mend unit")
 
 
 def _what_it_names_is_there(entry: Entry, draft: Draft) -> Iterator[Problem]:
@@ -285,6 +310,7 @@ RULES: tuple[Callable[[Entry, Draft], Iterator[Problem]], ...] = (
     _a_reading_comes_from_somewhere,
     _a_tag_has_its_timing,
     _the_unit_fits,
+    _a_design_is_compensated,
     _what_it_names_is_there,
     _a_composition_states_its_basis,
     _uncertainties_are_stated,

@@ -8,7 +8,8 @@ library, which is imported only then because its import takes longer than readin
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
+from contextlib import suppress
 from dataclasses import dataclass
 from datetime import timedelta
 from functools import cache
@@ -36,6 +37,7 @@ COMMON: Mapping[str, Mapping[str, float]] = {
     "mass flow": _MASS,
     "volume flow": _VOLUME,
     "actual volume flow": _VOLUME,
+    "differential pressure flow": _MASS | _MOLAR | _VOLUME,
     "species flow": _MOLAR | _MASS,
     "mole fraction": _MOLE,
     "mass fraction": _WEIGHT,
@@ -65,6 +67,7 @@ REFERENCES = {
     "20 degC, 101.325 kPa": "",
     "25 degC, 101.325 kPa": "",
 }
+FLOWING = "flowing"  # in place of a reference: cubic metres as a differential pressure meter holds them
 _AT_REFERENCE = re.compile(r"\b[NS](?=m3\b)|\bscf")
 _SCF = re.compile(r"\b(MM|M)?scf(?:/?([hdm])(?:in)?)?\b")
 _PER = {"h": "/h", "d": "/day", "m": "/min"}
@@ -101,18 +104,51 @@ def kmol_per_m3(reference: str) -> float:
     OutletError
         Not of that form, or far from any reference conditions in use.
     """
-    match = _REFERENCE.match(reference.strip())
-    if match is None:
-        raise OutletError(f"'{reference}' states no temperature and pressure", remedy=reference_remedy())
-    degrees, temperature_unit, pressure, pressure_unit = match.groups()
-    per_degree, offset = _TEMPERATURE[temperature_unit]
-    kelvin = (_number(degrees, reference) + offset) * per_degree
-    kpa = _number(pressure, reference) * scale("pressure", pressure_unit).to_base
+    kelvin, kpa = _gas_at(reference, reference_remedy())
     if not (250 <= kelvin <= 320 and 80 <= kpa <= 120):
         raise OutletError(
             f"'{reference}' lies outside 250 to 320 K and 80 to 120 kPa absolute", remedy=reference_remedy()
         )
     return kpa / (R_KPA_M3_KMOL_K * kelvin)
+
+
+def design_kmol_m3(design: str) -> float:
+    """Give the amount in one cubic metre of ideal gas at the conditions a meter is designed for.
+
+    Parameters
+    ----------
+    design : str
+        Temperature and absolute pressure, for example '180 degC, 350 kPa'.
+
+    Returns
+    -------
+    float
+        Ideal-gas amount concentration p / (R T) [kmol/m3].
+
+    Raises
+    ------
+    OutletError
+        Not of that form, or not the state of a gas in a plant.
+    """
+    remedy = 'write temperature and absolute pressure as design = "180 degC, 350 kPa"'
+    kelvin, kpa = _gas_at(design, remedy)
+    if not (50 <= kelvin <= 2000 and 1 <= kpa <= 50_000):
+        raise OutletError(f"'{design}' lies outside 50 to 2000 K and 1 to 50000 kPa absolute", remedy=remedy)
+    return kpa / (R_KPA_M3_KMOL_K * kelvin)
+
+
+def _gas_at(conditions: str, remedy: str) -> tuple[float, float]:
+    """Read a temperature [K] and an absolute pressure [kPa]."""
+    match = _REFERENCE.match(conditions.strip())
+    if match is None:
+        raise OutletError(f"'{conditions}' states no temperature and pressure", remedy=remedy)
+    degrees, temperature_unit, pressure, pressure_unit = match.groups()
+    per_degree, offset = _TEMPERATURE[temperature_unit]
+    kelvin = (_number(degrees, conditions) + offset) * per_degree
+    try:
+        return kelvin, _number(pressure, conditions) * scale("pressure", pressure_unit).to_base
+    except OutletError as error:
+        raise OutletError(error.what, remedy=remedy) from None
 
 
 def reference_remedy() -> str:
@@ -136,6 +172,7 @@ def scale(
     reference: str | None = None,
     atmosphere: str | None = None,
     molar_mass_kg_kmol: float | None = None,
+    design: str | None = None,
 ) -> Scale:
     """Give the factor and offset that turn a reading into the base unit of its kind.
 
@@ -150,13 +187,16 @@ def scale(
     atmosphere : str, optional
         Atmospheric pressure that a gauge pressure adds to, for example '101.3 kPa'.
     molar_mass_kg_kmol : float, optional
-        Molar mass of the one species that a species flow in mass units counts [kg/kmol].
+        Molar mass of the one species that a species flow in mass units counts, or that a differential
+        pressure flow is read with [kg/kmol].
+    design : str, optional
+        Design conditions of a differential pressure flow.
 
     Returns
     -------
     Scale
-        Factor to kmol/h (molar, volume and species flow), kg/h (mass flow), m3/h (actual volume flow),
-        mole or mass fraction, mol/mol (flow ratio), kPa absolute or K.
+        Factor to kmol/h (molar, volume, species and differential pressure flow), kg/h (mass flow), m3/h
+        (actual volume flow), mole or mass fraction, mol/mol (flow ratio), kPa absolute or K.
 
     Raises
     ------
@@ -170,16 +210,19 @@ def scale(
         return _pressure(text, atmosphere)
     if kind == "temperature" and text in _TEMPERATURE:
         return Scale(*_TEMPERATURE[text])
-    if kind == "volume flow":
-        return _volume_flow(text, reference)
     if kind == "actual volume flow" and _AT_REFERENCE.search(text):
         raise OutletError(
             f"'{unit}' is a volume at reference conditions",
             remedy='write kind = "volume flow" and a reference',
         )
-    if kind == "species flow":
-        return _species_flow(text, molar_mass_kg_kmol)
-    return Scale(_factor(kind, text))
+    by_kind: dict[str, Callable[[], Scale]] = {
+        "volume flow": lambda: _volume_flow(text, reference),
+        "species flow": lambda: _species_flow(text, molar_mass_kg_kmol),
+        "differential pressure flow": lambda: _differential_pressure(
+            text, reference, design, molar_mass_kg_kmol
+        ),
+    }
+    return by_kind[kind]() if kind in by_kind else Scale(_factor(kind, text))
 
 
 def _volume_flow(text: str, reference: str | None) -> Scale:
@@ -189,6 +232,22 @@ def _volume_flow(text: str, reference: str | None) -> Scale:
     _refuse_ambiguous(text)
     plain = _SCF.sub(_cubic_feet, re.sub(r"\b[NS](?=m3\b)", "", text))
     return Scale(_factor("volume flow", plain) * kmol_per_m3(reference))
+
+
+def _differential_pressure(
+    text: str, reference: str | None, design: str | None, molar_mass_kg_kmol: float | None
+) -> Scale:
+    """Scale what a meter shows, in moles, mass or volume, to kmol/h by the design it is read with."""
+    for kind, kmol in (("molar flow", 1.0), ("mass flow", 1.0 / (molar_mass_kg_kmol or 1.0))):
+        with suppress(OutletError):
+            return Scale(_factor(kind, text) * kmol)
+    if reference != FLOWING:
+        return _volume_flow(text, reference)
+    if design is None:
+        raise OutletError(
+            f"'{text}' at flowing conditions needs the design", remedy='write design = "180 degC, 350 kPa"'
+        )
+    return Scale(_factor("volume flow", text) * design_kmol_m3(design))
 
 
 def _cubic_feet(match: re.Match[str]) -> str:

@@ -9,7 +9,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from datetime import datetime, timedelta
 
-FLOW_KINDS = ("molar flow", "mass flow", "volume flow", "actual volume flow")
+FLOW_KINDS = ("molar flow", "mass flow", "volume flow", "actual volume flow", "differential pressure flow")
 FRACTION_KINDS = ("mole fraction", "mass fraction")
 BALANCE_KINDS = (*FLOW_KINDS, *FRACTION_KINDS, "species flow", "flow ratio")
 AUXILIARY_KINDS = ("pressure", "temperature", "signal")
@@ -69,9 +69,9 @@ class Instrument:
     """Anything that gives a reading about a stream.
 
     A reading in its own unit becomes a base value by `(reading + offset) * to_base`; base values are
-    kmol/h (molar, volume and species flow), kg/h (mass flow), mole or mass fraction, mol/mol (flow
-    ratio), kPa, K. An actual volume flow has `to_base` to m3/h and becomes kmol/h with the readings of
-    `pressure` and `temperature` (names of auxiliary instruments).
+    kmol/h (molar, volume, differential pressure and species flow), kg/h (mass flow), mole or mass fraction,
+    mol/mol (flow ratio), kPa, K. An actual volume flow has `to_base` to m3/h and becomes kmol/h with the
+    readings of `pressure` and `temperature` (names of auxiliary instruments).
     """
 
     name: str
@@ -97,6 +97,8 @@ class Instrument:
     pressure: str | None
     temperature: str | None
     largest_step: float | None = None  # largest true change within one cycle, in own unit
+    design_molar_mass_kg_kmol: float | None = None  # that a differential pressure flow is read with
+    design_kmol_m3: float | None = None  # at its design pressure and temperature; None: always right
 
 
 @dataclass(frozen=True, slots=True)

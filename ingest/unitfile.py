@@ -10,7 +10,7 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
-from ingest import analyzerrules, chemistry, draft, instrumentrules, unitrules
+from ingest import analyzerrules, chemistry, draft, instrumentrules, quantities, unitrules
 from ingest import keys as table
 from ingest.draft import Draft
 from ingest.errors import Problem, UnitFileError
@@ -185,6 +185,8 @@ def _instrument(entry: Entry, read: Draft) -> Instrument:
         pressure=entry.get("pressure"),
         temperature=entry.get("temperature"),
         largest_step=entry.get("largest_step"),
+        design_molar_mass_kg_kmol=entry.get("design_molar_mass"),
+        design_kmol_m3=quantities.design_kmol_m3(design) if (design := entry.get("design")) else None,
     )
 
 

@@ -33,6 +33,7 @@ def more(section: str) -> str:
 DECLARED = 'name = "oxygen in air"'
 CHANNEL = 'acetone = { tag = "AI-220.ACE", range = [0, 2], systematic = { relative_pct = 2, floor = 0.002 } }'
 WATCH = '[[watch]]\nfigure = "conversion"\nwindow = "8h"\nlow = 90\npriority = "low"\n'
+DESIGNED = 'kind = "differential pressure flow"\ndesign_molar_mass = 56.1\n'
 RATIO = (
     '[[instrument]]\nname = "FFI-1"\ntag = "FFI-1"\nkind = "flow ratio"\nstream = "air"\nunit = "mol/mol"\n'
     'random = {}\nsystematic = { relative_pct = 1 }\ncycle = "1min"\nmax_age = "5min"\nsampling = "held"\n'
@@ -361,6 +362,46 @@ BAD = {
     "an actual volume flow without its temperature": (
         with_edit('temperature = "TI-212"\n', ""),
         "instrument[FI-210].temperature", "missing for kind 'actual volume flow'", 'temperature = "TI-212"',
+    ),
+    "a differential pressure flow without its molar mass": (
+        after('name = "FI-201"', 'kind = "mass flow"', 'kind = "differential pressure flow"'),
+        "instrument[FI-201].design_molar_mass", "missing for kind 'differential pressure flow'", "write design_molar_mass = 18.0",
+    ),
+    "a molar mass in grams per gram": (
+        after('name = "FI-201"', 'kind = "mass flow"', 'kind = "differential pressure flow"\ndesign_molar_mass = 0.056'),
+        "instrument[FI-201].design_molar_mass", "must be 1 to 1000, got 0.056", "write for example design_molar_mass = 18.0",
+    ),
+    "a molar mass of a plain mass flow": (
+        after('name = "FI-201"', 'kind = "mass flow"', 'kind = "mass flow"\ndesign_molar_mass = 56.1'),
+        "instrument[FI-201].design_molar_mass", "does not go with kind 'mass flow'", "remove it, or mend kind",
+    ),
+    "a design without the temperature at hand": (
+        after('name = "FI-201"', 'kind = "mass flow"', DESIGNED + 'design = "20 degC, 300 kPa"\npressure = "PI-211"'),
+        "instrument[FI-201].temperature", "missing beside design and pressure", "or leave all three out",
+    ),
+    "a pressure without the design it is compared with": (
+        after('name = "FI-201"', 'kind = "mass flow"', DESIGNED + 'pressure = "PI-211"\ntemperature = "TI-212"'),
+        "instrument[FI-201].design", "missing beside pressure and temperature", 'write design = "180 degC, 350 kPa"',
+    ),
+    "a design in words": (
+        after('name = "FI-201"', 'kind = "mass flow"', DESIGNED + 'design = "hot"\npressure = "PI-211"\ntemperature = "TI-212"'),
+        "instrument[FI-201].design", "'hot' states no temperature and pressure", 'as design = "180 degC, 350 kPa"',
+    ),
+    "a design in gauge pressure": (
+        after('name = "FI-201"', 'kind = "mass flow"', DESIGNED + 'design = "20 degC, 3 barg"\npressure = "PI-211"\ntemperature = "TI-212"'),
+        "instrument[FI-201].design", "gauge pressure of no stated atmosphere", 'as design = "180 degC, 350 kPa"',
+    ),
+    "a mass at reference conditions": (
+        after('name = "FI-201"', 'kind = "mass flow"', DESIGNED + 'reference = "0 degC, 101.325 kPa"'),
+        "instrument[FI-201].reference", "a mass needs no reference", "remove it, or mend unit",
+    ),
+    "a design volume of no stated reference": (
+        after('name = "FI-202"', 'kind = "volume flow"', DESIGNED.strip()).replace('reference = "0 degC, 101.325 kPa"\n', ""),
+        "instrument[FI-202].unit", "'m3/h' states no reference conditions", '"0 degC, 101.325 kPa" (DIN 1343)',
+    ),
+    "a volume at flowing conditions without the design": (
+        after('name = "FI-202"', 'kind = "volume flow"', DESIGNED.strip()).replace("0 degC, 101.325 kPa", "flowing"),
+        "instrument[FI-202].unit", "'m3/h' at flowing conditions needs the design", 'write design = "180 degC, 350 kPa"',
     ),
     "a pressure that is a temperature": (
         with_edit('pressure = "PI-211"', 'pressure = "TI-212"'),

@@ -50,6 +50,11 @@ KINDS = {
         {"species": ()},
         lambda: sum(MASS[s] * flow_of("outlet", s) for t, s in STATE if t == "outlet"),
     ),
+    "differential pressure flow": (
+        # the mean of what mass and moles make of the design molar mass of 25
+        {"species": (), "design_molar_mass_kg_kmol": 25.0},
+        lambda: sum((MASS[s] / 25.0 + 1) / 2 * flow_of("outlet", s) for t, s in STATE if t == "outlet"),
+    ),
     "species flow": ({}, lambda: flow_of("outlet", "oxygen")),
     "mole fraction": (
         {},
