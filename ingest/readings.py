@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, fields
 from pathlib import Path
 from typing import Any
@@ -252,13 +253,62 @@ def read_months(paths: Iterable[Path], tags: Iterable[str], first_us: int, last_
     dict of str to Series
         Tags without a reading in the span are left out.
     """
-    pieces: dict[str, list[Series]] = {tag: [] for tag in tags}
-    for path in paths:
-        for tag, series in _read_file(path, pieces.keys()):
+    wanted = list(tags)
+    return in_span([read_month(path, wanted) for path in paths], first_us, last_us)
+
+
+def read_month(path: Path, tags: Iterable[str]) -> Readings:
+    """Read the readings of some tags back from one month file; only their row groups are read.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+    tags : iterable of str
+        The tags wanted.
+
+    Returns
+    -------
+    dict of str to Series
+        In the order of the tags wanted; tags that the file does not hold are left out.
+    """
+    with _month(path) as file:
+        groups = {tag: group for group, tag in enumerate(_tags_of(file))}
+        return {tag: _series(file.read_row_group(groups[tag])) for tag in tags if tag in groups}
+
+
+def month_tags(path: Path) -> tuple[str, ...]:
+    """List the tags that a month file holds readings of, without reading these.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+    """
+    with _month(path) as file:
+        return _tags_of(file)
+
+
+def in_span(months: Iterable[Readings], first_us: int, last_us: int) -> Readings:
+    """Join the readings of a span of time.
+
+    Parameters
+    ----------
+    months : iterable of dict of str to Series
+        In any order; no two hold the same tag and time.
+    first_us, last_us : int
+        first_us <= time < last_us [us since the epoch, UTC].
+
+    Returns
+    -------
+    dict of str to Series
+        Tags without a reading in the span are left out.
+    """
+    pieces: dict[str, list[Series]] = {}
+    for month in months:
+        for tag, series in month.items():
             low, high = np.searchsorted(series.time, [first_us, last_us])
             if high > low:
-                pieces[tag].append(series.take(slice(low, high)))
-    ordered = {tag: sorted(parts, key=lambda s: int(s.time[0])) for tag, parts in pieces.items() if parts}
+                pieces.setdefault(tag, []).append(series.take(slice(low, high)))
+    ordered = {tag: sorted(parts, key=lambda s: int(s.time[0])) for tag, parts in pieces.items()}
     return {tag: concatenated(parts) for tag, parts in ordered.items()}
 
 
@@ -308,18 +358,21 @@ def _table(tag: str, series: Series) -> Any:
     return pa.Table.from_arrays(columns, schema=_SCHEMA)
 
 
-def _read_file(path: Path, wanted: Iterable[str]) -> list[tuple[str, Series]]:
-    """The wanted tags of one month file; only their row groups are read."""
+@contextmanager
+def _month(path: Path) -> Iterator[pq.ParquetFile]:
+    """Open a month file; a damaged one is told as such."""
     try:
         with pq.ParquetFile(path) as file:
-            tags = json.loads(file.metadata.metadata[_TAGS])
-            groups = {tag: group for group, tag in enumerate(tags)}
-            return [(tag, _series(file.read_row_group(groups[tag]))) for tag in wanted if tag in groups]
+            yield file
     except (OSError, KeyError, TypeError, pa.ArrowException) as error:
         raise StoreError(
             f"{path.name}: not a whole month of readings ({type(error).__name__})",
             remedy="Run 'outlet verify' to see which files of the store are damaged.",
         ) from error
+
+
+def _tags_of(file: pq.ParquetFile) -> tuple[str, ...]:
+    return tuple(json.loads(file.metadata.metadata[_TAGS]))
 
 
 def _series(table: Any) -> Series:

@@ -10,6 +10,8 @@ import hashlib
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, fields, replace
 from datetime import timedelta
+from functools import lru_cache
+from pathlib import Path
 
 import numpy as np
 import pyarrow as pa
@@ -29,9 +31,8 @@ from ingest.cells import (
 )
 from ingest.parts import month_edges, month_of, times_us
 from ingest.passes import Pass
-from ingest.readings import Readings, read_months
+from ingest.readings import Readings, in_span, month_tags, read_month
 from ingest.snapshot import Snapshot
-from monitor.layout import table_of
 from monitor.months import Month, Plan, work
 
 METHOD = "1"  # to be raised when the same readings and unit file give other numbers: all months become due
@@ -39,6 +40,7 @@ PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored
 DERIVED = ("cells", "states", "figures-")
 _US = timedelta(microseconds=1)
 Progress = Callable[[str, int, int], None]
+Read = Callable[[Path], Readings]
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,7 +79,9 @@ def catch_up(
     anew = not known or _mark(plan) != _mark_of(before, unit)
     if not (anew or touched):
         return Worked()
-    record = _record(plan, pass_.view(), () if anew else known, touched)
+    # A month needs some minutes of its neighbours: in the order of time each file is then read once.
+    read: Read = lru_cache(maxsize=2)(lambda path: read_month(path, _tags(plan)))
+    record = _record(plan, pass_.view(), () if anew else known, touched, read)
     if anew:
         _forget(pass_, unit)
         start = pa.array([0], pa.timestamp("us", "UTC"))
@@ -89,7 +93,7 @@ def catch_up(
     while due:
         month = due.pop(0)
         progress(unit, len(worked.months), len(worked.months) + 1 + len(due))
-        made = _work(pass_, plan, record, month)
+        made = _work(pass_, plan, record, month, read)
         _write(pass_, unit, month, made)
         worked = Worked((*worked.months, month), worked.cells + made.cells, worked.solved + made.solved)
         following = next((later for later in record.months if later > month), None)
@@ -120,21 +124,28 @@ class _Record:
         return first, max(first, min(after, self.last_us)) if month in self.read else first, after
 
 
-def _record(plan: Plan, view: Snapshot, known: Sequence[str], touched: Sequence[Span]) -> _Record | None:
+def _record(
+    plan: Plan, view: Snapshot, known: Sequence[str], touched: Sequence[Span], read: Read
+) -> _Record | None:
     """Tell what time the readings of a unit cover, given months that are known to have some."""
+    tags = set(_tags(plan))
     new = {month for first, last in touched for month in _months_of(first, last)}
     inner = {*known, *new} if known else set()
 
+    def file_of(month: str) -> Path:
+        edges = month_edges(month)
+        return view.paths(SITE, STAGE, first=edges[0], last=edges[1])[0]
+
     def holds(month: str) -> bool:
         inside = bool(known) and known[0] <= month <= known[-1]
-        return month in inner if inside else bool(_readings(plan, view, *month_edges(month)))
+        return month in inner if inside else not tags.isdisjoint(month_tags(file_of(month)))
 
-    read = [month for month in view.months(SITE, STAGE) if holds(month)]
-    if not read:
+    months = [month for month in view.months(SITE, STAGE) if holds(month)]
+    if not months:
         return None
-    first = min(int(series.time[0]) for series in _readings(plan, view, *month_edges(read[0])).values())
-    last = max(int(series.time[-1]) for series in _readings(plan, view, *month_edges(read[-1])).values())
-    return _Record(first // plan.cell_us * plan.cell_us, last, tuple(read))
+    first = min(int(series.time[0]) for series in read(file_of(months[0])).values())
+    last = max(int(series.time[-1]) for series in read(file_of(months[-1])).values())
+    return _Record(first // plan.cell_us * plan.cell_us, last, tuple(months))
 
 
 def _months_of(first: int, last: int) -> Iterator[str]:
@@ -169,18 +180,17 @@ def _starts(view: Snapshot, unit: str, month: str) -> NDArray[np.int64]:
     return times_us(view.read(unit, "cells", first=first, last=last, columns=["start"]))
 
 
-def _readings(plan: Plan, view: Snapshot, first: int, last: int) -> Readings:
-    """Read the readings of a unit with first <= t < last; tags without any are not there."""
-    tags = [one.tag for one in plan.unit.instruments if one.tag is not None]
-    return read_months(view.paths(SITE, STAGE, first=first, last=last), tags, first, last)
+def _tags(plan: Plan) -> list[str]:
+    """List the tags of a unit."""
+    return [one.tag for one in plan.unit.instruments if one.tag is not None]
 
 
-def _work(pass_: Pass, plan: Plan, record: _Record, month: str) -> Month:
+def _work(pass_: Pass, plan: Plan, record: _Record, month: str, read: Read) -> Month:
     """Gather what a month needs and work it out."""
     unit, view = plan.unit, pass_.view()
     first, last, after = record.edges(month)
     since, until = first - look_back(unit) // _US, last + reach(unit) // _US + 1
-    readings = _readings(plan, view, since, until)
+    readings = in_span(map(read, view.paths(SITE, STAGE, first=since, last=until)), since, until)
     carried = _carried_at(view, unit.key, first)
     return work(
         plan, readings, (first, last, after), before=_cells_before(view, plan, first), carried=carried
@@ -238,8 +248,8 @@ def _write(pass_: Pass, unit: str, month: str, made: Month) -> None:
     gone = {s for u, s, m in pass_.view().parts if (u, m) == (unit, month) and s.startswith(DERIVED)}
     for stage in gone - made.stages.keys():
         pass_.write(unit, stage, month, pa.table({}))
-    for stage, frame in made.stages.items():
-        pass_.write(unit, stage, month, table_of(frame))
+    for stage, table in made.stages.items():
+        pass_.write(unit, stage, month, table)
 
 
 def _forget(pass_: Pass, unit: str) -> None:

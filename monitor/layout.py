@@ -19,6 +19,8 @@ from numpy.typing import NDArray
 
 from ingest.balance import Problem
 from ingest.reconcile import States
+from monitor.figures import Figure
+from monitor.windows import MODES, Judged
 
 BAR = " | "
 FIGURE_LEVELS = ("figure", "mode", "field")
@@ -91,23 +93,30 @@ def instrument_frame(frame: pd.DataFrame, field: str, names: Sequence[str]) -> p
     return frame[[f"{field} {name}" for name in names]].set_axis(list(names), axis=1)
 
 
-def flat(figures: pd.DataFrame) -> pd.DataFrame:
-    """Give windowed figures one flat column per figure, mode and field; numbers as float32.
+def figure_table(figures: Sequence[Figure], ends_us: NDArray[np.int64], judged: Judged) -> pa.Table:
+    """Lay windowed figures out as they are stored: a flat column per figure, mode and field; float32.
 
     Parameters
     ----------
-    figures : DataFrame
-        Columns (figure, mode, field), as `windows.window_figures` gives them.
+    figures : sequence of Figure
+    ends_us : ndarray of int64, shape (t,)
+        Window ends [us UTC].
+    judged : dict of str to ndarray
+        As `windows.judged_windows` gives it for one window.
 
     Returns
     -------
-    DataFrame
-        The same rows; columns `<figure> | <mode> | <field>`.
+    pyarrow.Table, t rows
+        `end`, then the columns `<figure> | <mode> | <field>`.
     """
-    names = [BAR.join(levels) for levels in figures.columns.to_list()]
-    arrays = [series.to_numpy() for _, series in figures.items()]
-    short = [one.astype(np.float32) if one.dtype == np.float64 else one for one in arrays]
-    return pd.DataFrame(dict(zip(names, short, strict=True)), index=figures.index)
+    rooms = {field: room if field == "reason" else room.astype(np.float32) for field, room in judged.items()}
+    columns = {
+        BAR.join((figure.name, mode, field)): pa.array(room[f, m])
+        for f, figure in enumerate(figures)
+        for m, mode in enumerate(MODES)
+        for field, room in rooms.items()
+    }
+    return pa.table({"end": _instants(ends_us), **columns})
 
 
 def unflat(frame: pd.DataFrame) -> pd.DataFrame:
@@ -116,7 +125,7 @@ def unflat(frame: pd.DataFrame) -> pd.DataFrame:
     Parameters
     ----------
     frame : DataFrame
-        As `flat` gives it, or some of its columns.
+        As `figure_table` lays it out, index `end`, or some of its columns.
 
     Returns
     -------
@@ -141,11 +150,13 @@ def table_of(frame: pd.DataFrame) -> pa.Table:
     -------
     pyarrow.Table
     """
-    label = pa.array(pd.DatetimeIndex(frame.index).as_unit("us").asi8, pa.int64()).cast(
-        pa.timestamp("us", "UTC")
-    )
+    label = _instants(pd.DatetimeIndex(frame.index).as_unit("us").asi8)
     columns = {str(name): pa.array(column.to_numpy()) for name, column in frame.items()}
     return pa.table({str(frame.index.name): label, **columns})
+
+
+def _instants(time_us: NDArray[np.int64]) -> pa.Array:
+    return pa.array(time_us, pa.int64()).cast(pa.timestamp("us", "UTC"))
 
 
 def utc_index(time_us: NDArray[np.int64], name: str) -> pd.DatetimeIndex:

@@ -13,19 +13,20 @@ from datetime import timedelta
 from typing import Any
 
 import numpy as np
-import pandas as pd
+import pyarrow as pa
+from numpy.typing import NDArray
 
 from ingest.balance import Problem, problem_of
 from ingest.cells import Carried, Cells, cells_frame, make_cells
 from ingest.errors import Problem as Fault
 from ingest.errors import UnitFileError
 from ingest.readings import Readings
-from ingest.reconcile import STATUS, States
+from ingest.reconcile import STATUS
 from ingest.unit import Unit
 from monitor.amounts import Amounts, amount_names, amounts_of
 from monitor.figures import Figure, figures_of
-from monitor.layout import figure_stage, flat, states_frame
-from monitor.windows import window_figures
+from monitor.layout import figure_stage, figure_table, states_frame, table_of
+from monitor.windows import judged_windows
 
 PIECE = 8192  # cells reconciled in one go; keeps the errors of one piece within some tens of MB
 PER_CELL = ("start", "kmol", "random", "systematic", "operating")
@@ -55,9 +56,9 @@ class Plan:
 
 @dataclass(frozen=True, slots=True)
 class Month:
-    """What one month holds: a frame for each stage as it is stored, its cells, and how many were solved."""
+    """What one month holds: a table for each stage as it is stored, its cells, and how many were solved."""
 
-    stages: Mapping[str, pd.DataFrame]
+    stages: Mapping[str, pa.Table]
     cells: int
     solved: int
 
@@ -119,8 +120,9 @@ def work(
     """
     first, last, after = edges
     cells = make_cells(plan.unit, readings, first, last, carried=carried)
-    states: list[States] = []
-    figures: list[dict[timedelta, pd.DataFrame]] = []
+    states: list[pa.Table] = []
+    figures: list[dict[timedelta, pa.Table]] = []
+    solved = 0
     held, unsolved = None, np.zeros(0, dtype=bool)
     for piece in (*_pieces(before), *_pieces(cells)):
         begin = int(piece.start[0])
@@ -129,13 +131,14 @@ def work(
         unsolved = np.concatenate([unsolved, found.status == UNSOLVED])[-len(held.start) :]
         since = max(begin, first - plan.cell_us)
         if piece.start[-1] >= since:
-            figures.append(window_figures(plan.unit, held, plan.figures, since_us=since, unsolved=unsolved))
+            figures.append(_figures(plan, held, since, after, unsolved))
         if begin >= first:
-            states.append(found)
-    stages = {"cells": cells_frame(plan.unit, cells)}
-    stages |= {"states": pd.concat([states_frame(plan.problem, one) for one in states])} if states else {}
-    stages |= {figure_stage(window): frame for window, frame in _of_month(figures, after).items()}
-    solved = sum(int((one.status == SOLVED).sum()) for one in states)
+            states.append(table_of(states_frame(plan.problem, found)))
+            solved += int((found.status == SOLVED).sum())
+    stages = {"cells": table_of(cells_frame(plan.unit, cells))}
+    stages |= {"states": pa.concat_tables(states)} if states else {}
+    for window in figures[0] if figures else ():
+        stages[figure_stage(window)] = pa.concat_tables([part[window] for part in figures])
     return Month(stages, len(cells.start), solved)
 
 
@@ -175,9 +178,10 @@ def _joined(earlier: Amounts, later: Amounts) -> Amounts:
     return replace(later, **pairs)
 
 
-def _of_month(parts: list[dict[timedelta, pd.DataFrame]], after: int) -> dict[timedelta, pd.DataFrame]:
-    """Join the figures of all pieces; the window that ends with the month belongs to the next one."""
-    windows = parts[0] if parts else {}
-    joined = {window: pd.concat([part[window] for part in parts]) for window in windows}
-    end = pd.Timestamp(after, unit="us", tz="UTC")
-    return {window: flat(frame[frame.index < end]) for window, frame in joined.items()}
+def _figures(
+    plan: Plan, amounts: Amounts, since: int, after: int, unsolved: NDArray[np.bool_]
+) -> dict[timedelta, pa.Table]:
+    """Lay out the figures from an instant on; a window that ends with the month belongs to the next one."""
+    ends_us, judged = judged_windows(plan.unit, amounts, plan.figures, since_us=since, unsolved=unsolved)
+    rows = int(np.searchsorted(ends_us, after))
+    return {window: figure_table(plan.figures, ends_us, one).slice(0, rows) for window, one in judged.items()}

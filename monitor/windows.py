@@ -96,6 +96,35 @@ def window_figures(
     since_us: int | None = None,
     unsolved: Mask | None = None,
 ) -> dict[timedelta, pd.DataFrame]:
+    """Every figure over every window of the unit, at the end of each cell, as frames.
+
+    Parameters
+    ----------
+    unit : Unit
+    amounts : Amounts
+    figures : sequence of Figure
+    since_us : int, optional
+    unsolved : ndarray of bool, shape (t,), optional
+        All as in `judged_windows`.
+
+    Returns
+    -------
+    dict of timedelta to DataFrame
+        Index `end`: window ends [UTC]. Columns (figure, mode, field), as in `judged_windows`.
+    """
+    ends_us, judged = judged_windows(unit, amounts, figures, since_us=since_us, unsolved=unsolved)
+    ends = _utc(ends_us, "end")
+    return {window: _frame(figures, one, ends) for window, one in judged.items()}
+
+
+def judged_windows(
+    unit: Unit,
+    amounts: Amounts,
+    figures: Sequence[Figure],
+    *,
+    since_us: int | None = None,
+    unsolved: Mask | None = None,
+) -> tuple[NDArray[np.int64], dict[timedelta, Judged]]:
     """Every figure over every window of the unit, at the end of each cell.
 
     The result for a cell depends on the cells of its longest window only: given those, any chunk gives
@@ -116,10 +145,12 @@ def window_figures(
 
     Returns
     -------
-    dict of timedelta to DataFrame
-        Index `end`: window ends [UTC]. Columns (figure, mode, field) with mode as in `MODES` and field as
-        in `FIELDS`; value and half_width (95 %) in the figure's unit, NaN where `reason`, an index into
-        `REASONS`, is not 0; coverage 0 to 1, NaN without running time.
+    ends_us : ndarray of int64, shape (rows,)
+        Window ends [us UTC].
+    judged : dict of timedelta to dict of str to ndarray
+        Each field of `FIELDS` as an array (figures, modes as in `MODES`, rows); value and half_width (95 %)
+        in the figure's unit, NaN where `reason`, an index into `REASONS`, is not 0; coverage 0 to 1, NaN
+        without running time.
     """
     job = _job(unit, amounts, figures, unsolved)
     lengths = [max(1, round(window / unit.cell)) for window in unit.windows]
@@ -129,8 +160,8 @@ def window_figures(
         spans = _Spans(rolling(lengths, begin - carried), tuple(np.array([one]) for one in lengths))
         rows = slice(begin - first, end - first)
         _judge(job, slice(carried, end), spans, [_part(one, rows) for one in judged])
-    ends = _utc(amounts.start[first:] + unit.cell // timedelta(microseconds=1), "end")
-    return {window: _frame(job, one, ends) for window, one in zip(unit.windows, judged, strict=True)}
+    ends_us = amounts.start[first:] + unit.cell // timedelta(microseconds=1)
+    return ends_us, dict(zip(unit.windows, judged, strict=True))
 
 
 def span_figures(
@@ -164,7 +195,7 @@ def span_figures(
         make t and h].
     """
     job = _job(unit, amounts, figures, unsolved)
-    return _frame(job, _spanned(job, edges_us), _utc(edges_us[:-1], "start"))
+    return _frame(figures, _spanned(job, edges_us), _utc(edges_us[:-1], "start"))
 
 
 def window_at(
@@ -417,14 +448,12 @@ def _part(judged: Judged, rows: slice) -> Judged:
     return {field: room[:, :, rows] for field, room in judged.items()}
 
 
-def _frame(job: _Job, judged: Judged, index: pd.DatetimeIndex) -> pd.DataFrame:
+def _frame(figures: Sequence[Figure], judged: Judged, index: pd.DatetimeIndex) -> pd.DataFrame:
     """Lay figures out as columns (figure, mode, field)."""
-    columns = [
-        room[f, m] for f in range(len(job.figures)) for m in range(len(MODES)) for room in judged.values()
-    ]
+    columns = [room[f, m] for f in range(len(figures)) for m in range(len(MODES)) for room in judged.values()]
     # Stacking the columns by kind, as pandas does with a copy, would cost a third of the whole time.
     frame = pd.DataFrame(dict(enumerate(columns)), index=index, copy=False)
-    frame.columns = _product([one.name for one in job.figures], tuple(judged))
+    frame.columns = _product([one.name for one in figures], tuple(judged))
     return frame
 
 

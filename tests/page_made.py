@@ -17,7 +17,7 @@ from ingest.unit import Unit
 from ingest.unitfile import load
 from monitor.amounts import amount_names
 from monitor.figures import figures_of
-from monitor.layout import figure_stage, flat
+from monitor.layout import BAR, figure_stage
 from monitor.windows import FIELDS, MODES, REASONS
 
 DEMO = Path(__file__).parents[1] / "config" / "demo.toml"
@@ -130,7 +130,9 @@ def fill(
     start = clock(days, end)
     idle = down(start, off)
     frames = {"cells": made_cells(of, start, idle), "states": states_frame(of, start, idle)}
-    frames |= {figure_stage(w): flat(figure_frame(of, start, idle, w, drop)) for w in of.windows}
+    for window in of.windows:
+        figures = figure_frame(of, start, idle, window, drop)
+        frames[figure_stage(window)] = figures.set_axis([BAR.join(name) for name in figures.columns], axis=1)
     with Store(folder).begin() as pass_:
         for stage, frame in frames.items():
             pass_.splice(
