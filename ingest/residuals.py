@@ -234,7 +234,7 @@ def change(now: Residuals, baseline: Residuals, allowance: Floats) -> Residuals:
     now : Residuals
         The w windows.
     baseline : Residuals
-        One window: the healthy period.
+        One window: the healthy period. Without a residual in it nothing can be tested.
     allowance : array (h,)
         Standard deviation by which each cause may have moved on its own since then, in units of the cause
         (calibration drift of an instrument as a fraction of its reading); 0 for none.
@@ -245,5 +245,6 @@ def change(now: Residuals, baseline: Residuals, allowance: Floats) -> Residuals:
         pull=now.pull - baseline.pull,
         random=now.random + baseline.random + drift @ drift.transpose(0, 2, 1),
         systematic=now.systematic - baseline.systematic,
+        freedom=np.where(baseline.freedom > 0, now.freedom, np.int16(0)),
         coverage=np.minimum(now.coverage, baseline.coverage),
     )

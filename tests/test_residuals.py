@@ -17,7 +17,7 @@ from ingest.balance import problem, sight
 from ingest.causes import Causes, calibration_drift
 from ingest.reconcile import solve
 from ingest.residuals import Residuals, cell_residuals, change, cycles_in_cells, windowed
-from ingest.suspects import biases, global_test, power, sidak, visible_sizes
+from ingest.suspects import biases, eliminate, global_test, power, sidak, visible_sizes
 from tests.balances_made import made_flows, made_readings
 from tests.residuals_made import (
     DEMO,
@@ -31,6 +31,7 @@ from tests.residuals_made import (
     healthy,
     of_cells,
     with_cycle,
+    with_errors,
 )
 
 INSTRUMENTS = len(PROBLEM.names)
@@ -138,29 +139,76 @@ def test_healthy_windows_of_an_hour_raise_a_false_alarm_in_5_of_100(cycle):
     assert 0.04 <= np.mean(told) <= 0.06
 
 
-def changed_alarms(unit, record, *, baseline, windows, length) -> float:
-    """Alarms among windows as changes from the baseline before them, calibration drifted for every window."""
-    value = healthy(baseline + windows * length, record, unit, 1)
-    later = value[baseline:].reshape(windows, length, -1)
-    value[baseline:] = drifted(later, record, unit).reshape(windows * length, -1)
+def changes(unit, record, *, baseline, windows, length, later=(0.9, 0.98), sick=None) -> Residuals:
+    """Windows as changes from the baseline before them, calibration drifted anew for every window.
+
+    Conversions lie in 0.90 to 0.98 before and in `later` after; `sick` is a bias (name, size) that comes.
+    """
+    flows = [
+        made_flows(PROBLEM.state, count, (*record, count), conversion=conversion)
+        for count, conversion in ((baseline, (0.9, 0.98)), (windows * length, later))
+    ]
+    shown = np.concatenate([error_free(unit, flow) for flow in flows])
+    value = with_errors(unit, shown, 1, np.random.default_rng((*record, 1)))
+    after = drifted(value[baseline:].reshape(windows, length, -1), record, unit)
+    value[baseline:] = after.reshape(windows * length, -1)
+    if sick:
+        value[baseline:] = biased(value[baseline:], *sick, unit)
     cells = demo_cells(value, unit)
     allowance = calibration_drift(unit, demo_causes(demo_readings(value[:1], unit), unit))
     now = windowed(cells, baseline + np.arange(windows) * length, length)
-    return alarms(change(now, windowed(cells, np.array([0]), baseline), allowance))
+    return change(now, windowed(cells, np.array([0]), baseline), allowance)
 
 
 @pytest.mark.parametrize("cycle", [timedelta(minutes=6), timedelta(minutes=30)], ids=["fresh", "held"])
 def test_healthy_changes_raise_a_false_alarm_in_5_of_100(cycle):
     # 4,000 windows of one hour against 12 h before them, calibration drifting by what is allowed for
     unit = with_cycle(cycle)
-    told = [changed_alarms(unit, (10, i), baseline=72, windows=20, length=6) for i in range(200)]
+    told = [alarms(changes(unit, (10, i), baseline=72, windows=20, length=6)) for i in range(200)]
     assert 0.04 <= np.mean(told) <= 0.06
 
 
 @pytest.mark.slow
 def test_healthy_changes_over_8_hours_raise_a_false_alarm_in_5_of_100():
-    told = [changed_alarms(DEMO, (11, i), baseline=144, windows=25, length=48) for i in range(100)]
+    told = [alarms(changes(DEMO, (11, i), baseline=144, windows=25, length=48)) for i in range(100)]
     assert 0.04 <= np.mean(told) <= 0.06
+
+
+@pytest.mark.slow
+def test_healthy_changes_to_another_conversion_raise_a_false_alarm_in_5_of_100():
+    # calibration errors of their stated size cancel only in part at conversions of 50 to 60 %; that is in
+    # the covariance. 1,000 records of their own calibration errors, 4 windows each
+    told = [
+        alarms(changes(DEMO, (19, i), baseline=36, windows=4, length=6, later=(0.5, 0.6)))
+        for i in range(1000)
+    ]
+    assert 0.035 <= np.mean(told) <= 0.065
+
+
+@pytest.mark.parametrize("name", ["FI-201", "AI-220 methacrolein"])
+def test_the_visible_size_of_a_change_is_that_of_theory(name):
+    # normal law: 90 of 100 windows of an hour show it, and it is 9 of 10 within a factor of 1.3
+    at = PROBLEM.names.index(name)
+    healthy_ones = changes(DEMO, (20,), baseline=72, windows=20, length=6)
+    size = float(visible_sizes(biases(healthy_ones).standard_error[:, at].mean(), INSTRUMENTS))
+    told = [
+        [_seen(changes(DEMO, (21, i), baseline=72, windows=20, length=6, sick=(name, factor * size)), at)]
+        for factor in (1 / 1.3, 1, 1.3)
+        for i in range(40)
+    ]
+    low, middle, high = np.mean(np.reshape(told, (3, 40)), axis=1)
+    assert low < 0.9 < high
+    assert middle == pytest.approx(0.9, abs=0.04)
+
+
+def test_without_a_healthy_period_no_change_is_tested():
+    value = error_free(DEMO, made_flows(PROBLEM.state, 12, 22))
+    value[:6] = np.nan
+    cells = demo_cells(value)
+    now, nothing = (windowed(cells, np.array([first]), 6) for first in (6, 0))
+    found = change(now, nothing, np.zeros(18))
+    assert np.isnan(global_test(found).p_value[0])
+    assert eliminate(found).stop == "no freedom left"
 
 
 def test_a_constant_calibration_error_of_any_size_cancels_in_the_change():
