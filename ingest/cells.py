@@ -15,15 +15,16 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from ingest.conditions import CONDITIONS, GOOD, MISSING, STALE, SUSPECTS, takes_part
+from ingest.conditions import CONDITIONS, GOOD, LARGEST, MISSING, STALE, SUSPECTS, takes_part
 from ingest.errors import StoreError
-from ingest.readings import Readings, Series, empty
+from ingest.readings import BAD, Readings, Series, empty
 from ingest.screen import looks_ahead, looks_back, screened
 from ingest.unit import Instrument, Operating, Unit
 
 OPERATING = ("running", "starting", "down", "turned down", "not known")
 RUNNING, STARTING, DOWN, TURNED_DOWN, NOT_KNOWN = range(5)
 
+LAB = "lab sample"
 LEAST_SHARE = 0.5  # below it more of the cell is unseen than seen, and its mean is no longer the cell's
 
 Floats = NDArray[np.float64]
@@ -79,6 +80,9 @@ RULES = {
     "interpolated": _Rule(False, False, False, True, "compressed exports keep points where slopes change"),
     "mean at end": _Rule(True, False, True, False, "the mean of the interval that the stamp closes"),
     "mean at start": _Rule(False, False, True, False, "the mean of the interval that the stamp opens"),
+    "lab sample": _Rule(
+        False, False, False, False, "a result is valid from its sample on, however often shown"
+    ),
 }
 
 
@@ -129,7 +133,7 @@ def look_back(unit: Unit) -> timedelta:
         Hold, then the time a silent signal counts as stale, then what the checks need to be sure.
     """
     needs = [
-        (t.hold_us + t.stale_us) * _US + looks_back(unit, i)
+        (t.hold_us + t.stale_us) * _US + looks_back(unit, i) + _again(i)
         for i in unit.instruments
         if i.tag is not None
         for t in (_timing(i),)
@@ -374,7 +378,22 @@ def _near(unit: Unit, readings: Readings, grid: _Grid) -> Readings:
         series = readings.get(tag) or empty()
         begin, end = np.searchsorted(series.time, [first, last])
         near[tag] = series.take(slice(begin, end))
+    for one in unit.instruments:
+        if one.tag is not None and one.sampling == LAB:
+            near[one.tag] = _results(near[one.tag], _again(one))
     return near
+
+
+def _again(instrument: Instrument) -> timedelta:
+    """How soon after it the same value is the same lab result, shown once more; none for other samplings."""
+    return instrument.cycle / 2 if instrument.sampling == LAB else timedelta(0)
+
+
+def _results(series: Series, again: timedelta) -> Series:
+    """The results of a lab, each once: an export repeats the last one, or writes words until the next."""
+    told = series.take((np.abs(series.value) < LARGEST) & (series.quality != BAD))
+    shown = (np.diff(told.value) == 0) & (np.diff(told.time) < again // _US)
+    return told.take(np.concatenate([[True], ~shown])[: len(told)])
 
 
 def _pieces_of(

@@ -153,7 +153,8 @@ def _status(analyzer: Entry) -> Entry:
     """Make a signal of the status of an analyzer, so that its tag is read and screened like any other."""
     stated = analyzer.get("status")
     values = {"kind": "signal", "unit": "-", "sampling": "held", "tag": stated["tag"]}
-    values |= {"max_age": stated["max_age"], "cycle": stated["max_age"]}
+    # It holds from its stamp on: a cycle would move it, and a status has none.
+    values |= {"max_age": stated["max_age"], "cycle": timedelta(seconds=1)}
     if name := analyzer.get("name"):
         values["name"] = f"{name} status"
     return Entry(f"{analyzer.place}.status", values)

@@ -192,7 +192,7 @@ def _a_tag_has_its_timing(entry: Entry, _draft: Draft) -> Iterator[Problem]:
         if entry.get("value") is not None and entry.get("tag") is None and key in entry.values:
             yield Problem(entry.at(key), "a declared value has no timing", "remove it")
     cycle, max_age = entry.get("cycle"), entry.get("max_age")
-    if cycle and max_age and max_age < cycle:
+    if cycle and max_age and max_age < cycle and entry.get("sampling") != "lab sample":
         what = f"shorter than the cycle of {quantities.duration_words(cycle)}"
         yield Problem(entry.at("max_age"), what, "write at least one cycle")
     if is_fraction(entry) and entry.get("sampling") == "interpolated":

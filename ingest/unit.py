@@ -15,7 +15,7 @@ BALANCE_KINDS = (*FLOW_KINDS, *FRACTION_KINDS, "species flow", "flow ratio")
 AUXILIARY_KINDS = ("pressure", "temperature", "signal")
 KINDS = (*BALANCE_KINDS, *AUXILIARY_KINDS)
 
-SAMPLINGS = ("held", "interpolated", "mean at end", "mean at start")
+SAMPLINGS = ("held", "interpolated", "mean at end", "mean at start", "lab sample")
 PRIORITIES = ("high", "medium", "low")
 REACTORS = ("well-mixed", "packed bed", "batch")
 ROLES = ("fresh feed", "recycle")

@@ -10,6 +10,7 @@ from __future__ import annotations
 import sys
 
 from ingest import keys, quantities
+from ingest.cells import RULES
 from ingest.checks import CHECKS
 from ingest.conditions import CONDITIONS, GOOD
 from ingest.instrumentrules import KIND_RULES
@@ -66,6 +67,12 @@ ABOUT = {
 }
 
 
+LAB_SAMPLE = (
+    "A lab sample is a tag with few results. `max_age` is how long a result is valid, counted from its sample; `dead_time`",
+    "is the time from the sample to the stamp, `cycle` the usual time between samples. A value that an export shows again",
+    "within half a cycle is the same result and renews nothing, and words or bad values between two results end nothing.",
+    "Several results of one sample go under one `[[analyzer]]`.",
+)
 DIFFERENTIAL_PRESSURE = (
     "A differential pressure flow (orifice, nozzle, Venturi) of a gas is what a meter shows that takes the density of its",
     "design for the true one. Its reading is set right by the root of the densities: by pressure and temperature where",
@@ -79,7 +86,7 @@ DIFFERENTIAL_PRESSURE = (
 def reference() -> str:
     """The whole of config/README.md."""
     sections = [_section(name, heading) for name, heading in HEADINGS.items()]
-    return "\n".join([START, *sections, _kinds(), _references(), _checks()])
+    return "\n".join([START, *sections, _samplings(), _kinds(), _references(), _checks()])
 
 
 def _section(name: str, heading: str) -> str:
@@ -130,6 +137,12 @@ def _needed(row: Key) -> str:
         return "no"
     words = row.default if isinstance(row.default, str) else str(row.default).lower().replace("'", "")
     return f"no; {words}"
+
+
+def _samplings() -> str:
+    lines = ["## What a stored value says about time", "", "| sampling | why |", "|---|---|"]
+    lines += [f"| {name} | {rule.why} |" for name, rule in RULES.items()]
+    return "\n".join([*lines, "", *LAB_SAMPLE, ""])
 
 
 def _kinds() -> str:
