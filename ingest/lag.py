@@ -4,7 +4,8 @@ What is estimated: the time from a movement of the feeds to the time stamp of th
 That is the unit file's `dead_time` (from the sample leaving the stream to its time stamp) plus what mixing in
 reactor and sample line adds, and it is compared with `dead_time` as it stands. Between two analyses a
 historian repeats the last one; that signal is later still by `held_min`, (cycle - one minute) / 2 on the
-average, and its effective lag is the sum of the two. Repeats are left out here: they are no results.
+average, and its effective lag is the sum of the two. Repeats are left out here, they are no results; and the
+cells put half a cycle on either side of a sample, so that this part belongs in no `dead_time`.
 
 The method: logs of all channels are regressed on logs of all feeds some minutes before, both without what is
 slower than two hours, since load, bath and catalyst move slowly and together whatever the lag. The noise of
@@ -168,23 +169,25 @@ def stretches(several: Sequence[Lag]) -> tuple[Lag, ...]:
     Parameters
     ----------
     several : sequence of Lag
-        Of one analyzer, ascending.
+        Of one analyzer, ascending; at least one.
 
     Returns
     -------
     tuple of Lag
         One for each stretch; a new one begins where the estimate is more than TOLERANCE_MIN from that of the
-        stretch so far. Spans without an estimate begin none and end none; where all are such there is none.
+        stretch so far. Spans without an estimate begin none and end none. Where all are such, little movement
+        in each may add up to an answer for all together; else there is none.
     """
     found: list[list[Lag]] = []
     for one in several:
         if np.isnan(one.estimate_min):
             continue
-        if found and abs(one.estimate_min - joined(found[-1]).estimate_min) <= TOLERANCE_MIN:
+        if found and _agree(found[-1], one):
             found[-1].append(one)
         else:
             found.append([one])
-    return tuple(joined(stretch) for stretch in found)
+    whole = (joined(stretch) for stretch in found or [list(several)])
+    return tuple(one for one in whole if not np.isnan(one.estimate_min))
 
 
 def gains_of(results: Floats, moved: Floats, time_h: Floats, *, slow_h: float) -> tuple[Floats, int]:
@@ -224,6 +227,12 @@ def gains_of(results: Floats, moved: Floats, time_h: Floats, *, slow_h: float) -
     # What covariance and coefficients have taken up: without it eight hours are too sure of their answer.
     counted = (free - p - j - 1) * _independent(_directions(best), scored)
     return np.asarray(-0.5 * counted * unexplained), p * j
+
+
+def _agree(so_far: Sequence[Lag], one: Lag) -> bool:
+    """Whether one more span has the lag of those so far, and all of them one answer."""
+    apart = abs(one.estimate_min - joined(so_far).estimate_min)
+    return bool(apart <= TOLERANCE_MIN and joined([*so_far, one]).answer in (AS_DECLARED, DIFFERS))
 
 
 def _lines(unit: Unit) -> Iterator[_Line]:

@@ -175,6 +175,24 @@ def page(unit_files: Sequence[Path], store: Path, port: int) -> int:
 
 
 @outlet.command()
+@click.option("--unit", "unit_file", type=_file, required=True, help="Unit file.")
+@_store
+@click.option(
+    "--days", type=click.IntRange(1, 366), default=7, show_default=True, help="The last days to look at."
+)
+@_json
+def lag(unit_file: Path, store: Path, days: int, as_json: bool) -> int:
+    """Tell how late each analyzer is by the plant's own movement. Nothing is changed."""
+    from ingest.unitfile import load
+    from monitor.delays import as_table, delays
+    from monitor.telling import delayed
+
+    found = delays(store, load(unit_file), days)
+    _print(as_table(found), delayed(found), as_json=as_json)
+    return YOURS if any(one.is_contradicted for one in found.analyzers) else FINE
+
+
+@outlet.command()
 @_store
 @_json
 def verify(store: Path, as_json: bool) -> int:

@@ -2,11 +2,15 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
+from zoneinfo import ZoneInfo
 
 from ingest.exports import Description
+from ingest.lag import AS_DECLARED, Lag
 from ingest.unit import Unit
 from monitor import wording
+from monitor.delays import Analyzer, Delays
 from monitor.judge import Judgement
 from monitor.run import Episode, PassResult
 
@@ -97,3 +101,74 @@ def _open(episode: Episode, zone: str) -> str:
     side = "below" if episode.side == "low" else "above"
     since = wording.local_time(episode.raised, zone)
     return f"{episode.watch}: {side} {wording.plain(episode.limit)} since {since} ({episode.priority})"
+
+
+def delayed(found: Delays) -> Iterator[str]:
+    """Tell how late the analyzers are: each day, then what follows from it.
+
+    Parameters
+    ----------
+    found : Delays
+        Of one unit.
+
+    Yields
+    ------
+    str
+        One line.
+    """
+    yield f"{found.name} [{found.unit}]: from a movement of the feeds to the analysis that shows it"
+    for one in found.analyzers:
+        yield f"{one.name}: declared {_minutes(one.declared_min)} min"
+        yield from (f"  {_day(day, found.time_zone)}" for day in one.days)
+    for one in found.analyzers:
+        yield from _lags(one, found.time_zone)
+    if not found.analyzers:
+        yield "the unit file has no analyzer with a tag"
+    yield "Nothing was changed: figures are worked out with the declared dead time."
+
+
+def _day(day: Lag, zone: str) -> str:
+    """Tell one local day."""
+    date = _date(day.first_us, zone)
+    if day.reason:
+        return f"{date:>11}  {day.answer}: {day.reason}"
+    return f"{date:>11}  {_estimate(day)}, {day.answer} ({day.analyses} analyses)"
+
+
+def _lags(one: Analyzer, zone: str) -> Iterator[str]:
+    """Tell each stretch of days over which the lag of an analyzer stayed, and what to do about it."""
+    if not one.stretches:
+        yield f"{one.name}: its lag could not be told on any of these days"
+    for stretch in one.stretches:
+        first = _date(stretch.first_us, zone)
+        last = _date(stretch.last_us - 1, zone)
+        first += " or before" if stretch.first_us == one.days[0].first_us else ""
+        when = f"since {first}" if stretch is one.stretches[-1] else f"from {first} to {last}"
+        if stretch.answer == AS_DECLARED:
+            yield f"{one.name}: {_estimate(stretch)} {when}, as declared"
+        else:
+            declared = f"declared {_minutes(one.declared_min)} min"
+            yield f"{one.name}: {declared}, the data say {_estimate(stretch)} {when}: {_remedy(stretch)}"
+
+
+def _remedy(stretch: Lag) -> str:
+    """Say what to do about a lag that is not the declared one."""
+    if stretch.estimate_min < 0:
+        return "results stand before their cause; check the clocks of analyzer and flow meters"
+    return f'check the sample line flow, or set dead_time = "{stretch.estimate_min:.0f}min"'
+
+
+def _estimate(lag: Lag) -> str:
+    """Write a lag with its interval in whole minutes."""
+    return f"{_minutes(lag.estimate_min)} ± {math.ceil(lag.half_width_min)} min"
+
+
+def _minutes(value: float) -> str:
+    """Write minutes as they are declared."""
+    return wording.number(value, 0 if value == round(value) else 1)
+
+
+def _date(time_us: int, zone: str) -> str:
+    """Write the local day of an instant."""
+    local = wording.utc(time_us).astimezone(ZoneInfo(zone))
+    return f"{local.day} {local:%b %Y}"

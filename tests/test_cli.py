@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import signal
 import socket
 import subprocess
@@ -117,6 +118,7 @@ def test_a_bad_unit_file_tells_all_its_faults_and_exits_with_2(tmp_path: Path):
         (("run", "--unit", UNIT_FILE, "x.csv"), "x.csv: there is no such file or folder"),
         (("describe", "x.csv", "--unit", UNIT_FILE), "x.csv: there is no such file"),
         (("verify", "--store", "nowhere"), "nowhere: there is no store here"),
+        (("lag", "--unit", UNIT_FILE, "--store", "nowhere"), "nowhere: there is no store here"),
         (("verify", "--stroe", "nowhere"), "outlet verify: No such option"),
         (("vrify",), "outlet: No such command 'vrify'"),
         (("demo", "--days", "0"), "outlet demo: Invalid value for '--days'"),
@@ -192,6 +194,46 @@ def test_verify_names_the_part_that_was_changed(plant: tuple[Path, dict[str, obj
     done = outlet("verify", "--json", folder=tmp_path)
     assert done.returncode == 2
     assert [one["file"] for one in json.loads(done.stdout)["findings"]] == [f"demo/{part.name}"]
+
+
+def test_the_dead_time_is_told_from_the_data_day_by_day(plant: tuple[Path, dict[str, object]]):
+    done = outlet("lag", "--unit", UNIT_FILE, "--store", "demo-plant/store", "--days", "3", folder=plant[0])
+    assert (done.returncode, done.stderr) == (0, "")
+    # The demo begins on 1 March 2026 and its analyzer is 4 min late (demo_data/README.md).
+    days = [line.split("  ")[1] for line in done.stdout.splitlines() if "analyses)" in line]
+    assert days == ["19 Mar 2026", "20 Mar 2026", "21 Mar 2026"]
+    assert "AI-220: 4 ± 1 min since 19 Mar 2026 or before, as declared\n" in done.stdout
+
+
+def test_a_dead_time_that_the_data_contradict_is_a_finding_and_changes_nothing(
+    plant: tuple[Path, dict[str, object]], tmp_path: Path
+):
+    store = plant[0] / "demo-plant/store"
+    held = {path: path.read_bytes() for path in store.rglob("*.parquet")}
+    text = UNIT_FILE.read_text(encoding="utf-8")
+    file = tmp_path / "demo.toml"
+    file.write_text(text.replace('dead_time = "4min"', 'dead_time = "15min"'), encoding="utf-8")
+    done = outlet("lag", "--unit", file, "--store", store, folder=tmp_path)
+    assert done.returncode == 2
+    assert "declared 15 min, the data say 4 ± 1 min since 15 Mar 2026 or before: check the" in done.stdout
+    assert done.stdout.endswith("Nothing was changed: figures are worked out with the declared dead time.\n")
+    said = json.loads(outlet("lag", "--unit", file, "--store", store, "--json", folder=tmp_path).stdout)
+    (analyzer,) = said["analyzers"]
+    assert [one["answer"] for one in analyzer["days"]] == ["differs"] * 7
+    assert analyzer["stretches"][0]["estimate_min"] == pytest.approx(4, abs=1)
+    assert {path: path.read_bytes() for path in store.rglob("*.parquet")} == held
+
+
+def test_a_store_that_holds_nothing_of_the_unit_says_how_to_fill_it(
+    plant: tuple[Path, dict[str, object]], tmp_path: Path
+):
+    file = tmp_path / "other.toml"
+    file.write_text(
+        re.sub(r'"(.I-2\d\d\.)', r'"X\1', UNIT_FILE.read_text(encoding="utf-8")), encoding="utf-8"
+    )
+    done = outlet("lag", "--unit", file, "--store", plant[0] / "demo-plant/store", folder=tmp_path)
+    assert done.returncode == 2
+    assert "holds no readings of other\n  Take exports in: outlet run --unit other.toml" in done.stderr
 
 
 @pytest.fixture

@@ -68,6 +68,7 @@ def test_without_a_common_movement_there_is_no_answer(made):
     found = judged((made(500 + 7 * run, DECLARED_MIN, DAYS) for run in range(6)), 24)
     assert {one.answer for several in found for one in several} == {"cannot tell"}
     assert all(np.isnan(one.estimate_min) for several in found for one in several)
+    assert [stretches(several) for several in found] == [()] * 6
 
 
 def test_no_day_is_called_different_where_the_declared_dead_time_is_true():
@@ -151,6 +152,16 @@ def test_a_dead_time_that_changed_makes_two_stretches():
 
 def _fields(series):
     return series.time, series.value, series.quality, series.source, series.row
+
+
+def test_spans_too_weak_for_an_answer_have_one_together():
+    span, readings = days(500, 8, DAYS)
+    weak = [one for one in lags(UNIT, readings, edges(span, 4)) if one.answer == "cannot tell"]
+    assert len(weak) > 20
+    (whole,) = stretches(weak)
+    assert (whole.answer, whole.first_us, whole.last_us) == ("differs", weak[0].first_us, weak[-1].last_us)
+    assert whole.estimate_min == pytest.approx(8, abs=1)
+    assert whole.analyses == sum(one.analyses for one in weak)
 
 
 @pytest.mark.parametrize(

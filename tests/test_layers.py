@@ -96,6 +96,7 @@ ORDER = (
     "monitor.page.app",
     "monitor.page.server",
     "monitor.judge",
+    "monitor.delays",
     "monitor.telling",
     "monitor.progress",
     "monitor.cli",
