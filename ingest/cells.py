@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from ingest.conditions import CONDITIONS, GOOD, LARGEST, MISSING, STALE, SUSPECTS, takes_part
 from ingest.errors import StoreError
 from ingest.readings import BAD, Readings, Series, empty
+from ingest.samples import sums
 from ingest.screen import looks_ahead, looks_back, screened
 from ingest.unit import Instrument, Operating, Unit
 
@@ -308,6 +309,7 @@ def cells_frame(unit: Unit, cells: Cells) -> pd.DataFrame:
     -------
     DataFrame
         Index `start` (UTC); columns `value <name>`, `share <name>`, `condition <name>` for each instrument,
+        `sum <name>` for each analyzer that states a band for the raw sum of its channels,
         and `operating`. Codes stay codes.
     """
     columns: dict[str, NDArray[np.generic]] = {}
@@ -315,6 +317,7 @@ def cells_frame(unit: Unit, cells: Cells) -> pd.DataFrame:
         columns[f"value {instrument.name}"] = cells.value[:, at]
         columns[f"share {instrument.name}"] = cells.share[:, at]
         columns[f"condition {instrument.name}"] = cells.condition[:, at]
+    columns |= {f"sum {name}": total for name, total in sums(unit, cells.value).items()}
     columns["operating"] = cells.operating
     index = pd.DatetimeIndex(cells.start.astype("datetime64[us]"), name="start").tz_localize("UTC")
     return pd.DataFrame(columns, index=index)

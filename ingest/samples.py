@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from ingest.chemistry import DRY_AIR
 from ingest.conditions import NOT_CHECKED, PASSED, REFUSED, SUSPECT, Codes
-from ingest.unit import Analyzer, Instrument
+from ingest.unit import Analyzer, Instrument, Unit
 
 SURE = 1.96  # standard uncertainties that a reading has to lie outside what is expected: 95 %
 TOO_QUIET = 0.05  # share of the spread that the stated random errors alone give to a sum nobody normalised
@@ -38,6 +38,26 @@ def raw_sum(values: Floats, analyzer: Analyzer) -> Codes:
     slack = 1e-9 * np.abs(total)  # of adding up in binary
     inside = (total >= low - slack) & (total <= high + slack)
     return np.select([np.isnan(total), inside], [NOT_CHECKED, PASSED], SUSPECT).astype(np.int8)
+
+
+def sums(unit: Unit, value: Floats) -> dict[str, Floats]:
+    """Add the channels of each analyzer up, as read, so that the sum can be followed over time.
+
+    Parameters
+    ----------
+    unit : Unit
+        m instruments.
+    value : array (t, m)
+        Cell means in the instruments' own units.
+
+    Returns
+    -------
+    dict of str to array (t,)
+        By the name of each analyzer that states a band for its sum, in the unit of its channels; NaN where a
+        channel has no value.
+    """
+    named = [one.name for one in unit.analyzers if one.sum_band]
+    return {name: value[:, [one.analyzer == name for one in unit.instruments]].sum(axis=1) for name in named}
 
 
 def is_normalised(values: Floats, members: Sequence[Instrument]) -> bool:

@@ -8,7 +8,7 @@ from datetime import timedelta
 import numpy as np
 import pytest
 
-from ingest.cells import look_back, make_cells, reach
+from ingest.cells import cells_frame, look_back, make_cells, reach
 from ingest.chemistry import DRY_AIR
 from ingest.conditions import (
     AIR_INGRESS,
@@ -237,6 +237,18 @@ def test_a_sum_out_of_its_band_is_doubted_kept_and_shown():
     cells = make_cells(unit, held, MIDNIGHT, MIDNIGHT + 40 * MINUTE)
     assert set(cells.condition[:, 1]) == {SUM_OUT_OF_BAND}
     assert np.isfinite(cells.value[:, 1]).all()
+
+
+def test_the_raw_sum_is_stored_beside_the_readings_in_their_unit():
+    unit = analyzed(sum_band=(98.0, 102.0))
+    readings = sampled([60, 61, 62, 63], [40, 42, 44, 46])
+    cells = make_cells(unit, readings, MIDNIGHT, MIDNIGHT + 30 * MINUTE)
+    frame = cells_frame(unit, cells)
+    # A result stands for 3 min about its sample, 4 min before its stamp. The second cell, minutes 10 to 20:
+    # stamp 12 until minute 11, stamp 18 from then on, so 0.1 x 62 + 0.9 x 63, and the other likewise.
+    assert frame["sum AI-2"].iloc[1] == pytest.approx(0.1 * 106 + 0.9 * 109)
+    np.testing.assert_array_equal(frame["sum AI-2"], cells.value[:, 1] + cells.value[:, 2])
+    assert not [name for name in cells_frame(made_unit(), cells) if name.startswith("sum")]
 
 
 def test_a_sum_without_one_of_its_channels_is_not_checked():
