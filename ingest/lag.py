@@ -2,7 +2,8 @@
 
 What is estimated: the time from a movement of the feeds to the time stamp of the analysis that shows it.
 That is the unit file's `dead_time` (from the sample leaving the stream to its time stamp) plus what mixing in
-reactor and sample line adds, and it is compared with `dead_time` as it stands. Between two analyses a
+reactor and sample line adds: a mean stay of 3 min about 2, one of 10 min about half, since fast movement does
+not come through. It is compared with `dead_time` as it stands. Between two analyses a
 historian repeats the last one; that signal is later still by `held_min`, (cycle - one minute) / 2 on the
 average, and its effective lag is the sum of the two. Repeats are left out here, they are no results; and the
 cells put half a cycle on either side of a sample, so that this part belongs in no `dead_time`.

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 from dataclasses import replace
 from datetime import timedelta
-from functools import cache
+from functools import lru_cache
 
 import numpy as np
 
@@ -34,7 +34,7 @@ def with_dead_time(minutes: float, unit: Unit = UNIT) -> Unit:
     return replace(unit, instruments=tuple(changed))
 
 
-@cache
+@lru_cache(maxsize=16)
 def days(seed: int, dead_min: float, count: int) -> tuple[tuple[int, int], Readings]:
     """First and last instant, and readings, of days without faults; the analyzer is late by `dead_min`."""
     truth = plant.simulate(count, seed)
