@@ -116,20 +116,22 @@ def _random(unit: Unit, readings: Measured, rates: Rates) -> tuple[Floats, tuple
     seen = balance_instruments(unit)
     hold = tuple(sorted({one.cycle for one in seen if one.random.relative or one.random.floor}))
     count, _, cells = rates.slope.shape
-    random = np.zeros((cells, len(hold), count, count))
+    random = np.empty((len(hold), count, count, cells))  # cells last: one operation for all of them
     for c, cycle in enumerate(hold):
         members = [i for i, one in enumerate(seen) if one.cycle == cycle]
-        part = amount_kmol(rates.slope[:, members] * np.nan_to_num(readings.random[members]), unit.cell)
-        ready = np.ascontiguousarray(part.transpose(2, 0, 1))
-        random[:, c] = ready @ ready.transpose(0, 2, 1)
-    return random, hold
+        part = rates.slope[:, members] * amount_kmol(np.nan_to_num(readings.random[members]), unit.cell)
+        for i in range(count):
+            np.einsum("mt,jmt->jt", part[i], part[: i + 1], out=random[c, i, : i + 1])
+            random[c, :i, i] = random[c, i, :i]
+    return random.transpose(3, 0, 1, 2), hold
 
 
 def _systematic(unit: Unit, readings: Measured, rates: Rates) -> Floats:
     """Give the change of each amount per standard systematic error, array (t, p, m + shared)."""
-    own = rates.slope * np.nan_to_num(readings.systematic)
-    shared = np.einsum("pmt,mst->pst", rates.slope, np.nan_to_num(readings.loading), optimize=True)
-    return amount_kmol(np.concatenate([own, shared], axis=1).transpose(2, 0, 1), unit.cell)
+    own = rates.slope * amount_kmol(np.nan_to_num(readings.systematic), unit.cell)
+    loading = amount_kmol(np.nan_to_num(readings.loading), unit.cell)
+    shared = np.einsum("pmt,mst->pst", rates.slope, loading, optimize=True)
+    return np.concatenate([own, shared], axis=1).transpose(2, 0, 1)
 
 
 def _reconciled_rows(unit: Unit, state: tuple[tuple[str, str], ...]) -> dict[str, Floats]:

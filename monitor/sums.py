@@ -101,7 +101,8 @@ def cell_terms(plan: Functionals, amounts: Amounts, rows: slice) -> CellTerms:
     seen &= np.isfinite(np.diagonal(random, axis1=2, axis2=3)).all(axis=1)
     parts = np.concatenate([kmol.T[:, None], systematic], axis=1)
     for amount, there in zip(parts, seen.T, strict=True):
-        amount[:, ~there] = 0.0
+        if not there.all():
+            amount[:, ~there] = 0.0
     linear = plan.weight @ parts.reshape(len(parts), -1)
     return CellTerms(
         linear=linear.reshape(len(linear), *parts.shape[1:]),
@@ -115,8 +116,8 @@ def _covariances(plan: Functionals, random: Array) -> Array:
     left, right = np.array(plan.pairs).T
     product = plan.weight[left][:, :, None] * plan.weight[right][:, None, :]  # (pairs, p, p)
     i, j = np.nonzero(product.any(axis=0))
-    entries = np.moveaxis(random[:, :, i, j], -1, 0)  # (e, t, c)
-    entries = np.where(np.isfinite(entries), entries, 0.0).transpose(0, 2, 1)
+    entries = random.transpose(2, 3, 1, 0)[i, j]  # (e, c, t)
+    entries[~np.isfinite(entries)] = 0.0
     found: Array = product[:, i, j] @ entries.reshape(len(i), -1)
     return found.reshape(len(left), *entries.shape[1:])
 

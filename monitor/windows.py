@@ -407,7 +407,8 @@ def _enter(job: _Job, out: Judged, at: tuple[int, int], sums: _Sums, time: _Runn
 def _ratio(sums: _Sums, n: int, d: int, scale: float) -> tuple[Array, Array]:
     """Value and variance of a ratio: systematic responses add before squaring, random ones after."""
     value, by_top, by_bottom = quotient(sums.linear[n][0], sums.linear[d][0], scale)
-    response = by_top * sums.linear[n][1:] + by_bottom * sums.linear[d][1:]
+    response = by_top * sums.linear[n][1:]
+    response += by_bottom * sums.linear[d][1:]
     random = (
         by_top**2 * sums.spread[n, n]
         + 2 * by_top * by_bottom * sums.spread[n, d]
