@@ -16,7 +16,8 @@ from numpy.typing import DTypeLike, NDArray
 Look = Callable[[Sequence[int]], Iterator[tuple[NDArray[np.int64], list[Any]]]]
 """Given places of columns, one block after another until the export ends: its rows' numbers, its columns."""
 
-NOTHING = (np.zeros(0, np.int64), [pa.array([], pa.string())])  # one column of a file without blocks
+# One column of a file without blocks; pa.array would import pandas here, which a look at a store need not.
+NOTHING = (np.zeros(0, np.int64), [pa.Array.from_buffers(pa.string(), 0, [None, None, None])])
 
 
 def single(column: Any) -> Any:
