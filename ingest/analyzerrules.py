@@ -115,7 +115,63 @@ def _air_can_be_told(analyzer: Entry, draft: Draft) -> Iterator[Problem]:
             yield Problem(f"{analyzer.at('air_ingress')}.{gas}", what, remedy)
 
 
+def number_of(state: float | str, draft: Draft) -> float | None:
+    """Give the number that a value of a status stands for.
+
+    Parameters
+    ----------
+    state : float or str
+        As stated: a number, or a word.
+    draft : Draft
+        The file, for its state_words.
+
+    Returns
+    -------
+    float or None
+        None for a word that is not among them.
+    """
+    if not isinstance(state, str):
+        return state
+    words = draft.once["exports"].get("state_words") or {}
+    return {_plain(word): number for word, number in words.items()}.get(_plain(state))
+
+
+def _plain(word: str) -> str:
+    """A word as exports are searched for it."""
+    return word.strip().casefold()
+
+
+def _a_status_has_known_values(analyzer: Entry, draft: Draft) -> Iterator[Problem]:
+    """A word among the values of a status is one of those that stand for a number."""
+    for state in (analyzer.get("status") or {}).get("calibrating", ()):
+        if number_of(state, draft) is None:
+            what = f"'{state}' is no number and no word of exports.state_words"
+            remedy = f"write state_words = {{ {state} = 1 }} under [exports]"
+            yield Problem(f"{analyzer.at('status')}.calibrating", what, remedy)
+
+
+def words_have_one_meaning(draft: Draft) -> Iterator[Problem]:
+    """Yield a fault for each word of an export that means two things.
+
+    Parameters
+    ----------
+    draft : Draft
+        The file.
+    """
+    exports = draft.once["exports"]
+    missing, seen = {_plain(word) for word in exports.get("missing_words") or ()}, set()
+    for word in exports.get("state_words") or {}:
+        if _plain(word) in missing:
+            what, remedy = "also stands for no reading", "take it out of missing_words or of state_words"
+            yield Problem(exports.at("state_words"), f"'{word}' {what}", remedy)
+        if _plain(word) in seen:
+            what = f"'{word}' stands twice, but for its capitals"
+            yield Problem(exports.at("state_words"), what, "name each word once")
+        seen.add(_plain(word))
+
+
 _EACH: tuple[Callable[[Entry, Draft], Iterator[Problem]], ...] = (
+    _a_status_has_known_values,
     _a_certificate_can_be_told,
     _a_sum_adds_like_to_like,
     _air_can_be_told,

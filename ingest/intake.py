@@ -62,6 +62,7 @@ class _Asked:
     def entry(self, tags: Iterable[str]) -> dict[str, Any]:
         """What the ledger keeps of it: with another one an export that was set aside is tried again."""
         rules = {**asdict(self.rules), "missing_words": list(self.rules.missing_words)}
+        rules["state_words"] = [list(pair) for pair in self.rules.state_words]
         return {"tags": sorted(tags), "rules": rules, "program": database.program_version()}
 
 

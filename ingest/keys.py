@@ -134,7 +134,7 @@ TABLE: tuple[Key, ...] = (
     Key("analyzer.channel", "species", "texts", "species counted together; left out, the one the channel is named for", '["oxygen"]'),
     *_again("analyzer.channel", _SHARED),
     Key("status", "tag", "text", "historian tag of the status", '"AI-220.CAL"', "always"),
-    Key("status", "calibrating", "states", "values of the status that mean that results are not of the stream", "[1, 2]", "always"),
+    Key("status", "calibrating", "states", "numbers, or words of state_words, that mean that results are not of the stream", "[1, 2]", "always"),
     Key("status", "max_age", "duration", "how long a status stands without a new one; where it is stored on change, the longest rest", '"26h"', "always", low=1, high=90 * _DAY),
     Key("status", "settle", "duration", "how long after a calibration results are still not of the stream", '"10min"', default="0 s", low=0, high=_DAY),
     Key("shared", "name", "text", "name of the common error", '"AI-220 span"', "always"),
@@ -159,6 +159,7 @@ TABLE: tuple[Key, ...] = (
     Key("watch", "steady", "yes or no", "watch the steady figure rather than the one as operated", "true", default=True),
     Key("exports", "time_zone", "zone", "zone of time stamps that state no offset", '"Europe/Berlin"'),
     Key("exports", "missing_words", "texts", "words in the value column that mean no reading", '["No Data"]', default=[]),
+    Key("exports", "state_words", "numbers", "words in the value column that stand for a number, such as those of a status", "{ Sample = 0, Calibrating = 1 }"),
     Key("exports", "quality", "choice", "what the quality column holds, where it does not tell by itself", '"words"', choices=QUALITIES),
     Key("exports", "date_order", "choice", "order of dates such as 03/04/2026, where a file does not tell by itself", '"day first"', choices=DATE_ORDERS),
     Key("exports", "decimal", "choice", "decimal mark of numbers such as 1,234, where a file does not tell by itself", '","', choices=DECIMALS),
@@ -438,10 +439,10 @@ def _bands(value: object, row: Key) -> dict[str, tuple[float, float]]:
     return {name: _pair(item, row) for name, item in _named(value, row).items()}
 
 
-def _states(value: object, row: Key) -> tuple[float, ...]:
+def _states(value: object, row: Key) -> tuple[float | str, ...]:
     if not isinstance(value, list) or not value:
-        raise _misfit(value, row, "a list of numbers")
-    return tuple(_number(item, row) for item in value)
+        raise _misfit(value, row, "a list of numbers or words")
+    return tuple(_text(item, row) if isinstance(item, str) else _number(item, row) for item in value)
 
 
 FORMS: dict[str, Callable[[object, Key], Any]] = {

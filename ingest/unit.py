@@ -164,6 +164,7 @@ class ExportRules:
     quality: str | None  # 'words', 'opc ua', 'opc da' or None (found out)
     date_order: str | None = None  # 'day first', 'month first' or None (found out)
     decimal: str | None = None  # ',', '.' or None (found out)
+    state_words: tuple[tuple[str, float], ...] = ()  # words in the value column, and the number of each
 
 
 @dataclass(frozen=True, slots=True)

@@ -140,6 +140,7 @@ def _build(read: Draft, key: str) -> Unit:
         exports=ExportRules(
             time_zone=exports.get("time_zone"),
             missing_words=exports.get("missing_words") or (),
+            state_words=tuple((exports.get("state_words") or {}).items()),
             quality=exports.get("quality"),
             date_order=exports.get("date_order"),
             decimal=exports.get("decimal"),
@@ -205,7 +206,9 @@ def _analyzer(entry: Entry, read: Draft) -> Analyzer:
     return Analyzer(
         name=name,
         status=f"{name} status" if status else None,
-        calibrating=status.get("calibrating", ()),
+        calibrating=tuple(
+            analyzerrules.number_of(state, read) or 0.0 for state in status.get("calibrating", ())
+        ),
         settle=status.get("settle", timedelta(0)),
         certificate=tuple((f"{name} {channel}", reading) for channel, reading in certificate.items()),
         tolerance=tolerance,

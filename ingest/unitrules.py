@@ -293,6 +293,7 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _what_enters_can_leave,
     _instruments_hold,
     analyzerrules.hold,
+    analyzerrules.words_have_one_meaning,
     _shared_errors_have_members,
     _load_limits_are_in_order,
     _watches_can_be_judged,

@@ -53,6 +53,7 @@ class Numbers:
 
     decimal: str
     missing: frozenset[str]
+    states: tuple[tuple[str, float], ...] = ()  # words that stand for a number, whatever their capitals
 
     def read(self, column: Any) -> Values:
         """Read a column of values.
@@ -87,6 +88,9 @@ class Numbers:
 
     def _from_text(self, column: Any) -> Values:
         text = pc.replace_substring(pc.utf8_trim_whitespace(column), _MINUS, "-")
+        for word, number in self.states:
+            written = pa.scalar(f"{number:.17g}".replace(".", self.decimal), text.type)
+            text = pc.if_else(pc.equal(pc.utf8_lower(text), word.strip().lower()), written, text)
         small = pc.utf8_lower(text)
         blank = flags(pc.equal(small, "")) | ~present(text)
         missing = flags(pc.is_in(small, pa.array(sorted(self.missing), small.type))) | blank
@@ -275,16 +279,16 @@ def decide_numbers(export: str, columns: Sequence[int], look: Look, rules: Expor
     for rows, block in look(columns) if columns else ():
         written = [column for column in block if is_text(column.type)]
         if not written:
-            return Numbers(".", missing)
+            return Numbers(".", missing, rules.state_words)
         mark = _mark(written, settled=rules.decimal is not None)
         if mark is not None and rules.decimal in (None, mark):
-            return Numbers(mark, missing)
+            return Numbers(mark, missing, rules.state_words)
         if mark is not None:
             _refuse_mark(export, *_shown(rows, written, _COMMA if mark == "," else _POINT)[0], mark)
         unclear = unclear or _shown(rows, written, _GROUPED)
     if unclear and rules.decimal is None:
         _refuse_either_mark(export, *unclear[0])
-    return Numbers(rules.decimal or ".", missing)
+    return Numbers(rules.decimal or ".", missing, rules.state_words)
 
 
 def _mark(columns: Sequence[Any], *, settled: bool) -> str | None:

@@ -118,7 +118,11 @@ def _value(row: Key) -> str:
         "moment": "date and time",
     }
     form |= {"formulas": "table of texts", "channels": "table", "numbers": "table of numbers"}
-    form |= {"bands": "table of two numbers each", "states": "list of numbers", "status": "table, see status"}
+    form |= {
+        "bands": "table of two numbers each",
+        "states": "list of numbers or texts",
+        "status": "table, see status",
+    }
     return form.get(row.form, row.form) + _bounds(row)
 
 

@@ -273,7 +273,7 @@ BAD = {
     ),
     "a status without its values": (
         with_edit("calibrating = [1], ", ""),
-        "analyzer[AI-220].status.calibrating", "missing (values of the status", "write calibrating = [1, 2]",
+        "analyzer[AI-220].status.calibrating", "missing (numbers, or words of state_words", "write calibrating = [1, 2]",
     ),
     "a status without its age": (
         with_edit(', max_age = "26h" }', " }"),
@@ -281,11 +281,27 @@ BAD = {
     ),
     "a status value in words": (
         with_edit("calibrating = [1]", 'calibrating = ["on"]'),
-        "analyzer[AI-220].status.calibrating", "'on' is not a number", "write calibrating = [1, 2]",
+        "analyzer[AI-220].status.calibrating", "'on' is no number and no word of exports.state_words", "state_words = { on = 1 }",
     ),
     "a status value outside a list": (
         with_edit("calibrating = [1]", "calibrating = 1"),
-        "analyzer[AI-220].status.calibrating", "1 is not a list of numbers", "write calibrating = [1, 2]",
+        "analyzer[AI-220].status.calibrating", "1 is not a list of numbers or words", "write calibrating = [1, 2]",
+    ),
+    "a status value that is neither number nor word": (
+        with_edit("calibrating = [1]", "calibrating = [true]"),
+        "analyzer[AI-220].status.calibrating", "true is not a number", "write calibrating = [1, 2]",
+    ),
+    "a word that stands for a number and for nothing": (
+        with_edit('missing_words = [', 'state_words = { "no data" = 3 }\nmissing_words = ['),
+        "exports.state_words", "'no data' also stands for no reading", "take it out of missing_words or of state_words",
+    ),
+    "a state word for a word": (
+        with_edit('missing_words = [', 'state_words = { on = "1" }\nmissing_words = ['),
+        "exports.state_words", "'1' is not a number", "write state_words = { Sample = 0, Calibrating = 1 }",
+    ),
+    "two state words that differ by capitals": (
+        with_edit('missing_words = [', 'state_words = { On = 1, on = 2 }\nmissing_words = ['),
+        "exports.state_words", "'on' stands twice, but for its capitals", "name each word once",
     ),
     "a status that is a tag alone": (
         with_edit('status = { tag = "AI-220.CAL", calibrating = [1], max_age = "26h" }', 'status = "AI-220.CAL"'),
