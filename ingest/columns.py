@@ -17,7 +17,7 @@ Look = Callable[[Sequence[int]], Iterator[tuple[NDArray[np.int64], list[Any]]]]
 """Given places of columns, one block after another until the export ends: its rows' numbers, its columns."""
 
 # One column of a file without blocks; pa.array would import pandas here, which a look at a store need not.
-NOTHING = (np.zeros(0, np.int64), [pa.Array.from_buffers(pa.string(), 0, [None, None, None])])
+NOTHING = (np.zeros(0, np.int64), [pa.nulls(0, pa.string())])
 
 
 def single(column: Any) -> Any:
