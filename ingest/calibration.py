@@ -8,11 +8,12 @@ from datetime import timedelta
 import numpy as np
 from numpy.typing import NDArray
 
+from ingest.channels import doubt
 from ingest.conditions import LARGEST, NOT_CHECKED, PASSED, REFUSED, Codes
 from ingest.readings import BAD, Series
 from ingest.unit import Analyzer, Instrument
 
-FLOORS = 2.0  # stated floors by which a reading may miss the certificate besides the tolerance: 95 %
+SURE = 3.0  # standard uncertainties by which a channel may miss the gas: all of a dozen do so 97 times in 100
 _LONG_AGO = np.iinfo(np.int64).min // 2
 _US = timedelta(microseconds=1)
 
@@ -82,7 +83,8 @@ def repeated(series: Series, answers: Codes, cycle: timedelta) -> Codes:
 def by_certificate(values: NDArray[np.float64], members: Sequence[Instrument], analyzer: Analyzer) -> Codes:
     """Refuse the analyses that read what the certificate of the calibration gas says, on every channel of it.
 
-    A gas that is like the process gas cannot be told from it: such an analyzer needs its status.
+    A channel may miss it by the tolerance of the certificate and three of its own standard uncertainties. A
+    gas that is like the process gas cannot be told from it: such an analyzer needs its status.
 
     Parameters
     ----------
@@ -101,8 +103,8 @@ def by_certificate(values: NDArray[np.float64], members: Sequence[Instrument], a
     stated = dict(analyzer.certificate)
     rows = [at for at, one in enumerate(members) if one.name in stated]
     gas = np.array([stated[members[at].name] for at in rows])
-    floor = np.array([np.hypot(members[at].random.floor, members[at].systematic.floor) for at in rows])
-    allowed = analyzer.tolerance * np.abs(gas) + FLOORS * floor
+    sigma = np.array([doubt(members[at], stated[members[at].name]) for at in rows])
+    allowed = analyzer.tolerance * np.abs(gas) + SURE * sigma
     seen = values[rows]
     # The slack keeps a reading that is off by just the tolerance inside it, whatever its last binary digit.
     near = (np.abs(seen - gas[:, None]) <= allowed[:, None] * (1 + 1e-9)).all(axis=0)

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from ingest.conditions import Flags
 from ingest.readings import Series
+from ingest.unit import Instrument
 
 Times = NDArray[np.int64]
 Floats = NDArray[np.float64]
@@ -86,3 +87,22 @@ def together(
             fresh = (last >= 0) & (axis - series.time[last] <= age // timedelta(microseconds=1))
             row[fresh] = shown[last[fresh]]
     return values, places
+
+
+def doubt(channel: Instrument, reading: Floats | float) -> Floats:
+    """Give the standard uncertainty of readings of a channel, random and systematic together.
+
+    Parameters
+    ----------
+    channel : Instrument
+        With its stated uncertainties.
+    reading : array or float
+        In its own unit.
+
+    Returns
+    -------
+    array
+        In its own unit (k = 1).
+    """
+    parts = (one.relative * np.abs(reading) + one.floor for one in (channel.random, channel.systematic))
+    return np.asarray(np.hypot(*parts))

@@ -127,7 +127,7 @@ TABLE: tuple[Key, ...] = (
     *_again("analyzer", _SHARED),
     Key("analyzer", "channel", "channels", "tag of each species, or a table of what differs for it", '{ oxygen = "AI-220.O2" }', "always"),
     Key("analyzer", "status", "status", "tag that tells when results are not of the stream", '{ tag = "AI-220.CAL", calibrating = [1], max_age = "26h" }'),
-    Key("analyzer", "certificate", "numbers", "what the channels read on the calibration gas, and how closely", "{ oxygen = 5.0, nitrogen = 83.0, tolerance_pct = 2 }"),
+    Key("analyzer", "certificate", "numbers", "what the channels read on the calibration gas, within tolerance_pct of it and three of their standard uncertainties", "{ oxygen = 5.0, nitrogen = 83.0, tolerance_pct = 2 }"),
     Key("analyzer", "sum_band", "pair", "what all channels add up to, before any normalising", "[98, 102]"),
     Key("analyzer", "air_ingress", "bands", "least and most nitrogen and oxygen that the stream holds; more of both is air in the sample", "{ nitrogen = [0.3, 0.5], oxygen = [5.0, 6.5] }"),
     Key("analyzer.channel", "tag", "text", "historian tag of the channel", '"AI-220.O2"', "always"),

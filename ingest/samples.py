@@ -7,6 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from ingest.channels import doubt
 from ingest.chemistry import DRY_AIR
 from ingest.conditions import NOT_CHECKED, PASSED, REFUSED, SUSPECT, Codes
 from ingest.unit import Analyzer, Instrument, Unit
@@ -129,8 +130,5 @@ def air_ingress(values: Floats, members: Sequence[Instrument], analyzer: Analyze
 def _share(seen: Floats, channel: Instrument, low: float, high: float, air: float) -> tuple[Floats, Floats]:
     """Give the least and the greatest share of air that one gas allows."""
     whole = air / channel.to_base
-    doubt = SURE * np.hypot(
-        channel.random.relative * np.abs(seen) + channel.random.floor,
-        channel.systematic.relative * np.abs(seen) + channel.systematic.floor,
-    )
-    return (seen - doubt - high) / (whole - high), (seen + doubt - low) / (whole - low)
+    off = SURE * doubt(channel, seen)
+    return (seen - off - high) / (whole - high), (seen + off - low) / (whole - low)
