@@ -12,7 +12,7 @@ from ingest.chemistry import Atoms
 from ingest.errors import OutletError, Problem
 from ingest.keys import Entry, missing, nearest, read_table, rows
 
-ONCE = ("unit", "chemistry", "operating", "catalyst", "exports")
+ONCE = ("unit", "chemistry", "operating", "catalyst", "hold_up", "exports")
 MANY = ("node", "stream", "instrument", "analyzer", "shared", "watch")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")

@@ -147,6 +147,8 @@ TABLE: tuple[Key, ...] = (
     Key("operating", "turned_down_below", "number", "load below which it is turned down; left out, it never is", "4000"),
     Key("operating", "starting_for", "duration", "time after coming back that counts as starting", '"4h"', default="0 s", low=0, high=30 * _DAY),
     Key("catalyst", "charged", "moment", "when the catalyst was charged, with its offset", "2026-02-10T06:00:00+01:00", "always"),
+    Key("hold_up", "total_kmol", "number", "what a well-mixed reactor holds at any time, all species together [kmol]", "12.5", "always", low=1e-9),
+    Key("hold_up", "relative_pct", "number", "standard uncertainty (k = 1) of that in percent", "5", "always", low=0.001, high=100),
     Key("watch", "name", "text", "name of the watch; left out, it is the figure and the window", '"yield, shift"'),
     Key("watch", "figure", "text", "figure that is watched", '"yield on feed"', "always"),
     Key("watch", "window", "duration", "one of the windows of the unit", '"8h"', "always", low=1, high=366 * _DAY),

@@ -165,6 +165,25 @@ def _roles_fit(draft: Draft) -> Iterator[Problem]:
             yield Problem("stream", what, f'write role = "{other}" for one, or remove role')
 
 
+def _the_contents_are_those_of_the_outlet(draft: Draft) -> Iterator[Problem]:
+    """Only a well-mixed reactor with one stream out of it has contents that its outlet tells."""
+    stated, kind = draft.once["hold_up"], draft.once["unit"].get("reactor")
+    if not stated.values and not stated.told:
+        return
+    if kind not in (None, "well-mixed"):
+        what = f"a {kind} reactor does not hold what leaves it"
+        yield Problem("hold_up", what, "remove the section, or mend reactor in [unit]")
+    if not all_read(draft):
+        return
+    reactors = {node.get("name") for node in draft.many["node"] if node.get("reacts")}
+    leaving = [one for one in _at(draft, "from", reactors) if one.get("to") not in reactors]
+    if not draft.many["node"]:
+        leaving = [one for one in draft.many["stream"] if direction_of(one) == "out"]
+    if len(leaving) > 1 or len(reactors) > 1:
+        what = "several streams leave what reacts, and which of them it holds is not told"
+        yield Problem("hold_up", what, "remove the section, or describe the reactor alone")
+
+
 def _leads_back(draft: Draft, stream: Entry, reactors: set[str]) -> bool:
     """Tell whether a stream closes a loop through a node that reacts."""
     joins, here, there = _joins(draft), stream.get("from"), stream.get("to")
@@ -206,4 +225,5 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _each_node_can_close,
     _the_reactor_has_its_reaction,
     _roles_fit,
+    _the_contents_are_those_of_the_outlet,
 )

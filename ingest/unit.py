@@ -19,6 +19,15 @@ SAMPLINGS = ("held", "interpolated", "mean at end", "mean at start", "lab sample
 PRIORITIES = ("high", "medium", "low")
 REACTORS = ("well-mixed", "packed bed", "batch")
 ROLES = ("fresh feed", "recycle")
+# Why a reactor has no instantaneous selectivity, and what to do about it.
+NO_RATES = {
+    "well-mixed": ("needs what the reactor holds", "write a section [hold_up]"),
+    "packed bed": ("is not given by outlet data of a packed bed", "take the overall selectivity"),
+    "batch": (
+        "is the slope between samples of a batch, which is not worked out",
+        "take the overall selectivity",
+    ),
+}
 
 
 @dataclass(frozen=True, slots=True)
@@ -140,6 +149,14 @@ class Operating:
 
 
 @dataclass(frozen=True, slots=True)
+class HoldUp:
+    """What a well-mixed reactor holds [kmol, all species], and how sure that is (k = 1, a fraction)."""
+
+    total_kmol: float
+    relative: float
+
+
+@dataclass(frozen=True, slots=True)
 class Watch:
     """Limits on one windowed figure. `low`/`high` in the figure's unit; None means no such limit."""
 
@@ -191,4 +208,5 @@ class Unit:
     least_coverage: float
     exports: ExportRules
     nodes: tuple[Node, ...] = ()  # none: the whole unit is one node that reacts
+    hold_up: HoldUp | None = None
     analyzers: tuple[Analyzer, ...] = ()

@@ -18,6 +18,7 @@ from ingest.keys import Entry, Key
 from ingest.unit import (
     Analyzer,
     ExportRules,
+    HoldUp,
     Instrument,
     Node,
     Operating,
@@ -145,6 +146,7 @@ def _build(read: Draft, key: str) -> Unit:
             date_order=exports.get("date_order"),
             decimal=exports.get("decimal"),
         ),
+        hold_up=_hold_up(read.once["hold_up"]),
         nodes=tuple(Node(e.get("name"), e.get("reacts")) for e in read.many["node"]),
     )
 
@@ -236,6 +238,13 @@ def _operating(entry: Entry) -> Operating | None:
         turned_down_below=down if turned is None else turned,
         starting_for=entry.get("starting_for"),
     )
+
+
+def _hold_up(entry: Entry) -> HoldUp | None:
+    """Make the hold-up, or None when the section is not there."""
+    if not entry.values:
+        return None
+    return HoldUp(entry.get("total_kmol"), entry.get("relative_pct") / 100.0)
 
 
 def _watch(entry: Entry) -> Watch:

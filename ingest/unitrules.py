@@ -13,7 +13,7 @@ from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantit
 from ingest.draft import Draft, direction_of, twice, undeclared
 from ingest.errors import Problem
 from ingest.keys import Entry
-from ingest.unit import AUXILIARY_KINDS
+from ingest.unit import AUXILIARY_KINDS, NO_RATES
 
 HOUR = timedelta(hours=1)
 DAY = timedelta(days=1)
@@ -35,6 +35,7 @@ def figure_names(draft: Draft) -> tuple[str, ...]:
     """
     entry = draft.chemistry
     wanted, unwanted = entry.get("wanted"), entry.get("unwanted") or ()
+    targets = (*unwanted, "all unwanted")
     compositions = draft.reacting()
     carriers = [name for name in unwanted if entry.get("key_element") in dict(compositions.get(name, ()))]
     elements = chemistry.elements_of(list(compositions.values()))
@@ -42,13 +43,14 @@ def figure_names(draft: Draft) -> tuple[str, ...]:
         "conversion",
         "selectivity on converted",
         "yield on feed",
-        *(f"overall selectivity to {name}" for name in (*unwanted, "all unwanted")),
+        *(f"overall selectivity to {name}" for name in targets),
         *(f"share of {name}" for name in (*carriers, "unseen")),
         *(f"{chemistry.ELEMENT_NAMES.get(symbol, symbol)} closure" for symbol in elements),
         "converted closure",
         *(f"make of {name}" for name in (wanted, *unwanted)),
         "specific consumption fed",
         "specific consumption consumed",
+        *(f"instantaneous selectivity to {name}" for name in targets if draft.once["hold_up"].values),
         *(f"{name} per pass" for name in PER_PASS if draft.many["node"]),
         *(["recycle ratio"] if any(entry.get("role") for entry in draft.many["stream"]) else []),
     )
@@ -223,8 +225,7 @@ def _watches_can_be_judged(draft: Draft) -> Iterator[Problem]:
     """A watch names a figure and a window that exist, and limits that leave room for its deadband."""
     windows = draft.once["unit"].get("windows") or ()
     for watch in draft.many["watch"]:
-        asked = [watch.get("figure")] if watch.get("figure") else []
-        yield from undeclared(watch, "figure", asked, figure_names(draft), "figure of this unit")
+        yield from _figure_is_there(watch, draft)
         if windows and watch.get("window") and watch.get("window") not in windows:
             words = quantities.duration_words(watch.get("window"))
             allowed = ", ".join(quantities.duration_words(window) for window in windows)
@@ -233,6 +234,18 @@ def _watches_can_be_judged(draft: Draft) -> Iterator[Problem]:
             )
         yield from _limits(watch)
     yield from _watch_names(draft)
+
+
+def _figure_is_there(watch: Entry, draft: Draft) -> Iterator[Problem]:
+    """The figure is one of the unit's; where outlet data cannot give it, that is the reason told."""
+    figure, reactor = watch.get("figure"), draft.once["unit"].get("reactor")
+    known = figure_names(draft)
+    rates = str(figure).startswith("instantaneous selectivity")
+    if rates and reactor in NO_RATES and not draft.once["hold_up"].values:
+        what, remedy = NO_RATES[reactor]
+        yield Problem(watch.at("figure"), f"'{figure}' {what}", remedy)
+    else:
+        yield from undeclared(watch, "figure", [figure] if figure else [], known, "figure of this unit")
 
 
 def _limits(watch: Entry) -> Iterator[Problem]:

@@ -6,7 +6,7 @@ and raw amounts straight from the readings, so that closures can witness against
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import timedelta
 
 import numpy as np
@@ -17,6 +17,7 @@ from ingest.cells import Cells
 from ingest.instruments import Measured, balance_instruments, measured
 from ingest.reconcile import States, reconcile
 from ingest.unit import Unit
+from monitor.formation import between_middles, contents, difference_share, formed_of, outlet_rows
 from monitor.raw import Rates, raw_rates, raw_rows
 
 Floats = NDArray[np.float64]
@@ -41,7 +42,7 @@ class Amounts:
     systematic : array (t, p, s)
         Change [kmol] per one standard systematic error of each source.
     sources : tuple of str, length s
-        Balance instruments, then shared errors.
+        Balance instruments, then shared errors, then the hold-up where one is stated.
     operating : array (t,)
         As in `Cells`.
     """
@@ -78,7 +79,9 @@ def amount_names(unit: Unit) -> tuple[str, ...]:
         The reactor.
     """
     state = state_of(unit)
-    return (*_reconciled_rows(unit, state), *raw_rows(unit, state))
+    targets = formed_of(unit)
+    inside, formed = ([f"{what} {name}" for name in targets] for what in ("inside", "formed"))
+    return (*_reconciled_rows(unit, state), *raw_rows(unit, state), *inside, *formed)
 
 
 def amounts_of(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amounts]:
@@ -94,13 +97,21 @@ def amounts_of(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amou
         Readings on the grid.
     """
     rows = np.array(list(_reconciled_rows(unit, problem.state).values()))
-    states, solution = reconcile(unit, problem, cells, rows)
+    asked = np.vstack([rows, outlet_rows(unit, problem.state)]) if unit.hold_up else rows
+    states, solution = reconcile(unit, problem, cells, asked)
     readings = measured(unit, cells.value, cells.share)
-    raw = raw_rates(unit, problem, readings, solution.flow)
-    rates = Rates(np.vstack([solution.value, raw.value]), np.concatenate([solution.gain, raw.slope]))
+    parts = [
+        Rates(solution.value[: len(rows)], solution.gain[: len(rows)]),
+        raw_rates(unit, problem, readings, solution.flow),
+    ]
+    if unit.hold_up:
+        found = contents(unit.hold_up, solution.value[len(rows) :], solution.gain[len(rows) :])
+        step = amount_kmol(np.ones(1), unit.cell)  # contents are no rate; undoes what is done to rates below
+        parts.append(Rates(found.value / step, found.slope / step))
+    rates = Rates(np.vstack([one.value for one in parts]), np.concatenate([one.slope for one in parts]))
     random, hold = _random(unit, readings, rates)
-    return states, Amounts(
-        names=amount_names(unit),
+    kept = Amounts(
+        names=amount_names(unit)[: len(rates.value)],
         start=cells.start,
         kmol=amount_kmol(rates.value.T, unit.cell),
         random=random,
@@ -109,6 +120,47 @@ def amounts_of(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amou
         sources=(*problem.names, *(one.name for one in unit.shared)),
         operating=cells.operating,
     )
+    return states, with_formed(unit, _with_hold_up_error(unit, kept))
+
+
+def with_formed(unit: Unit, amounts: Amounts) -> Amounts:
+    """Work out what is formed from one cell to the next, over all cells that are there.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor; without a stated hold-up nothing is done.
+    amounts : Amounts
+        With or without what was formed, which is worked out anew: cells of several pieces have been joined.
+
+    Returns
+    -------
+    Amounts
+        NaN for what is formed up to the first cell, and where a cell or the one before is not seen.
+    """
+    if not unit.hold_up:
+        return amounts
+    names = [name for name in amounts.names if not name.startswith("formed ")]
+    p, targets = len(names), formed_of(unit)
+    made, inside = ([names.index(f"{what} {one}") for one in targets] for what in ("made", "inside"))
+    values = [one[:, :p] for one in (amounts.kmol, amounts.systematic)]
+    both = [np.concatenate([one, between_middles(one[:, made], one[:, inside])], axis=1) for one in values]
+    grown = np.zeros((*amounts.random.shape[:2], p + len(targets), p + len(targets)))
+    grown[:, :, :p, :p] = amounts.random[:, :, :p, :p]
+    share = difference_share(unit, amounts.hold)[:, None, None]
+    grown[:, :, p:, p:] = grown[:, :, made][..., made] + share * grown[:, :, inside][..., inside]
+    all_names = (*names, *(f"formed {one}" for one in targets))
+    return replace(amounts, names=all_names, kmol=both[0], systematic=both[1], random=grown)
+
+
+def _with_hold_up_error(unit: Unit, amounts: Amounts) -> Amounts:
+    """Add the error of the stated hold-up as one more systematic source: it scales all contents."""
+    if not unit.hold_up:
+        return amounts
+    inside = np.array([name.startswith("inside ") for name in amounts.names])
+    change = np.where(inside, unit.hold_up.relative * amounts.kmol, 0.0)[:, :, None]
+    wider = np.concatenate([amounts.systematic, change], axis=2)
+    return replace(amounts, systematic=wider, sources=(*amounts.sources, "hold-up"))
 
 
 def _random(unit: Unit, readings: Measured, rates: Rates) -> tuple[Floats, tuple[timedelta, ...]]:

@@ -76,6 +76,7 @@ def figures_of(unit: Unit, amount_names: Sequence[str]) -> tuple[Figure, ...]:
         *(_around(one, "the whole unit") if unit.nodes else one for one in of_the_feed),
         *_per_pass(unit, of_the_feed, names),
         *_selectivities(unit, names),
+        *_instantaneous(unit, names),
         *_shares(unit, species, names),
         *_closures(unit, names),
         *_makes(unit, species, names),
@@ -300,6 +301,26 @@ def _selectivities(unit: Unit, names: tuple[str, ...]) -> list[Figure]:
             names,
         )
         for one in targets
+    ]
+
+
+def _instantaneous(unit: Unit, names: tuple[str, ...]) -> list[Figure]:
+    """Give the ratio of rates of formation, wanted over unwanted; there only with a stated hold-up."""
+    return [
+        Figure(
+            f"instantaneous selectivity to {one}",
+            f"Instantaneous selectivity, {unit.wanted} over {one}",
+            "mol/mol",
+            {f"formed {unit.wanted}": 1.0},
+            {f"formed {one}": 1.0},
+            1.0,
+            f"Rate at which {unit.wanted} forms inside the reactor over that of {one}: out minus in, plus "
+            "what the contents gain, which have the composition of the outlet. At steady state it is the "
+            "overall one.",
+            True,
+            names,
+        )
+        for one in (*unit.unwanted, "all unwanted")
     ]
 
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ingest.balance import sight
-from ingest.unit import Unit
+from ingest.unit import NO_RATES, Unit
 from monitor.months import plan_of
 
 
@@ -17,6 +17,7 @@ class Judgement:
 
     `freedom` counts readings beyond what the flows need; an instrument is `checked` when the others could
     foretell its reading, else `unchecked`. `lost_with` names flows that go unseen with one instrument.
+    `not_given` says which figures the unit does not have, and why.
     """
 
     unit: str
@@ -31,6 +32,7 @@ class Judgement:
     unseen: tuple[str, ...]
     lost_with: dict[str, tuple[str, ...]]
     figures: tuple[str, ...]
+    not_given: tuple[str, ...]
     watches: tuple[str, ...]
 
 
@@ -76,5 +78,6 @@ def judge(unit: Unit) -> Judgement:
         unseen=tuple(np.array(flows)[~whole.seen].tolist()),
         lost_with=lost_with,
         figures=tuple(figure.name for figure in plan.figures),
+        not_given=() if unit.hold_up else (f"instantaneous selectivity {NO_RATES[unit.reactor][0]}",),
         watches=tuple(watch.name for watch in unit.watches),
     )

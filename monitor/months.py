@@ -23,7 +23,7 @@ from ingest.errors import UnitFileError
 from ingest.readings import Readings
 from ingest.reconcile import STATUS
 from ingest.unit import Unit
-from monitor.amounts import Amounts, amount_names, amounts_of
+from monitor.amounts import Amounts, amount_names, amounts_of, with_formed
 from monitor.figures import Figure, figures_of
 from monitor.layout import figure_stage, figure_table, states_frame, table_of
 from monitor.windows import judged_windows
@@ -51,7 +51,8 @@ class Plan:
     def lead_us(self) -> int:
         """Give how long before its first cell a month looks back: the longest window, in whole cells [us]."""
         longest = max(self.unit.windows) // _US
-        return -(-longest // self.cell_us) * self.cell_us
+        one_before = self.cell_us if self.unit.hold_up else 0  # what is formed begins in the cell before
+        return -(-longest // self.cell_us) * self.cell_us + one_before
 
 
 @dataclass(frozen=True, slots=True)
@@ -128,6 +129,7 @@ def work(
         begin = int(piece.start[0])
         found, amounts = amounts_of(plan.unit, plan.problem, piece)
         held = amounts if held is None else _joined(_since(held, begin - plan.lead_us), amounts)
+        held = with_formed(plan.unit, held)
         unsolved = np.concatenate([unsolved, found.status == UNSOLVED])[-len(held.start) :]
         since = max(begin, first - plan.cell_us)
         if piece.start[-1] >= since:

@@ -37,6 +37,7 @@ def judged(found: Judgement) -> Iterator[str]:
         yield f"not checked    {name}; without it unseen: {', '.join(found.lost_with[name]) or 'nothing'}"
     yield f"unseen         {', '.join(found.unseen) or 'nothing: every flow is determined'}"
     yield f"figures        {', '.join(found.figures)}"
+    yield from (f"not given      {words}" for words in found.not_given)
     yield f"watches        {', '.join(found.watches) or 'none'}"
 
 

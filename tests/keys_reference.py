@@ -29,6 +29,7 @@ HEADINGS = {
     "shared": "[[shared]]",
     "operating": "[operating]",
     "catalyst": "[catalyst]",
+    "hold_up": "[hold_up]",
     "watch": "[[watch]]",
     "exports": "[exports]",
 }
@@ -61,6 +62,8 @@ ABOUT = {
     " Where no status stands (none came for `max_age`), results are not checked.",
     "shared": "A systematic error that moves several instruments together, such as the span of an analyzer.",
     "operating": "How the load tells whether the reactor is down, starting, turned down or running.",
+    "hold_up": "What a well-mixed reactor holds. With it the instantaneous selectivity is worked out: its contents have"
+    " the composition of the one stream that leaves it, and what they gain counts as formed.",
     "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"
     " inside by `deadband` for `off_delay` ends it.",
     "exports": "What the exports themselves do not tell.",

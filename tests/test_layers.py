@@ -69,6 +69,7 @@ ORDER = (
     "demo_data.truth",
     "demo_data.exports",
     "monitor.raw",
+    "monitor.formation",
     "monitor.amounts",
     "monitor.figures",
     "monitor.sums",
