@@ -125,15 +125,18 @@ def demo(folder: Path, days: int, no_page: bool, port: int, as_json: bool) -> in
 
 @outlet.command()
 @click.argument("file", type=_file)
+@click.option("--store", type=_folder, help="Folder of a store; tells the usual readings.")
 @_json
-def check(file: Path, as_json: bool) -> None:
-    """Judge a unit FILE: all its faults, or what its instruments let you see and check."""
+def check(file: Path, store: Path | None, as_json: bool) -> None:
+    """Judge a unit FILE: all its faults, or what its instruments let you see and check, and how well."""
     from ingest.unitfile import load
-    from monitor.judge import judge
+    from monitor.judge import as_table, judge
+    from monitor.store import last_running
     from monitor.telling import judged
 
-    found = judge(load(file))
-    _print(asdict(found), judged(found), as_json=as_json)
+    unit = load(file)
+    found = judge(unit, None if store is None else last_running(store, unit, timedelta(days=7)))
+    _print(as_table(found), judged(found), as_json=as_json)
 
 
 @outlet.command()

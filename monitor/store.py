@@ -10,7 +10,8 @@ import pandas as pd
 import pyarrow as pa
 
 from ingest.balance import problem_of
-from ingest.cells import cells_from_frame
+from ingest.cells import RUNNING, Cells, cells_from_frame
+from ingest.errors import StoreError
 from ingest.ledger import Store
 from ingest.unit import Unit
 from monitor.amounts import amounts_of
@@ -69,6 +70,74 @@ def edges(folder: Path, unit: str) -> tuple[pd.Timestamp, pd.Timestamp] | None:
         snapshot.read(unit, "cells", first=pd.Timestamp(months[-1], tz="UTC"), columns=["start"]), "start"
     )
     return head.index[0], tail.index[-1]
+
+
+def cells(folder: Path, unit: Unit, span: tuple[datetime, datetime]) -> Cells:
+    """Give the cells of a span.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    span : tuple of datetime
+        From the first cell start to before the second, zone-aware.
+
+    Returns
+    -------
+    Cells
+
+    Raises
+    ------
+    StoreError
+        There are none.
+    """
+    table = Store(folder).read(unit.key, "cells", first=span[0], last=span[1])
+    if not table.num_rows:
+        raise _nothing(folder, unit.key, f"no cells of {unit.key} from {span[0]:%F} to {span[1]:%F}")
+    return cells_from_frame(unit, _frame(table, "start"))
+
+
+def last_running(folder: Path, unit: Unit, length: timedelta) -> Cells:
+    """Give the cells of some time up to and with the last in which the unit was running.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    length : timedelta
+        How far back from there.
+
+    Returns
+    -------
+    Cells
+
+    Raises
+    ------
+    StoreError
+        The unit never ran as far as the store tells.
+    """
+    snapshot = Store(folder).snapshot()
+    for month in reversed(snapshot.months(unit.key, "cells")):
+        first = pd.Timestamp(month, tz="UTC")
+        span = (first, first + pd.offsets.MonthBegin(1))
+        condition = operating(folder, unit.key, span)["operating"]
+        running = condition.index[condition == RUNNING]
+        if len(running):
+            last = running[-1] + unit.cell
+            return cells(folder, unit, (last - length, last))
+    raise _nothing(folder, unit.key, f"no cell in which {unit.key} was running")
+
+
+def _nothing(folder: Path, key: str, lacking: str) -> StoreError:
+    """Say what the store does not hold."""
+    return StoreError(
+        f"{folder}: holds {lacking}",
+        remedy=f"Take exports in: outlet run --unit {key}.toml --store {folder} EXPORT...",
+    )
 
 
 def figures(

@@ -11,6 +11,7 @@ from ingest.lag import AS_DECLARED, Lag
 from ingest.unit import Unit
 from monitor import wording
 from monitor.delays import Analyzer, Delays
+from monitor.expected import JUDGED_BY, Expectation
 from monitor.judge import Judgement
 from monitor.run import Episode, PassResult
 
@@ -35,10 +36,59 @@ def judged(found: Judgement) -> Iterator[str]:
     yield f"checked        {', '.join(found.checked) or 'none: no reading can be checked by the others'}"
     for name in found.unchecked:
         yield f"not checked    {name}; without it unseen: {', '.join(found.lost_with[name]) or 'nothing'}"
+    for one in found.parallel:
+        yield f"not told apart {', '.join(one)}: when one is off, the balance cannot tell which"
     yield f"unseen         {', '.join(found.unseen) or 'nothing: every flow is determined'}"
     yield f"figures        {', '.join(found.figures)}"
     yield from (f"not given      {words}" for words in found.not_given)
+    if found.unseen_figures:
+        yield f"not seen       {', '.join(found.unseen_figures)}: the readings do not determine them"
+    yield from _needs(found.needs)
     yield f"watches        {', '.join(found.watches) or 'none'}"
+    yield from _usual(found)
+
+
+def _needs(needs: dict[str, tuple[str, ...]]) -> Iterator[str]:
+    """Tell which instruments figures cannot do without, those with the same ones together."""
+    for own in dict.fromkeys(needs.values()):
+        names = [name for name, needed in needs.items() if needed == own]
+        if own:
+            yield f"lost           {', '.join(names)}: without any one of {', '.join(own)}"
+        else:
+            yield f"kept           {', '.join(names)}: without any one instrument"
+
+
+def _usual(found: Judgement) -> Iterator[str]:
+    """Tell the half-widths to expect, and what would narrow them."""
+    if found.usual is None:
+        yield "half-widths    need the usual readings: give --store, nothing is guessed"
+        return
+    span = (
+        wording.local_time(wording.utc(time_us), found.time_zone)
+        for time_us in (found.usual.first_us, found.usual.last_us)
+    )
+    yield f"half-widths    95 %, at the median readings while running from {' to '.join(span)};"
+    yield "               over one cell, 8 h, 24 h; and which added instrument would narrow the 8 h most"
+    yield from (f"  {_expected(one)}" for one in found.usual.figures)
+    for name, quality in found.offered.items():
+        yield f"could be added {name}: {quality}"
+    if not found.offered:
+        yield "could be added nothing: every species and stream that the unit has is read already"
+
+
+def _expected(one: Expectation) -> str:
+    """Tell one figure at the usual readings."""
+    told = [wide for wide in one.half_width if math.isfinite(wide)]
+    if not told:
+        return f"{one.figure:<40} cannot be told at these readings"
+    if not max(told):
+        return f"{one.figure:<40} fixed by the balance itself"
+    places = wording.decimals_for(min(told))
+    wide = "  ".join(f"±{wording.number(one, places):>7}" for one in one.half_width)
+    value = f"{wording.number(one.value, places)} {one.unit}"
+    left = 100 * (1 - one.narrowed / one.half_width[JUDGED_BY])
+    with_it = f"  {wording.number(left, 0)} % narrower with a {one.narrowed_by}" if one.narrowed_by else ""
+    return f"{one.figure:<40} {value:>16}  {wide}{with_it}"
 
 
 def described(found: Description, unit: Unit) -> Iterator[str]:

@@ -12,11 +12,14 @@ import sys
 import time
 import urllib.request
 from collections.abc import Iterator
+from datetime import timedelta
 from pathlib import Path
 
 import pytest
 
 from demo_data.exports import UNIT_FILE
+from ingest.ledger import Store
+from monitor.layout import figure_stage
 from monitor.progress import line
 from tests.source import ROOT
 
@@ -82,6 +85,29 @@ def test_a_good_unit_file_is_judged(tmp_path: Path):
     assert said["unseen"] == []
 
 
+def test_half_widths_need_a_store_and_are_then_those_that_the_store_shows(
+    plant: tuple[Path, dict[str, object]],
+):
+    without = outlet("check", UNIT_FILE, folder=plant[0])
+    assert "half-widths    need the usual readings: give --store, nothing is guessed\n" in without.stdout
+    store = plant[0] / "demo-plant/store"
+    done = outlet("check", UNIT_FILE, "--store", store, "--json", folder=plant[0])
+    assert (done.returncode, done.stderr) == (0, "")
+    said = json.loads(done.stdout, parse_constant=pytest.fail)
+    # law: a window of usual cells has the half-width of a usual window; the demo ends on 22 March, local time
+    assert said["usual"]["to"] == "2026-03-21T22:50:00.000000Z"
+    figures = {one["figure"]: one["half_width"] for one in said["usual"]["figures"]}
+    names = ("conversion", "selectivity on converted", "yield on feed", "carbon closure")
+    for place, window in ((1, 8), (2, 24)):
+        stage = Store(store).read("demo", figure_stage(timedelta(hours=window)))
+        shown = stage.to_pandas(ignore_metadata=True).tail(1008).median(numeric_only=True)
+        for name in names:
+            expected = shown[f"{name} | as operated | half_width"]
+            assert figures[name][place] == pytest.approx(expected, rel=0.1)
+    told = outlet("check", UNIT_FILE, "--store", store, folder=plant[0]).stdout
+    assert "% narrower with a channel on water in outlet\n" in told
+
+
 def test_what_goes_unseen_without_two_meters_is_told(tmp_path: Path):
     text = UNIT_FILE.read_text(encoding="utf-8")
     kept = text.split("[[instrument]]")
@@ -118,6 +144,7 @@ def test_a_bad_unit_file_tells_all_its_faults_and_exits_with_2(tmp_path: Path):
         (("run", "--unit", UNIT_FILE, "x.csv"), "x.csv: there is no such file or folder"),
         (("describe", "x.csv", "--unit", UNIT_FILE), "x.csv: there is no such file"),
         (("verify", "--store", "nowhere"), "nowhere: there is no store here"),
+        (("check", UNIT_FILE, "--store", "nowhere"), "nowhere: there is no store here"),
         (("lag", "--unit", UNIT_FILE, "--store", "nowhere"), "nowhere: there is no store here"),
         (("verify", "--stroe", "nowhere"), "outlet verify: No such option"),
         (("vrify",), "outlet: No such command 'vrify'"),

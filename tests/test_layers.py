@@ -96,6 +96,8 @@ ORDER = (
     "monitor.page.balance",
     "monitor.page.app",
     "monitor.page.server",
+    "monitor.typical",
+    "monitor.expected",
     "monitor.judge",
     "monitor.delays",
     "monitor.telling",
