@@ -12,19 +12,21 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from ingest.balance import problem_of
 from ingest.cells import Carried, make_cells
 from ingest.errors import UnitFileError
 from ingest.ledger import Store
 from ingest.readings import Series
 from ingest.unit import HoldUp
 from monitor import months
-from monitor.amounts import amount_names
+from monitor.amounts import amount_names, amounts_of
 from monitor.figures import figures_of
 from monitor.formation import between_middles, contents, difference_share
 from monitor.judge import judge
 from monitor.layout import figure_stage
 from monitor.run import run_pass
 from monitor.telling import judged
+from monitor.windows import window_figures
 from tests.plants_made import START, Seen, unit_text
 from tests.unitfiles_made import DEMO, loaded, with_edit
 
@@ -224,6 +226,30 @@ def test_cells_in_pieces_give_what_cells_in_one_go_give(run, tmp_path, monkeypat
         frames = [one[stage].to_pandas(ignore_metadata=True) for one in (whole, parts)]
         assert frames[0]["instantaneous selectivity to CH4 | as operated | value"].notna().sum() > 300
         pd.testing.assert_frame_equal(*frames, rtol=1e-4)
+
+
+def test_its_half_width_is_the_spread_over_the_shortest_window_and_more_over_longer_ones(run, tmp_path):
+    text, columns = plant(run)
+    only_random = text.replace("systematic = { relative_pct = 0.5, floor = 1e-9 }", "systematic = {}")
+    unit = loaded(tmp_path, only_random.replace("relative_pct = 5\n", "relative_pct = 0.001\n"))
+    count, draw = 4000, np.random.default_rng(1)
+    first, minute = START.value // 1000, 60_000_000
+    stamps, ones = first + minute * np.arange(1, count + 1), np.ones(count, np.int32)
+    readings = {  # the plant at rest, each minute's readings off by 0.5 % by chance
+        f"T{i}": Series(
+            stamps, one[100] * (1 + 0.005 * draw.normal(size=count)), 2 * ones.astype(np.int8), ones, ones
+        )
+        for i, one in enumerate(columns)
+    }
+    cells = make_cells(unit, readings, first, first + count * minute)
+    _, amounts = amounts_of(unit, problem_of(unit), cells)
+    ratio = {}
+    for window, frame in window_figures(unit, amounts, figures_of(unit, amounts.names)).items():
+        judged = frame["instantaneous selectivity to CH4"]["as operated"].iloc[100:]
+        ratio[window] = judged["half_width"].mean() / (1.96 * judged["value"].std())
+    # 4000 cells hold 800 windows of five minutes: their spread is known to 2.5 %
+    assert ratio[timedelta(minutes=5)] == pytest.approx(1, abs=0.1)
+    assert ratio[timedelta(hours=1)] > 1.5
 
 
 BAD = {
