@@ -31,6 +31,7 @@ STATUS = ("solved", "did not converge", "cannot be seen", "no readings", "down")
 SOLVED, NOT_CONVERGED, UNSEEN, NO_READINGS, DOWN = range(len(STATUS))
 
 ZERO_FLOW = 1e-10  # of the unit's total flow; a flow below minus this is negative
+ZERO_GAIN = 1e-5  # of the objective, for a flow as large as the unit's total: rounding, not a push
 ZERO_SLOPE = 1e-9  # of the steepest direction; less than that pushes nowhere
 
 
@@ -205,21 +206,29 @@ def _bounded(problem: Problem, readings: Measured, rows: Floats, groups: list[Gr
     """
     found = _settled(problem, readings, rows, [group for group in groups if group.view.rank])
     held = np.zeros(found.flow.shape, dtype=bool)
-    freed = np.zeros_like(held)
-    for _ in range(len(problem.state)):
+    for _ in range(2 * len(problem.state)):
         low = _below_zero(found.flow) & ~held
-        lifted = _lifted(problem, readings, found.flow, held) & ~freed & ~low.any(axis=0)
+        lifted = _lifted(problem, readings, found.flow, held) & ~low.any(axis=0)
         changed = np.flatnonzero((low | lifted).any(axis=0))
         if not len(changed):
             break
         held = (held | low) & ~lifted
-        freed |= lifted
         for group, pattern in alike(held[:, changed]):
             narrow = replace(problem, basis=problem.basis @ null_space(problem.basis[pattern]))
             place = changed[group]
             part = readings.take(place)
             _write(found, place, _settled(narrow, part, rows, groups_of(narrow, part)))
+    astray = _below_zero(found.flow) | _lifted(problem, readings, found.flow, held)
+    _give_up(found, np.flatnonzero(astray.any(axis=0)))
     return found
+
+
+def _give_up(found: Solution, places: Places) -> None:
+    """Mark cells whose search for the flows at zero went round in circles; they yield nothing."""
+    found.status[places] = NOT_CONVERGED
+    for numbers in (found.flow, found.adjustment, found.adjustment_sd, found.value):
+        numbers[:, places] = np.nan
+    found.objective[places] = np.nan
 
 
 def _below_zero(flow: Floats) -> Flags:
@@ -239,8 +248,10 @@ def _lifted(problem: Problem, readings: Measured, flow: Floats, held: Flags) -> 
     uphill = -tangent.along(geometry, point, point.weight * miss)
     for group, pattern in alike(held[:, some]):
         multiplier = np.linalg.lstsq(problem.basis[pattern].T, uphill[:, group], rcond=None)[0]
-        steepest = np.abs(uphill[:, group]).max(axis=0)
-        lifted[np.ix_(pattern, some[group])] = multiplier < -ZERO_SLOPE * steepest
+        least = ZERO_SLOPE * np.abs(uphill[:, group]).max(axis=0)
+        least = np.maximum(least, ZERO_GAIN / np.abs(flow[:, some[group]]).sum(axis=0))
+        worst = multiplier == multiplier.min(axis=0)  # one at a time: letting all go at once may go round
+        lifted[np.ix_(pattern, some[group])] = worst & (multiplier < -least)
     return lifted
 
 
