@@ -153,6 +153,28 @@ def with_formed(unit: Unit, amounts: Amounts) -> Amounts:
     return replace(amounts, names=all_names, kmol=both[0], systematic=both[1], random=grown)
 
 
+def at_rest(unit: Unit, amounts: Amounts) -> Amounts:
+    """Give the amounts of cells that stand each for itself: what is formed is what is made.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor; without a stated hold-up nothing is done.
+    amounts : Amounts
+        Of cells that do not follow one another.
+    """
+    if not unit.hold_up:
+        return amounts
+    places = [
+        [amounts.names.index(f"{what} {one}") for one in formed_of(unit)] for what in ("made", "inside")
+    ]
+    kmol, systematic = amounts.kmol.copy(), amounts.systematic.copy()
+    for values in (kmol, systematic):
+        made, inside = (values[:, place] for place in places)
+        values[:, -len(places[0]) :] = np.where(np.isfinite(inside), made, np.nan)
+    return replace(amounts, kmol=kmol, systematic=systematic)
+
+
 def _with_hold_up_error(unit: Unit, amounts: Amounts) -> Amounts:
     """Add the error of the stated hold-up as one more systematic source: it scales all contents."""
     if not unit.hold_up:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from ingest.balance import problem_of
 from ingest.instruments import balance_instruments
 from ingest.unit import FLOW_KINDS, FRACTION_KINDS, Instrument, Uncertainty, Unit
-from monitor.amounts import Amounts, amounts_of
+from monitor.amounts import Amounts, amounts_of, at_rest
 from monitor.figures import Figure, figures_of
 from monitor.typical import as_cells, shown
 from monitor.windows import MODES, judged_windows
@@ -77,6 +77,7 @@ def expectations(unit: Unit, value: Floats, offered: Sequence[Addition]) -> tupl
     """
     problem = problem_of(unit)
     states, amounts = amounts_of(unit, problem, as_cells(unit, value[None]))
+    amounts = at_rest(unit, amounts)
     figures = figures_of(unit, amounts.names)
     told, wide = _half_widths(unit, amounts, figures)
     narrow = np.array([_with(unit, value, states.flow_kmol_h[0], one, figures) for one in offered])
@@ -103,7 +104,7 @@ def _with(unit: Unit, value: Floats, flow: Floats, addition: Addition, figures: 
     more = replace(unit, instruments=(*unit.instruments, addition.instrument))
     problem = problem_of(more)
     read = np.append(value, shown(more, problem, flow, np.append(value, np.nan))[-1])
-    _, amounts = amounts_of(more, problem, as_cells(more, read[None]))
+    amounts = at_rest(more, amounts_of(more, problem, as_cells(more, read[None]))[1])
     names = [one.name for one in figures]
     own = {one.name: one for one in figures_of(more, amounts.names)}
     return _half_widths(more, amounts, [own[name] for name in names])[1][:, JUDGED_BY]

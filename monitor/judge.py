@@ -16,7 +16,7 @@ from ingest.instruments import measured
 from ingest.residuals import cell_residuals, cycles_in_cells, windowed
 from ingest.suspects import parallel_sets
 from ingest.unit import NO_RATES, Unit
-from monitor.amounts import Amounts, amounts_of
+from monitor.amounts import Amounts, amounts_of, at_rest
 from monitor.expected import Addition, Expectation, additions, expectations
 from monitor.figures import Figure
 from monitor.months import plan_of
@@ -154,7 +154,7 @@ def _lost(problem: Problem, name: str) -> NDArray[np.bool_]:
 def _seen_figures(unit: Unit, problem: Problem, figures: tuple[Figure, ...], value: Floats) -> dict[str, Any]:
     """Tell which figures are not seen at all, and which instruments each of the others cannot do without."""
     rows = np.vstack([value, one_lost(value)])
-    _, amounts = amounts_of(unit, problem, as_cells(unit, rows))
+    amounts = at_rest(unit, amounts_of(unit, problem, as_cells(unit, rows))[1])
     seen = {one.name: _is_seen(one, amounts) for one in figures}
     names = np.array([one.name for one in unit.instruments])
     return {

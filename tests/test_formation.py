@@ -20,6 +20,7 @@ from ingest.readings import Series
 from ingest.unit import HoldUp
 from monitor import months
 from monitor.amounts import amount_names, amounts_of
+from monitor.expected import expectations
 from monitor.figures import figures_of
 from monitor.formation import between_middles, contents, difference_share
 from monitor.judge import judge
@@ -250,6 +251,17 @@ def test_its_half_width_is_the_spread_over_the_shortest_window_and_more_over_lon
     # 4000 cells hold 800 windows of five minutes: their spread is known to 2.5 %
     assert ratio[timedelta(minutes=5)] == pytest.approx(1, abs=0.1)
     assert ratio[timedelta(hours=1)] > 1.5
+
+
+def test_a_judgement_of_the_unit_at_rest_sees_it_and_expects_the_overall_one(run, tmp_path):
+    text, columns = plant(run)
+    unit = loaded(tmp_path, text)
+    assert not judge(unit).unseen_figures
+    at_rest = np.array([[one[100] for one in columns]])
+    found = {one.figure: one for one in expectations(unit, at_rest[0], ())}
+    overall, instantaneous = (found[f"{kind} selectivity to CH4"] for kind in ("overall", "instantaneous"))
+    assert instantaneous.value == pytest.approx(overall.value, rel=1e-9)
+    assert all(np.array(instantaneous.half_width) > np.array(overall.half_width))
 
 
 BAD = {
