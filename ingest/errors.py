@@ -59,7 +59,7 @@ class UnitFileError(OutletError):
         """List one problem a line under the file's name."""
         count = f"{len(problems)} problem{'s' if len(problems) != 1 else ''}"
         lines = [f"  {p.where}: {p.what}; {p.remedy}" for p in problems]
-        super().__init__("\n".join([f"{file}: {count}", *lines]), remedy="Mend the keys named above.")
+        super().__init__("\n".join([f"{file}: {count}", *lines]), remedy="Mend what is named above.")
         self.problems = tuple(problems)
 
 
