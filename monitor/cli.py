@@ -11,14 +11,19 @@ import socket
 import sys
 from collections.abc import Iterable, Sequence
 from dataclasses import asdict
-from datetime import timedelta
+from datetime import datetime, timedelta
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from ingest.errors import ExportError, OutletError
 from monitor.page.launch import DEFAULT_PORT, command
+
+if TYPE_CHECKING:
+    from ingest.unit import Unit
+
+Span = tuple[datetime, datetime]
 
 # Matrices here are small: more threads of the linear algebra cost twice the processor time and no less time.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -26,6 +31,7 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 # Exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C.
 FINE, YOURS, STOPPED = 0, 2, 130
 DEMO_DAYS = 60
+MOST_CELLS = 20_000  # that suspects looks at in one go: 180 MB of residuals
 
 _file = click.Path(dir_okay=False, path_type=Path)
 _folder = click.Path(file_okay=False, path_type=Path)
@@ -47,6 +53,7 @@ _port = click.option(
     show_default=True,
     help="Port on 127.0.0.1.",
 )
+_day = click.DateTime(formats=["%Y-%m-%d"])
 _json = click.option("--json", "as_json", is_flag=True, help="Print one JSON object.")
 
 
@@ -193,6 +200,52 @@ def lag(unit_file: Path, store: Path, days: int, as_json: bool) -> int:
     found = delays(store, load(unit_file), days)
     _print(as_table(found), delayed(found), as_json=as_json)
     return YOURS if any(one.is_contradicted for one in found.analyzers) else FINE
+
+
+@outlet.command()
+@click.option("--unit", "unit_file", type=_file, required=True, help="Unit file.")
+@_store
+@click.option("--from", "first", type=_day, help="First day, plant time. [default: a week before the end]")
+@click.option("--to", "last", type=_day, help="Last day. [default: the end of the record]")
+@click.option("--baseline-from", "healthy_first", type=_day, help="First day of a time when all was well.")
+@click.option("--baseline-to", "healthy_last", type=_day, help="Last day of it.")
+@_json
+def suspects(unit_file: Path, store: Path, as_json: bool, **days: datetime | None) -> int:
+    """Tell whether the balance fits, and if not, which readings are suspected and what to check first."""
+    from ingest.unitfile import load
+    from monitor.store import cells
+    from monitor.suspicion import as_table, report
+    from monitor.telling import suspected
+
+    unit = load(unit_file)
+    span, healthy = _spans(store, unit, **days)
+    found = report(unit, cells(store, unit, span), None if healthy is None else cells(store, unit, healthy))
+    _print(as_table(found), suspected(found), as_json=as_json)
+    return YOURS if found.findings else FINE
+
+
+def _spans(
+    store: Path,
+    unit: Unit,
+    *,
+    first: datetime | None,
+    last: datetime | None,
+    healthy_first: datetime | None,
+    healthy_last: datetime | None,
+) -> tuple[Span, Span | None]:
+    """Turn the days that were asked for into spans of time."""
+    from monitor.store import days
+
+    if (healthy_first is None) != (healthy_last is None):
+        raise click.UsageError("--baseline-from and --baseline-to go together")
+    span = days(store, unit, first, last)
+    healthy = days(store, unit, healthy_first, healthy_last) if healthy_first and healthy_last else None
+    for asked in (span, healthy):
+        if asked and not asked[0] < asked[1]:
+            raise click.UsageError(f"the first day {asked[0]:%F} lies after the last")
+        if asked and asked[1] - asked[0] > MOST_CELLS * unit.cell:
+            raise click.UsageError(f"more than {MOST_CELLS * unit.cell // timedelta(days=1)} days at once")
+    return span, healthy
 
 
 @outlet.command()

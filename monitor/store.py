@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 
 import pandas as pd
@@ -130,6 +130,38 @@ def last_running(folder: Path, unit: Unit, length: timedelta) -> Cells:
             last = running[-1] + unit.cell
             return cells(folder, unit, (last - length, last))
     raise _nothing(folder, unit.key, f"no cell in which {unit.key} was running")
+
+
+def days(folder: Path, unit: Unit, first: date | None, last: date | None) -> tuple[datetime, datetime]:
+    """Give the span of some days of the unit's calendar, both included.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    first, last : date or None
+        None for a week in all, up to the end of the record.
+
+    Returns
+    -------
+    tuple of datetime
+        From the first instant to the end, zone-aware; the end of the record when no last day is named.
+
+    Raises
+    ------
+    StoreError
+        The unit has no cells.
+    """
+    if last is None:
+        found = edges(folder, unit.key)
+        if found is None:
+            raise _nothing(folder, unit.key, f"no cells of {unit.key}")
+        end = found[1] + unit.cell
+    else:
+        end = pd.Timestamp(last + timedelta(days=1), tz=unit.time_zone)
+    return end - timedelta(days=7) if first is None else pd.Timestamp(first, tz=unit.time_zone), end
 
 
 def _nothing(folder: Path, key: str, lacking: str) -> StoreError:

@@ -12,8 +12,10 @@ from ingest.unit import Unit
 from monitor import wording
 from monitor.delays import Analyzer, Delays
 from monitor.expected import JUDGED_BY, Expectation
+from monitor.fit import ALONE, CHANGE, IN_A_ROW, LENGTHS
 from monitor.judge import Judgement
 from monitor.run import Episode, PassResult
+from monitor.suspicion import ONE, OPEN, Finding, Fit, Report, Suspect
 
 
 def judged(found: Judgement) -> Iterator[str]:
@@ -223,3 +225,89 @@ def _date(time_us: int, zone: str) -> str:
     """Write the local day of an instant."""
     local = wording.utc(time_us).astimezone(ZoneInfo(zone))
     return f"{local.day} {local:%b %Y}"
+
+
+def suspected(found: Report) -> Iterator[str]:
+    """Tell whether the balance fits, and if not, what is suspected and what to check first.
+
+    Parameters
+    ----------
+    found : Report
+        Of one unit.
+
+    Yields
+    ------
+    str
+        One line.
+    """
+    against = f"; healthy: {_from_to(found, *found.healthy_us)}" if found.healthy_us else ""
+    yield f"{found.name} [{found.unit}]: {_from_to(found, *found.span_us)}{against}"
+    yield f"{'windows':<9} {'alone':<16} as a change from the healthy time"
+    for length in LENGTHS:
+        told = {one.kind: _fitting(one) for one in found.fits if one.window == length}
+        yield f"{wording.window(length):<9} {told[ALONE]:<16} {told.get(CHANGE, 'not asked: no baseline')}"
+    share = wording.number(100 * found.false_share, 0)
+    yield f"By chance {share} % of healthy windows fail; a reading is suspected when {IN_A_ROW} in a row do."
+    for one in found.findings:
+        yield from _finding(found, one)
+    if not any(one.tested for one in found.fits):
+        yield "not tested: no window holds enough cells with readings to spare"
+    elif not found.findings:
+        yield "fits: no reading is suspected"
+
+
+def _fitting(one: Fit) -> str:
+    """Tell how many windows fit."""
+    return f"{one.tested - one.failed} of {one.tested} fit" if one.tested else "not tested"
+
+
+def _from_to(found: Report, first_us: int, last_us: int) -> str:
+    """Write a span in plant time."""
+    first, last = (wording.local_time(wording.utc(one), found.time_zone) for one in (first_us, last_us))
+    return f"{first} to {last}"
+
+
+def _finding(report: Report, one: Finding) -> Iterator[str]:
+    """Tell one failure: when, what, how much, what each suspect does to the figures, what to check."""
+    since = wording.local_time(wording.utc(one.since_us), report.time_zone)
+    when = f"since {since}" if one.is_lasting else f"from {_from_to(report, one.since_us, one.until_us)}"
+    how = "alone" if one.kind == ALONE else "as a change from the healthy time"
+    yield ""
+    yield f"does not fit ({how}) {when}: {_answer(one)}"
+    for number, suspect in enumerate(one.suspects, start=1):
+        yield f"  ({number}) {suspect.name} {_size(suspect, one.kind)}; check first: {suspect.check}"
+    worst = wording.local_time(wording.utc(one.worst_us), report.time_zone)
+    yield f"  {f'{wording.window(one.window)} from {worst}':<45} {'as shown':>12}" + "".join(
+        f"  without ({number})" for number in range(1, len(one.suspects) + 1)
+    )
+    for place, (name, unit, value) in enumerate(one.figures):
+        cells = [_value(suspect.without[place]) for suspect in one.suspects]
+        yield f"  {f'{name}, {unit}':<45} {_value(value):>12}" + "".join(f"  {text:>11}" for text in cells)
+
+
+def _answer(one: Finding) -> str:
+    """Tell in a sentence what the failure points at."""
+    names = [suspect.name for suspect in one.suspects if suspect.is_plausible]
+    names = names or [suspect.name for suspect in one.suspects]
+    if one.answer == ONE:
+        return f"{names[0]} is suspected"
+    if one.answer == OPEN:
+        return f"cannot tell which of {', '.join(names)}: their traces are alike"
+    sets = [[suspect.name for suspect in one.suspects if suspect.is_likeliest], *one.then]
+    then = ", then ".join(" or ".join(own) for own in sets)
+    enough = "one after the other these explain it" if one.is_explained else "not even these explain it all"
+    return f"several causes, or one that no instrument here shows; {enough}: {then}"
+
+
+def _size(suspect: Suspect, kind: str) -> str:
+    """Tell by how much a suspect would have to be off, or to have moved."""
+    told = wording.amount(100 * abs(suspect.size), 100 * suspect.half_width, "%")
+    unlikely = "" if suspect.is_plausible else " (unlikely: more than half of it)"
+    up = suspect.size > 0
+    how = f"reads too {'high' if up else 'low'}" if kind == ALONE else f"has moved {'up' if up else 'down'}"
+    return f"{how} by {told} of its reading{unlikely}"
+
+
+def _value(value: float) -> str:
+    """Write a figure, or that it is lost."""
+    return "not seen" if math.isnan(value) else wording.number(value, 2)

@@ -108,6 +108,20 @@ def test_half_widths_need_a_store_and_are_then_those_that_the_store_shows(
     assert "% narrower with a channel on water in outlet\n" in told
 
 
+def test_a_balance_that_fits_suspects_nothing(plant: tuple[Path, dict[str, object]]):
+    words = ["suspects", "--unit", UNIT_FILE, "--store", "demo-plant/store"]
+    days = ["--from", "2026-03-18", "--to", "2026-03-20"]
+    healthy = ["--baseline-from", "2026-03-12", "--baseline-to", "2026-03-17"]
+    done = outlet(*words, *days, *healthy, folder=plant[0])
+    assert (done.returncode, done.stderr) == (0, "")
+    assert "24 h      3 of 3 fit       3 of 3 fit\n" in done.stdout
+    assert done.stdout.endswith("fits: no reading is suspected\n")
+    said = json.loads(outlet(*words, *days, "--json", folder=plant[0]).stdout, parse_constant=pytest.fail)
+    # plant time is an hour ahead of UTC
+    assert said["span"] == ["2026-03-17T23:00:00.000000Z", "2026-03-20T23:00:00.000000Z"]
+    assert (said["baseline"], said["findings"]) == (None, [])
+
+
 def test_what_goes_unseen_without_two_meters_is_told(tmp_path: Path):
     text = UNIT_FILE.read_text(encoding="utf-8")
     kept = text.split("[[instrument]]")
@@ -145,6 +159,19 @@ def test_a_bad_unit_file_tells_all_its_faults_and_exits_with_2(tmp_path: Path):
         (("describe", "x.csv", "--unit", UNIT_FILE), "x.csv: there is no such file"),
         (("verify", "--store", "nowhere"), "nowhere: there is no store here"),
         (("check", UNIT_FILE, "--store", "nowhere"), "nowhere: there is no store here"),
+        (("suspects", "--unit", UNIT_FILE, "--store", "nowhere"), "nowhere: there is no store here"),
+        (
+            ("suspects", "--unit", UNIT_FILE, "--baseline-to", "2026-03-04"),
+            "outlet suspects: --baseline-from and --baseline-to go together",
+        ),
+        (
+            ("suspects", "--unit", UNIT_FILE, "--from", "2026-03-04", "--to", "2026-03-03"),
+            "outlet suspects: the first day 2026-03-04 lies after the last",
+        ),
+        (
+            ("suspects", "--unit", UNIT_FILE, "--from", "2025-03-04", "--to", "2026-03-03"),
+            "outlet suspects: more than 138 days at once",
+        ),
         (("lag", "--unit", UNIT_FILE, "--store", "nowhere"), "nowhere: there is no store here"),
         (("verify", "--stroe", "nowhere"), "outlet verify: No such option"),
         (("vrify",), "outlet: No such command 'vrify'"),

@@ -99,6 +99,8 @@ ORDER = (
     "monitor.typical",
     "monitor.expected",
     "monitor.judge",
+    "monitor.fit",
+    "monitor.suspicion",
     "monitor.delays",
     "monitor.telling",
     "monitor.progress",
