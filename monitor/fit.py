@@ -22,7 +22,8 @@ Floats = NDArray[np.float64]
 LENGTHS = (timedelta(hours=1), timedelta(hours=8), timedelta(hours=24))
 LEVEL = 0.01  # share of healthy windows that fail by chance
 IN_A_ROW = 2  # windows that have to fail one after the other before anything is named
-ALONE, CHANGE = "alone", "change"
+ALONE, CHANGE, BASELINE = "alone", "change", "baseline"
+BASELINE_LENGTH = LENGTHS[1]
 _US = timedelta(microseconds=1)
 
 
@@ -33,7 +34,7 @@ class Trial:
     Parameters
     ----------
     kind : str
-        `ALONE` or `CHANGE`.
+        `ALONE`, `CHANGE`, or `BASELINE` for windows of the healthy period alone.
     length : timedelta
         Of a window.
     start : array (w,)
@@ -148,7 +149,8 @@ def left_over(unit: Unit, problem: Problem, cells: Cells) -> CellResiduals:
 def fits(unit: Unit, problem: Problem, cells: Cells, healthy: Cells | None) -> tuple[Trial, ...]:
     """Test windows of every length, alone and, where a healthy period is given, as a change from it.
 
-    Windows follow one another without overlap and end with the last cell.
+    Windows follow one another without overlap and end with the last cell. The healthy period is tested too,
+    since a fault in it would show as a change the other way.
 
     Parameters
     ----------
@@ -168,6 +170,7 @@ def fits(unit: Unit, problem: Problem, cells: Cells, healthy: Cells | None) -> t
         baseline = windowed(base, np.array([0]), len(healthy.start))
         allowance = calibration_drift(unit, Causes(base.names, np.zeros((0, 0, 0))))
         tests += [_against(one, baseline, allowance) for one in tests]
+        tests.append(replace(_tested(unit, healthy, base, BASELINE_LENGTH), kind=BASELINE))
     return tuple(tests)
 
 
@@ -220,10 +223,10 @@ def failures(tests: Iterable[Trial]) -> list[Failure]:
     tests : iterable of Trial
         As `fits` gives them.
     """
-    of_kind: dict[str, list[Series]] = {CHANGE: [], ALONE: []}
+    of_kind: dict[str, list[Series]] = {CHANGE: [], ALONE: [], BASELINE: []}
     for test in tests:
         of_kind[test.kind] += series_of(test)
-    moved, alone = ([_failure(one) for one in _overlapping(found)] for found in of_kind.values())
+    moved, alone = ([_failure(one) for one in _overlapping(of_kind[kind])] for kind in (CHANGE, ALONE))
     untold = [
         one
         for one in alone

@@ -12,7 +12,7 @@ from ingest.unit import Unit
 from monitor import wording
 from monitor.delays import Analyzer, Delays
 from monitor.expected import JUDGED_BY, Expectation
-from monitor.fit import ALONE, CHANGE, IN_A_ROW, LENGTHS
+from monitor.fit import ALONE, BASELINE, CHANGE, IN_A_ROW, LENGTHS
 from monitor.judge import Judgement
 from monitor.run import Episode, PassResult
 from monitor.suspicion import ONE, OPEN, Finding, Fit, Report, Suspect
@@ -75,7 +75,7 @@ def _usual(found: Judgement) -> Iterator[str]:
     for name, quality in found.offered.items():
         yield f"could be added {name}: {quality}"
     if not found.offered:
-        yield "could be added nothing: every species and stream that the unit has is read already"
+        yield "could be added nothing: all is read, or the unit has no channel and no meter to compare with"
 
 
 def _expected(one: Expectation) -> str:
@@ -246,11 +246,17 @@ def suspected(found: Report) -> Iterator[str]:
     for length in LENGTHS:
         told = {one.kind: _fitting(one) for one in found.fits if one.window == length}
         yield f"{wording.window(length):<9} {told[ALONE]:<16} {told.get(CHANGE, 'not asked: no baseline')}"
+    for one in found.fits:
+        if one.kind == BASELINE:
+            warning = "; it holds a fault: name a better one" if one.failed > 1 else ""
+            yield f"healthy time, alone: {_fitting(one)} over {wording.window(one.window)}{warning}"
     share = wording.number(100 * found.false_share, 0)
     yield f"By chance {share} % of healthy windows fail; a reading is suspected when {IN_A_ROW} in a row do."
-    for one in found.findings:
-        yield from _finding(found, one)
-    if not any(one.tested for one in found.fits):
+    for finding in found.findings:
+        yield from _finding(found, finding)
+    if any(suspect.size < 0 for finding in found.findings for suspect in finding.suspects):
+        yield "Where a channel reads low and is found right, look for a product that no channel sees."
+    if not any(one.tested for one in found.fits if one.kind != BASELINE):
         yield "not tested: no window holds enough cells with readings to spare"
     elif not found.findings:
         yield "fits: no reading is suspected"

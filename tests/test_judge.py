@@ -155,6 +155,16 @@ def test_usual_readings_are_medians_of_the_time_in_which_the_unit_ran():
     assert np.isnan(usual(never)).all()
 
 
+def test_a_unit_without_channel_or_meter_has_nothing_to_take_as_a_measure(tmp_path: Path):
+    # the loop is read by flows of single species alone; usual readings of perfect instruments
+    unit = loaded(tmp_path, oxide_text(oxide_readings()))
+    found = judge(unit, as_cells(unit, arbitrary(unit, problem_of(unit))[None]))
+    assert found.offered == {}
+    assert "could be added nothing" in list(judged(found))[-1]
+    expected = {one.figure: one for one in found.usual.figures}
+    assert np.isfinite(expected["conversion per pass"].half_width).all()
+
+
 def test_a_judgement_changes_nothing_and_is_laid_out_with_null_for_what_is_not_known(shift):
     record = as_cells(shift, np.array([[FED, LEFT]] * 3))
     kept = record.value.copy()
