@@ -7,6 +7,7 @@ running total over the whole series), and a wild reading spoils its own cell onl
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import timedelta
 from typing import Any
@@ -21,6 +22,7 @@ from ingest.readings import BAD, Readings, Series, empty
 from ingest.samples import sums
 from ingest.screen import looks_ahead, looks_back, screened
 from ingest.unit import Instrument, Operating, Unit
+from ingest.votes import majority, voters
 
 OPERATING = ("running", "starting", "down", "turned down", "not known")
 RUNNING, STARTING, DOWN, TURNED_DOWN, NOT_KNOWN = range(5)
@@ -230,11 +232,15 @@ def make_cells(
     return Cells(start, value.T, share.T, condition.T, operating)
 
 
-def operating_of(load: Floats, start: Times, operating: Operating, carried: Carried) -> Codes:
-    """Tell the operating condition of each cell from its load.
+def operating_of(
+    load: Floats, start: Times, operating: Operating, carried: Carried, *, votes: Sequence[Floats] = ()
+) -> Codes:
+    """Tell the operating condition of each cell from its load and from what votes beside it.
 
     Down below `down_below`, back only above `running_above`; between the two it stays what it was, over
-    cells without load too. Before anything has told, a load between the two is not known.
+    cells without load too. Before anything has told, a load between the two is not known. With votes, down
+    and back are what most of the signals that are seen say; else, as in a tie, it stays what it was. A load
+    that was outvoted tells no turn-down.
 
     Parameters
     ----------
@@ -245,23 +251,26 @@ def operating_of(load: Floats, start: Times, operating: Operating, carried: Carr
     operating : Operating
     carried : Carried
         From the cells before.
+    votes : sequence of arrays (t,)
+        The signals of `operating.votes`, each in its own unit; NaN casts no vote.
 
     Returns
     -------
     array (t,) of int8
-        Index into OPERATING. Not known, then down, then starting, then turned down go before running.
+        Index into OPERATING. Not known (nothing seen, or nothing has told yet), then down, then starting,
+        then turned down go before running.
     """
-    up = load > operating.running_above
-    down, known = _last_told(load < operating.down_below, up, carried.down)
+    fell, up, seen = majority(np.array([load, *votes]), voters(operating))
+    down, known = _last_told(fell, up, carried.down)
     was_down = np.concatenate([[carried.down is True], down[:-1]])
     returned = np.where(up & was_down, start, -_NEVER)
     before = -_NEVER if carried.returned_us is None else carried.returned_us
     since = start - np.maximum(np.maximum.accumulate(returned), before)
     conditions = [
-        np.isnan(load) | ~known,
+        ~(seen & known),
         down,
         since < operating.starting_for // _US,
-        load < operating.turned_down_below,
+        (load >= operating.down_below) & (load < operating.turned_down_below),
     ]
     codes = np.select(conditions, [NOT_KNOWN, DOWN, STARTING, TURNED_DOWN], RUNNING)
     return codes.astype(np.int8)
@@ -517,11 +526,12 @@ def _dearest(
 
 
 def _operating(unit: Unit, value: Floats, start: Times, carried: Carried) -> Codes:
-    """The operating condition from the load instrument's row; running throughout where no rule is stated."""
+    """The operating condition from the rows of load and votes; running throughout where no rule is stated."""
     if unit.operating is None:
         return np.full(start.size, RUNNING, dtype=np.int8)
-    load = [i.name for i in unit.instruments].index(unit.operating.load)
-    return operating_of(value[load], start, unit.operating, carried)
+    names = [i.name for i in unit.instruments]
+    load, *votes = (value[names.index(vote.instrument)] for vote in voters(unit.operating))
+    return operating_of(load, start, unit.operating, carried, votes=votes)
 
 
 def _last_told(down: Flags, up: Flags, before: bool | None) -> tuple[Flags, Flags]:

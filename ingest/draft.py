@@ -25,12 +25,14 @@ _NEEDED = ("unit", "chemistry", "stream")
 class Draft:
     """The sections of one unit file; one that is not there is an entry without values, or an empty list.
 
-    `atoms` holds the composition of each declared species, None where its formula was refused.
+    `atoms` holds the composition of each declared species, None where its formula was refused; `votes` what
+    stands beside the load in the operating section.
     """
 
     once: dict[str, Entry]
     many: dict[str, list[Entry]]
     atoms: dict[str, Atoms | None] = field(default_factory=dict)
+    votes: list[Entry] = field(default_factory=list)
 
     @property
     def chemistry(self) -> Entry:
@@ -119,7 +121,7 @@ def _read_section(section: str, content: object, draft: Draft) -> list[Problem]:
         return [Problem(section, "wrong kind of heading", f"write {_heading(section)}")]
     if not isinstance(content, list):
         draft.once[section], problems = read_table(section, content, section)
-        return problems
+        return problems + (_open_votes(draft) if section == "operating" else [])
     problems = []
     for number, table in enumerate(content, start=1):
         name = table.get("name") if isinstance(table, Mapping) else None
@@ -146,6 +148,18 @@ def _open_channels(analyzer: Entry, draft: Draft) -> list[Problem]:
         problems += faults
     if analyzer.get("status"):
         draft.many["instrument"].append(_status(analyzer))
+    return problems
+
+
+def _open_votes(draft: Draft) -> list[Problem]:
+    """Read each vote of the operating section, named by its instrument where it states one."""
+    section, problems = "operating.vote", []
+    for number, table in enumerate(draft.once["operating"].get("vote") or (), start=1):
+        name = table.get("instrument") if isinstance(table, Mapping) else None
+        place = f"{section}[{name if isinstance(name, str) and name else number}]"
+        entry, faults = read_table(section, table, place)
+        draft.votes += [entry] if isinstance(table, Mapping) else []
+        problems += faults
     return problems
 
 

@@ -146,6 +146,12 @@ TABLE: tuple[Key, ...] = (
     Key("operating", "running_above", "number", "load above which it is back", "2000", "always"),
     Key("operating", "turned_down_below", "number", "load below which it is turned down; left out, it never is", "4000"),
     Key("operating", "starting_for", "duration", "time after coming back that counts as starting", '"4h"', default="0 s", low=0, high=30 * _DAY),
+    Key("operating", "vote", "votes", "other signals that tell down from running; most of those that are seen decide, the load among them", '[{ instrument = "FI-210", down_below = 9000, running_above = 15000 }]'),
+    Key("operating.vote", "instrument", "text", "instrument that gives the signal", '"FI-210"', "always"),
+    Key("operating.vote", "down_below", "number", "value below which it says down", "9000", "unless down_above is stated"),
+    Key("operating.vote", "running_above", "number", "value above which it says running", "15000", "with down_below"),
+    Key("operating.vote", "down_above", "number", "value above which it says down, where high means down", "16.0", "unless down_below is stated"),
+    Key("operating.vote", "running_below", "number", "value below which it says running", "12.0", "with down_above"),
     Key("catalyst", "charged", "moment", "when the catalyst was charged, with its offset", "2026-02-10T06:00:00+01:00", "always"),
     Key("hold_up", "total_kmol", "number", "what a well-mixed reactor holds at any time, all species together [kmol]", "12.5", "always", low=1e-9),
     Key("hold_up", "relative_pct", "number", "standard uncertainty (k = 1) of that in percent", "5", "always", low=0.001, high=100),
@@ -398,10 +404,14 @@ def span_words(seconds: float) -> str:
     return quantities.duration_words(timedelta(seconds=seconds))
 
 
-def _durations(value: object, row: Key) -> tuple[Any, ...]:
+def _listed(value: object, row: Key, form: str) -> list[Any]:
     if not isinstance(value, list) or not value:
-        raise _misfit(value, row, "a list of time spans")
-    return tuple(_duration(item, row) for item in value)
+        raise _misfit(value, row, form)
+    return value
+
+
+def _durations(value: object, row: Key) -> tuple[Any, ...]:
+    return tuple(_duration(item, row) for item in _listed(value, row, "a list of time spans"))
 
 
 def _moment(value: object, row: Key) -> datetime:
@@ -433,6 +443,10 @@ def _named(value: object, row: Key) -> dict[str, Any]:
     return dict(value)
 
 
+def _tables(value: object, row: Key) -> list[Any]:
+    return _listed(value, row, "a list of tables")
+
+
 def _numbers(value: object, row: Key) -> dict[str, float]:
     return {name: _number(item, row) for name, item in _named(value, row).items()}
 
@@ -442,9 +456,8 @@ def _bands(value: object, row: Key) -> dict[str, tuple[float, float]]:
 
 
 def _states(value: object, row: Key) -> tuple[float | str, ...]:
-    if not isinstance(value, list) or not value:
-        raise _misfit(value, row, "a list of numbers or words")
-    return tuple(_text(item, row) if isinstance(item, str) else _number(item, row) for item in value)
+    items = _listed(value, row, "a list of numbers or words")
+    return tuple(_text(item, row) if isinstance(item, str) else _number(item, row) for item in items)
 
 
 FORMS: dict[str, Callable[[object, Key], Any]] = {
@@ -463,4 +476,5 @@ FORMS: dict[str, Callable[[object, Key], Any]] = {
     "bands": _bands,
     "states": _states,
     "channels": _named,
+    "votes": _tables,
 }

@@ -32,6 +32,7 @@ from ingest.conditions import Flags, takes_part
 from ingest.readings import Readings, Series
 from ingest.screen import screened
 from ingest.unit import FLOW_KINDS, FRACTION_KINDS, Instrument, Unit
+from ingest.votes import voters
 
 ANSWERS = ("as declared", "differs", "cannot tell", "not checked")
 AS_DECLARED, DIFFERS, CANNOT_TELL, NOT_CHECKED = ANSWERS
@@ -287,13 +288,15 @@ def _movement(unit: Unit, readings: Readings, usable: Sequence[Flags], grid: Tim
 
 
 def _running(unit: Unit, readings: Readings, usable: Sequence[Flags], grid: Times) -> Flags:
-    """Where the unit runs, turned down or not; everywhere if nothing tells the load."""
+    """Where the unit runs, turned down or not; everywhere if no rule is stated."""
     rule = unit.operating
-    for at, one in enumerate(unit.instruments):
-        if rule is not None and one.name == rule.load and one.tag is not None:
-            codes = operating_of(_at(grid, one, readings, usable[at]), grid, rule, Carried())
-            return np.isin(codes, (RUNNING, TURNED_DOWN))
-    return np.ones(len(grid), dtype=bool)
+    if rule is None:
+        return np.ones(len(grid), dtype=bool)
+    names = [one.name for one in unit.instruments]
+    places = [names.index(vote.instrument) for vote in voters(rule)]
+    load, *votes = (_at(grid, unit.instruments[at], readings, usable[at]) for at in places)
+    codes = operating_of(load, grid, rule, Carried(), votes=votes)
+    return np.isin(codes, (RUNNING, TURNED_DOWN))
 
 
 def _at(grid: Times, instrument: Instrument, readings: Readings, usable: Flags) -> Floats:

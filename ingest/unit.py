@@ -134,11 +134,24 @@ class SharedError:
 
 
 @dataclass(frozen=True, slots=True)
-class Operating:
-    """How the load tells the operating condition; limits in the load instrument's own unit.
+class Vote:
+    """What one signal says: down beyond `down`, running beyond `running`, in its own unit.
 
-    Down below `down_below`; back only above `running_above`; starting for `starting_for` after that;
-    turned down below `turned_down_below`.
+    The side is told by their order: where `down` is the lower limit, a low value says down, else a high one.
+    """
+
+    instrument: str
+    down: float
+    running: float
+
+
+@dataclass(frozen=True, slots=True)
+class Operating:
+    """How load and votes tell the operating condition; limits in the load instrument's own unit.
+
+    Down once most of the signals that are seen say so, the load by `down_below`; back once most say running,
+    the load by `running_above`; starting for `starting_for` after that; turned down by the load alone, below
+    `turned_down_below`. Without votes the load decides by itself.
     """
 
     load: str
@@ -146,6 +159,7 @@ class Operating:
     running_above: float
     turned_down_below: float
     starting_for: timedelta
+    votes: tuple[Vote, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

@@ -27,6 +27,7 @@ from ingest.unit import (
     Stream,
     Uncertainty,
     Unit,
+    Vote,
     Watch,
 )
 
@@ -133,7 +134,7 @@ def _build(read: Draft, key: str) -> Unit:
         instruments=tuple(_instrument(entry, read) for entry in read.many["instrument"]),
         shared=tuple(_shared(entry, read) for entry in read.many["shared"]),
         analyzers=tuple(_analyzer(entry, read) for entry in read.many["analyzer"]),
-        operating=_operating(read.once["operating"]),
+        operating=_operating(read),
         catalyst_charged=read.once["catalyst"].get("charged"),
         watches=tuple(_watch(entry) for entry in read.many["watch"]),
         windows=tuple(sorted(unit.get("windows"))),
@@ -226,8 +227,9 @@ def _shared(entry: Entry, read: Draft) -> SharedError:
     return SharedError(entry.get("name"), members, entry.get("relative_pct") / 100.0)
 
 
-def _operating(entry: Entry) -> Operating | None:
+def _operating(read: Draft) -> Operating | None:
     """Make the operating rules, or None when the section is not there."""
+    entry = read.once["operating"]
     if not entry.values:
         return None
     down, turned = entry.get("down_below"), entry.get("turned_down_below")
@@ -237,7 +239,14 @@ def _operating(entry: Entry) -> Operating | None:
         running_above=entry.get("running_above"),
         turned_down_below=down if turned is None else turned,
         starting_for=entry.get("starting_for"),
+        votes=tuple(_vote(vote) for vote in read.votes),
     )
+
+
+def _vote(entry: Entry) -> Vote:
+    """Make one vote by the pair of limits it states."""
+    [pair] = (pair for pair in unitrules.VOTE_LIMITS if not entry.lacks(pair[0]))
+    return Vote(entry.get("instrument"), *(entry.get(key) for key in pair))
 
 
 def _hold_up(entry: Entry) -> HoldUp | None:

@@ -17,6 +17,7 @@ from ingest.unit import AUXILIARY_KINDS, NO_RATES
 
 HOUR = timedelta(hours=1)
 DAY = timedelta(days=1)
+VOTE_LIMITS = (("down_below", "running_above"), ("down_above", "running_below"))
 PER_PASS = ("conversion", "selectivity on converted", "yield on feed")
 
 
@@ -221,6 +222,38 @@ def _load_limits_are_in_order(draft: Draft) -> Iterator[Problem]:
         yield Problem(entry.at("turned_down_below"), what, "write a higher load, or leave it out")
 
 
+def _votes_can_be_cast(draft: Draft) -> Iterator[Problem]:
+    """A vote names an instrument with a tag, each another than the load, and has one pair of limits."""
+    load = Entry("operating.load", {"instrument": draft.once["operating"].get("load")})
+    known = [e.get("name") for e in draft.many["instrument"] if e.get("name") and e.get("value") is None]
+    yield from twice(
+        [load, *draft.votes], "instrument", "give each signal one vote; the load has one already"
+    )
+    for entry in draft.votes:
+        asked = [entry.get("instrument")] if entry.get("instrument") else []
+        yield from undeclared(entry, "instrument", asked, known, "instrument with a tag")
+        yield from _vote_limits(entry)
+
+
+def _vote_limits(vote: Entry) -> Iterator[Problem]:
+    """One pair of limits, both of it, with room between down and running."""
+    stated = [pair for pair in VOTE_LIMITS if not all(vote.lacks(key) for key in pair)]
+    if len(stated) != 1:
+        what = "has limits on both sides" if stated else "has no limits"
+        remedy = "write down_below and running_above, or down_above and running_below"
+        yield Problem(vote.place, what, remedy)
+        return
+    [pair] = stated
+    for lacking, other in (pair, pair[::-1]):
+        if vote.lacks(lacking):
+            yield Problem(vote.at(lacking), f"missing beside {other}", f"write {lacking} = ... too")
+    down, running = (vote.get(key) for key in pair)
+    side = pair[1].removeprefix("running_")
+    if None not in (down, running) and (running <= down if side == "above" else running >= down):
+        what = f"{running:g} is not {side} {pair[0]} = {down:g}"
+        yield Problem(vote.at(pair[1]), what, "leave room between the two, so that noise does not flip it")
+
+
 def _watches_can_be_judged(draft: Draft) -> Iterator[Problem]:
     """A watch names a figure and a window that exist, and limits that leave room for its deadband."""
     windows = draft.once["unit"].get("windows") or ()
@@ -309,5 +342,6 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     analyzerrules.words_have_one_meaning,
     _shared_errors_have_members,
     _load_limits_are_in_order,
+    _votes_can_be_cast,
     _watches_can_be_judged,
 )

@@ -28,6 +28,7 @@ HEADINGS = {
     "status": "status",
     "shared": "[[shared]]",
     "operating": "[operating]",
+    "operating.vote": "[[operating.vote]]",
     "catalyst": "[catalyst]",
     "hold_up": "[hold_up]",
     "watch": "[[watch]]",
@@ -62,6 +63,11 @@ ABOUT = {
     " Where no status stands (none came for `max_age`), results are not checked.",
     "shared": "A systematic error that moves several instruments together, such as the span of an analyzer.",
     "operating": "How the load tells whether the reactor is down, starting, turned down or running.",
+    "operating.vote": "Signals that vote beside the load, so that one dead meter does not call a shutdown. The reactor is"
+    " down once more than half of the signals that are seen say down, and back once more than half say running; in"
+    " between it stays what it was. A missing, stale or refused signal has no vote; one between its two limits counts"
+    " as seen and says neither. Take signals that move within minutes of the feed and that fail each by itself: other"
+    " feeds, the outlet flow, oxygen at the outlet. Where no signal is seen, the condition is not known.",
     "hold_up": "What a well-mixed reactor holds. With it the instantaneous selectivity is worked out: its contents have"
     " the composition of the one stream that leaves it, and what they gain counts as formed.",
     "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"

@@ -30,6 +30,7 @@ def more(section: str) -> str:
     return f"{DEMO}\n{section}"
 
 
+NO_VOTES = DEMO[: DEMO.index("[[operating.vote]]")] + DEMO[DEMO.index("[catalyst]") :]
 DECLARED = 'name = "oxygen in air"'
 CHANNEL = 'acetone = { tag = "AI-220.ACE", range = [0, 2], systematic = { relative_pct = 2, floor = 0.002 } }'
 WATCH = '[[watch]]\nfigure = "conversion"\nwindow = "8h"\nlow = 90\npriority = "low"\n'
@@ -228,7 +229,7 @@ BAD = {
         "stream[air].name", "'air' already belongs to stream[air]", "give each its own name",
     ),
     "two instruments of one name": (
-        with_edit('name = "FI-203"', 'name = "FI-201"'),
+        with_edit('name = "TI-205"', 'name = "FI-201"'),
         "instrument[FI-201].name", "'FI-201' already belongs to instrument[FI-201]", "give each its own name",
     ),
     "an instrument named like a channel": (
@@ -537,6 +538,50 @@ BAD = {
         with_edit("turned_down_below = 4000", "turned_down_below = 500"),
         "operating.turned_down_below", "500 is not above down_below = 1000", "or leave it out",
     ),
+    "votes that are no list": (
+        with_edit('load = "FI-201"', 'load = "FI-201"\nvote = 3', NO_VOTES),
+        "operating.vote", "3 is not a list of tables", "write vote = [{ instrument =",
+    ),
+    "a vote that is no table": (
+        with_edit('load = "FI-201"', 'load = "FI-201"\nvote = ["FI-210"]', NO_VOTES),
+        "operating.vote[1]", "'FI-210' is no table", "write it under [operating.vote]",
+    ),
+    "a vote of an instrument that is not there": (
+        with_edit('instrument = "FI-210"', 'instrument = "FI-211"'),
+        "operating.vote[FI-211].instrument", "'FI-211' is no instrument with a tag", "did you mean",
+    ),
+    "a vote of a certificate": (
+        with_edit('instrument = "FI-210"', 'instrument = "oxygen in air"'),
+        "operating.vote[oxygen in air].instrument", "is no instrument with a tag", "write one of 'FI-201'",
+    ),
+    "a second vote of the load": (
+        with_edit('instrument = "FI-210"', 'instrument = "FI-201"'),
+        "operating.vote[FI-201].instrument", "'FI-201' already belongs to operating.load", "one vote",
+    ),
+    "two votes of one signal": (
+        with_edit('instrument = "FI-210"', 'instrument = "FI-203"'),
+        "operating.vote[FI-203].instrument", "already belongs to operating.vote[FI-203]", "one vote",
+    ),
+    "a vote without limits": (
+        with_edit("down_below = 9000\nrunning_above = 15500\n", ""),
+        "operating.vote[FI-210]", "has no limits", "write down_below and running_above, or down_above and",
+    ),
+    "a vote with limits on both sides": (
+        with_edit("running_above = 15500", "running_below = 15500"),
+        "operating.vote[FI-210]", "has limits on both sides", "write down_below and running_above, or",
+    ),
+    "a vote that never says running": (
+        with_edit("running_above = 15500\n", ""),
+        "operating.vote[FI-210].running_above", "missing beside down_below", "write running_above = ... too",
+    ),
+    "a vote without room between its limits": (
+        with_edit("running_above = 15500", "running_above = 9000"),
+        "operating.vote[FI-210].running_above", "9000 is not above down_below = 9000", "leave room between",
+    ),
+    "a vote of the other side without room": (
+        with_edit("running_below = 12", "running_below = 17"),
+        "operating.vote[AI-220 oxygen].running_below", "17 is not below down_above = 16", "leave room",
+    ),
     "a figure that is none": (
         with_edit('figure = "yield on feed"', 'figure = "yield on fed"'),
         "watch[1].figure", "'yield on fed' is no figure of this unit", "did you mean 'yield on feed'?",
@@ -611,7 +656,7 @@ def test_the_error_is_laid_out_as_one_line_per_fault(tmp_path: Path):
         UnitFileError, match=r"made\.toml: 1 problem\n  unit\.cell: '10' is no time span; "
     ) as caught:
         loaded(tmp_path, text)
-    assert str(caught.value).endswith("\n  Mend the keys named above.")
+    assert str(caught.value).endswith("\n  Mend what is named above.")
 
 
 def test_a_fault_of_an_analyzer_is_told_once_not_once_per_channel(tmp_path: Path):

@@ -42,6 +42,7 @@ ORDER = (
     "ingest.samples",
     "ingest.checks",
     "ingest.screen",
+    "ingest.votes",
     "ingest.cells",
     "ingest.instruments",
     "ingest.lag",
