@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
 from datetime import timedelta
 from typing import Any
@@ -13,8 +13,9 @@ from numpy.typing import NDArray
 from ingest.balance import Problem, problem_of
 from ingest.cells import Cells
 from ingest.instruments import balance_columns
+from ingest.pairs import pairs
 from ingest.residuals import Residuals
-from ingest.suspects import PASSES, STOPS, Elimination, biases, eliminate
+from ingest.suspects import PASSES, STOPS, biases, eliminate
 from ingest.unit import FLOW_KINDS, Unit
 from monitor.amounts import amounts_of
 from monitor.board import key_figures
@@ -32,6 +33,11 @@ PLAUSIBLE = (
     0.5  # of its reading; nobody overlooks an instrument that is off by more (common practice, no source)
 )
 
+MOST = 5  # pairs that are told of one failure
+
+# Causes, each with size and standard error; and whether no others explain more.
+Explanation = tuple[tuple[tuple[str, float, float], ...], bool]
+
 # Where to look first, by what is suspected (common practice, no source).
 CHECKS = {
     "channel": "run a calibration check of this channel; compare with a lab sample of the same hour",
@@ -44,22 +50,37 @@ CHECKS = {
 
 
 @dataclass(frozen=True, slots=True)
-class Suspect:
-    """One thing that would explain a failure.
+class Part:
+    """One thing that may be off.
 
     `size` and `half_width` (95 %) are fractions of its reading, above zero when it reads too high (of an air
-    leak: the share of the sample that is air). `is_likeliest` tells whether nothing explains more,
-    `is_plausible` whether the size is at most `PLAUSIBLE`. `without` holds the value of each main figure
-    without it, in the order of `Finding.figures`; NaN where it cannot be seen then.
+    leak: the share of the sample that is air).
     """
 
     name: str
     size: float
     half_width: float
+    check: str
+
+
+@dataclass(frozen=True, slots=True)
+class Suspect:
+    """What would explain a failure: one thing, or two that are off at once.
+
+    `is_likeliest` tells whether nothing explains more, `is_plausible` whether every size is at most
+    `PLAUSIBLE`. `without` holds the value of each main figure without it, in the order of `Finding.figures`;
+    NaN where it cannot be seen then.
+    """
+
+    parts: tuple[Part, ...]
     is_likeliest: bool
     is_plausible: bool
     without: tuple[float, ...]
-    check: str
+
+    @property
+    def name(self) -> str:
+        """Give the names of its parts."""
+        return " and ".join(part.name for part in self.parts)
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,8 +89,8 @@ class Finding:
 
     `kind` and `window` tell which test it is. It lasts from `since_us` to `until_us`, the windows in between
     failed one after the other; `is_lasting` when none has fitted since. Sizes and figures are those of the
-    worst window, from `worst_us` on. `then` holds the causes that are left when the likeliest is explained
-    away, each one a set that cannot be told apart.
+    worst window, from `worst_us` on. Of several causes the suspects are pairs, those that explain most
+    first; `untold` more pairs explain it nearly as well.
     """
 
     kind: str
@@ -81,8 +102,7 @@ class Finding:
     p_value: float
     answer: str
     suspects: tuple[Suspect, ...]
-    then: tuple[tuple[str, ...], ...]
-    is_explained: bool
+    untold: int
     figures: tuple[tuple[str, str, float], ...]  # name, unit, value with all readings
 
 
@@ -147,11 +167,12 @@ def _finding(unit: Unit, problem: Problem, cells: Cells, failure: Failure) -> Fi
     """Explain one failure by its worst window."""
     test, worst = failure.worst.test, failure.worst.worst
     window = test.residuals.take(slice(worst, worst + 1))
-    found = eliminate(window, level=LEVEL)
     first = int(np.searchsorted(cells.start, test.start[worst]))
     inside = rows(cells, slice(first, first + max(1, round(test.length / unit.cell))))
     figures, with_all = _main_figures(unit, problem, inside)
-    suspects = _suspects(unit, problem, inside, window, found)
+    singles = _singles(window)
+    both = [] if singles else _pairs(window)
+    told = singles or both[:MOST]
     return Finding(
         kind=test.kind,
         window=test.length,
@@ -160,45 +181,70 @@ def _finding(unit: Unit, problem: Problem, cells: Cells, failure: Failure) -> Fi
         worst_us=int(test.start[worst]),
         is_lasting=failure.is_lasting,
         p_value=float(test.p_value[worst]),
-        answer=_answer(found, suspects),
-        suspects=suspects,
-        then=tuple(step.suspects for step in found.steps[1:]),
-        is_explained=found.stop == STOPS[PASSES],
+        answer=_answer(told),
+        suspects=tuple(_suspect(unit, problem, inside, *one) for one in told),
+        untold=max(0, len(both) - MOST),
         figures=tuple((one.name, one.unit, value) for one, value in zip(figures, with_all, strict=True)),
     )
 
 
-def _answer(found: Elimination, suspects: tuple[Suspect, ...]) -> str:
-    """Tell whether one thing is named: it explains enough, and nothing else does by a size to be believed."""
-    if len(found.steps) > 1 or found.stop != STOPS[PASSES]:
-        return SEVERAL
-    return ONE if sum(one.is_plausible for one in suspects) == 1 else OPEN
+def _singles(window: Residuals) -> list[Explanation]:
+    """Give what explains a window by itself and what comes near it, sizes that can be believed first.
 
-
-def _suspects(
-    unit: Unit, problem: Problem, cells: Cells, window: Residuals, found: Elimination
-) -> tuple[Suspect, ...]:
-    """Give what explains one window best and what comes near it; sizes that can be believed first."""
-    if not found.steps:
-        return ()
+    Nothing where one cause is not enough, or none has a size to be believed.
+    """
+    found = eliminate(window, level=LEVEL)
+    if len(found.steps) != 1 or found.stop != STOPS[PASSES]:
+        return []
     alone = biases(window)
     likeliest, rivals = found.steps[0].suspects, found.steps[0].rivals
-    suspects = []
+    told: list[Explanation] = []
     for name in (*likeliest, *rivals):
         at = alone.names.index(name)
-        size, error = float(alone.size[0, at]), float(alone.standard_error[0, at])
-        suspects.append(
-            Suspect(
-                name=name,
-                size=size,
-                half_width=TWO_SIDED_95 * error,
-                is_likeliest=name in likeliest,
-                is_plausible=abs(size) <= PLAUSIBLE,
-                without=_main_figures(unit, problem, put_right(unit, problem, cells, name, size))[1],
-                check=CHECKS[_sort(unit, name)],
-            )
-        )
-    return tuple(sorted(suspects, key=lambda one: not one.is_plausible))
+        own = (name, float(alone.size[0, at]), float(alone.standard_error[0, at]))
+        told.append(((own,), name in likeliest))
+    ordered = sorted(told, key=lambda one: not _is_plausible(one))
+    return ordered if _is_plausible(ordered[0]) else []
+
+
+def _pairs(window: Residuals) -> list[Explanation]:
+    """Give the pairs that explain a window, the likeliest first."""
+    found = pairs(window, level=LEVEL, largest=PLAUSIBLE)
+    return [
+        (tuple(zip(one.names, one.size, one.standard_error, strict=True)), one is found[0]) for one in found
+    ]
+
+
+def _is_plausible(one: Explanation) -> bool:
+    return all(abs(size) <= PLAUSIBLE for _, size, _ in one[0])
+
+
+def _answer(explained: Sequence[Explanation]) -> str:
+    """Tell whether one thing is named: nothing else explains it by a size to be believed."""
+    if not explained or len(explained[0][0]) > 1:
+        return SEVERAL
+    return ONE if sum(_is_plausible(one) for one in explained) == 1 else OPEN
+
+
+def _suspect(
+    unit: Unit,
+    problem: Problem,
+    cells: Cells,
+    parts: tuple[tuple[str, float, float], ...],
+    is_likeliest: bool,
+) -> Suspect:
+    """Lay out one explanation, with the figures without it."""
+    right = cells
+    for name, size, _ in parts:
+        right = put_right(unit, problem, right, name, size)
+    return Suspect(
+        parts=tuple(
+            Part(name, size, TWO_SIDED_95 * error, CHECKS[_sort(unit, name)]) for name, size, error in parts
+        ),
+        is_likeliest=is_likeliest,
+        is_plausible=_is_plausible((parts, is_likeliest)),
+        without=_main_figures(unit, problem, right)[1],
+    )
 
 
 def put_right(unit: Unit, problem: Problem, cells: Cells, cause: str, size: float) -> Cells:

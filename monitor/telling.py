@@ -15,7 +15,7 @@ from monitor.expected import JUDGED_BY, Expectation
 from monitor.fit import ALONE, BASELINE, CHANGE, IN_A_ROW, LENGTHS
 from monitor.judge import Judgement
 from monitor.run import Episode, PassResult
-from monitor.suspicion import ONE, OPEN, Finding, Fit, Report, Suspect
+from monitor.suspicion import ONE, OPEN, PLAUSIBLE, Finding, Fit, Part, Report
 
 
 def judged(found: Judgement) -> Iterator[str]:
@@ -254,7 +254,8 @@ def suspected(found: Report) -> Iterator[str]:
     yield f"By chance {share} % of healthy windows fail; a reading is suspected when {IN_A_ROW} in a row do."
     for finding in found.findings:
         yield from _finding(found, finding)
-    if any(suspect.size < 0 for finding in found.findings for suspect in finding.suspects):
+    parts = [part for finding in found.findings for one in finding.suspects for part in one.parts]
+    if any(part.size < 0 for part in parts):
         yield "Where a channel reads low and is found right, look for a product that no channel sees."
     if not any(one.tested for one in found.fits if one.kind != BASELINE):
         yield "not tested: no window holds enough cells with readings to spare"
@@ -281,7 +282,9 @@ def _finding(report: Report, one: Finding) -> Iterator[str]:
     yield ""
     yield f"does not fit ({how}) {when}: {_answer(one)}"
     for number, suspect in enumerate(one.suspects, start=1):
-        yield f"  ({number}) {suspect.name} {_size(suspect, one.kind)}; check first: {suspect.check}"
+        for place, part in enumerate(suspect.parts):
+            mark = f"({number})" if not place else "and"
+            yield f"  {mark} {part.name} {_size(part, one.kind)}; check first: {part.check}"
     worst = wording.local_time(wording.utc(one.worst_us), report.time_zone)
     yield f"  {f'{wording.window(one.window)} from {worst}':<45} {'as shown':>12}" + "".join(
         f"  without ({number})" for number in range(1, len(one.suspects) + 1)
@@ -294,22 +297,24 @@ def _finding(report: Report, one: Finding) -> Iterator[str]:
 def _answer(one: Finding) -> str:
     """Tell in a sentence what the failure points at."""
     names = [suspect.name for suspect in one.suspects if suspect.is_plausible]
-    names = names or [suspect.name for suspect in one.suspects]
     if one.answer == ONE:
         return f"{names[0]} is suspected"
     if one.answer == OPEN:
         return f"cannot tell which of {', '.join(names)}: their traces are alike"
-    sets = [[suspect.name for suspect in one.suspects if suspect.is_likeliest], *one.then]
-    then = ", then ".join(" or ".join(own) for own in sets)
-    enough = "one after the other these explain it" if one.is_explained else "not even these explain it all"
-    return f"several causes, or one that no instrument here shows; {enough}: {then}"
+    causes = "several causes, or one that no instrument here shows"
+    if not one.suspects:
+        return f"{causes}: no pair is found that explains it"
+    if len(one.suspects) == 1:
+        return f"{causes}; only this pair explains it: {names[0]}"
+    more = f" and {one.untold} more" if one.untold else ""
+    return f"{causes}; cannot tell which pair: {'; '.join(names)}{more}"
 
 
-def _size(suspect: Suspect, kind: str) -> str:
+def _size(part: Part, kind: str) -> str:
     """Tell by how much a suspect would have to be off, or to have moved."""
-    told = wording.amount(100 * abs(suspect.size), 100 * suspect.half_width, "%")
-    unlikely = "" if suspect.is_plausible else " (unlikely: more than half of it)"
-    up = suspect.size > 0
+    told = wording.amount(100 * abs(part.size), 100 * part.half_width, "%")
+    unlikely = "" if abs(part.size) <= PLAUSIBLE else " (unlikely: more than half of it)"
+    up = part.size > 0
     how = f"reads too {'high' if up else 'low'}" if kind == ALONE else f"has moved {'up' if up else 'down'}"
     return f"{how} by {told} of its reading{unlikely}"
 

@@ -103,7 +103,7 @@ def test_half_widths_need_a_store_and_are_then_those_that_the_store_shows(
         shown = stage.to_pandas(ignore_metadata=True).tail(1008).median(numeric_only=True)
         for name in names:
             expected = shown[f"{name} | as operated | half_width"]
-            assert figures[name][place] == pytest.approx(expected, rel=0.1)
+            assert figures[name][place] == pytest.approx(expected, rel=0.02)
     told = outlet("check", UNIT_FILE, "--store", store, folder=plant[0]).stdout
     assert "% narrower with a channel on water in outlet\n" in told
 

@@ -54,6 +54,7 @@ ORDER = (
     "ingest.causes",
     "ingest.residuals",
     "ingest.suspects",
+    "ingest.pairs",
     "ingest.parts",
     "ingest.episodes",
     "ingest.snapshot",

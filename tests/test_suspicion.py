@@ -15,7 +15,9 @@ from demo_data.meters import as_readings, measure
 from demo_data.plant import simulate
 from ingest.balance import problem_of
 from ingest.cells import DOWN, STARTING, Cells, make_cells
+from ingest.pairs import pairs
 from ingest.reconcile import reconcile
+from ingest.suspects import global_test
 from monitor.fit import ALONE, CHANGE, LENGTHS, LEVEL, Trial, counted, failures, fits, series_of
 from monitor.months import rows
 from monitor.run import run_pass
@@ -23,7 +25,8 @@ from monitor.store import cells as stored
 from monitor.store import days
 from monitor.suspicion import ANSWERS, CHECKS, as_table, put_right, report
 from monitor.telling import suspected
-from tests.residuals_made import biased, healthy
+from tests.balances_made import PUBLISHED
+from tests.residuals_made import biased, healthy, of_case
 from tests.test_half_widths import DEMO, record
 
 DAY = 144  # cells
@@ -93,7 +96,8 @@ def test_a_reading_that_moves_is_named_with_its_size_and_since_when(name: str, s
     likeliest = found.suspects[0]
     assert (likeliest.name, likeliest.is_likeliest) == (name, True)
     # by hand: an error of e of the truth is e / (1 + e) of what is shown
-    assert abs(likeliest.size - size / (1 + size)) < likeliest.half_width
+    (part,) = likeliest.parts
+    assert abs(part.size - size / (1 + size)) < part.half_width
 
 
 def test_of_two_meters_with_the_same_trace_it_cannot_be_told_which():
@@ -103,7 +107,7 @@ def test_of_two_meters_with_the_same_trace_it_cannot_be_told_which():
     assert found.answer == OPEN
     steam, outlet = (one for one in found.suspects if one.is_plausible)
     assert (steam.name, outlet.name) == ("FI-203", "FI-210")
-    assert steam.size < 0 < outlet.size
+    assert steam.parts[0].size < 0 < outlet.parts[0].size
     told = list(suspected(report(DEMO, after, before)))
     assert (
         told[-1] == "Where a channel reads low and is found right, look for a product that no channel sees."
@@ -111,14 +115,59 @@ def test_of_two_meters_with_the_same_trace_it_cannot_be_told_which():
     assert any("cannot tell which of FI-203, FI-210: their traces are alike" in line for line in told)
 
 
-def test_two_readings_that_move_are_never_called_one_clean_cause():
+@pytest.mark.parametrize(
+    "sick",
+    [
+        {"FI-202": 0.03, "AI-220 methacrolein": -0.05},
+        {"FI-202": 0.05, "AI-220 oxygen": -0.05},
+        {"FI-203": 0.06, "AI-220 methacrolein": -0.05},
+        {"FI-201": 0.03, "AI-220 oxygen": 0.05},
+    ],
+    ids=" and ".join,
+)
+def test_two_readings_that_move_are_told_as_a_pair_and_never_called_one_clean_cause(sick: dict[str, float]):
+    for number in range(3):
+        before, after = made((20, number), sick)
+        found = min(report(DEMO, after, before).findings, key=lambda one: one.p_value)
+        assert found.answer == SEVERAL
+        (pair,) = (one for one in found.suspects if {part.name for part in one.parts} == set(sick))
+        for part in pair.parts:
+            true = sick[part.name] / (1 + sick[part.name])
+            assert abs(part.size - true) < 2 * part.half_width
+
+
+def test_the_only_pair_that_explains_a_failure_is_named():
     before, after = made(3, {"FI-202": 0.05, "AI-220 methacrolein": -0.08})
-    (found,) = report(DEMO, after, before).findings
-    assert found.answer == SEVERAL
     told = list(suspected(report(DEMO, after, before)))
-    assert any(
-        "several causes, or one that no instrument here shows; one after the other" in line for line in told
-    )
+    assert any(line.endswith("only this pair explains it: FI-202 and AI-220 methacrolein") for line in told)
+    assert any(line.startswith("  and AI-220 methacrolein has moved down by") for line in told)
+
+
+def test_a_pair_of_biases_has_the_sizes_that_were_put_in():
+    # law: error-free readings of the heat exchanger network (Narasimhan & Jordache 2000) but for two biases
+    reading = np.array(PUBLISHED["NJ6"]["true"]) + np.array([0, 12, 0, 0, 0, -6])
+    residuals = of_case(PUBLISHED["NJ6"], reading)
+    best = pairs(residuals, level=LEVEL, largest=np.inf)[0]
+    assert best.names == ("2", "6")
+    np.testing.assert_allclose(best.size, [12, -6])
+    assert best.p_value == pytest.approx(1)
+    # law: the pair takes all of the objective
+    assert best.ratio == pytest.approx(global_test(residuals).statistic[0])
+
+
+def test_where_no_pair_explains_a_failure_none_is_named():
+    # three large biases: what any two of them leave is more than chance allows
+    before, after = made(4, {"FI-202": 0.1, "AI-220 methacrolein": -0.2, "FI-201": 0.15})
+    told = report(DEMO, after, before)
+    found = min(told.findings, key=lambda one: one.p_value)
+    assert (found.answer, found.suspects) == (SEVERAL, ())
+    assert any(line.endswith("no pair is found that explains it") for line in suspected(told))
+
+
+def test_with_two_degrees_of_freedom_no_pair_can_be_tested():
+    residuals = of_case(PUBLISHED["NJ6"], [101.91, 64.45, 34.65, 64.2, np.nan, np.nan])
+    assert global_test(residuals).freedom[0] <= 2
+    assert pairs(residuals, level=LEVEL, largest=np.inf) == ()
 
 
 @pytest.mark.parametrize(
@@ -228,11 +277,12 @@ def test_the_drifting_channel_is_named_with_its_size(plant):
     assert found.answer == ONE
     likeliest = found.suspects[0]
     assert likeliest.name == "AI-220 methacrolein"
-    assert likeliest.check == CHECKS["channel"]
+    assert likeliest.parts[0].check == CHECKS["channel"]
     # it grows evenly; what is told is of the worst window, as a fraction of what is shown
     middle = found.worst_us + found.window // timedelta(microseconds=2)
     size = drift["size_pct"] / 100 * min(1, (middle - begun) / (ended - begun))
-    assert abs(likeliest.size - size / (1 + size)) < likeliest.half_width
+    (part,) = likeliest.parts
+    assert abs(part.size - size / (1 + size)) < part.half_width
     # the calibration ended it within the hour in which it did
     assert abs(found.until_us - ended) <= HOUR_US
 
