@@ -131,7 +131,7 @@ def limit_episodes(
 
     Notes
     -----
-    ANSI/ISA-18.2-2016 for the terms (quoted in an open course text; the standard itself not seen). A value
+    ANSI/ISA-18.2-2016 for the terms (quoted in an open teaching text; the standard itself not seen). A value
     on the limit is inside.
     """
     if not len(end_us) == len(value) == len(half_width) == len(operating):

@@ -55,7 +55,7 @@ def _minutes(times) -> list[float]:
     return ((times - pd.Timestamp(MIDNIGHT, unit="us", tz="UTC")) / pd.Timedelta(minutes=1)).tolist()
 
 
-# Terms: ANSI/ISA-18.2-2016 / IEC 62682:2014 (state diagram quoted in an open course text; the standards not
+# Terms: ANSI/ISA-18.2-2016 / IEC 62682:2014 (state diagram quoted in an open teaching text; the standards not
 # seen): a condition becomes an alarm after the on-delay and returns to normal after the off-delay.
 
 

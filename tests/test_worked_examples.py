@@ -205,7 +205,7 @@ def test_allyl_chloride_from_the_outlet_amounts(tmp_path):
 
 
 def test_ethylene_from_methanol_at_80_percent_conversion(tmp_path):
-    # Himmelblau & Riggs (seen quoted in course notes): 19 and 8 mol in the outlet give 2.4 mol/mol
+    # Himmelblau & Riggs (seen quoted in teaching notes): 19 and 8 mol in the outlet give 2.4 mol/mol
     figures = told(
         tmp_path,
         {"methanol": "CH4O", "ethylene": "C2H4", "propylene": "C3H6", "water": "H2O"},
