@@ -158,7 +158,7 @@ def reach(unit: Unit) -> timedelta:
         then what the checks need to be sure.
     """
     needs = [
-        (t.shift_us + t.linear * t.hold_us) * _US + looks_ahead(i)
+        (t.shift_us + t.linear * t.hold_us) * _US + looks_ahead(unit, i)
         for i in unit.instruments
         if i.tag is not None
         for t in (_timing(i),)

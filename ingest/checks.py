@@ -36,7 +36,7 @@ from ingest.conditions import (
 )
 from ingest.readings import BAD, UNCERTAIN, UNKNOWN, Readings, Series, empty
 from ingest.steps import steps
-from ingest.stuck import STUCK_CHANNELS, stuck
+from ingest.stuck import STUCK_CHANNELS, stuck, stuck_alone
 from ingest.unit import Analyzer, Instrument, Unit
 
 Answers = list[Codes | None]  # of one check, for each instrument; None where it did not run
@@ -304,6 +304,15 @@ def _stuck(seen: Seen) -> Answers:
     return answers
 
 
+def _repeat(seen: Seen) -> Answers:
+    answers = seen.unanswered()
+    for at, (one, series) in enumerate(zip(seen.unit.instruments, seen.series, strict=True)):
+        if one.longest_repeat is not None:
+            flags = stuck_alone(series, one.cycle, one.longest_repeat)
+            answers[at] = np.where(flags, REFUSED, PASSED).astype(np.int8)
+    return answers
+
+
 def _step(seen: Seen) -> Answers:
     answers = seen.unanswered()
     for at, one in enumerate(seen.unit.instruments):
@@ -370,6 +379,10 @@ def _no_stuck(unit: Unit, instrument: Instrument) -> str:
     return "" if instrument in able else reason
 
 
+def _no_repeat(_unit: Unit, instrument: Instrument) -> str:
+    return "no longest_repeat is stated" if instrument.longest_repeat is None else ""
+
+
 def _no_step(_unit: Unit, instrument: Instrument) -> str:
     return "no largest_step is stated" if instrument.largest_step is None else ""
 
@@ -407,6 +420,13 @@ CHECKS: Mapping[str, Check] = {
     ),
     "stuck": Check(
         _stuck, _no_stuck, GOOD, STUCK, "a result that is not renewed tells of a time that is over"
+    ),
+    "repeat": Check(
+        _repeat,
+        _no_repeat,
+        GOOD,
+        STUCK,
+        "one channel repeats honestly, but not for longer than it ever did while it was healthy",
     ),
     "step": Check(
         _step,

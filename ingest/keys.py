@@ -79,11 +79,12 @@ _INSTRUMENT = (
     Key("instrument", "max_age", "duration", "age at which a result is stale", '"20min"', "with tag", low=1, high=90 * _DAY),
     Key("instrument", "sampling", "choice", "what a stored value says about the time between two", '"held"', "with tag", choices=SAMPLINGS),
     Key("instrument", "largest_step", "number", "largest change of the true value within one cycle; a larger step is a spike or a doubt", "5.0", low=1e-9),
+    Key("instrument", "longest_repeat", "number", "longest run of equal results in its healthy past, outages included [results]; more than half as many again are stuck", "3", low=1, high=10000),
 )  # fmt: skip
 
 
 _SHARED: tuple[str, ...] = ("unit", "basis", "left_out", "random", "systematic", "range")
-_SHARED += ("cycle", "dead_time", "max_age", "sampling", "largest_step")
+_SHARED += ("cycle", "dead_time", "max_age", "sampling", "largest_step", "longest_repeat")
 _EITHER = ("unit", "random", "systematic", "cycle", "max_age", "sampling")
 
 

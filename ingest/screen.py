@@ -17,7 +17,7 @@ from ingest.checks import CHECKS, Seen, stated
 from ingest.conditions import ANSWERS, NOT_CHECKED, Codes, takes_part
 from ingest.readings import Readings
 from ingest.steps import STEP_LOOKS_AHEAD, STEP_LOOKS_BACK
-from ingest.stuck import STUCK_LOOKS_AHEAD, STUCK_LOOKS_BACK
+from ingest.stuck import STUCK_GAP, STUCK_LOOKS_AHEAD, STUCK_LOOKS_BACK, repeats
 from ingest.unit import Instrument, Unit
 
 # Why the raw sum of an analyzer says nothing although its band is stated.
@@ -147,25 +147,40 @@ def looks_back(unit: Unit, instrument: Instrument) -> timedelta:
     return max(map(_own_back, members)) + sum(status, analyzer.settle) + 2 * beside
 
 
-def looks_ahead(instrument: Instrument) -> timedelta:
+def looks_ahead(unit: Unit, instrument: Instrument) -> timedelta:
     """Give how long after a reading its condition can depend on other readings.
 
     Parameters
     ----------
+    unit : Unit
     instrument : Instrument
+        One of the unit's.
 
     Returns
     -------
     timedelta
-        What being sure of a stuck analyzer and of a spike needs.
+        What being sure of a stuck analyzer or channel and of a spike needs; for a channel, the most that any
+        of its analyzer does, since it is judged beside the others.
     """
+    if stated(unit, instrument) is None:
+        return _own_ahead(instrument)
+    return max(_own_ahead(one) for one in unit.instruments if one.analyzer == instrument.analyzer)
+
+
+def _own_ahead(instrument: Instrument) -> timedelta:
+    """What being stuck and stepping need to look ahead on one channel."""
     cycles = STUCK_LOOKS_AHEAD if instrument.analyzer is not None else 0
+    if instrument.longest_repeat is not None:
+        cycles = max(cycles, repeats(instrument.longest_repeat) + 1)
     return (cycles + (STEP_LOOKS_AHEAD if instrument.largest_step is not None else 0)) * instrument.cycle
 
 
 def _own_back(instrument: Instrument) -> timedelta:
     """What being stuck and stepping need to look back on one channel."""
-    back = (STUCK_LOOKS_BACK if instrument.analyzer is not None else 0) * instrument.cycle
+    cycles = STUCK_LOOKS_BACK if instrument.analyzer is not None else 0
+    if instrument.longest_repeat is not None:
+        cycles = max(cycles, repeats(instrument.longest_repeat) + STUCK_GAP)
+    back = cycles * instrument.cycle
     if instrument.largest_step is not None:
         back += STEP_LOOKS_BACK * instrument.cycle + instrument.max_age
     return back

@@ -106,6 +106,7 @@ class Instrument:
     pressure: str | None
     temperature: str | None
     largest_step: float | None = None  # largest true change within one cycle, in own unit
+    longest_repeat: float | None = None  # longest run of equal results in its healthy past [results]
     design_molar_mass_kg_kmol: float | None = None  # that a differential pressure flow is read with
     design_kmol_m3: float | None = None  # at its design pressure and temperature; None: always right
 

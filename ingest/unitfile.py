@@ -189,6 +189,7 @@ def _instrument(entry: Entry, read: Draft) -> Instrument:
         pressure=entry.get("pressure"),
         temperature=entry.get("temperature"),
         largest_step=entry.get("largest_step"),
+        longest_repeat=entry.get("longest_repeat"),
         design_molar_mass_kg_kmol=entry.get("design_molar_mass"),
         design_kmol_m3=quantities.design_kmol_m3(design) if (design := entry.get("design")) else None,
     )
