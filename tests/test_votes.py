@@ -13,8 +13,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from demo_data import meters, plant
 from ingest.cells import OPERATING, Carried, Cells, carried_after, make_cells, operating_of
-from ingest.unit import Operating, Vote
+from ingest.unit import Analyzer, Operating, Vote
 from ingest.votes import majority, voters
 from tests.operating_made import UNIT, made, screens, told
 from tests.unitfiles_made import DEMO, loaded
@@ -26,11 +27,11 @@ VOTES = (Vote("FI-1", 10.0, 20.0), Vote("FI-2", 10.0, 20.0), Vote("AI-3", 16.0, 
 PLANT = Operating("FI-1", 10.0, 20.0, 40.0, timedelta(0), VOTES[1:])
 
 
-def condition(rows: list[list[float]], plant: Operating = PLANT, carried: Carried | None = None) -> list[str]:
+def condition(rows: list[list[float]], rule: Operating = PLANT, carried: Carried | None = None) -> list[str]:
     """The condition of cells an hour apart; a row for each signal."""
     load, *votes = (np.array(row, dtype=float) for row in rows)
     start = MIDNIGHT + np.arange(load.size) * HOUR
-    codes = operating_of(load, start, plant, carried or Carried(), votes=votes)
+    codes = operating_of(load, start, rule, carried or Carried(), votes=votes)
     return [OPERATING[code] for code in codes]
 
 
@@ -83,9 +84,9 @@ def test_only_the_load_tells_a_turn_down_and_an_outvoted_one_does_not():
 
 
 def test_a_return_by_votes_starts_the_unit():
-    plant = replace(PLANT, starting_for=timedelta(hours=2))
+    rule = replace(PLANT, starting_for=timedelta(hours=2))
     rows = [[0, NAN, NAN, NAN], [0, 50, 50, 50], [20.9, 9, 9, 9]]
-    assert condition(rows, plant) == ["down", "starting", "starting", "running"]
+    assert condition(rows, rule) == ["down", "starting", "starting", "running"]
 
 
 def test_without_votes_the_load_is_its_own_majority():
@@ -96,11 +97,11 @@ def test_without_votes_the_load_is_its_own_majority():
     assert condition([load], alone) == found
 
 
-def machine(rows: list[tuple[float, ...]], plant: Operating) -> list[str]:
+def machine(rows: list[tuple[float, ...]], rule: Operating) -> list[str]:
     """The same rule told one cell after the other."""
     down, returned, found = None, None, []
     for hour, values in enumerate(rows):
-        pairs = [(v, vote) for v, vote in zip(values, voters(plant), strict=True) if not np.isnan(v)]
+        pairs = [(v, vote) for v, vote in zip(values, voters(rule), strict=True) if not np.isnan(v)]
         says = [
             "down" if (v < one.down if one.down < one.running else v > one.down)
             else "up" if (v > one.running if one.down < one.running else v < one.running)
@@ -116,10 +117,10 @@ def machine(rows: list[tuple[float, ...]], plant: Operating) -> list[str]:
             found.append("not known")
         elif down:
             found.append("down")
-        elif returned is not None and timedelta(hours=hour - returned) < plant.starting_for:
+        elif returned is not None and timedelta(hours=hour - returned) < rule.starting_for:
             found.append("starting")
         else:
-            found.append("turned down" if plant.down_below <= values[0] < 40 else "running")
+            found.append("turned down" if rule.down_below <= values[0] < 40 else "running")
     return found
 
 
@@ -136,16 +137,16 @@ OXYGEN = st.sampled_from([9.0, 12.0, 14.0, 16.0, 20.9, NAN])
 def test_the_condition_equals_a_cell_by_cell_machine_however_the_cells_are_cut(
     rows: list[tuple[float, ...]], hours: int, cut: int
 ):
-    plant = replace(PLANT, starting_for=timedelta(hours=hours))
+    rule = replace(PLANT, starting_for=timedelta(hours=hours))
     start = MIDNIGHT + np.arange(len(rows)) * HOUR
     load, *votes = np.array(rows).T
     found, carried = [], Carried()
     for part in (slice(0, cut), slice(cut, cut + 3), slice(cut + 3, None)):
-        codes = operating_of(load[part], start[part], plant, carried, votes=[one[part] for one in votes])
+        codes = operating_of(load[part], start[part], rule, carried, votes=[one[part] for one in votes])
         nothing = np.empty((codes.size, 0))
         carried = carried_after(Cells(start[part], nothing, nothing, nothing, codes), carried)
         found += [OPERATING[code] for code in codes]
-    assert found == machine(rows, plant)
+    assert found == machine(rows, rule)
 
 
 def test_cells_take_each_vote_from_its_own_instrument_and_a_stale_one_has_none():
@@ -191,9 +192,24 @@ def test_the_load_alone_misses_and_invents_outages_under_the_same_faults():
     assert alone.false
 
 
-def test_good_readings_are_hardly_refused_and_every_calibration_window_is_found():
+def test_a_trip_within_a_minute_is_found_within_25_min(monkeypatch: pytest.MonkeyPatch):
+    monkeypatch.setattr(plant, "RAMP_DOWN_H", 1 / 60)
+    monkeypatch.setattr(plant, "RAMP_UP_H", 0.5)
+    found = reduce(add, (told(made(seed, 60)) for seed in range(31, 33)))
+    assert found.shutdowns == 24
+    assert (found.found_soon, found.false, found.beside) == (24, 0, 0)
+
+
+CERTIFICATE = tuple((f"AI-220 {name}", value) for name, value in meters.CALIBRATION_GAS_PCT.items())
+BY_CERTIFICATE = replace(
+    UNIT.analyzers[0], status=None, calibrating=(), certificate=CERTIFICATE, tolerance=0.02
+)
+
+
+@pytest.mark.parametrize("analyzer", [UNIT.analyzers[0], BY_CERTIFICATE], ids=["status", "certificate"])
+def test_good_readings_are_hardly_refused_and_every_calibration_window_is_found(analyzer: Analyzer):
     # Aims of the design: at most 0.5 % of good minutes refused, at least 99.5 % of windows found.
-    counts = screens(made(21, 60, faulty=False))
+    counts = screens(made(21, 60, faulty=False), replace(UNIT, analyzers=(analyzer,)))
     assert counts["windows"] >= 65
     assert counts["windows found"] == counts["windows"]
     assert counts["good refused"] <= 0.005 * counts["good"]
