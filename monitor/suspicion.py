@@ -40,12 +40,12 @@ Explanation = tuple[tuple[tuple[str, float, float], ...], bool]
 
 # Where to look first, by what is suspected (common practice, no source).
 CHECKS = {
-    "channel": "run a calibration check of this channel; compare with a lab sample of the same hour",
-    "flow meter": "check zero, impulse lines and the density, pressure or temperature that it is read with",
-    "declared": "compare the value in the unit file with the certificate of what is fed now",
-    "shared": "look at the raw sum of all channels, then at the calibration gas and its certificate",
-    "air": "leak test the sample line from probe to analyzer, fittings and filter first",
-    "other": "compare with an independent reading",
+    "channel": "calibration of this channel, and a lab sample of the same hour",
+    "flow meter": "zero, impulse lines and the density, pressure or temperature that it is read with",
+    "declared": "the value in the unit file against the certificate of what is fed now",
+    "shared": "the raw sum of all channels, then the calibration gas and its certificate",
+    "air": "leak test of the sample line from probe to analyzer, fittings and filter first",
+    "other": "an independent reading",
 }
 
 
