@@ -232,7 +232,8 @@ def eliminate(residuals: Residuals, *, level: float = 0.05) -> Elimination:
     """Explain the residuals by one set of suspects after the other until the global test passes.
 
     Every step frees the size of the most likely cause, which is the same as taking the reading out; a
-    set of parallel causes is one step, since the data cannot tell which of them it is.
+    set of parallel causes is one step, since the data cannot tell which of them it is. What is all but
+    explained with it, the other members of its set first of all, is not suspected again.
 
     Parameters
     ----------
@@ -242,6 +243,7 @@ def eliminate(residuals: Residuals, *, level: float = 0.05) -> Elimination:
         Of the global test.
     """
     weight = _weight(residuals)
+    whole = _told(residuals, weight)
     steps: list[Step] = []
     while True:
         test = _tested(residuals, weight)
@@ -249,11 +251,12 @@ def eliminate(residuals: Residuals, *, level: float = 0.05) -> Elimination:
             return Elimination(tuple(steps), STOPS[NO_FREEDOM])
         if not test.p_value[0] < level:
             return Elimination(tuple(steps), STOPS[PASSES])
-        ratio = np.nan_to_num(_estimated(residuals, weight).statistic[0]) ** 2
+        seen = _told(residuals, weight) > STRENGTH**-2 * whole
+        ratio = np.where(seen, np.nan_to_num(_estimated(residuals, weight).statistic[0]) ** 2, 0.0)
         first = int(np.argmax(ratio))
         if not ratio[first] > 0:
             return Elimination(tuple(steps), STOPS[NO_CAUSE])
-        close = _close(_alike(residuals, weight.matrix)[0], STRENGTH)[first]
+        close = _close(_alike(residuals, weight.matrix)[0], STRENGTH)[first] & seen
         weight = _explained(residuals, weight, first)
         steps.append(_step(residuals, weight, ratio, close))
 
@@ -312,6 +315,11 @@ def _score(residuals: Residuals, matrix: Floats) -> tuple[Floats, Floats]:
     return score, np.where(told > NO_VARIANCE * most, told, np.nan)
 
 
+def _told(residuals: Residuals, weight: _Weight) -> Floats:
+    """Give how much the residuals of the first window tell of each cause, array (h,); 0 without a trace."""
+    return np.asarray(np.nan_to_num(_score(residuals, weight.matrix)[1][0]))
+
+
 def _alike(residuals: Residuals, matrix: Floats) -> Floats:
     root = 1.0 / np.sqrt(_score(residuals, matrix)[1])
     both = residuals.response.transpose(0, 2, 1) @ matrix @ residuals.response
@@ -335,7 +343,8 @@ def _step(residuals: Residuals, weight: _Weight, ratio: Floats, close: Flags) ->
     """Sum up one step, given the likelihood ratios before it and the weight after it."""
     after = _tested(residuals, weight)
     best = float(ratio.max())
-    near = [i for i in np.argsort(-ratio, kind="stable") if ratio[i] > best - RIVAL and not close[i]]
+    least = max(best - RIVAL, 0.0)  # a cause without a trace has a ratio of 0
+    near = [i for i in np.argsort(-ratio, kind="stable") if ratio[i] > least and not close[i]]
     return Step(
         suspects=_named(residuals, np.flatnonzero(close)),
         rivals=_named(residuals, near),
