@@ -127,7 +127,10 @@ class _Record:
 def _record(
     plan: Plan, view: Snapshot, known: Sequence[str], touched: Sequence[Span], read: Read
 ) -> _Record | None:
-    """Tell what time the readings of a unit cover, given months that are known to have some."""
+    """Tell what time the readings of a unit cover, given months that are known to have some.
+
+    A mean stamped at its end covers the interval before its stamp.
+    """
     tags = set(_tags(plan))
     new = {month for first, last in touched for month in _months_of(first, last)}
     inner = {*known, *new} if known else set()
@@ -143,7 +146,9 @@ def _record(
     months = [month for month in view.months(SITE, STAGE) if holds(month)]
     if not months:
         return None
-    first = min(int(series.time[0]) for series in read(file_of(months[0])).values())
+    before = {one.tag: one.cycle // _US for one in plan.unit.instruments if one.sampling == "mean at end"}
+    begun = read(file_of(months[0]))
+    first = min(int(series.time[0]) - before.get(tag, 0) for tag, series in begun.items())
     last = max(int(series.time[-1]) for series in read(file_of(months[-1])).values())
     return _Record(first // plan.cell_us * plan.cell_us, last, tuple(months))
 

@@ -204,6 +204,17 @@ def test_the_day_of_25_hours_has_every_interval_once_where_its_stamp_says_it_end
         assert hours[pd.Timestamp(f"2026-10-25T{end}")] == pytest.approx(expected, rel=1e-5)
 
 
+def test_the_first_interval_of_a_record_counts_where_its_stamp_says_it_ends(tmp_path):
+    # the first mean, stamped 00:10, stands for 00:00 to 00:10: six means make a whole hour by 01:00
+    ends = pd.date_range("2026-03-02 00:10", periods=6, freq="10min", tz="UTC")
+    values = np.tile([100.0, 88.5, 10.0, 1.5], (6, 1))
+    timing = 'max_age = "30min"\nsampling = "mean at end"'
+    text = ethane_plant(windows='["1h"]', zone="UTC", timing=timing)
+    export = wide([f"{end:%Y-%m-%dT%H:%M:%SZ}" for end in ends], values)
+    hour = passed(tmp_path, text, export, 1).iloc[-1]["make of ethylene", "as operated"]
+    assert hour["coverage"] == 1
+
+
 # --- one steady state
 
 
