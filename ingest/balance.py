@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ingest import instruments
+from ingest.chemistry import Atoms, element_matrix
 from ingest.errors import BalanceError
 from ingest.unit import Unit
 
@@ -218,12 +219,26 @@ def conservation_of(unit: Unit, state: tuple[tuple[str, str], ...]) -> Floats:
 
 def _kept(unit: Unit, state: tuple[tuple[str, str], ...], *, reacts: bool) -> Floats:
     """Give what a node keeps, as weights on flows: elements and inert species, or every species."""
-    atoms = {one.name: dict(one.atoms) for one in unit.species if reacts and not one.inert}
-    elements = sorted({element for held in atoms.values() for element in held})
-    kept = [[atoms.get(name, {}).get(element, 0.0) for _, name in state] for element in elements]
+    atoms = reacting_atoms(unit) if reacts else {}
+    elements = sorted({element for held in atoms.values() for element, _ in held})
     ties = [one.name for one in unit.species if one.name not in atoms]
-    kept += [[1.0 if name == tie else 0.0 for _, name in state] for tie in ties]
-    return np.array(kept)
+    return np.array(
+        [
+            *element_matrix([atoms.get(name, ()) for _, name in state], elements),
+            *([float(name == tie) for _, name in state] for tie in ties),
+        ]
+    )
+
+
+def reacting_atoms(unit: Unit) -> dict[str, Atoms]:
+    """Give the atoms of each species that takes part in the reactions, {name: ((element, count), ...)}.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor.
+    """
+    return {one.name: one.atoms for one in unit.species if not one.inert}
 
 
 def sight(problem: Problem, present: NDArray[np.bool_]) -> Sight:

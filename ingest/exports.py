@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Collection, Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -100,23 +99,6 @@ def describe(
     for readings in batches:
         sample = sample or _sample(readings)
     return Description(path.name, batches.dialect.describe(), sample, batches.account())
-
-
-def fingerprint(path: Path) -> str:
-    """Give the SHA-256 of a file as it lies on disk.
-
-    Parameters
-    ----------
-    path : pathlib.Path
-        Any file.
-
-    Returns
-    -------
-    str
-        64 hexadecimal digits.
-    """
-    with path.open("rb") as file:
-        return hashlib.file_digest(file, "sha256").hexdigest()
 
 
 def _opened(

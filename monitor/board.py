@@ -12,10 +12,11 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from ingest.chemistry import ELEMENT_NAMES
 from ingest.unit import Unit, Watch
 from monitor import wording
 from monitor.axes import microseconds
-from monitor.figures import ELEMENT_NAMES, Figure
+from monitor.figures import Figure
 from monitor.series import runs
 from monitor.windows import REASONS
 from monitor.wording import PRIORITY_RANK, Standing, Told

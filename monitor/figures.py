@@ -13,11 +13,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from ingest.chemistry import ELEMENT_NAMES
 from ingest.unit import Species, Unit
 
 Array = NDArray[np.float64]
 
-ELEMENT_NAMES = {"C": "carbon", "H": "hydrogen", "O": "oxygen", "N": "nitrogen"}
 
 # Only an ideally mixed vessel at steady state has its outlet composition everywhere inside.
 INSTANTANEOUS = {

@@ -12,7 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from ingest.balance import Problem, sign_of
+from ingest.balance import Problem, reacting_atoms, sign_of
+from ingest.chemistry import element_matrix
 from ingest.instruments import Measured, balance_instruments
 from ingest.unit import FLOW_KINDS, FRACTION_KINDS, Unit
 
@@ -38,14 +39,14 @@ def closed_elements(unit: Unit) -> tuple[str, ...]:
     unit : Unit
         The reactor.
     """
-    atoms = {one.name: dict(one.atoms) for one in unit.species if not one.inert}
-    elements = sorted({element for held in atoms.values() for element in held})
+    carriers = {name: {element for element, _ in held} for name, held in reacting_atoms(unit).items()}
+    elements = sorted(set().union(*carriers.values()))
     crossing = [stream for stream in unit.streams if stream.direction != "inner"]
     flows = [(stream.name, name) for stream in crossing for name in stream.species]
     return tuple(
         element
         for element in elements
-        if all(_is_read(unit, stream, name) for stream, name in flows if element in atoms.get(name, {}))
+        if all(_is_read(unit, stream, name) for stream, name in flows if element in carriers.get(name, ()))
     )
 
 
@@ -68,19 +69,15 @@ def raw_rows(unit: Unit, state: tuple[tuple[str, str], ...]) -> dict[str, Floats
         The state axis.
     """
     out = -sign_of(unit, state)
+    atoms = reacting_atoms(unit)
     rows: dict[str, Floats] = {}
     for element in closed_elements(unit):
-        held = _atoms(unit, state, element)
+        (held,) = element_matrix([atoms.get(name, ()) for _, name in state], [element])
         rows |= {f"raw in {element}": held * (out < 0), f"raw out {element}": held * (out > 0)}
         if element == unit.key_element:
             key = np.array([name == unit.key_reactant for _, name in state])
             rows |= {f"raw made {element}": held * out * ~key, f"raw consumed {element}": -held * out * key}
     return rows
-
-
-def _atoms(unit: Unit, state: tuple[tuple[str, str], ...], element: str) -> Floats:
-    held = {one.name: 0.0 if one.inert else dict(one.atoms).get(element, 0.0) for one in unit.species}
-    return np.array([held[name] for _, name in state])
 
 
 def raw_rates(unit: Unit, problem: Problem, readings: Measured, flow: Floats) -> Rates:

@@ -16,7 +16,8 @@ import pytest
 
 from ingest import lines, parquets
 from ingest.account import GAP, REASONS, TWICE
-from ingest.exports import describe, fingerprint
+from ingest.exports import describe
+from ingest.parts import sha256_of
 from ingest.readings import BAD, GOOD, QUALITIES, UNCERTAIN, UNKNOWN, Readings, Series
 from ingest.unit import ExportRules
 from tests.exports_made import (
@@ -433,8 +434,8 @@ def test_reading_leaves_the_export_as_it_was_and_gives_the_same_again(tmp_path: 
 def test_the_fingerprint_is_the_sha256_of_the_file(tmp_path: Path):
     path = saved(tmp_path, b"abc")
     # SHA-256 of 'abc': FIPS 180-4, example B.1
-    assert fingerprint(path) == "ba7816bf8f01cfea414140de5dae2223b00361a396177a9cb410ff61f20015ad"
-    assert fingerprint(path) == hashlib.sha256(path.read_bytes()).hexdigest()
+    assert sha256_of(path) == "ba7816bf8f01cfea414140de5dae2223b00361a396177a9cb410ff61f20015ad"
+    assert sha256_of(path) == hashlib.sha256(path.read_bytes()).hexdigest()
 
 
 def test_a_description_shows_the_dialect_three_rows_and_the_account(tmp_path: Path):

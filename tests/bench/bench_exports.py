@@ -19,7 +19,8 @@ import pyarrow.parquet as pq
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
-from ingest.exports import fingerprint, open_export
+from ingest.exports import open_export
+from ingest.parts import sha256_of
 from ingest.readings import Series, by_month, join, write_month
 from ingest.unit import ExportRules
 
@@ -127,7 +128,7 @@ def read(path: Path) -> str:
     whole = time.process_time() - begin
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
     hashed = time.process_time()
-    fingerprint(path)
+    sha256_of(path)
     hashed = time.process_time() - hashed
     account = batches.account()
     size = path.stat().st_size / 1e6
