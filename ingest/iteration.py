@@ -151,8 +151,8 @@ def at_rest(problem: Problem, readings: Measured, groups: Sequence[Group]) -> It
 def _rest(readings: Measured, job: _Job) -> Rest:
     """Iterate the cells of one job to rest."""
     geometry = job.geometry
-    start, *begun = _begin(geometry, readings, job.rank)
-    q, shared, iterations, still = _iterate(geometry, start, (begun[0], begun[1]), job.rank)
+    start, q, shared = _begin(geometry, readings, job.rank)
+    iterations, still = _iterate(geometry, start, q, shared, job.rank)
     flow = _completed(geometry.problem.basis @ q, job.unfelt)
     point = tangent.moved(geometry, start, flow)
     inverse, sound = tangent.covariance(geometry, point, job.rank)
@@ -189,10 +189,9 @@ def _completed(flow: Floats, unfelt: Floats) -> Floats:
 
 
 def _iterate(
-    geometry: Geometry, start: Point, begun: tuple[Floats, Floats], rank: int | None
-) -> tuple[Floats, Floats, NDArray[np.int8], Flags]:
-    """Give (q, shared errors, iterations, at rest); cells that have come to rest are left alone."""
-    point, (q, shared) = start, begun
+    geometry: Geometry, point: Point, q: Floats, shared: Floats, rank: int | None
+) -> tuple[NDArray[np.int8], Flags]:
+    """Move q and shared errors in place to rest, give (iterations, at rest); calm cells are left alone."""
     k, count = q.shape
     iterations = np.zeros(count, dtype=np.int8)
     still = np.zeros(count, dtype=bool)
@@ -211,7 +210,7 @@ def _iterate(
             break
         if calm.any():
             moving, point = moving[~calm], point.take(~calm)
-    return q, shared, iterations, still
+    return iterations, still
 
 
 def _begin(geometry: Geometry, readings: Measured, rank: int | None) -> tuple[Point, Floats, Floats]:

@@ -18,10 +18,9 @@ from numpy.typing import NDArray
 from ingest import systems, tangent
 from ingest.balance import Problem, determined, null_space
 from ingest.cells import OPERATING, Cells
-from ingest.instruments import Measured, measured
+from ingest.instruments import Measured
 from ingest.iteration import Group, Rest, alike, at_rest, groups_of
 from ingest.tangent import Point
-from ingest.unit import Unit
 
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
@@ -97,18 +96,18 @@ class States:
 
 
 def reconcile(
-    unit: Unit, problem: Problem, cells: Cells, rows: Floats | None = None
+    problem: Problem, cells: Cells, readings: Measured, rows: Floats | None = None
 ) -> tuple[States, Solution]:
     """Reconcile every cell that is not down.
 
     Parameters
     ----------
-    unit : Unit
-        The reactor.
     problem : Problem
-        Its balance.
+        The balance of the unit.
     cells : Cells
-        Readings on the grid.
+        The grid and the operating condition.
+    readings : Measured
+        Base readings of these cells.
     rows : array (p, N), optional
         Linear functions of the flows whose gains are wanted.
 
@@ -119,7 +118,6 @@ def reconcile(
         The same with the gains, quantity first.
     """
     down = cells.operating == OPERATING.index("down")
-    readings = measured(unit, cells.value, cells.share)
     running = replace(readings, reading=np.where(down, np.nan, readings.reading))
     solution = solve(problem, running, rows)
     solution.status[down] = DOWN
@@ -211,7 +209,7 @@ def _bounded(problem: Problem, readings: Measured, rows: Floats, groups: list[Gr
         lifted = _lifted(problem, readings, found.flow, held) & ~low.any(axis=0)
         changed = np.flatnonzero((low | lifted).any(axis=0))
         if not len(changed):
-            break
+            return found
         held = (held | low) & ~lifted
         for group, pattern in alike(held[:, changed]):
             narrow = replace(problem, basis=problem.basis @ null_space(problem.basis[pattern]))

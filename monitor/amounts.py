@@ -98,8 +98,8 @@ def amounts_of(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amou
     """
     rows = np.array(list(_reconciled_rows(unit, problem.state).values()))
     asked = np.vstack([rows, outlet_rows(unit, problem.state)]) if unit.hold_up else rows
-    states, solution = reconcile(unit, problem, cells, asked)
     readings = measured(unit, cells.value, cells.share)
+    states, solution = reconcile(problem, cells, readings, asked)
     parts = [
         Rates(solution.value[: len(rows)], solution.gain[: len(rows)]),
         raw_rates(unit, problem, readings, solution.flow),

@@ -8,7 +8,11 @@ from typing import Any
 
 import numpy as np
 
-from ingest.instruments import Measured
+from ingest.balance import Problem
+from ingest.cells import Cells
+from ingest.instruments import Measured, measured
+from ingest.reconcile import States, reconcile
+from ingest.unit import Unit
 
 PUBLISHED: dict[str, Any] = json.loads(
     (Path(__file__).parent / "published" / "reconciliation.json").read_text()
@@ -68,3 +72,8 @@ def predicted(problem, flow) -> np.ndarray:
     """What error-free instruments read at the flows, (m, t)."""
     below = np.where(problem.linear[:, None], 1.0, problem.denominator @ flow)
     return (problem.numerator @ flow) / below
+
+
+def reconciled(unit: Unit, problem: Problem, cells: Cells) -> States:
+    """States of the cells of a unit."""
+    return reconcile(problem, cells, measured(unit, cells.value, cells.share))[0]

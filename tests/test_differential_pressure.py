@@ -11,34 +11,17 @@ import pytest
 from ingest.balance import problem_of
 from ingest.cells import make_cells
 from ingest.instruments import measured
-from ingest.reconcile import reconcile
 from ingest.unit import Unit
-from tests.unitfiles_made import loaded, with_edit
+from tests.balances_made import reconciled
+from tests.unitfiles_made import AMMONIA, loaded, with_edit
 from tests.units_made import MIDNIGHT, MINUTE, made_series
 
 R = 8.31446261815324  # kPa m3/(kmol K), CODATA 2018, exact
 
 # N2 + 3 H2 = 2 NH3, in a stream whose molar mass moves with its composition.
-UNIT_FILE = """
-[unit]
-name = "made for the test"
-time_zone = "UTC"
-reactor = "packed bed"
-windows = ["1h"]
-
-[chemistry]
-key_reactant = "nitrogen"
-wanted = "ammonia"
-unwanted = []
-inert = ["methane"]
-key_element = "N"
-
-[chemistry.species]
-nitrogen = "N2"
-hydrogen = "H2"
-ammonia = "NH3"
-methane = "CH4"
-
+UNIT_FILE = (
+    AMMONIA
+    + """
 [[stream]]
 name = "feed"
 direction = "in"
@@ -62,6 +45,7 @@ cycle = "1min"
 max_age = "5min"
 sampling = "held"
 """
+)
 ANALYZER = """
 [[analyzer]]
 name = "AI-{n}"
@@ -228,7 +212,7 @@ def test_the_reconciled_molar_mass_sets_right_what_the_design_gets_wrong(
     assert molar_mass == pytest.approx(20.06, abs=0.01)
     problem = problem_of(unit)
     cells = make_cells(unit, readings, MIDNIGHT, MIDNIGHT + 30 * MINUTE)
-    states, _ = reconcile(unit, problem, cells)
+    states = reconciled(unit, problem, cells)
     fed = [at for at, (stream, _) in enumerate(problem.state) if stream == "feed"]
     assert states.flow_kmol_h[1, fed].sum() / whole - 1 == pytest.approx(error, abs=2e-4)
 
@@ -251,7 +235,7 @@ def test_a_fixed_design_shows_in_the_residuals_of_a_plain_meter_beside_another(t
         readings, whole, _ = readings_of(unit)
         readings["FI-2"] = made_series(np.arange(60), [whole])
         cells = make_cells(unit, readings, MIDNIGHT, MIDNIGHT + 30 * MINUTE)
-        states, _ = reconcile(unit, problem_of(unit), cells)
+        states = reconciled(unit, problem_of(unit), cells)
         found[kind] = states.objective[1]
     assert found["mass flow"] == pytest.approx(56.5, rel=0.03)
     assert found["differential pressure flow"] < 0.1

@@ -11,11 +11,11 @@ import pytest
 from ingest.balance import problem, problem_of
 from ingest.cells import DOWN, RUNNING
 from ingest.errors import BalanceError
-from ingest.reconcile import reconcile
 from monitor.expected import additions, expectations
 from monitor.judge import as_table, judge
 from monitor.telling import judged
 from monitor.typical import arbitrary, as_cells, possible_flows, shown, usual
+from tests.balances_made import reconciled
 from tests.loops_made import oxide_readings, oxide_text
 from tests.plants_made import Seen, unit_text
 from tests.test_half_widths import DEMO
@@ -141,7 +141,7 @@ def test_what_instruments_show_is_read_back_as_the_flows():
     # law: readings that agree need no adjustment
     balance = problem_of(DEMO)
     cells = as_cells(DEMO, arbitrary(DEMO, balance)[None])
-    states, _ = reconcile(DEMO, balance, cells)
+    states = reconciled(DEMO, balance, cells)
     np.testing.assert_allclose(states.flow_kmol_h[0], possible_flows("demo", balance), rtol=1e-6)
     assert states.objective[0] == pytest.approx(0, abs=1e-9)
 

@@ -11,8 +11,8 @@ import pytest
 from ingest.balance import problem_of
 from ingest.cells import Cells, look_back, make_cells, reach
 from ingest.conditions import CONDITIONS
-from ingest.reconcile import reconcile
 from ingest.screen import not_checked
+from tests.balances_made import reconciled
 from tests.unitfiles_made import DEMO, loaded, with_edit
 from tests.units_made import DAY, HOUR, MIDNIGHT, made_channel, made_series, made_unit
 
@@ -133,7 +133,7 @@ def test_a_lab_result_takes_the_place_of_a_declared_composition_while_it_is_vali
         condition=np.zeros(value.shape, dtype=np.int8),
         operating=np.zeros(1, dtype=np.int8),
     )
-    states, _ = reconcile(unit, problem, cells)
+    states = reconciled(unit, problem, cells)
     fed = {
         name: states.flow_kmol_h[0, at] for at, (s, name) in enumerate(problem.state) if s == "isobutene feed"
     }

@@ -9,8 +9,8 @@ import pytest
 
 from ingest.balance import problem_of
 from ingest.cells import make_cells
-from ingest.reconcile import reconcile
-from tests.unitfiles_made import loaded, with_edit
+from tests.balances_made import reconciled
+from tests.unitfiles_made import AMMONIA, loaded, with_edit
 from tests.units_made import MIDNIGHT, MINUTE, made_series
 
 R = 8.31446261815324  # kPa m3/(kmol K), CODATA 2018, exact
@@ -18,26 +18,9 @@ R = 8.31446261815324  # kPa m3/(kmol K), CODATA 2018, exact
 FED = {"nitrogen": 600.0, "methane": 6.0, "hydrogen": 1500.0}
 LEFT = {"nitrogen": 540.0, "hydrogen": 1320.0, "ammonia": 120.0, "methane": 6.0}
 
-TEXT = """
-[unit]
-name = "made for the test"
-time_zone = "UTC"
-reactor = "packed bed"
-windows = ["1h"]
-
-[chemistry]
-key_reactant = "nitrogen"
-wanted = "ammonia"
-unwanted = []
-inert = ["methane"]
-key_element = "N"
-
-[chemistry.species]
-nitrogen = "N2"
-hydrogen = "H2"
-ammonia = "NH3"
-methane = "CH4"
-
+TEXT = (
+    AMMONIA
+    + """
 [[stream]]
 name = "nitrogen feed"
 direction = "in"
@@ -126,6 +109,7 @@ max_age = "20min"
 sampling = "held"
 channel = { nitrogen = "AI-2.N2", ammonia = "AI-2.NH3" }
 """
+)
 
 
 def readings(**others):
@@ -147,7 +131,7 @@ def readings(**others):
 def found(folder: Path, text: str, given) -> dict[tuple[str, str], float]:
     unit = loaded(folder, text)
     problem = problem_of(unit)
-    states, _ = reconcile(
+    states = reconciled(
         unit, problem, make_cells(unit, given, MIDNIGHT + 20 * MINUTE, MIDNIGHT + 30 * MINUTE)
     )
     return dict(zip(problem.state, states.flow_kmol_h[0], strict=True))

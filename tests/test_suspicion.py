@@ -16,7 +16,6 @@ from demo_data.plant import simulate
 from ingest.balance import problem_of
 from ingest.cells import DOWN, STARTING, Cells, make_cells
 from ingest.pairs import pairs
-from ingest.reconcile import reconcile
 from ingest.suspects import global_test
 from monitor.fit import ALONE, CHANGE, LENGTHS, LEVEL, Trial, counted, failures, fits, series_of
 from monitor.months import rows
@@ -25,7 +24,7 @@ from monitor.store import cells as stored
 from monitor.store import days
 from monitor.suspicion import ANSWERS, CHECKS, as_table, put_right, report
 from monitor.telling import suspected
-from tests.balances_made import PUBLISHED
+from tests.balances_made import PUBLISHED, reconciled
 from tests.residuals_made import biased, healthy, of_case
 from tests.test_half_widths import DEMO, record
 
@@ -210,8 +209,8 @@ def test_without_a_reading_is_the_solution_of_a_unit_that_does_not_have_it():
     place = NAMES.index("FI-202")
     fewer = replace(DEMO, instruments=tuple(one for one in DEMO.instruments if one.name != "FI-202"))
     kept = {name: np.delete(getattr(few, name), place, axis=1) for name in ("value", "share", "condition")}
-    states, _ = reconcile(DEMO, PROBLEM, without)
-    again, _ = reconcile(fewer, problem_of(fewer), replace(few, **kept))
+    states = reconciled(DEMO, PROBLEM, without)
+    again = reconciled(fewer, problem_of(fewer), replace(few, **kept))
     np.testing.assert_allclose(states.flow_kmol_h, again.flow_kmol_h, rtol=1e-7)
 
 

@@ -22,3 +22,26 @@ def loaded(folder: Path, text: str) -> Unit:
     path = folder / "made.toml"
     path.write_text(text, encoding="utf-8")
     return unitfile.load(path)
+
+
+# N2 + 3 H2 = 2 NH3 with methane that takes no part: a unit file up to its species; streams follow.
+AMMONIA = """
+[unit]
+name = "made for the test"
+time_zone = "UTC"
+reactor = "packed bed"
+windows = ["1h"]
+
+[chemistry]
+key_reactant = "nitrogen"
+wanted = "ammonia"
+unwanted = []
+inert = ["methane"]
+key_element = "N"
+
+[chemistry.species]
+nitrogen = "N2"
+hydrogen = "H2"
+ammonia = "NH3"
+methane = "CH4"
+"""
