@@ -6,9 +6,10 @@ from collections.abc import Callable, Iterator
 
 from ingest.chemistry import DRY_AIR, atoms
 from ingest.draft import Draft, undeclared
+from ingest.entries import Entry
 from ingest.errors import Problem
 from ingest.instrumentrules import is_fraction, scale_of
-from ingest.keys import Entry, rows
+from ingest.keys import rows
 
 TOLERANCES_PCT = (0.01, 50.0)  # closer nothing reads, and wider everything is the calibration gas
 

@@ -9,8 +9,9 @@ from typing import Any
 
 from ingest import chemistry
 from ingest.chemistry import Atoms
+from ingest.entries import Entry, missing, nearest, read_table
 from ingest.errors import OutletError, Problem
-from ingest.keys import Entry, missing, nearest, read_table, rows
+from ingest.keys import rows
 
 ONCE = ("unit", "chemistry", "operating", "catalyst", "hold_up", "exports")
 MANY = ("node", "stream", "instrument", "analyzer", "shared", "watch")

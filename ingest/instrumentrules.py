@@ -11,8 +11,9 @@ from dataclasses import dataclass
 
 from ingest import chemistry, quantities
 from ingest.draft import Draft, undeclared
+from ingest.entries import Entry, missing
 from ingest.errors import OutletError, Problem
-from ingest.keys import Entry, missing, rows
+from ingest.keys import rows
 from ingest.unit import AUXILIARY_KINDS, FRACTION_KINDS
 
 

@@ -9,8 +9,9 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 
 from ingest.draft import Draft, direction_of, undeclared
+from ingest.entries import Entry, missing
 from ingest.errors import Problem
-from ingest.keys import Entry, missing, rows
+from ingest.keys import rows
 
 ENDS = ("from", "to")
 Joins = set[tuple[str, str]]  # (node, node that a stream goes on to)

@@ -13,8 +13,9 @@ from typing import Any
 from ingest import analyzerrules, chemistry, draft, instrumentrules, quantities, unitrules
 from ingest import keys as table
 from ingest.draft import Draft
+from ingest.entries import Entry
 from ingest.errors import Problem, UnitFileError
-from ingest.keys import Entry, Key
+from ingest.keys import Key
 from ingest.unit import (
     Analyzer,
     ExportRules,

@@ -11,8 +11,8 @@ from datetime import timedelta
 
 from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantities
 from ingest.draft import Draft, direction_of, twice, undeclared
+from ingest.entries import Entry
 from ingest.errors import Problem
-from ingest.keys import Entry
 from ingest.unit import AUXILIARY_KINDS, NO_RATES
 
 HOUR = timedelta(hours=1)

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import sys
 
-from ingest import keys, quantities
+from ingest import entries, keys, quantities
 from ingest.cells import RULES
 from ingest.checks import CHECKS
 from ingest.conditions import CONDITIONS, GOOD
@@ -139,7 +139,7 @@ def _bounds(row: Key) -> str:
     if row.low == float("-inf"):
         return ""
     if row.form.startswith("duration"):
-        return f", {keys.span_words(row.low)} to {keys.span_words(row.high)}"
+        return f", {entries.span_words(row.low)} to {entries.span_words(row.high)}"
     return f", {row.low:g} to {row.high:g}" if row.high < float("inf") else f", {row.low:g} or more"
 
 

@@ -16,6 +16,7 @@ ORDER = (
     "ingest.quantities",
     "ingest.unit",
     "ingest.keys",
+    "ingest.entries",
     "ingest.draft",
     "ingest.instrumentrules",
     "ingest.analyzerrules",
@@ -106,6 +107,10 @@ ORDER = (
     "monitor.delays",
     "monitor.telling",
     "monitor.progress",
+    "monitor.commands.shared",
+    "monitor.commands.running",
+    "monitor.commands.asking",
+    "monitor.commands.keeping",
     "monitor.cli",
     "monitor.__main__",
 )

@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pytest
 
-from ingest import draft, keys, unitfile, unitrules
+from ingest import draft, entries, keys, unitfile, unitrules
 from ingest.instrumentrules import KIND_RULES
 from ingest.unit import FRACTION_KINDS, KINDS, Uncertainty, Unit
 from monitor.amounts import amount_names
@@ -227,12 +227,12 @@ def test_every_key_has_a_sentence_an_example_and_a_reader():
     for row in KEYS:
         assert row.sentence, row.name
         assert row.example, row.name
-        assert row.form in {*keys.FORMS, *keys.NESTED}, row.name
+        assert row.form in {*entries.FORMS, *keys.NESTED}, row.name
 
 
 @pytest.mark.parametrize("row", KEYS, ids=lambda row: row.name)
 def test_the_example_of_a_key_is_read_without_complaint(row: keys.Key):
-    entry, problems = keys.read_table(row.section, tomllib.loads(f"{row.key} = {row.example}"), "here")
+    entry, problems = entries.read_table(row.section, tomllib.loads(f"{row.key} = {row.example}"), "here")
     assert not [problem for problem in problems if problem.where.startswith(f"here.{row.key}")]
     assert entry.get(row.key) is not None
 
