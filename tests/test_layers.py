@@ -82,6 +82,7 @@ ORDER = (
     "monitor.months",
     "monitor.catchup",
     "monitor.run",
+    "monitor.celltext",
     "monitor.wording",
     "monitor.axes",
     "monitor.series",
