@@ -13,8 +13,8 @@ from ingest.entries import Entry, missing, nearest, read_table
 from ingest.errors import OutletError, Problem
 from ingest.keys import rows
 
-ONCE = ("unit", "chemistry", "operating", "catalyst", "hold_up", "exports")
-MANY = ("node", "stream", "instrument", "analyzer", "shared", "watch")
+ONCE = ("unit", "chemistry", "operating", "catalyst", "healthy", "hold_up", "exports")
+MANY = ("node", "stream", "instrument", "analyzer", "shared", "event", "watch")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")
 # What is said of an analyzer as a whole, not of each of its channels.

@@ -12,7 +12,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
-from ingest.unit import FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, ROLES, SAMPLINGS
+from ingest.unit import EVENT_KINDS, FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, ROLES, SAMPLINGS
 
 NESTED = ("uncertainty", "status")  # forms that are a table with a section of their own
 BASES = ("dry", "wet", "as analysed")
@@ -149,6 +149,13 @@ TABLE: tuple[Key, ...] = (
     Key("operating.vote", "down_above", "number", "value above which it says down, where high means down", "16.0", "unless down_below is stated"),
     Key("operating.vote", "running_below", "number", "value below which it says running", "12.0", "with down_above"),
     Key("catalyst", "charged", "moment", "when the catalyst was charged, with its offset", "2026-02-10T06:00:00+01:00", "always"),
+    Key("event", "at", "moment", "when it happened, with its offset", "2026-05-12T09:30:00+02:00", "always"),
+    Key("event", "kind", "choice", "what it was; a catalyst change or a calibration breaks ageing and expectation there", '"calibration"', "always", choices=EVENT_KINDS),
+    Key("event", "name", "text", "what people call it", '"AI-220 on new span gas"', "always"),
+    Key("event", "instrument", "text", "instrument or analyzer that was calibrated", '"AI-220"'),
+    Key("healthy", "from", "moment", "when the healthy period begins, with its offset", "2026-03-02T00:00:00+01:00", "always"),
+    Key("healthy", "to", "moment", "when it ends, with its offset", "2026-05-01T00:00:00+02:00", "always"),
+    Key("healthy", "operating_point", "texts", "instruments whose readings the expectation may depend on, beside load and catalyst age", '["TI-205"]', default=[]),
     Key("hold_up", "total_kmol", "number", "what a well-mixed reactor holds at any time, all species together [kmol]", "12.5", "always", low=1e-9),
     Key("hold_up", "relative_pct", "number", "standard uncertainty (k = 1) of that in percent", "5", "always", low=0.001, high=100),
     Key("watch", "name", "text", "name of the watch; left out, it is the figure and the window", '"yield, shift"'),

@@ -19,6 +19,7 @@ SAMPLINGS = ("held", "interpolated", "mean at end", "mean at start", "lab sample
 PRIORITIES = ("high", "medium", "low")
 REACTORS = ("well-mixed", "packed bed", "batch")
 ROLES = ("fresh feed", "recycle")
+EVENT_KINDS = ("catalyst change", "calibration", "planned", "note")
 # Why a reactor has no instantaneous selectivity, and what to do about it.
 NO_RATES = {
     "well-mixed": ("needs what the reactor holds", "write a section [hold_up]"),
@@ -172,6 +173,28 @@ class HoldUp:
 
 
 @dataclass(frozen=True, slots=True)
+class Event:
+    """Something people know of; `kind` is one of EVENT_KINDS, `instrument` one, an analyzer or None."""
+
+    at: datetime  # tz-aware
+    kind: str
+    name: str
+    instrument: str | None
+
+
+@dataclass(frozen=True, slots=True)
+class Healthy:
+    """The time that a person calls healthy: from `first` to before `last`, tz-aware.
+
+    The expectation is fitted there, on load, catalyst age and the instruments of `operating_point`.
+    """
+
+    first: datetime
+    last: datetime
+    operating_point: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Watch:
     """Limits on one windowed figure. `low`/`high` in the figure's unit; None means no such limit."""
 
@@ -225,3 +248,5 @@ class Unit:
     nodes: tuple[Node, ...] = ()  # none: the whole unit is one node that reacts
     hold_up: HoldUp | None = None
     analyzers: tuple[Analyzer, ...] = ()
+    healthy: Healthy | None = None
+    events: tuple[Event, ...] = ()  # in the order of time

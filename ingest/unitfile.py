@@ -18,7 +18,9 @@ from ingest.errors import Problem, UnitFileError
 from ingest.keys import Key
 from ingest.unit import (
     Analyzer,
+    Event,
     ExportRules,
+    Healthy,
     HoldUp,
     Instrument,
     Node,
@@ -149,6 +151,8 @@ def _build(read: Draft, key: str) -> Unit:
             decimal=exports.get("decimal"),
         ),
         hold_up=_hold_up(read.once["hold_up"]),
+        healthy=_healthy(read.once["healthy"]),
+        events=tuple(sorted((_event(entry) for entry in read.many["event"]), key=lambda event: event.at)),
         nodes=tuple(Node(e.get("name"), e.get("reacts")) for e in read.many["node"]),
     )
 
@@ -256,6 +260,18 @@ def _hold_up(entry: Entry) -> HoldUp | None:
     if not entry.values:
         return None
     return HoldUp(entry.get("total_kmol"), entry.get("relative_pct") / 100.0)
+
+
+def _healthy(entry: Entry) -> Healthy | None:
+    """Make the healthy period, or None when the section is not there."""
+    if entry.get("from") is None:
+        return None
+    return Healthy(entry.get("from"), entry.get("to"), entry.get("operating_point"))
+
+
+def _event(entry: Entry) -> Event:
+    """Make one event."""
+    return Event(**{key: entry.get(key) for key in ("at", "kind", "name", "instrument")})
 
 
 def _watch(entry: Entry) -> Watch:

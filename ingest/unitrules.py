@@ -254,6 +254,29 @@ def _vote_limits(vote: Entry) -> Iterator[Problem]:
         yield Problem(vote.at(pair[1]), what, "leave room between the two, so that noise does not flip it")
 
 
+def _healthy_can_be_fitted(draft: Draft) -> Iterator[Problem]:
+    """The healthy period ends after it begins, and names instruments with a tag."""
+    entry = draft.once["healthy"]
+    known = [e.get("name") for e in draft.many["instrument"] if e.get("name") and e.get("value") is None]
+    named = entry.get("operating_point") or ()
+    yield from undeclared(entry, "operating_point", named, known, "instrument with a tag")
+    first, last = entry.get("from"), entry.get("to")
+    if None not in (first, last) and last <= first:
+        yield Problem(entry.at("to"), f"{last.isoformat()} is not after from", "write a later moment")
+
+
+def _events_name_instruments(draft: Draft) -> Iterator[Problem]:
+    """Only a calibration names an instrument or an analyzer, one that is declared."""
+    known = (*draft.names("instrument"), *draft.names("analyzer"))
+    for entry in draft.many["event"]:
+        named, kind = entry.get("instrument"), entry.get("kind")
+        asked = [named] if named else []
+        yield from undeclared(entry, "instrument", asked, known, "declared instrument or analyzer")
+        if named and kind not in (None, "calibration"):
+            what = f"a {kind} concerns no single instrument"
+            yield Problem(entry.at("instrument"), what, 'write kind = "calibration", or leave it out')
+
+
 def _watches_can_be_judged(draft: Draft) -> Iterator[Problem]:
     """A watch names a figure and a window that exist, and limits that leave room for its deadband."""
     windows = draft.once["unit"].get("windows") or ()
@@ -343,5 +366,7 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _shared_errors_have_members,
     _load_limits_are_in_order,
     _votes_can_be_cast,
+    _healthy_can_be_fitted,
+    _events_name_instruments,
     _watches_can_be_judged,
 )

@@ -30,6 +30,8 @@ HEADINGS = {
     "operating": "[operating]",
     "operating.vote": "[[operating.vote]]",
     "catalyst": "[catalyst]",
+    "event": "[[event]]",
+    "healthy": "[healthy]",
     "hold_up": "[hold_up]",
     "watch": "[[watch]]",
     "exports": "[exports]",
@@ -68,6 +70,10 @@ ABOUT = {
     " between it stays what it was. A missing, stale or refused signal has no vote; one between its two limits counts"
     " as seen and says neither. Take signals that move within minutes of the feed and that fail each by itself: other"
     " feeds, the outlet flow, oxygen at the outlet. Where no signal is seen, the condition is not known.",
+    "event": "What people know to have happened. Trends show it; after a catalyst change or a calibration the ageing"
+    " before it says nothing about the time after it.",
+    "healthy": "A time that a person calls healthy: what the unit does is held against what it did then, at the same load,"
+    " catalyst age and operating point. At least 30 days, better 60. It stays until a person writes another one.",
     "hold_up": "What a well-mixed reactor holds. With it the instantaneous selectivity is worked out: its contents have"
     " the composition of the one stream that leaves it, and what they gain counts as formed.",
     "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"

@@ -31,6 +31,7 @@ def more(section: str) -> str:
 
 
 NO_VOTES = DEMO[: DEMO.index("[[operating.vote]]")] + DEMO[DEMO.index("[catalyst]") :]
+NO_POINT = with_edit('operating_point = ["TI-205", "FI-202", "FI-203"]', "")  # nobody else names TI-205
 DECLARED = 'name = "oxygen in air"'
 CHANNEL = 'acetone = { tag = "AI-220.ACE", range = [0, 2], systematic = { relative_pct = 2, floor = 0.002 } }'
 WATCH = '[[watch]]\nfigure = "conversion"\nwindow = "8h"\nlow = 90\npriority = "low"\n'
@@ -229,11 +230,11 @@ BAD = {
         "stream[air].name", "'air' already belongs to stream[air]", "give each its own name",
     ),
     "two instruments of one name": (
-        with_edit('name = "TI-205"', 'name = "FI-201"'),
+        with_edit('name = "TI-205"', 'name = "FI-201"', NO_POINT),
         "instrument[FI-201].name", "'FI-201' already belongs to instrument[FI-201]", "give each its own name",
     ),
     "an instrument named like a channel": (
-        with_edit('name = "TI-205"', 'name = "AI-220 oxygen"'),
+        with_edit('name = "TI-205"', 'name = "AI-220 oxygen"', NO_POINT),
         "analyzer[AI-220].channel.oxygen.name", "'AI-220 oxygen' already belongs to", "give each its own name",
     ),
     "one tag twice": (
@@ -245,7 +246,7 @@ BAD = {
         "instrument[FI-203]", "has neither tag nor value", 'write tag = "..." of the historian',
     ),
     "both tag and value": (
-        with_edit('tag = "TI-205.PV"', 'tag = "TI-205.PV"\nvalue = 5'),
+        with_edit('tag = "TI-205.PV"', 'tag = "TI-205.PV"\nvalue = 5', NO_POINT),
         "instrument[TI-205]", "has both tag and value", "remove one of them",
     ),
     "a declared signal": (
@@ -613,6 +614,32 @@ BAD = {
     "two watches that would have one name": (
         more(WATCH + WATCH),
         "watch[5].name", "'conversion 8 h' is the name of two watches", 'write name = "..." for one',
+    ),
+    "a healthy period that ends before it begins": (
+        with_edit("to = 2026-03-27T00:00:00+01:00", "to = 2026-03-01T00:00:00+01:00"),
+        "healthy.to", "2026-03-01T00:00:00+01:00 is not after from", "write a later moment",
+    ),
+    "a healthy period without its offset": (
+        with_edit("from = 2026-03-02T00:00:00+01:00", "from = 2026-03-02T00:00:00"),
+        "healthy.from", "is not a date and time with its offset", "write from = 2026-03-02T00:00:00+01:00",
+    ),
+    "an operating point that names a declared value": (
+        with_edit('operating_point = ["TI-205"', 'operating_point = ["oxygen in air"'),
+        "healthy.operating_point", "'oxygen in air' is no instrument with a tag", "write one of 'FI-201'",
+    ),
+    "an event of no kind that is known": (
+        with_edit('kind = "planned"', 'kind = "plan"'),
+        "event[more isobutene in the mixed feed].kind", "'plan' is not one of its words", "'planned'?",
+    ),
+    "a calibration of an instrument that is not there": (
+        with_edit('instrument = "AI-220"', 'instrument = "AI-221"'),
+        "event[AI-220 set right, methacrolein channel].instrument",
+        "'AI-221' is no declared instrument or analyzer", "did you mean 'AI-220'?",
+    ),
+    "a note that names an instrument": (
+        with_edit('kind = "planned"', 'kind = "note"\ninstrument = "TI-205"'),
+        "event[more isobutene in the mixed feed].instrument", "a note concerns no single instrument",
+        'write kind = "calibration", or leave it out',
     ),
     "a word list that names one twice": (
         with_edit('missing_words = [', 'missing_words = ["No Data", '),

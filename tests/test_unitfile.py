@@ -173,6 +173,23 @@ def test_a_watch_is_named_by_figure_and_window_unless_it_has_a_name(tmp_path: Pa
     assert unit.watches[0].name == "yield, shift"
 
 
+def test_the_healthy_period_names_its_span_and_the_operating_point():
+    healthy = DEMO_UNIT.healthy
+    assert healthy is not None
+    assert healthy.first == datetime(2026, 3, 1, 23, tzinfo=UTC)
+    assert healthy.last == datetime(2026, 3, 26, 23, tzinfo=UTC)
+    assert healthy.operating_point == ("TI-205", "FI-202", "FI-203")
+
+
+def test_events_come_in_the_order_of_time_and_a_calibration_may_name_its_instrument(tmp_path: Path):
+    early = '[[event]]\nat = 2026-03-05T08:00:00Z\nkind = "note"\nname = "filter changed"\n'
+    events = loaded(tmp_path, f"{DEMO}\n{early}").events
+    assert [event.kind for event in events] == ["note", "planned", "calibration"]
+    assert [event.instrument for event in events] == [None, None, "AI-220"]
+    channel = with_edit('instrument = "AI-220"', 'instrument = "AI-220 oxygen"')
+    assert loaded(tmp_path, channel).events[-1].instrument == "AI-220 oxygen"
+
+
 def test_sections_that_are_optional_may_be_left_out(tmp_path: Path):
     text = DEMO[: DEMO.index("[[shared]]")]
     unit = loaded(tmp_path, text)
