@@ -1,4 +1,4 @@
-"""The store's SQLite file: its tables, how it is opened, the lock between passes, its faults in words."""
+"""The store's SQLite file: how it is made and opened, the lock between passes, its faults in words."""
 
 from __future__ import annotations
 
@@ -13,52 +13,14 @@ from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 
+from ingest import migrations
 from ingest.errors import StoreError
 
 LEDGER = "ledger.sqlite"
 LOCK = "pass.lock"
 HOLDER = "pass.holder"
-SCHEMA_VERSION = 1
 APPLICATION_ID = 0x4F75746C  # "Outl" in the file's header says that the file is ours
 BUSY_S = 30.0  # a commit waits so long for another one; each takes milliseconds
-
-SCHEMA = """
-BEGIN IMMEDIATE;
-CREATE TABLE meta (key TEXT PRIMARY KEY, value TEXT NOT NULL) STRICT;
-CREATE TABLE passes (
-  number INTEGER PRIMARY KEY, started TEXT NOT NULL, finished TEXT NOT NULL,
-  exports INTEGER NOT NULL, rows INTEGER NOT NULL, note TEXT NOT NULL
-) STRICT;
-CREATE TABLE exports (
-  number INTEGER PRIMARY KEY, sha256 TEXT NOT NULL UNIQUE, name TEXT NOT NULL, size INTEGER NOT NULL,
-  taken_at TEXT NOT NULL, status TEXT NOT NULL CHECK (status IN ('taken', 'set aside')),
-  error TEXT NOT NULL, asked TEXT NOT NULL, account TEXT NOT NULL,
-  made_by INTEGER NOT NULL REFERENCES passes (number)
-) STRICT;
-CREATE TABLE seen (path TEXT PRIMARY KEY, size INTEGER NOT NULL, mtime_ns INTEGER NOT NULL,
-  sha256 TEXT NOT NULL) STRICT;
-CREATE TABLE parts (
-  unit TEXT NOT NULL, stage TEXT NOT NULL, month TEXT NOT NULL, file TEXT NOT NULL UNIQUE,
-  sha256 TEXT NOT NULL, rows INTEGER NOT NULL, size INTEGER NOT NULL,
-  made_by INTEGER NOT NULL REFERENCES passes (number), PRIMARY KEY (unit, stage, month)
-) STRICT;
-CREATE TABLE episodes (
-  unit TEXT NOT NULL, position INTEGER NOT NULL, watch TEXT, raised TEXT, cleared TEXT,
-  detail TEXT NOT NULL, PRIMARY KEY (unit, position)
-) STRICT;
-CREATE TABLE episode_columns (unit TEXT PRIMARY KEY, columns TEXT NOT NULL) STRICT;
-CREATE TABLE journal (
-  number INTEGER PRIMARY KEY AUTOINCREMENT, written TEXT NOT NULL, who TEXT NOT NULL, what TEXT NOT NULL,
-  note TEXT NOT NULL DEFAULT '', unit TEXT, watch TEXT, raised TEXT
-) STRICT;
-CREATE TRIGGER journal_keeps_lines BEFORE UPDATE ON journal
-  BEGIN SELECT RAISE(ABORT, 'the journal is append-only'); END;
-CREATE TRIGGER journal_loses_nothing BEFORE DELETE ON journal
-  BEGIN SELECT RAISE(ABORT, 'the journal is append-only'); END;
-CREATE TRIGGER journal_replaces_nothing BEFORE INSERT ON journal
-  WHEN EXISTS (SELECT 1 FROM journal WHERE number = NEW.number)
-  BEGIN SELECT RAISE(ABORT, 'the journal is append-only'); END;
-"""
 
 # SQLite's primary result codes (sqlite.org/rescode.html) that a user can mend; any other is our bug.
 FAULTS = {
@@ -87,6 +49,25 @@ def now() -> str:
         ISO 8601.
     """
     return datetime.now(UTC).isoformat(timespec="seconds")
+
+
+def stamp(at: datetime | None = None) -> str:
+    """Give an instant as text, UTC, to the millisecond.
+
+    Parameters
+    ----------
+    at : datetime or None
+        With a zone; None for the present.
+
+    Returns
+    -------
+    str
+        ISO 8601.
+    """
+    at = datetime.now(UTC) if at is None else at
+    if at.tzinfo is None:
+        raise ValueError(f"{at.isoformat()}: an instant needs a zone")
+    return at.astimezone(UTC).isoformat(timespec="milliseconds")
 
 
 def program_version() -> str:
@@ -123,10 +104,29 @@ def open_ledger(folder: Path) -> Iterator[sqlite3.Connection]:
             f"{folder}: there is no store here", remedy="Take exports in first, or name another --store."
         )
     with _in_words(path), closing(_connect(path, "rw", BUSY_S)) as ledger:
-        _must_be_ours(ledger, path)
         ledger.execute("PRAGMA synchronous = FULL")
+        _bring_up(ledger, path)
         ledger.execute("PRAGMA foreign_keys = ON")
         yield ledger
+
+
+@contextmanager
+def writing(folder: Path) -> Iterator[sqlite3.Connection]:
+    """Open the ledger of a store in one transaction that may write; it is committed at the end.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+
+    Yields
+    ------
+    sqlite3.Connection
+    """
+    with open_ledger(folder) as ledger:
+        ledger.execute("BEGIN IMMEDIATE")
+        yield ledger
+        ledger.execute("COMMIT")
 
 
 def make_ledger(folder: Path) -> None:
@@ -142,12 +142,10 @@ def make_ledger(folder: Path) -> None:
         if _is_empty(ledger):
             ledger.execute("PRAGMA journal_mode = WAL")
             ledger.execute("PRAGMA synchronous = FULL")
-            facts = {"schema_version": str(SCHEMA_VERSION), "program_version": program_version()}
-            ledger.executescript(SCHEMA)
+            ledger.execute("BEGIN IMMEDIATE")
             ledger.execute(f"PRAGMA application_id = {APPLICATION_ID}")
-            ledger.executemany("INSERT INTO meta VALUES (?, ?)", list(facts.items()))
+            _migrate(ledger, 0)
             ledger.execute("COMMIT")
-        _must_be_ours(ledger, path)
 
 
 def has_ledger(folder: Path) -> bool:
@@ -236,19 +234,36 @@ def _is_empty(ledger: sqlite3.Connection) -> bool:
     return not ledger.execute("SELECT count(*) FROM sqlite_schema").fetchone()[0]
 
 
-def _must_be_ours(ledger: sqlite3.Connection, path: Path) -> None:
-    """Refuse a file of another program, and one of a later version of this program."""
+def _bring_up(ledger: sqlite3.Connection, path: Path) -> None:
+    """Bring a ledger of an earlier version of this program to the present one, whole or not at all."""
+    if _version(ledger, path) < migrations.VERSION:
+        ledger.execute("BEGIN IMMEDIATE")
+        _migrate(ledger, _version(ledger, path))  # looked at again: another process may have been faster
+        ledger.execute("COMMIT")
+
+
+def _migrate(ledger: sqlite3.Connection, version: int) -> None:
+    """Run what is missing from one version to this program's, in the transaction that is open."""
+    for statement in migrations.steps_from(version):
+        ledger.execute(statement)
+    facts = {"schema_version": str(migrations.VERSION), "program_version": program_version()}
+    ledger.executemany("INSERT OR REPLACE INTO meta VALUES (?, ?)", list(facts.items()))
+
+
+def _version(ledger: sqlite3.Connection, path: Path) -> int:
+    """Give the version of a ledger's tables; refuse another program's file, and a later version's."""
     if ledger.execute("PRAGMA application_id").fetchone()[0] != APPLICATION_ID:
         raise StoreError(
             f"{path}: is not a ledger of this program", remedy="Name another folder with --store."
         )
     facts = dict(ledger.execute("SELECT key, value FROM meta"))
-    if int(facts["schema_version"]) > SCHEMA_VERSION:
+    if int(facts["schema_version"]) > migrations.VERSION:
         raise StoreError(
             f"{path}: schema version {facts['schema_version']}, made by program {facts['program_version']}; "
-            f"this program knows schema versions up to {SCHEMA_VERSION}",
+            f"this program knows schema versions up to {migrations.VERSION}",
             remedy="Use a newer version of this program, or name another folder with --store.",
         )
+    return int(facts["schema_version"])
 
 
 @contextmanager

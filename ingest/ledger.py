@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pyarrow as pa
 
-from ingest import database, parts, records
+from ingest import database, documents, parts, records
 from ingest.parts import Part
 from ingest.passes import Pass
 from ingest.records import Export, PassEntry
@@ -139,6 +139,7 @@ class Store:
         with database.open_ledger(self.folder) as ledger:
             said = [str(line) for (line,) in ledger.execute("PRAGMA integrity_check")]
             named = records.read_snapshot(self.folder, ledger).parts.values()
+            said += [f"{one}: holds another text than was written" for one in documents.damaged(ledger)]
         remedy = "Put the store back from a copy, or take the exports in anew."
         faults = [Finding(database.LEDGER, line, remedy) for line in said if line != "ok"]
         checked = ((part, _fault(self.folder / part.file, part)) for part in named)

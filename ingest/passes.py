@@ -6,6 +6,7 @@ nobody names; the next pass sweeps them.
 
 from __future__ import annotations
 
+import sqlite3
 from collections.abc import Callable, Iterable
 from contextlib import ExitStack, suppress
 from dataclasses import astuple, replace
@@ -43,6 +44,7 @@ class Pass:
         self._recorded: set[str] = set()
         self._seen: dict[str, Seen] = {}
         self._made: set[str] = set()
+        self._steps: list[Callable[[sqlite3.Connection], object]] = []
 
     def __enter__(self) -> Self:
         """Take the lock, sweep what dead passes left and look at the store."""
@@ -257,6 +259,16 @@ class Pass:
         """
         self._seen[path] = seen
 
+    def at_commit(self, step: Callable[[sqlite3.Connection], object]) -> None:
+        """Let a step of the caller's be part of the commit, after all of the pass's own.
+
+        Parameters
+        ----------
+        step : callable
+            Given the ledger in the transaction of the commit; if it fails, so does the pass.
+        """
+        self._steps.append(step)
+
     def _look(self) -> None:
         """See what the last pass left."""
         with database.open_ledger(self._folder) as ledger:
@@ -278,8 +290,7 @@ class Pass:
             sum(p.rows for p in written),
             self._note,
         )
-        with database.open_ledger(self._folder) as ledger:
-            ledger.execute("BEGIN IMMEDIATE")
+        with database.writing(self._folder) as ledger:
             ledger.execute("INSERT INTO passes VALUES (?, ?, ?, ?, ?, ?)", astuple(entry))
             records.write_parts(ledger, self._before.parts, self._now.parts)
             records.write_exports(ledger, recorded)
@@ -288,7 +299,8 @@ class Pass:
             for unit, rows in self._now.episode_rows.items():
                 if rows != self._before.episode_rows.get(unit):
                     records.write_episodes(ledger, unit, rows)
-            ledger.execute("COMMIT")
+            for step in self._steps:
+                step(ledger)
 
 
 def _files(snapshot: Snapshot) -> set[str]:

@@ -20,6 +20,7 @@ from ingest.parts import instant_us
 from ingest.passes import Pass
 from ingest.records import Export
 
+ROOT = Path(__file__).resolve().parent.parent
 HOUR = 3_600_000_000  # microseconds
 JANUARY = instant_us(pd.Timestamp("2026-01-01T00:00Z"))
 FEBRUARY = instant_us(pd.Timestamp("2026-02-01T00:00Z"))
@@ -122,8 +123,7 @@ def killed(folder: Path, death: str, body: str = "fill(pass_)") -> int:
         f"from pathlib import Path\nfrom tests.store_made import *\n"
         f"DEATHS[{death!r}]()\nwith Store(Path({str(folder)!r})).begin() as pass_:\n    {body}\n"
     )
-    root = Path(__file__).resolve().parent.parent
-    return subprocess.run([sys.executable, "-c", script], cwd=root, check=False).returncode
+    return subprocess.run([sys.executable, "-c", script], cwd=ROOT, check=False).returncode
 
 
 def undisturbed(folder: Path) -> Store:
