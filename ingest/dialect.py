@@ -38,6 +38,7 @@ _QUALITIES = {
 _NO_TEXT = (
     (b"PK\3\4", "a spreadsheet or zip file", "Export as CSV text (or .csv.gz) or as Parquet."),
     (b"\x1f\x8b", "a gz file without .gz in its name", "Rename it so that it ends in .csv.gz."),
+    (b"\x28\xb5\x2f\xfd", "a zst file without .zst in its name", "Rename it so that it ends in .csv.zst."),
 )
 _DATE_ALONE = r"^\s*\d{1,4}[-/.]\d{1,2}[-/.]\d{1,4}\s*$"
 _CLOCK_ALONE = r"^\s*\d{1,2}:\d{2}(:\d{2}([.,]\d+)?)?( ?[AaPp][Mm])?\s*$"

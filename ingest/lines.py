@@ -6,12 +6,13 @@ import codecs
 import gzip
 import zlib
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import AbstractContextManager, contextmanager, nullcontext
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, BinaryIO, cast
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from ingest.account import COLUMNS, KEPT, QUOTES, RETURN
@@ -58,7 +59,7 @@ def opened(path: Path) -> Iterator[BinaryIO]:
     Parameters
     ----------
     path : pathlib.Path
-        Names ending in .gz are expanded.
+        Names ending in .gz or .zst are expanded.
 
     Yields
     ------
@@ -68,8 +69,8 @@ def opened(path: Path) -> Iterator[BinaryIO]:
     if path.is_dir():
         raise ExportError(f"{path.name}: is a folder, not an export", remedy="Name the files inside it.")
     try:
-        with gzip.open(path) if path.suffix.lower() == ".gz" else path.open("rb") as file:
-            yield cast(BinaryIO, file)
+        with path.open("rb") as raw, _expanded(raw, path.suffix.lower()) as file:
+            yield file
     except FileNotFoundError as error:
         raise ExportError(f"{path.name}: there is no such file", remedy="Check the name.") from error
     except (EOFError, zlib.error, gzip.BadGzipFile) as error:
@@ -78,10 +79,24 @@ def opened(path: Path) -> Iterator[BinaryIO]:
             remedy="Export or copy the file again.",
         ) from error
     except OSError as error:
+        if error.errno is None and path.suffix.lower() == ".zst":  # what Arrow's codec says has no number
+            raise ExportError(
+                f"{path.name}: the zst file is damaged or cut short ({error})",
+                remedy="Export or copy the file again.",
+            ) from error
         raise ExportError(
             f"{path.name}: cannot be read ({error.strerror or error})",
             remedy="Check the file's permissions and the disk.",
         ) from error
+
+
+def _expanded(raw: BinaryIO, suffix: str) -> AbstractContextManager[BinaryIO]:
+    """The bytes of a file as they were before it was compressed, if it was."""
+    if suffix == ".gz":
+        return cast(AbstractContextManager[BinaryIO], gzip.open(raw))
+    if suffix == ".zst":
+        return cast(AbstractContextManager[BinaryIO], pa.CompressedInputStream(raw, "zstd"))
+    return nullcontext(raw)
 
 
 def blocks(path: Path, codec: str) -> Iterator[tuple[int, bytes]]:

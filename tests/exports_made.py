@@ -105,11 +105,20 @@ def micros(time: datetime) -> int:
 
 
 def saved(folder: Path, text: str | bytes, name: str = "export.csv", encoding: str = "utf-8") -> Path:
-    """A file of this text; names ending in .gz are compressed."""
+    """A file of this text; names ending in .gz or .zst are compressed."""
     raw = text if isinstance(text, bytes) else text.encode(encoding)
+    packed = {".gz": gzip.compress, ".zst": zst}.get(Path(name).suffix, bytes)
     path = folder / name
-    path.write_bytes(gzip.compress(raw) if name.endswith(".gz") else raw)
+    path.write_bytes(packed(raw))
     return path
+
+
+def zst(raw: bytes) -> bytes:
+    """One Zstandard frame (RFC 8878)."""
+    sink = pa.BufferOutputStream()
+    with pa.CompressedOutputStream(sink, "zstd") as packer:
+        packer.write(raw)
+    return sink.getvalue().to_pybytes()
 
 
 def opened(

@@ -29,7 +29,7 @@ from ingest.account import (
 )
 from ingest.errors import ExportError
 from ingest.unit import ExportRules
-from tests.exports_made import long_text, made_truth, opened, read, saved, wide_parquet, wide_text
+from tests.exports_made import long_text, made_truth, opened, read, saved, wide_parquet, wide_text, zst
 
 WIDE = wide_text(made_truth())  # 300 rows of 3 tags
 LONG = long_text(made_truth())  # 900 rows
@@ -117,7 +117,7 @@ SPOILT = {
 
 
 @pytest.mark.parametrize("what", SPOILT)
-@pytest.mark.parametrize("name", ["export.csv", "export.csv.gz"])
+@pytest.mark.parametrize("name", ["export.csv", "export.csv.gz", "export.csv.zst"])
 def test_what_cannot_be_read_is_rejected_with_its_row_and_the_rest_is_kept(
     tmp_path: Path, what: str, name: str
 ):
@@ -300,6 +300,26 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
         "the gz file is damaged",
         "again",
     ),
+    "zst under another name": (
+        "x.csv",
+        zst(ANY.encode()),
+        r"x\.csv: is a zst file without",
+        r"Rename it so that it ends in \.csv\.zst",
+    ),
+    "empty zst": ("x.csv.zst", zst(b""), r"x\.csv\.zst: is empty", "Export it again"),
+    "text called zst": ("x.csv.zst", ANY.encode(), r"x\.csv\.zst: the zst file is damaged", "again"),
+    "zst cut short": (
+        "x.csv.zst",
+        zst(WIDE.encode())[:-200],
+        r"x\.csv\.zst: the zst file is damaged or cut",
+        "again",
+    ),
+    "zst with a flipped bit": (
+        "x.csv.zst",
+        zst(WIDE.encode())[:-6] + bytes(6),
+        "the zst file is damaged",
+        "again",
+    ),
     "Windows text": (
         "x.csv",
         "time,A\u20ac\n2026-01-01T00:00Z,1\n".encode("cp1252"),
@@ -383,7 +403,7 @@ def test_a_file_that_the_system_refuses_is_said_to_be_unreadable(tmp_path: Path)
         opened(tmp_path / "x.csv")
 
 
-@pytest.mark.parametrize("name", ["x.csv", "x.csv.gz"])
+@pytest.mark.parametrize("name", ["x.csv", "x.csv.gz", "x.csv.zst"])
 def test_a_file_that_expands_beyond_the_ceiling_is_refused(
     tmp_path: Path, name: str, monkeypatch: pytest.MonkeyPatch
 ):
