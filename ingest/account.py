@@ -10,8 +10,9 @@ is accepted or rejected for one reason.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable, Iterator
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, field, fields, replace
+from typing import Any, Self
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +20,8 @@ from numpy.typing import NDArray
 KEPT = 3  # rows kept as evidence for each reason, tags named where more were not asked for
 TEXT = 120  # characters kept of each
 
-# Codes of what can be wrong with one reading, in the order of the table below; 0 is nothing.
+# Codes of what can be wrong with one reading, in the order of the table below; 0 is nothing. The ledger keeps
+# them: a new one goes to the end.
 (
     ACCEPTED,
     COLUMNS,
@@ -121,6 +123,24 @@ class Account:
     evidence: tuple[Evidence, ...]
     unasked_tags: tuple[tuple[str, int], ...]
 
+    @classmethod
+    def from_stored(cls, stored: Mapping[str, Any]) -> Self:
+        """Give the account that the ledger holds as text; what an older one did not count is nought.
+
+        Parameters
+        ----------
+        stored : mapping
+            Of an export that was taken in, as it comes back from JSON.
+
+        Returns
+        -------
+        Account
+        """
+        empty = {"str": "", "int": 0}
+        known = {one.name: stored.get(one.name, empty.get(str(one.type), ())) for one in fields(cls)}
+        lists = {name: tuple(map(_tuple, value)) for name, value in known.items() if isinstance(value, list)}
+        return cls(**(known | lists | {"evidence": tuple(Evidence(**one) for one in known["evidence"])}))
+
     @property
     def rejected(self) -> int:
         """Give the readings rejected for any reason."""
@@ -185,6 +205,11 @@ class Account:
             more = f" and {len(names) - KEPT} more" if len(names) > KEPT else ""
             yield f"{self.unasked} of tags that no unit file names ({', '.join(names[:KEPT])}{more})"
         yield f"{self.rejected} rejected"
+
+
+def _tuple(item: Any) -> Any:
+    """A pair as it was before it went into JSON."""
+    return tuple(item) if isinstance(item, list) else item
 
 
 def _counted(count: int, noun: str) -> str:

@@ -20,7 +20,11 @@ from ingest.records import Export, Seen
 from ingest.unit import ExportRules, Unit
 
 SETTLE = timedelta(seconds=2)  # a file changed more recently may still be growing
-SUFFIXES = (".csv", ".csv.gz", ".txt", ".txt.gz", ".tsv", ".tsv.gz", ".parquet", ".pq")
+SUFFIXES = (
+    *(kind + packed for kind in (".csv", ".txt", ".tsv") for packed in ("", ".gz", ".zst")),
+    ".parquet",
+    ".pq",
+)
 NAMES_SHOWN = 5
 
 Status = Literal["taken", "taken already", "set aside", "left for the next pass"]
@@ -78,6 +82,14 @@ class _File:
     before: Export | None
 
 
+@dataclass(frozen=True, slots=True)
+class _Taken:
+    """What was read of a file, and how, in sentences."""
+
+    account: Account
+    dialect: tuple[str, ...]
+
+
 def take_in(
     pass_: Pass,
     units: Sequence[Unit],
@@ -108,11 +120,11 @@ def take_in(
     asked = _asked(units)
     files, outcomes = _plan(pass_, asked, _found(paths), settle)
     archive = Archive(pass_, asked.tags.union(*(export.asked["tags"] for export in pass_.exports())))
-    taken: list[tuple[_File, Account]] = []
+    taken: list[tuple[_File, _Taken]] = []
     done, total = 0, sum(file.seen.size for file in files)
     for file in files:
         became = _read(pass_, archive, asked, file)
-        if isinstance(became, Account):
+        if isinstance(became, _Taken):
             taken.append((file, became))
         else:
             outcomes.append(became)
@@ -120,7 +132,7 @@ def take_in(
         if progress is not None:
             progress(done, total)
     archive.finish()
-    outcomes += [_enter(pass_, asked, file, account, archive.merged) for file, account in taken]
+    outcomes += [_enter(pass_, asked, file, read, archive.merged) for file, read in taken]
     _amend(pass_, archive.merged, {file.number for file, _ in taken})
     touched = {unit.key: spans_of(archive.merged.touched, _tags(unit)) for unit in units}
     return IntakeResult(tuple(sorted(outcomes, key=_by_name)), touched, _notes(pass_, asked))
@@ -229,7 +241,7 @@ def _unasked_then(entry: Export) -> frozenset[str]:
     return frozenset(tag for tag, _ in entry.account.get("unasked_tags", ()))
 
 
-def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> Account | Outcome:
+def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> _Taken | Outcome:
     """Read one export into the archive, or leave no trace of it there."""
     try:
         batches = open_export(
@@ -245,7 +257,7 @@ def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> Account 
         archive.drop()
         return left
     archive.keep()
-    return batches.account()
+    return _Taken(batches.account(), batches.dialect.describe())
 
 
 def _left(file: _File) -> Outcome | None:
@@ -266,14 +278,15 @@ def _set_aside(pass_: Pass, asked: _Asked, file: _File, error: str) -> Outcome:
     return Outcome(file.path.name, "set aside", error)
 
 
-def _enter(pass_: Pass, asked: _Asked, file: _File, account: Account, merged: Merged) -> Outcome:
+def _enter(pass_: Pass, asked: _Asked, file: _File, read: _Taken, merged: Merged) -> Outcome:
     """Enter a file that was taken in, with what became of its readings in the archive."""
     earlier = file.before.account if file.before is not None else {}
-    settled = account.settled(
+    settled = read.account.settled(
         superseded=earlier.get("superseded", 0) + merged.superseded[file.number],
         duplicates=earlier.get("duplicates", 0) + merged.duplicates[file.number],
     )
-    told = json.loads(json.dumps(asdict(settled)))  # lists, as they come back from the ledger
+    told = {**asdict(settled), "dialect": read.dialect}
+    told = json.loads(json.dumps(told))  # lists, as they come back from the ledger
     pass_.record_export(_entry(pass_, file, asked, status="taken", error="", account=told))
     return Outcome(file.path.name, "taken", settled.describe()[0], settled)
 

@@ -12,7 +12,7 @@ import click
 
 from ingest.errors import OutletError
 from monitor.commands.asking import check, describe, lag, suspects
-from monitor.commands.keeping import verify
+from monitor.commands.keeping import exports, verify
 from monitor.commands.running import demo, page, run
 from monitor.commands.shared import FINE, STOPPED, YOURS
 
@@ -63,5 +63,5 @@ def outlet() -> None:
     """
 
 
-for one in (demo, check, describe, run, page, lag, suspects, verify):
+for one in (demo, check, describe, run, page, lag, suspects, exports, verify):
     outlet.add_command(one)

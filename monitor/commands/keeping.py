@@ -1,4 +1,4 @@
-"""Commands about the store itself: verify."""
+"""Commands about the store itself: exports, verify."""
 
 from __future__ import annotations
 
@@ -14,6 +14,27 @@ from monitor.commands.shared import (
     say,
     store_option,
 )
+
+
+@click.command()
+@store_option
+@click.option("--name", default="", help="Only exports whose name holds these words.")
+@json_option
+@click.argument("which", metavar="[NUMBER|NAME]", required=False)
+def exports(store: Path, name: str, which: str | None, as_json: bool) -> None:
+    """List the exports that were taken in or set aside, newest first, or tell the whole account of one."""
+    from ingest.ledger import Store
+    from monitor.deliveries import matching, named, table
+    from monitor.tellexports import as_rows, as_table, listed, told
+
+    entries = Store(store).exports()
+    if which is None:
+        frame = matching(table(entries), name)
+        say({"exports": as_rows(frame)}, listed(frame), as_json=as_json)
+        return
+    found = named(entries, which)
+    lines = (line for one in found for line in told(one))
+    say({"exports": [as_table(one) for one in found]}, lines, as_json=as_json)
 
 
 @click.command()
