@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import timedelta
 from typing import Any
 
@@ -13,13 +13,14 @@ from ingest.entries import Entry, missing, nearest, read_table
 from ingest.errors import OutletError, Problem
 from ingest.keys import rows
 
-ONCE = ("unit", "chemistry", "operating", "catalyst", "healthy", "hold_up", "exports")
+ONCE = ("unit", "chemistry", "operating", "catalyst", "healthy", "hold_up", "budget", "guarantee", "exports")
 MANY = ("node", "stream", "instrument", "analyzer", "shared", "event", "watch")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")
 # What is said of an analyzer as a whole, not of each of its channels.
 OF_ANALYZER = ("name", "channel", "status", "certificate", "sum_band", "air_ingress")
 _NEEDED = ("unit", "chemistry", "stream")
+_BY_FIGURE = ("budget", "guarantee")  # their keys are names of figures
 
 
 @dataclass(slots=True)
@@ -120,6 +121,8 @@ def _read_section(section: str, content: object, draft: Draft) -> list[Problem]:
     """Read one section into the draft; a repeated one entry by entry, named where it has a name."""
     if isinstance(content, list) is not (section in MANY):
         return [Problem(section, "wrong kind of heading", f"write {_heading(section)}")]
+    if section in _BY_FIGURE:
+        return _read_figures(section, content, draft)
     if not isinstance(content, list):
         draft.once[section], problems = read_table(section, content, section)
         return problems + (_open_votes(draft) if section == "operating" else [])
@@ -133,6 +136,13 @@ def _read_section(section: str, content: object, draft: Draft) -> list[Problem]:
         if section == "analyzer":
             problems += _open_channels(entry, draft)
     return problems
+
+
+def _read_figures(section: str, content: object, draft: Draft) -> list[Problem]:
+    """Read a section whose keys are names of figures, as one table of numbers."""
+    draft.once[section], problems = read_table(section, {"figure": content}, section)
+    remedy = 'write for example "yield on feed" = 82.0'
+    return [replace(problem, where=section, remedy=remedy) for problem in problems]
 
 
 def _open_channels(analyzer: Entry, draft: Draft) -> list[Problem]:

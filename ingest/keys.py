@@ -168,6 +168,8 @@ TABLE: tuple[Key, ...] = (
     Key("watch", "on_delay", "duration", "how long the limit has to be crossed", '"1h"', default="0 s", low=0, high=30 * _DAY),
     Key("watch", "off_delay", "duration", "how long the figure has to be back", '"2h"', default="0 s", low=0, high=30 * _DAY),
     Key("watch", "steady", "yes or no", "watch the steady figure rather than the one as operated", "true", default=True),
+    Key("budget", "figure", "numbers", "what the figure of that name should be, in its unit", '{ "yield on feed" = 82.0 }'),
+    Key("guarantee", "figure", "numbers", "what was warranted of it, in its unit", '{ conversion = 95.0 }'),
     Key("exports", "time_zone", "zone", "zone of time stamps that state no offset", '"Europe/Berlin"'),
     Key("exports", "missing_words", "texts", "words in the value column that mean no reading", '["No Data"]', default=[]),
     Key("exports", "state_words", "numbers", "words in the value column that stand for a number, such as those of a status", "{ Sample = 0, Calibrating = 1 }"),

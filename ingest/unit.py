@@ -250,3 +250,5 @@ class Unit:
     analyzers: tuple[Analyzer, ...] = ()
     healthy: Healthy | None = None
     events: tuple[Event, ...] = ()  # in the order of time
+    budget: tuple[tuple[str, float], ...] = ()  # figure, and the value that it is held against
+    guarantee: tuple[tuple[str, float], ...] = ()

@@ -152,6 +152,8 @@ def _build(read: Draft, key: str) -> Unit:
         ),
         hold_up=_hold_up(read.once["hold_up"]),
         healthy=_healthy(read.once["healthy"]),
+        budget=tuple((read.once["budget"].get("figure") or {}).items()),
+        guarantee=tuple((read.once["guarantee"].get("figure") or {}).items()),
         events=tuple(sorted((_event(entry) for entry in read.many["event"]), key=lambda event: event.at)),
         nodes=tuple(Node(e.get("name"), e.get("reacts")) for e in read.many["node"]),
     )

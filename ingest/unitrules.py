@@ -11,7 +11,7 @@ from datetime import timedelta
 
 from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantities
 from ingest.draft import Draft, direction_of, twice, undeclared
-from ingest.entries import Entry
+from ingest.entries import Entry, nearest
 from ingest.errors import Problem
 from ingest.unit import AUXILIARY_KINDS, NO_RATES
 
@@ -304,6 +304,17 @@ def _figure_is_there(watch: Entry, draft: Draft) -> Iterator[Problem]:
         yield from undeclared(watch, "figure", [figure] if figure else [], known, "figure of this unit")
 
 
+def _targets_name_figures(draft: Draft) -> Iterator[Problem]:
+    """Budget and guarantee name figures of the unit."""
+    known = figure_names(draft)
+    for section in ("budget", "guarantee"):
+        for name in draft.once[section].get("figure") or ():
+            if name not in known:
+                yield Problem(
+                    f"{section}.{name}", f"'{name}' is no figure of this unit", nearest(name, known)
+                )
+
+
 def _limits(watch: Entry) -> Iterator[Problem]:
     """At least one limit, low below high, and a deadband smaller than the room between."""
     low, high, deadband = watch.get("low"), watch.get("high"), watch.get("deadband")
@@ -369,4 +380,5 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _healthy_can_be_fitted,
     _events_name_instruments,
     _watches_can_be_judged,
+    _targets_name_figures,
 )

@@ -12,6 +12,7 @@ from dataclasses import dataclass, fields, replace
 from datetime import timedelta
 from functools import lru_cache
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -38,6 +39,10 @@ from monitor.months import Month, Plan, work
 METHOD = "1"  # to be raised when the same readings and unit file give other numbers: all months become due
 PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored months were worked out with
 DERIVED = ("cells", "states", "figures-")
+# What a unit file says that no stored number depends on: a change of it makes nothing due.
+BESIDE: dict[str, Any] = {
+    "name": "", "watches": (), "healthy": None, "events": (), "budget": (), "guarantee": ()
+}  # fmt: skip
 _US = timedelta(microseconds=1)
 Progress = Callable[[str, int, int], None]
 Read = Callable[[Path], Readings]
@@ -266,7 +271,7 @@ def _forget(pass_: Pass, unit: str) -> None:
 
 def _mark(plan: Plan) -> str:
     """Tell in one word what a unit is worked out with."""
-    return hashlib.sha256(f"{METHOD} {replace(plan.unit, watches=(), name='')!r}".encode()).hexdigest()[:16]
+    return hashlib.sha256(f"{METHOD} {replace(plan.unit, **BESIDE)!r}".encode()).hexdigest()[:16]
 
 
 def _mark_of(view: Snapshot, unit: str) -> str:

@@ -81,7 +81,7 @@ def plan_of(unit: Unit) -> Plan:
     BalanceError
         The balance forces a flow to zero.
     UnitFileError
-        A watch names a figure that the unit does not have.
+        A watch, the budget or the guarantee names a figure that the unit does not have.
     """
     figures = figures_of(unit, amount_names(unit))
     names = [figure.name for figure in figures]
@@ -89,6 +89,12 @@ def plan_of(unit: Unit) -> Plan:
         Fault(f"watch[{place}].figure", f"the unit has no figure '{watch.figure}'", f"write one of {names}")
         for place, watch in enumerate(unit.watches, start=1)
         if watch.figure not in names
+    ]
+    lost += [
+        Fault(f"{section}.{name}", "the unit has no such figure", f"write one of {names}")
+        for section in ("budget", "guarantee")
+        for name, _ in getattr(unit, section)
+        if name not in names
     ]
     if lost:
         raise UnitFileError(unit.key, lost)

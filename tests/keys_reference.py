@@ -34,6 +34,8 @@ HEADINGS = {
     "healthy": "[healthy]",
     "hold_up": "[hold_up]",
     "watch": "[[watch]]",
+    "budget": "[budget]",
+    "guarantee": "[guarantee]",
     "exports": "[exports]",
 }
 START = """# The unit file
@@ -78,6 +80,9 @@ ABOUT = {
     " the composition of the one stream that leaves it, and what they gain counts as formed.",
     "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"
     " inside by `deadband` for `off_delay` ends it.",
+    "budget": "Figures under their own names, in their own units, that the monthly summary is held against. Its other"
+    " figures are compared with earlier months alone.",
+    "guarantee": "The same, for what was warranted.",
     "exports": "What the exports themselves do not tell.",
 }
 
@@ -114,7 +119,10 @@ def _section(name: str, heading: str) -> str:
 
 
 def _row(row: Key) -> str:
-    cells = (f"`{row.key}`", _value(row), _needed(row), row.sentence, f"`{row.key} = {row.example}`")
+    # The keys of these two are the figures themselves: their table is the section.
+    example = row.example.strip("{ }") if row.section in ("budget", "guarantee") else ""
+    example = example or f"{row.key} = {row.example}"
+    cells = (f"`{row.key}`", _value(row), _needed(row), row.sentence, f"`{example}`")
     return f"| {' | '.join(cells)} |"
 
 

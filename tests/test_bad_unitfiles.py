@@ -595,6 +595,14 @@ BAD = {
         more(WATCH.replace("conversion", "share of isobutane")),
         "watch[4].figure", "'share of isobutane' is no figure of this unit", "did you mean 'share of ",
     ),
+    "a budget for no figure": (
+        with_edit('"yield on feed" = 83.0', '"yield on fed" = 83.0'),
+        "budget.yield on fed", "'yield on fed' is no figure of this unit", "did you mean 'yield on feed'?",
+    ),
+    "a guarantee that is no number": (
+        with_edit("conversion = 95.0", 'conversion = "95 %"'),
+        "guarantee", "'95 %' is not a number", 'write for example "yield on feed" = 82.0',
+    ),
     "a window that the unit does not have": (
         with_edit('window = "8h"', 'window = "12h"'),
         "watch[1].window", "12 h is not among the unit's windows", "write one of 1 h, 8 h, 24 h, 7 d",

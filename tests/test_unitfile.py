@@ -257,3 +257,8 @@ def test_the_example_of_a_key_is_read_without_complaint(row: keys.Key):
 def test_the_reference_of_keys_is_the_table_of_keys():
     # after a change: python -m tests.keys_reference > config/README.md
     assert (ROOT / "config/README.md").read_text(encoding="utf-8") == reference()
+
+
+def test_budget_and_guarantee_are_numbers_by_figure():
+    assert dict(DEMO_UNIT.budget)["yield on feed"] == 83.0
+    assert dict(DEMO_UNIT.guarantee) == {"yield on feed": 80.0, "conversion": 95.0}
