@@ -12,6 +12,8 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+from ingest.shown import shown
+
 
 @dataclass(frozen=True, slots=True)
 class Problem:
@@ -64,7 +66,17 @@ class UnitFileError(OutletError):
 
 
 class ExportError(OutletError):
-    """One export cannot be read; it is set aside with this message and the others go on."""
+    """One export cannot be read; it is set aside with this message and the others go on.
+
+    Parameters
+    ----------
+    what, remedy : str
+        What they hold of the export is shown as text of one line, whatever stands in it.
+    """
+
+    def __init__(self, what: str, *, remedy: str) -> None:
+        """Keep two lines, two lines."""
+        super().__init__(shown(what), remedy=shown(remedy))
 
 
 class StoreError(OutletError):

@@ -15,8 +15,10 @@ import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
+from ingest import files
 from ingest.account import COLUMNS, KEPT, QUOTES, RETURN
 from ingest.errors import ExportError
+from ingest.files import Told
 
 BLOCK = 1 << 20  # bytes read at a time: sets the peak memory, not the speed
 LONGEST_LINE = 1 << 20  # bytes
@@ -53,23 +55,23 @@ class Block:
 
 
 @contextmanager
-def opened(path: Path) -> Iterator[BinaryIO]:
+def opened(path: Path, told: Told | None = None) -> Iterator[BinaryIO]:
     """Open an export for reading; what the system refuses becomes an ExportError.
 
     Parameters
     ----------
     path : pathlib.Path
-        Names ending in .gz or .zst are expanded.
+        A regular file; names ending in .gz or .zst are expanded.
+    told : callable or None
+        Told the bytes of the file, as it is on disk, that were read so far.
 
     Yields
     ------
     binary file
         Expanded bytes.
     """
-    if path.is_dir():
-        raise ExportError(f"{path.name}: is a folder, not an export", remedy="Name the files inside it.")
     try:
-        with path.open("rb") as raw, _expanded(raw, path.suffix.lower()) as file:
+        with files.opened(path, told) as raw, _expanded(raw, path.suffix.lower()) as file:
             yield file
     except FileNotFoundError as error:
         raise ExportError(f"{path.name}: there is no such file", remedy="Check the name.") from error
@@ -99,7 +101,7 @@ def _expanded(raw: BinaryIO, suffix: str) -> AbstractContextManager[BinaryIO]:
     return nullcontext(raw)
 
 
-def blocks(path: Path, codec: str) -> Iterator[tuple[int, bytes]]:
+def blocks(path: Path, codec: str, told: Told | None = None) -> Iterator[tuple[int, bytes]]:
     """Read a text file as blocks of whole lines.
 
     Parameters
@@ -108,6 +110,8 @@ def blocks(path: Path, codec: str) -> Iterator[tuple[int, bytes]]:
         The export.
     codec : str
         Python's name of the encoding; 'utf-8' passes bytes through once they are known to be UTF-8.
+    told : callable or None
+        As in `opened`.
 
     Yields
     ------
@@ -117,7 +121,7 @@ def blocks(path: Path, codec: str) -> Iterator[tuple[int, bytes]]:
         UTF-8, ending with a line feed.
     """
     row, rest = 1, b""
-    for chunk in _decoded(path, codec):
+    for chunk in _decoded(path, codec, told):
         data = rest + chunk
         cut = data.rfind(b"\n") + 1
         rest = data[cut:]
@@ -262,11 +266,11 @@ def _whole_line_ends(data: bytes, raw: NDArray[np.uint8], ends: NDArray[np.int64
     return bool(np.count_nonzero(raw == _CR) == np.count_nonzero(raw[np.maximum(ends - 1, 0)] == _CR))
 
 
-def _decoded(path: Path, codec: str) -> Iterator[bytes]:
+def _decoded(path: Path, codec: str, told: Told | None) -> Iterator[bytes]:
     """The file's bytes as UTF-8, a block at a time, without byte order mark."""
     decoder = codecs.getincrementaldecoder(codec)()
     size = 0
-    with opened(path) as file:
+    with opened(path, told) as file:
         while chunk := file.read(BLOCK):
             size += len(chunk)
             if size > LARGEST_EXPANDED:

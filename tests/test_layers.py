@@ -11,6 +11,7 @@ import pytest
 from tests.source import PACKAGES, ROOT, Source, sources
 
 ORDER = (
+    "ingest.shown",
     "ingest.errors",
     "ingest.chemistry",
     "ingest.quantities",
@@ -25,6 +26,7 @@ ORDER = (
     "ingest.unitfile",
     "ingest.columns",
     "ingest.account",
+    "ingest.files",
     "ingest.lines",
     "ingest.timestamps",
     "ingest.readings",
