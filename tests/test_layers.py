@@ -83,6 +83,7 @@ ORDER = (
     "monitor.sums",
     "monitor.windows",
     "monitor.runlengths",
+    "monitor.trendtests",
     "monitor.drift",
     "monitor.layout",
     "monitor.months",
