@@ -81,7 +81,7 @@ def amount_names(unit: Unit) -> tuple[str, ...]:
     state = state_of(unit)
     targets = formed_of(unit)
     inside, formed = ([f"{what} {name}" for name in targets] for what in ("inside", "formed"))
-    return (*_reconciled_rows(unit, state), *raw_rows(unit, state), *inside, *formed)
+    return (*reconciled_rows(unit, state), *raw_rows(unit, state), *inside, *formed)
 
 
 def amounts_of(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amounts]:
@@ -96,7 +96,7 @@ def amounts_of(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amou
     cells : Cells
         Readings on the grid.
     """
-    rows = np.array(list(_reconciled_rows(unit, problem.state).values()))
+    rows = np.array(list(reconciled_rows(unit, problem.state).values()))
     asked = np.vstack([rows, outlet_rows(unit, problem.state)]) if unit.hold_up else rows
     readings = measured(unit, cells.value, cells.share)
     states, solution = reconcile(problem, cells, readings, asked)
@@ -208,8 +208,16 @@ def _systematic(unit: Unit, readings: Measured, rates: Rates) -> Floats:
     return np.concatenate([own, shared], axis=1).transpose(2, 0, 1)
 
 
-def _reconciled_rows(unit: Unit, state: tuple[tuple[str, str], ...]) -> dict[str, Floats]:
-    """Give each amount of the reconciled state as weights on the flows, {name: (N,)}."""
+def reconciled_rows(unit: Unit, state: tuple[tuple[str, str], ...]) -> dict[str, Floats]:
+    """Give each amount of the reconciled state as weights on the flows, {name: (N,)}.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor.
+    state : tuple of (stream, species)
+        The state axis.
+    """
     out = -sign_of(unit, state)
     flows = {one.name: np.array([float(name == one.name) for _, name in state]) for one in unit.species}
     key = flows[unit.key_reactant]

@@ -77,6 +77,8 @@ def raw_rows(unit: Unit, state: tuple[tuple[str, str], ...]) -> dict[str, Floats
         if element == unit.key_element:
             key = np.array([name == unit.key_reactant for _, name in state])
             rows |= {f"raw made {element}": held * out * ~key, f"raw consumed {element}": -held * out * key}
+            wanted = np.array([name == unit.wanted for _, name in state])
+            rows |= {f"raw made {element} in {unit.wanted}": held * out * wanted}
     return rows
 
 
