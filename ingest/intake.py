@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import hashlib
 import json
+import os
 import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
@@ -10,13 +12,16 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any, Literal
 
-from ingest import database, parts
+from ingest import database
 from ingest.account import Account
 from ingest.archive import SITE, Archive, Merged, Span, spans_of
 from ingest.errors import ExportError, StoreError
 from ingest.exports import open_export
+from ingest.files import opened
+from ingest.found import found
 from ingest.passes import Pass
 from ingest.records import Export, Seen
+from ingest.shown import shown
 from ingest.unit import ExportRules, Unit
 
 SETTLE = timedelta(seconds=2)  # a file changed more recently may still be growing
@@ -118,7 +123,9 @@ def take_in(
     IntakeResult
     """
     asked = _asked(units)
-    files, outcomes = _plan(pass_, asked, _found(paths), settle)
+    meant = found(paths, SUFFIXES)
+    files, outcomes = _plan(pass_, asked, meant.files, settle)
+    outcomes += [_set_aside_unread(path, fault) for path, fault in meant.refused]
     archive = Archive(pass_, asked.tags.union(*(export.asked["tags"] for export in pass_.exports())))
     taken: list[tuple[_File, _Taken]] = []
     done, total = 0, sum(file.seen.size for file in files)
@@ -170,17 +177,6 @@ def _tags(unit: Unit) -> frozenset[str]:
     return frozenset(instrument.tag for instrument in unit.instruments if instrument.tag is not None)
 
 
-def _found(paths: Iterable[Path]) -> list[Path]:
-    """The files meant, each once, by name."""
-    found: dict[Path, Path] = {}
-    for path in paths:
-        if not path.exists():
-            raise ExportError(f"{path}: there is no such file or folder", remedy="Check the name.")
-        inside = [p for p in path.iterdir() if p.name.lower().endswith(SUFFIXES)] if path.is_dir() else [path]
-        found |= {file.resolve(): file for file in inside if not file.is_dir()}
-    return sorted(found.values(), key=lambda path: (path.name, str(path)))
-
-
 def _plan(
     pass_: Pass, asked: _Asked, paths: Iterable[Path], settle: timedelta
 ) -> tuple[list[_File], list[Outcome]]:
@@ -195,7 +191,7 @@ def _plan(
             outcomes.append(seen)
         elif seen.sha256 in files:
             twin = files[seen.sha256].path.name
-            outcomes.append(Outcome(path.name, "taken already", f"has the same content as {twin}"))
+            outcomes.append(_outcome(path, "taken already", f"has the same content as {shown(twin)}"))
         else:
             chosen = _choose(asked, path, seen, number, known.get(seen.sha256))
             if isinstance(chosen, Outcome):
@@ -209,17 +205,37 @@ def _plan(
 def _look(pass_: Pass, path: Path, settle: timedelta) -> Seen | Outcome:
     """Size, time and content of a file; its content is read only if the others changed."""
     try:
-        stat = path.stat()
+        stat = path.lstat()
         if 0 <= time.time() - stat.st_mtime < settle.total_seconds():
-            return Outcome(path.name, "left for the next pass", "was changed a moment ago and may still grow")
-        known = pass_.seen(str(path.resolve()))
+            return _outcome(path, "left for the next pass", "was changed a moment ago and may still grow")
+        known = pass_.seen(_place(path))
         if known is not None and (known.size, known.mtime_ns) == (stat.st_size, stat.st_mtime_ns):
             return known
-        fresh = Seen(stat.st_size, stat.st_mtime_ns, parts.sha256_of(path))
+        with opened(path) as file:
+            fresh = Seen(stat.st_size, stat.st_mtime_ns, hashlib.file_digest(file, "sha256").hexdigest())
+    except ExportError as fault:
+        return _set_aside_unread(path, fault)
+    except PermissionError as fault:
+        what = f"{path.name}: cannot be read ({fault.strerror})"
+        return _set_aside_unread(path, ExportError(what, remedy="Check the file's permissions."))
     except OSError as fault:
-        return Outcome(path.name, "left for the next pass", f"cannot be read: {fault.strerror}")
-    pass_.record_seen(str(path.resolve()), fresh)
+        return _outcome(path, "left for the next pass", f"cannot be read: {fault.strerror}")
+    pass_.record_seen(_place(path), fresh)
     return fresh
+
+
+def _place(path: Path) -> str:
+    """Where a file lies, as the ledger keeps it; a name need not be text."""
+    return os.fsencode(path.resolve()).decode("utf-8", "backslashreplace")
+
+
+def _set_aside_unread(path: Path, fault: ExportError) -> Outcome:
+    """Tell of what was not opened; its content is not known, so the ledger has no entry of it."""
+    return _outcome(path, "set aside", str(fault))
+
+
+def _outcome(path: Path, status: Status, words: str, account: Account | None = None) -> Outcome:
+    return Outcome(shown(path.name), status, words, account)
 
 
 def _choose(asked: _Asked, path: Path, seen: Seen, number: int, entry: Export | None) -> _File | Outcome:
@@ -228,11 +244,11 @@ def _choose(asked: _Asked, path: Path, seen: Seen, number: int, entry: Export | 
         return _File(path, seen, number, asked.tags, asked.tags, None)
     if entry.status == "set aside":
         if entry.asked == asked.entry(asked.tags):
-            return Outcome(path.name, "set aside", entry.error)
+            return _outcome(path, "set aside", entry.error)
         return _File(path, seen, number, asked.tags, asked.tags, None)
     added = _unasked_then(entry) & asked.tags
     if not added:
-        return Outcome(path.name, "taken already", f"was taken in on {entry.taken_at} as {entry.name}")
+        return _outcome(path, "taken already", f"was taken in on {entry.taken_at} as {entry.name}")
     return _File(path, seen, entry.number, added.union(entry.asked["tags"]), added, entry)
 
 
@@ -263,19 +279,19 @@ def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> _Taken |
 def _left(file: _File) -> Outcome | None:
     """Whether a file was changed while it was being read."""
     try:
-        stat = file.path.stat()
+        stat = file.path.lstat()
         same = (stat.st_size, stat.st_mtime_ns) == (file.seen.size, file.seen.mtime_ns)
     except OSError:
         same = False
     words = "was changed while it was being read"
-    return None if same else Outcome(file.path.name, "left for the next pass", words)
+    return None if same else _outcome(file.path, "left for the next pass", words)
 
 
 def _set_aside(pass_: Pass, asked: _Asked, file: _File, error: str) -> Outcome:
     """Enter a file that cannot be read; one that could be read once keeps its entry."""
     if file.before is None:
         pass_.record_export(_entry(pass_, file, asked, status="set aside", error=error, account={}))
-    return Outcome(file.path.name, "set aside", error)
+    return _outcome(file.path, "set aside", error)
 
 
 def _enter(pass_: Pass, asked: _Asked, file: _File, read: _Taken, merged: Merged) -> Outcome:
@@ -288,7 +304,7 @@ def _enter(pass_: Pass, asked: _Asked, file: _File, read: _Taken, merged: Merged
     told = {**asdict(settled), "dialect": read.dialect}
     told = json.loads(json.dumps(told))  # lists, as they come back from the ledger
     pass_.record_export(_entry(pass_, file, asked, status="taken", error="", account=told))
-    return Outcome(file.path.name, "taken", settled.describe()[0], settled)
+    return _outcome(file.path, "taken", settled.describe()[0], settled)
 
 
 def _entry(
@@ -298,7 +314,7 @@ def _entry(
     return Export(
         number=file.number,
         sha256=file.seen.sha256,
-        name=file.path.name,
+        name=shown(file.path.name),
         size=file.seen.size,
         taken_at=database.now(),
         status=status,

@@ -69,6 +69,7 @@ ORDER = (
     "ingest.passes",
     "ingest.ledger",
     "ingest.archive",
+    "ingest.found",
     "ingest.intake",
     "demo_data.kinetics",
     "demo_data.scenario",
