@@ -13,8 +13,8 @@ import click
 from ingest.errors import OutletError
 from monitor.commands.asking import check, describe, lag, suspects
 from monitor.commands.keeping import exports, verify
-from monitor.commands.running import demo, page, run
-from monitor.commands.shared import FINE, STOPPED, YOURS
+from monitor.commands.running import demo, follow, page, run
+from monitor.commands.shared import FINE, STOPPED, STOPPED_WORDS, YOURS
 
 # Matrices here are small: more threads of the linear algebra cost twice the processor time and no less time.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -31,7 +31,7 @@ def main() -> None:
         click.echo(_two_lines(error), err=True)
         code = YOURS
     except (click.Abort, KeyboardInterrupt):
-        click.echo("Stopped. The store holds the last pass that was finished.", err=True)
+        click.echo(STOPPED_WORDS, err=True)
         code = STOPPED
     sys.exit(code or FINE)
 
@@ -63,5 +63,5 @@ def outlet() -> None:
     """
 
 
-for one in (demo, check, describe, run, page, lag, suspects, exports, verify):
+for one in (demo, check, describe, run, follow, page, lag, suspects, exports, verify):
     outlet.add_command(one)

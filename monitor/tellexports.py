@@ -10,7 +10,7 @@ import pandas as pd
 
 from ingest.records import Export
 from monitor import deliveries, wording
-from monitor.run import PassResult
+from monitor.run import PassResult, UnitResult
 
 COLUMNS = ("rows", "readings", *deliveries.PLACES)
 
@@ -142,7 +142,7 @@ def in_one_line(result: PassResult, now: datetime, zone: str) -> str:
     Returns
     -------
     str
-        `14 Apr 2026 09:20 CEST  pass 12: 2 taken (1,440 readings accepted); demo: 144 cells, 1 episode open`.
+        `14 Apr 2026 09:20 CEST  pass 12: 1 taken (144 readings accepted); demo: 6 cells, 1 episode open`.
     """
     counts = pd.Series([one.status for one in result.exports], dtype=str).value_counts()
     files = ", ".join(f"{count} {status}" for status, count in counts.items()) or "no export"
@@ -150,11 +150,14 @@ def in_one_line(result: PassResult, now: datetime, zone: str) -> str:
     taken = f" ({_readings(sum(one.accepted for one in accounts))} accepted" if accounts else ""
     rejected = sum(one.rejected for one in accounts)
     taken += (f", {rejected:,} rejected)" if rejected else ")") if taken else ""
-    units = (
-        f"{one.unit}: {one.cells:,} cells, {sum(e.cleared is None for e in one.episodes)} open"
-        for one in result.units
-    )
+    units = (f"{one.unit}: {_worked(one)}" for one in result.units)
     return "; ".join([f"{wording.local_time(now, zone)}  pass {result.number}: {files}{taken}", *units])
+
+
+def _worked(one: UnitResult) -> str:
+    """What a pass did for one unit."""
+    still = sum(episode.cleared is None for episode in one.episodes)
+    return f"{one.cells:,} cells, {still or 'no'} episode{'s' if still > 1 else ''} open"
 
 
 def _readings(count: int) -> str:

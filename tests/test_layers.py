@@ -118,6 +118,7 @@ ORDER = (
     "monitor.telling",
     "monitor.tellexports",
     "monitor.progress",
+    "monitor.follow",
     "monitor.commands.shared",
     "monitor.commands.running",
     "monitor.commands.asking",

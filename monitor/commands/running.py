@@ -1,29 +1,36 @@
-"""Commands that bring exports in and show what is stored: demo, run, page."""
+"""Commands that bring exports in and show what is stored: demo, run, follow, page."""
 
 from __future__ import annotations
 
+import json
 import os
 import socket
 import sys
 from collections.abc import Sequence
 from dataclasses import asdict
-from datetime import timedelta
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import click
 
 from ingest.errors import OutletError
 from monitor.commands.shared import (
     FINE,
+    STOPPED_WORDS,
     YOURS,
     folder_path,
     json_option,
     port_option,
     say,
+    seconds,
     store_option,
     units_option,
 )
 from monitor.page.launch import command
+
+if TYPE_CHECKING:
+    from monitor.run import PassResult
 
 DEMO_DAYS = 60
 
@@ -66,6 +73,60 @@ def demo(folder: Path, days: int, no_page: bool, port: int, as_json: bool) -> in
 def run(unit_files: Sequence[Path], store: Path, exports: Sequence[Path], as_json: bool) -> int:
     """Take EXPORTS (files or folders) in, then bring figures and episodes up to date."""
     return _take_in(unit_files, store, exports, as_json)
+
+
+@click.command()
+@units_option
+@store_option
+@click.option(
+    "--every", type=seconds, default=5, show_default=True, help="Seconds from one look to the next."
+)
+@click.option(
+    "--settle", type=seconds, default=10, show_default=True, help="Seconds that a file must be at rest."
+)
+@click.option("--json", "as_json", is_flag=True, help="Print one JSON object a line for each pass.")
+@click.argument("folders", metavar="FOLDER...", type=folder_path, nargs=-1, required=True)
+def follow(
+    unit_files: Sequence[Path],
+    store: Path,
+    folders: Sequence[Path],
+    *,
+    every: float,
+    settle: float,
+    as_json: bool,
+) -> int:
+    """Stay, and take in what arrives in each FOLDER. SIGTERM (exit code 0) or Ctrl+C ends it.
+
+    A line a pass goes to standard output, what went wrong to standard error, once. A pass that is
+    interrupted leaves no trace; what was taken in is known from the store, however this ended.
+    """
+    from monitor.follow import Follower, Stop, keep_looking
+    from monitor.tellexports import in_one_line
+
+    def tell(result: PassResult, zone: str) -> None:
+        line = json.dumps(asdict(result), ensure_ascii=False, default=str)
+        click.echo(line if as_json else in_one_line(result, datetime.now(UTC), zone))
+
+    def warn(words: str) -> None:
+        click.echo(words, err=True)
+
+    with Stop() as stop:
+        follower = Follower(
+            unit_files,
+            store,
+            folders,
+            settle=timedelta(seconds=settle),
+            tell=tell,
+            warn=warn,
+            check=stop.check,
+        )
+        try:
+            keep_looking(follower, every=timedelta(seconds=every))
+        except KeyboardInterrupt:
+            if not stop.is_asked:
+                raise
+            warn(STOPPED_WORDS)
+    return FINE
 
 
 @click.command()

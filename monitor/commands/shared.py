@@ -13,8 +13,10 @@ from monitor.page.launch import DEFAULT_PORT
 
 # Exit codes; 1 is Python's own for a fault of ours, 130 the shell's for Ctrl+C.
 FINE, YOURS, STOPPED = 0, 2, 130
+STOPPED_WORDS = "Stopped. The store holds the last pass that was finished."
 
 file_path = click.Path(dir_okay=False, path_type=Path)
+seconds = click.FloatRange(0.1, 3600)
 folder_path = click.Path(file_okay=False, path_type=Path)
 units_option = click.option(
     "--unit",
