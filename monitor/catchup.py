@@ -1,14 +1,15 @@
-"""Which months of a unit a pass has to work out again, and working them out into the open pass.
+"""Which days of a unit a pass has to work out again, and working them out into the open pass.
 
-A month is due when readings came in that reach its cells or the windows over them, when the record grew into
-it, when the operating condition it begins with changed, or when the unit file changed since.
+A cell is made again when readings came in that reach it, when the record grew into it, or when the operating
+condition before it changed. A day is worked out again when one of its cells came out otherwise, and with it
+the figures of all windows that hold cells of it; all days are when the unit file changed since.
 """
 
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, fields, replace
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import astuple, dataclass, fields, replace
 from datetime import timedelta
 from functools import lru_cache
 from pathlib import Path
@@ -26,23 +27,29 @@ from ingest.cells import (
     Carried,
     Cells,
     carried_after,
+    cells_frame,
     cells_from_frame,
     look_back,
+    make_cells,
     reach,
 )
 from ingest.parts import month_edges, month_of, times_us
 from ingest.passes import Pass
 from ingest.readings import Readings, in_span, month_tags, read_month
+from ingest.reconcile import STATUS
 from ingest.snapshot import Snapshot
-from monitor.months import Month, Plan, work
+from monitor.days import DAY_US, Day, Plan, changed_days, rows
+from monitor.layout import table_of
+from monitor.months import days_before, figure_tables, runs_of, states_table, worked_out
 
-METHOD = "1"  # to be raised when the same readings and unit file give other numbers: all months become due
+METHOD = "2"  # to be raised when the same readings and unit file give other numbers: all days become due
 PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored months were worked out with
 DERIVED = ("cells", "states", "figures-")
 # What a unit file says that no stored number depends on: a change of it makes nothing due.
 BESIDE: dict[str, Any] = {
     "name": "", "watches": (), "healthy": None, "events": (), "budget": (), "guarantee": ()
 }  # fmt: skip
+SOLVED = STATUS.index("solved")
 _US = timedelta(microseconds=1)
 Progress = Callable[[str, int, int], None]
 Read = Callable[[Path], Readings]
@@ -50,11 +57,32 @@ Read = Callable[[Path], Readings]
 
 @dataclass(frozen=True, slots=True)
 class Worked:
-    """What was worked out of one unit: months, their cells, and how many of these the balance solved."""
+    """What was worked out of one unit: months written, days, their cells, how many the balance solved."""
 
     months: tuple[str, ...] = ()
+    days: int = 0
     cells: int = 0
     solved: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class _Desk:
+    """What one month hands on to the next of the same pass: days worked out, and which of them changed."""
+
+    days: Mapping[int, Day]
+    changed: tuple[int, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class _Job:
+    """What all months of one unit share in one pass."""
+
+    pass_: Pass
+    before: Snapshot
+    plan: Plan
+    record: _Record
+    spans: Sequence[Span]  # in which cells may come out otherwise
+    read: Read
 
 
 def catch_up(
@@ -93,18 +121,21 @@ def catch_up(
         pass_.write(unit, PLAN_STAGE, PLAN_MONTH, pa.table({"start": start, "plan": [_mark(plan)]}))
     if record is None:
         return Worked()
-    due = sorted(record.months if anew else _touched(plan, record, before, touched))
-    worked = Worked()
+    spans = _reached(plan, record, before, touched, anew=anew)
+    job = _Job(pass_, before, plan, record, spans, read)
+    due = [m for m in record.months if any(_meet(span, month_edges(m)) for span in spans)]
+    worked, desk = Worked(), _Desk({}, ())
+    done = 0
     while due:
         month = due.pop(0)
-        progress(unit, len(worked.months), len(worked.months) + 1 + len(due))
-        made = _work(pass_, plan, record, month, read)
-        _write(pass_, unit, month, made)
-        worked = Worked((*worked.months, month), worked.cells + made.cells, worked.solved + made.solved)
+        progress(unit, done, done + 1 + len(due))
+        desk, made = _work(job, month, desk)
+        done += 1
+        worked = Worked(*(a + b for a, b in zip(astuple(worked), astuple(made), strict=True)))
         following = next((later for later in record.months if later > month), None)
-        if following and following not in due and _begins_otherwise(pass_, before, unit, following):
+        if following and following not in due and _goes_on(job, desk, following):
             due.insert(0, following)
-    progress(unit, len(worked.months), len(worked.months))
+    progress(unit, done, done)
     return worked
 
 
@@ -166,22 +197,24 @@ def _months_of(first: int, last: int) -> Iterator[str]:
         month = month_of(month_edges(month)[1])
 
 
-def _touched(plan: Plan, record: _Record, before: Snapshot, touched: Sequence[Span]) -> set[str]:
-    """List the months whose cells or windows the new readings can change."""
+def _reached(
+    plan: Plan, record: _Record, before: Snapshot, touched: Sequence[Span], *, anew: bool
+) -> list[Span]:
+    """Give the spans in which cells may come out otherwise than they are stored."""
+    if anew:
+        return [(record.first_us, max(record.last_us, month_edges(record.months[-1])[0]) + 1)]
     ahead, behind = reach(plan.unit) // _US, look_back(plan.unit) // _US
     spans = [(first - ahead, last + behind) for first, last in touched]
     known = before.months(plan.unit.key, "cells")
     first, last = (_starts(before, plan.unit.key, month) for month in (known[0], known[-1]))
     # Where the record grew at either end there are cells that were not there before.
     spans += [(record.first_us, int(first[0])), (int(last[-1]) + plan.cell_us, record.last_us)]
-    due = {
-        month
-        for month in record.months
-        for low, high in spans
-        if low < high and month_edges(month)[0] <= high + plan.lead_us and month_edges(month)[1] >= low
-    }
-    behind_new = {month_of(month_edges(month)[1]) for month in due - set(known)}
-    return due | (behind_new & set(record.months))
+    spans += [month_edges(month) for month in record.read if month not in known]
+    return [(low, high) for low, high in spans if low < high]
+
+
+def _meet(one: Span, other: Span) -> bool:
+    return one[0] < other[1] and other[0] < one[1]
 
 
 def _starts(view: Snapshot, unit: str, month: str) -> NDArray[np.int64]:
@@ -195,29 +228,99 @@ def _tags(plan: Plan) -> list[str]:
     return [one.tag for one in plan.unit.instruments if one.tag is not None]
 
 
-def _work(pass_: Pass, plan: Plan, record: _Record, month: str, read: Read) -> Month:
-    """Gather what a month needs and work it out."""
-    unit, view = plan.unit, pass_.view()
-    first, last, after = record.edges(month)
-    since, until = first - look_back(unit) // _US, last + reach(unit) // _US + 1
-    readings = in_span(map(read, view.paths(SITE, STAGE, first=since, last=until)), since, until)
-    carried = _carried_at(view, unit.key, first)
-    return work(
-        plan, readings, (first, last, after), before=_cells_before(view, plan, first), carried=carried
+def _work(job: _Job, month: str, desk: _Desk) -> tuple[_Desk, Worked]:
+    """Work out what changed in a month and write it."""
+    plan, unit = job.plan, job.plan.unit.key
+    cells, changed = _renewed(job, month)
+    first, after = (edge // DAY_US for edge in month_edges(month))
+    again = [day for one in (*desk.changed, *changed) for day in range(one, one + plan.days_after + 1)]
+    runs = runs_of(day for day in again if first <= day < after)
+    wanted = {day for run in runs for day in _between(days_before(plan, run))}
+    days = worked_out(plan, cells, wanted, _earlier(job, desk, [day for day in wanted if day < first]))
+    if changed:
+        job.pass_.write(unit, "cells", month, table_of(cells_frame(plan.unit, cells)))
+    for run in runs_of(changed):
+        _put(job, "states", states_table(plan, [days[day] for day in _between(run)]), run)
+    for run in runs:
+        for stage, table in figure_tables(plan, days, run).items():
+            _put(job, stage, table, run)
+    kept = days_before(plan, (after, after))[0] - 1
+    handed = _Desk(
+        {day: one for day, one in days.items() if day >= kept},
+        tuple(day for day in (*desk.changed, *changed) if day + plan.days_after >= after),
+    )
+    status = [days[day].states.status for day in changed]
+    solved = sum(int((one == SOLVED).sum()) for one in status)
+    return handed, Worked((month,) if runs else (), len(changed), sum(map(len, status)), solved)
+
+
+def _between(run: tuple[int, int]) -> range:
+    """Give the days of a run."""
+    return range(run[0], run[1] + 1)
+
+
+def _put(job: _Job, stage: str, table: pa.Table, run: tuple[int, int]) -> None:
+    """Write rows in the place of those of a run of days."""
+    first, after = run[0] * DAY_US, (run[1] + 1) * DAY_US
+    job.pass_.splice(job.plan.unit.key, stage, table, first=first, last=after)
+
+
+def _goes_on(job: _Job, desk: _Desk, month: str) -> bool:
+    """Tell whether what changed before a month reaches into it, by windows or by how the month begins."""
+    first = month_edges(month)[0]
+    near = any(day + job.plan.days_after >= first // DAY_US for day in desk.changed)
+    return near or _carried_at(job.before, job.plan.unit.key, first) != _carried_at(
+        job.pass_.view(), job.plan.unit.key, first
     )
 
 
-def _cells_before(view: Snapshot, plan: Plan, first: int) -> Cells:
-    """Read the cells of the longest window before an instant, from the last hole on."""
-    unit = plan.unit
-    table = view.read(unit.key, "cells", first=first - plan.lead_us, last=first)
+def _renewed(job: _Job, month: str) -> tuple[Cells, list[int]]:
+    """Make cells of a month again where they may have changed: all its cells, and the days that did."""
+    plan, (first, last, _) = job.plan, job.record.edges(month)
+    old = _stored(job.pass_.view(), plan, first, last)
+    begins, began = (_carried_at(view, plan.unit.key, first) for view in (job.pass_.view(), job.before))
+    spans = [span for span in job.spans if _meet(span, (first, last))]
+    spans += [(first, first + 1)] if begins != began else []
+    if last <= first or not spans:
+        return old, []
+    low = min(span[0] for span in spans) // DAY_US * DAY_US
+    high = -(-max(span[1] for span in spans) // DAY_US) * DAY_US
+    cells = _made(job, old, (max(low, first), min(high, last)), begins)
+    upto = [rows(one, slice(0, int(np.searchsorted(one.start, high)))) for one in (old, cells)]
+    if high < last and carried_after(upto[0], began) != carried_after(upto[1], begins):
+        cells = _made(job, cells, (high, last), begins)
+    return cells, changed_days(old, cells)
+
+
+def _made(job: _Job, cells: Cells, span: Span, carried: Carried) -> Cells:
+    """Make the cells of a span from the readings and put them in the place of those that are there."""
+    unit, (first, last) = job.plan.unit, span
+    since, until = first - look_back(unit) // _US, last + reach(unit) // _US + 1
+    paths = job.pass_.view().paths(SITE, STAGE, first=since, last=until)
+    readings = in_span(map(job.read, paths), since, until)
+    low, high = np.searchsorted(cells.start, [first, last])
+    earlier, later = rows(cells, slice(0, low)), rows(cells, slice(high, None))
+    new = make_cells(unit, readings, first, last, carried=carried_after(earlier, carried))
+    return Cells(
+        *(np.concatenate([getattr(one, f.name) for one in (earlier, new, later)]) for f in fields(Cells))
+    )
+
+
+def _earlier(job: _Job, desk: _Desk, wanted: Sequence[int]) -> Mapping[int, Day]:
+    """Work out days before a month from their stored cells, where this pass has not done so already."""
+    lacking = sorted(day for day in wanted if day not in desk.days)
+    if not lacking:
+        return desk.days
+    cells = _stored(job.pass_.view(), job.plan, lacking[0] * DAY_US, (lacking[-1] + 1) * DAY_US)
+    return worked_out(job.plan, cells, lacking, desk.days)
+
+
+def _stored(view: Snapshot, plan: Plan, first: int, last: int) -> Cells:
+    """Read cells back."""
+    table = view.read(plan.unit.key, "cells", first=first, last=last)
     if not table.num_rows:
-        return _no_cells(len(unit.instruments))
-    frame = table.to_pandas(ignore_metadata=True).set_index("start")
-    cells = cells_from_frame(unit, frame)
-    holes = np.flatnonzero(np.diff(cells.start, append=first) > plan.cell_us)
-    begin = int(holes[-1]) + 1 if holes.size else 0
-    return Cells(*(getattr(cells, field.name)[begin:] for field in fields(Cells)))
+        return _no_cells(len(plan.unit.instruments))
+    return cells_from_frame(plan.unit, table.to_pandas(ignore_metadata=True).set_index("start"))
 
 
 def _no_cells(instruments: int) -> Cells:
@@ -245,21 +348,6 @@ def _carried_at(view: Snapshot, unit: str, first: int) -> Carried:
         if told.size and (told[-1] != STARTING or (told == DOWN).any()):
             break
     return carried_after(cells)
-
-
-def _begins_otherwise(pass_: Pass, before: Snapshot, unit: str, month: str) -> bool:
-    """Tell whether a month begins with another operating condition than when it was last worked out."""
-    first = month_edges(month)[0]
-    return _carried_at(before, unit, first) != _carried_at(pass_.view(), unit, first)
-
-
-def _write(pass_: Pass, unit: str, month: str, made: Month) -> None:
-    """Write a month's stages in the place of all that were derived for it."""
-    gone = {s for u, s, m in pass_.view().parts if (u, m) == (unit, month) and s.startswith(DERIVED)}
-    for stage in gone - made.stages.keys():
-        pass_.write(unit, stage, month, pa.table({}))
-    for stage, table in made.stages.items():
-        pass_.write(unit, stage, month, table)
 
 
 def _forget(pass_: Pass, unit: str) -> None:

@@ -17,9 +17,9 @@ from ingest.residuals import cell_residuals, cycles_in_cells, windowed
 from ingest.suspects import parallel_sets
 from ingest.unit import NO_RATES, Unit
 from monitor.amounts import Amounts, amounts_of, at_rest
+from monitor.days import plan_of
 from monitor.expected import Addition, Expectation, additions, expectations
 from monitor.figures import Figure
-from monitor.months import plan_of
 from monitor.typical import arbitrary, as_cells, one_lost, usual
 
 Floats = NDArray[np.float64]
@@ -86,7 +86,7 @@ def judge(unit: Unit, record: Cells | None = None) -> Judgement:
     Raises
     ------
     BalanceError, UnitFileError
-        As `months.plan_of` and `typical.possible_flows`.
+        As `days.plan_of` and `typical.possible_flows`.
     """
     plan = plan_of(unit)
     problem = plan.problem

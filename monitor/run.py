@@ -1,4 +1,4 @@
-"""One pass through everything: exports into readings, each unit's due months, its episodes; one commit."""
+"""One pass through everything: exports into readings, each unit's due days, its episodes; one commit."""
 
 from __future__ import annotations
 
@@ -11,16 +11,19 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
+from ingest.columns import plain, single
 from ingest.intake import SETTLE, Outcome, take_in
 from ingest.ledger import Store
+from ingest.parts import times_us
 from ingest.passes import Pass
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.catchup import Worked, catch_up
-from monitor.drift import unit_episodes
+from monitor.days import figure_step, plan_of
+from monitor.drift import MICROSECOND, unit_episodes
 from monitor.layout import BAR, figure_stage, unflat
-from monitor.months import plan_of
 from monitor.windows import MODES
 
 Progress = Callable[[str, int, int], None]
@@ -49,6 +52,7 @@ class UnitResult:
     unit: str
     time_zone: str
     months: tuple[str, ...]
+    days: int
     cells: int
     solved: int
     episodes: tuple[Episode, ...]
@@ -126,14 +130,22 @@ def episodes_of(view: Snapshot, unit: Unit) -> pd.DataFrame:
     DataFrame
         As `drift.unit_episodes` gives it.
     """
-    codes = view.read(unit.key, "cells", columns=["operating"]).column("operating")
     frames = {}
     for window in sorted({watch.window for watch in unit.watches}):
         watched = [watch for watch in unit.watches if watch.window == window]
         names = [BAR.join((w.figure, MODES[w.steady], f)) for w in watched for f in ("value", "half_width")]
         table = view.read(unit.key, figure_stage(window), columns=["end", *dict.fromkeys(names)])
         frames[window] = unflat(table.to_pandas(ignore_metadata=True).set_index("end"))
-    return unit_episodes(unit, frames, codes.to_numpy().astype(np.int8))
+    return unit_episodes(unit, frames, _operating(view, unit))
+
+
+def _operating(view: Snapshot, unit: Unit) -> NDArray[np.int8]:
+    """Give the operating condition of the cell that ends with each row of figures."""
+    table = view.read(unit.key, "cells", columns=["start", "operating"])
+    step_us = figure_step(unit) // MICROSECOND
+    with_row = (times_us(table) + unit.cell // MICROSECOND) % step_us == 0
+    codes: NDArray[np.int8] = plain(single(table.column("operating")), np.int8)
+    return np.asarray(codes[with_row])
 
 
 def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
@@ -146,6 +158,7 @@ def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
         unit=unit.key,
         time_zone=unit.time_zone,
         months=worked.months,
+        days=worked.days,
         cells=worked.cells,
         solved=worked.solved,
         episodes=tuple(_episode(one) for one in episodes.itertuples()),

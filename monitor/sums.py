@@ -182,8 +182,11 @@ def between(bounds: NDArray[np.intp]) -> Total:
         Takes an array (..., t), gives a list of one array (..., n); 0 for a span without cells.
     """
     filled = np.flatnonzero(np.diff(bounds) > 0)
+    single = bool((np.diff(bounds) == 1).all())
 
     def total(values: Numbers) -> list[Numbers]:
+        if single:
+            return [values[..., bounds[0] : bounds[-1]]]
         sums = np.zeros((*values.shape[:-1], len(bounds) - 1), values.dtype)
         if len(filled):
             inside = values[..., : bounds[-1]]

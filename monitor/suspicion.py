@@ -19,9 +19,9 @@ from ingest.suspects import PASSES, STOPS, biases, eliminate
 from ingest.unit import FLOW_KINDS, Unit
 from monitor.amounts import amounts_of
 from monitor.board import key_figures
+from monitor.days import rows
 from monitor.figures import Figure, figures_of
 from monitor.fit import LEVEL, Failure, causes_of, counted, failures, fits
-from monitor.months import rows
 from monitor.windows import TWO_SIDED_95, window_at
 
 Floats = NDArray[np.float64]

@@ -143,7 +143,8 @@ def passed(result: PassResult) -> Iterator[str]:
     yield from result.notes
     for unit in result.units:
         months = f"worked out {', '.join(unit.months)}" if unit.months else "nothing new"
-        solved = f" ({unit.cells} cells, {unit.solved} of them solved)" if unit.cells else ""
+        days = f"{unit.days} day{'s'[: unit.days != 1]}"
+        solved = f" ({days}, {unit.cells} cells, {unit.solved} of them solved)" if unit.cells else ""
         still = [one for one in unit.episodes if one.cleared is None]
         yield f"{unit.unit}: {months}{solved}; {len(unit.episodes)} episodes so far, {len(still)} open"
         yield from (f"  {_open(one, unit.time_zone)}" for one in still)

@@ -18,11 +18,11 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from ingest.cells import DOWN, RUNNING
 from ingest.unit import Unit
 from monitor.amounts import Amounts
 from monitor.figures import Figure, quotient
-from monitor.sums import CellTerms, Functionals, Total, between, cell_terms, functionals, rolling
+from monitor.sums import Functionals, Total, functionals, rolling
+from monitor.tallies import Sums, Tally, tally
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
@@ -45,12 +45,13 @@ Judged = dict[str, NDArray[Any]]
 
 LEAST_RUNNING = 0.1  # share of a span that must be running time of the mode, else "not running"
 TWO_SIDED_95 = 1.959963984540054  # standard normal quantile at 0.975
+HOUR = timedelta(hours=1)
 CHUNK = 4096  # cells in one go; the sums of a chunk then stay within some tens of MB
 
 
 @dataclass(frozen=True, slots=True)
 class _Spans:
-    """How to sum, and how many cells each sum should hold: (rows,) or (1,) per entry of the total."""
+    """How to add tallies up, and how many cells each sum should hold: (rows,) or (1,) per total."""
 
     total: Total
     slots: tuple[NDArray[np.int64], ...]
@@ -67,24 +68,12 @@ class _Running:
 
 
 @dataclass(frozen=True, slots=True)
-class _Sums:
-    """Sums over the cells that count, for one set of spans."""
-
-    count: NDArray[np.int32]  # (rows,)
-    linear: dict[int, Array]  # functional: (1 + s, rows) [kmol]
-    spread: dict[tuple[int, int], Array]  # pair: random covariance (rows,) [kmol2]
-
-
-@dataclass(frozen=True, slots=True)
 class _Job:
     """What stays the same for every chunk of one call."""
 
     figures: tuple[Figure, ...]
     plan: Functionals
-    amounts: Amounts
-    unsolved: Mask
-    cell_h: float
-    held_cells: Array  # (c,)
+    cell: timedelta
     least_coverage: float
 
 
@@ -152,16 +141,46 @@ def judged_windows(
         in the figure's unit, NaN where `reason`, an index into `REASONS`, is not 0; coverage 0 to 1, NaN
         without running time.
     """
-    job = _job(unit, amounts, figures, unsolved)
-    lengths = [max(1, round(window / unit.cell)) for window in unit.windows]
     first = 0 if since_us is None else int(np.searchsorted(amounts.start, since_us))
-    judged = [_room(job, len(amounts.start) - first, FIELDS) for _ in lengths]
-    for carried, begin, end in _chunks(first, len(amounts.start), max(lengths)):
-        spans = _Spans(rolling(lengths, begin - carried), tuple(np.array([one]) for one in lengths))
-        rows = slice(begin - first, end - first)
-        _judge(job, slice(carried, end), spans, [_part(one, rows) for one in judged])
-    ends_us = amounts.start[first:] + unit.cell // timedelta(microseconds=1)
-    return ends_us, dict(zip(unit.windows, judged, strict=True))
+    longest, count = max(max(1, round(window / unit.cell)) for window in unit.windows), len(amounts.start)
+    parts = []
+    for carried, begin, end in _chunks(first, count, longest):
+        held = tally(functionals(figures), *_on_grid(unit, amounts, unsolved), np.arange(carried, end + 1))
+        parts.append(rolled(unit, figures, [held], skip=begin - carried, step=unit.cell))
+    judged = {window: _joined([part[window] for part in parts], figures) for window in unit.windows}
+    return amounts.start[first:] + unit.cell // timedelta(microseconds=1), judged
+
+
+def rolled(
+    unit: Unit, figures: Sequence[Figure], tallies: Sequence[Tally], *, skip: int, step: timedelta
+) -> dict[timedelta, Judged]:
+    """Every figure over every window of the unit, at the end of each span of some tallies.
+
+    Parameters
+    ----------
+    unit : Unit
+        Gives windows, cell and least coverage.
+    figures : sequence of Figure
+        Those that the tallies are of.
+    tallies : sequence of Tally
+        One after the other without holes, of b spans in all, each as long as `step`.
+    skip : int
+        Spans at the front that only serve the windows of later ones.
+    step : timedelta
+        Divides every window.
+
+    Returns
+    -------
+    dict of timedelta to dict of str to ndarray
+        As in `judged_windows`, with b - skip rows.
+    """
+    job = _Job(tuple(figures), functionals(figures), unit.cell, unit.least_coverage)
+    lengths = [max(1, round(window / step)) for window in unit.windows]
+    slots = tuple(np.array([length * round(step / unit.cell)]) for length in lengths)
+    rows = sum(one.idle.shape[1] for one in tallies) - skip
+    judged = [_room(len(job.figures), rows, FIELDS) for _ in lengths]
+    _judge(job, tallies, _Spans(rolling(lengths, skip), slots), judged)
+    return dict(zip(unit.windows, judged, strict=True))
 
 
 def span_figures(
@@ -194,8 +213,8 @@ def span_figures(
         Numerator and denominator are the sums over the cells that count, whatever the reason [kmol; of a
         make t and h].
     """
-    job = _job(unit, amounts, figures, unsolved)
-    return _frame(figures, _spanned(job, edges_us), _utc(edges_us[:-1], "start"))
+    judged = _spanned(unit, amounts, figures, edges_us, unsolved)
+    return _frame(figures, judged, _utc(edges_us[:-1], "start"))
 
 
 def window_at(
@@ -219,8 +238,8 @@ def window_at(
     DataFrame
         Index (figure, mode), columns `SPAN_FIELDS` as in `span_figures`.
     """
-    job = _job(unit, amounts, figures, None)
-    judged = _spanned(job, np.array([first_us, last_us], dtype=np.int64))
+    edges_us = np.array([first_us, last_us], dtype=np.int64)
+    judged = _spanned(unit, amounts, figures, edges_us, None)
     index = pd.MultiIndex.from_product([[one.name for one in figures], MODES], names=["figure", "mode"])
     return pd.DataFrame({field: judged[field].ravel() for field in SPAN_FIELDS}, index=index)
 
@@ -278,20 +297,12 @@ def local_midnights(time_zone: str, first_us: int, last_us: int) -> NDArray[np.i
     return instants.tz_convert("UTC").tz_localize(None).to_numpy("datetime64[us]").astype(np.int64)
 
 
-def _job(unit: Unit, amounts: Amounts, figures: Sequence[Figure], unsolved: Mask | None) -> _Job:
-    """Check the grid and prepare what every chunk shares."""
+def _on_grid(unit: Unit, amounts: Amounts, unsolved: Mask | None) -> tuple[Amounts, Mask]:
+    """Check the grid; without word on them all cells converged."""
     if (np.diff(amounts.start) != unit.cell // timedelta(microseconds=1)).any():
         msg = "amounts must lie on one grid of the unit's cells, without holes"
         raise ValueError(msg)
-    return _Job(
-        figures=tuple(figures),
-        plan=functionals(figures),
-        amounts=amounts,
-        unsolved=np.zeros(len(amounts.start), dtype=bool) if unsolved is None else unsolved,
-        cell_h=unit.cell / timedelta(hours=1),
-        held_cells=np.array([hold / unit.cell for hold in amounts.hold]),
-        least_coverage=unit.least_coverage,
-    )
+    return amounts, np.zeros(len(amounts.start), dtype=bool) if unsolved is None else unsolved
 
 
 def _chunks(first: int, count: int, longest: int) -> Iterator[tuple[int, int, int]]:
@@ -301,72 +312,78 @@ def _chunks(first: int, count: int, longest: int) -> Iterator[tuple[int, int, in
         yield max(0, begin - longest + 1), begin, min(begin + size, count)
 
 
-def _spanned(job: _Job, edges_us: NDArray[np.int64]) -> Judged:
+def _spanned(
+    unit: Unit,
+    amounts: Amounts,
+    figures: Sequence[Figure],
+    edges_us: NDArray[np.int64],
+    unsolved: Mask | None,
+) -> Judged:
     """Judge the spans between edges, many short ones in one go."""
-    slots = np.round(np.diff(edges_us) / (job.cell_h * 3.6e9)).astype(np.int64)
-    places = np.searchsorted(job.amounts.start, edges_us)
-    judged = _room(job, len(slots), SPAN_FIELDS)
+    job = _Job(tuple(figures), functionals(figures), unit.cell, unit.least_coverage)
+    amounts, unsolved = _on_grid(unit, amounts, unsolved)
+    slots = np.round(np.diff(edges_us) / (unit.cell // timedelta(microseconds=1))).astype(np.int64)
+    places = np.searchsorted(amounts.start, edges_us)
+    judged = _room(len(job.figures), len(slots), SPAN_FIELDS)
     cuts = np.flatnonzero(np.diff(places[:-1] // CHUNK)) + 1
     for a, z in itertools.pairwise([0, *cuts.tolist(), len(slots)]):
-        rows = slice(int(places[a]), int(places[z]))
-        spans = _Spans(between(places[a : z + 1] - rows.start), (slots[a:z],))
-        _judge(job, rows, spans, [_part(judged, slice(a, z))])
+        held = tally(job.plan, amounts, unsolved, places[a : z + 1])
+        spans = _Spans(lambda values: [values], (slots[a:z],))
+        _judge(job, [held], spans, [_part(judged, slice(a, z))])
     return judged
 
 
-def _judge(job: _Job, rows: slice, spans: _Spans, out: list[Judged]) -> None:
-    """Judge all figures over the spans of some cells into `out`, one entry per entry of the total."""
-    terms = cell_terms(job.plan, job.amounts, rows)
-    operating = job.amounts.operating[rows]
-    modes = (operating != DOWN, operating == RUNNING)
-    told = np.asarray(terms.seen.any(axis=1))
-    times = [_running(mode, told, job.unsolved[rows], spans) for mode in modes]
-    for mask, users in _by_mask(job.plan, terms.seen, modes):
-        for place, sums in enumerate(_summed(job, terms, mask, [f for f, _ in users], spans)):
+def _judge(job: _Job, tallies: Sequence[Tally], spans: _Spans, out: list[Judged]) -> None:
+    """Judge all figures over the spans of some tallies into `out`, one entry per entry of the total."""
+    times = [_running(tallies, mode, spans) for mode in range(len(MODES))]
+    held_cells = np.array([hold / job.cell for hold in tallies[0].hold])
+    for users in _alike(tallies):
+        for place, sums in enumerate(_summed(job, tallies, users, held_cells, spans)):
             for f, m in users:
                 _enter(job, out[place], (f, m), sums, times[m][place])
 
 
-def _running(mode: Mask, told: Mask, unsolved: Mask, spans: _Spans) -> list[_Running]:
+def _alike(tallies: Sequence[Tally]) -> list[list[tuple[int, int]]]:
+    """Group (figure, mode) that share their sums in every tally."""
+    groups: dict[tuple[int, ...], list[tuple[int, int]]] = {}
+    for f, m in np.ndindex(tallies[0].group.shape):
+        groups.setdefault(tuple(int(one.group[f, m]) for one in tallies), []).append((f, m))
+    return list(groups.values())
+
+
+def _running(tallies: Sequence[Tally], mode: int, spans: _Spans) -> list[_Running]:
     """Count the cells of one mode; what the record does not hold counts as running."""
-    idle, told_in, unsolved_in = (
-        spans.total(one.astype(np.int32)) for one in (~mode, mode & told, mode & unsolved)
+    idle, told, unsolved = (
+        spans.total(np.concatenate([getattr(one, name)[mode] for one in tallies]))
+        for name in ("idle", "told", "unsolved")
     )
     return [
-        _Running(slots - idle[place], told_in[place], unsolved_in[place], slots)
+        _Running(slots - idle[place], told[place], unsolved[place], slots)
         for place, slots in enumerate(spans.slots)
     ]
 
 
-def _by_mask(
-    plan: Functionals, seen: Mask, modes: tuple[Mask, ...]
-) -> list[tuple[Mask, list[tuple[int, int]]]]:
-    """Group (figure, mode) by the cells that count for them, so that equal ones are summed once."""
-    groups: dict[bytes, tuple[Mask, list[tuple[int, int]]]] = {}
-    for f, needs in enumerate(plan.needs):
-        whole = seen[:, needs].all(axis=1)
-        for m, mode in enumerate(modes):
-            counts = whole & mode
-            groups.setdefault(counts.tobytes(), (counts, []))[1].append((f, m))
-    return list(groups.values())
-
-
-def _summed(job: _Job, terms: CellTerms, mask: Mask, users: list[int], spans: _Spans) -> list[_Sums]:
+def _summed(
+    job: _Job, tallies: Sequence[Tally], users: list[tuple[int, int]], held_cells: Array, spans: _Spans
+) -> list[Sums]:
     """Sum over the cells that count what the figures that use them are made of."""
-    top, bottom = job.plan.top[users], job.plan.bottom[users]
-    used = {int(k) for k in (*top, *bottom) if k >= 0}
+    mine = [one.sums[one.group[users[0]]] for one in tallies]
+    figures = [f for f, _ in users]
+    top, bottom = (side[figures].tolist() for side in (job.plan.top, job.plan.bottom))
     ratios = {pair for n, d in zip(top, bottom, strict=True) for pair in ((n, n), (n, d), (d, d))}
-    count = spans.total(mask.astype(np.int32))
-    linear = {k: spans.total(terms.linear[k] * mask) for k in used}
+    count = spans.total(np.concatenate([one.count for one in mine]))
+    linear = {
+        k: spans.total(np.concatenate([one.linear[k] for one in mine], axis=-1))
+        for k in {*top, *bottom} - {-1}
+    }
     spread = {
-        pair: spans.total(terms.covariance[q] * mask)
-        for q, pair in enumerate(job.plan.pairs)
-        if pair in ratios
+        pair: spans.total(np.concatenate([one.spread[pair] for one in mine], axis=-1))
+        for pair in ratios & set(job.plan.pairs)
     }
     # A result held longer than a cell counts once in its hold, never more often than once in the window.
-    repeats = [np.minimum(job.held_cells[:, None], slots) for slots in spans.slots]
+    repeats = [np.minimum(held_cells[:, None], slots) for slots in spans.slots]
     return [
-        _Sums(
+        Sums(
             count[place],
             {k: one[place] for k, one in linear.items()},
             {pair: (repeat * one[place]).sum(axis=0) for pair, one in spread.items()},
@@ -375,12 +392,12 @@ def _summed(job: _Job, terms: CellTerms, mask: Mask, users: list[int], spans: _S
     ]
 
 
-def _enter(job: _Job, out: Judged, at: tuple[int, int], sums: _Sums, time: _Running) -> None:
+def _enter(job: _Job, out: Judged, at: tuple[int, int], sums: Sums, time: _Running) -> None:
     """Write one figure in one mode over one window length."""
     scale, n, d = job.figures[at[0]].scale, int(job.plan.top[at[0]]), int(job.plan.bottom[at[0]])
     top = sums.linear[n][0]
     if d < 0:
-        bottom = (sums.count * job.cell_h).astype(np.float64)
+        bottom = (sums.count * (job.cell / HOUR)).astype(np.float64)
         value, by_top, _ = quotient(top, bottom, scale)
         variance, doubtful, top = (
             by_top**2 * _own_variance(sums, n),
@@ -404,7 +421,7 @@ def _enter(job: _Job, out: Judged, at: tuple[int, int], sums: _Sums, time: _Runn
         room[at] = told[field]
 
 
-def _ratio(sums: _Sums, n: int, d: int, scale: float) -> tuple[Array, Array]:
+def _ratio(sums: Sums, n: int, d: int, scale: float) -> tuple[Array, Array]:
     """Value and variance of a ratio: systematic responses add before squaring, random ones after."""
     value, by_top, by_bottom = quotient(sums.linear[n][0], sums.linear[d][0], scale)
     response = by_top * sums.linear[n][1:]
@@ -418,7 +435,7 @@ def _ratio(sums: _Sums, n: int, d: int, scale: float) -> tuple[Array, Array]:
     return value, np.maximum(random, 0.0) + np.einsum("sr,sr->r", response, response)
 
 
-def _own_variance(sums: _Sums, k: int) -> Array:
+def _own_variance(sums: Sums, k: int) -> Array:
     """Variance of one functional [kmol2]."""
     response = sums.linear[k][1:]
     return np.asarray(sums.spread[k, k] + np.einsum("sr,sr->r", response, response))
@@ -438,15 +455,23 @@ def _reason(
     return reason
 
 
-def _room(job: _Job, rows: int, shown: tuple[str, ...]) -> Judged:
+def _room(figures: int, rows: int, shown: tuple[str, ...]) -> Judged:
     """Room for the figures over some spans."""
-    shape = (len(job.figures), len(MODES), rows)
+    shape = (figures, len(MODES), rows)
     return {field: np.empty(shape, np.int8 if field == "reason" else np.float64) for field in shown}
 
 
 def _part(judged: Judged, rows: slice) -> Judged:
     """Give the room of some rows."""
     return {field: room[:, :, rows] for field, room in judged.items()}
+
+
+def _joined(parts: Sequence[Judged], figures: Sequence[Figure]) -> Judged:
+    """Put the rows of some chunks one after the other."""
+    none = _room(len(figures), 0, FIELDS)
+    return {
+        field: np.concatenate([none[field], *(part[field] for part in parts)], axis=2) for field in FIELDS
+    }
 
 
 def _frame(figures: Sequence[Figure], judged: Judged, index: pd.DatetimeIndex) -> pd.DataFrame:

@@ -18,7 +18,7 @@ from ingest import keys
 from ingest.unit import HoldUp
 from ingest.unitfile import load
 from monitor.cli import outlet
-from monitor.months import plan_of
+from monitor.days import plan_of
 from tests.loops_made import oxide_readings, oxide_text
 from tests.source import PACKAGES, ROOT, sources
 from tests.test_layers import ORDER

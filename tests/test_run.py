@@ -19,12 +19,11 @@ from ingest.ledger import Store
 from ingest.readings import Series, by_month, join, write_month
 from ingest.unit import Unit, Watch
 from ingest.unitfile import load
-from monitor import months
 from monitor.amounts import amounts_of
 from monitor.catchup import Worked, catch_up
+from monitor.days import plan_of
 from monitor.drift import unit_episodes
 from monitor.layout import figure_stage, unflat
-from monitor.months import plan_of
 from monitor.run import PassResult, run_pass
 from monitor.windows import MODES, window_figures
 from tests.units_made import DAY, HOUR, MINUTE, made_unit
@@ -136,13 +135,20 @@ def test_a_gap_of_months_that_is_filled_later_leaves_no_trace(whole: Path, tmp_p
     assert derived(tmp_path) == derived(whole)
 
 
+def otherwise(readings: dict[str, Series], first: int, last: int) -> dict[str, Series]:
+    """The readings of a span, the flow half a percent higher than it was."""
+    found = cut(readings, first, last)
+    return {**found, "FI-1.PV": replace(found["FI-1.PV"], value=1.005 * found["FI-1.PV"].value)}
+
+
 def test_one_late_reading_recomputes_its_month_and_no_other(whole: Path, tmp_path: Path):
     unit = unit_made()
     readings = readings_made(unit)
+    late = FIRST + 60 * DAY + 3 * HOUR  # 21 March: its 7 d window ends in March
     arrive(tmp_path, unit, readings)
-    late = FIRST + 60 * DAY  # 21 March: its 7 d window ends in March
+    assert arrive(tmp_path, unit, otherwise(readings, late, late + HOUR)).months == ("2026-03",)
     worked = arrive(tmp_path, unit, cut(readings, late, late + HOUR))
-    assert worked.months == ("2026-03",)
+    assert (worked.months, worked.days, worked.cells) == (("2026-03",), 1, 24)
     assert derived(tmp_path) == derived(whole)
 
 
@@ -150,8 +156,8 @@ def test_a_late_reading_at_the_end_of_a_month_reaches_the_windows_of_the_next(tm
     unit = unit_made()
     readings = readings_made(unit)
     arrive(tmp_path, unit, readings)
-    worked = arrive(tmp_path, unit, cut(readings, MONTH_END - 3 * DAY, MONTH_END - 3 * DAY + HOUR))
-    assert worked.months == ("2026-02", "2026-03")
+    worked = arrive(tmp_path, unit, otherwise(readings, MONTH_END - 69 * HOUR, MONTH_END - 68 * HOUR))
+    assert (worked.months, worked.days) == (("2026-02", "2026-03"), 1)
 
 
 def test_months_do_not_show_in_the_figures(whole: Path):
@@ -167,19 +173,6 @@ def test_months_do_not_show_in_the_figures(whole: Path):
         np.testing.assert_allclose(
             stored.to_numpy(float), direct[stored.columns].to_numpy(float), rtol=2**-22, atol=1e-9
         )
-
-
-def test_the_size_of_a_piece_does_not_show_in_the_figures(
-    whole: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-):
-    # 37 cells: months and their leads are cut into some twenty pieces, none of which ends with a day.
-    unit = unit_made()
-    monkeypatch.setattr(months, "PIECE", 37)
-    arrive(tmp_path, unit, readings_made(unit))
-    for window in unit.windows:
-        direct, cut_up = (stored_figures(folder, unit, window) for folder in (whole, tmp_path))
-        assert (cut_up.index == direct.index).all()
-        np.testing.assert_allclose(cut_up.to_numpy(float), direct.to_numpy(float), rtol=2**-22, atol=1e-9)
 
 
 def test_each_cell_has_one_state_and_one_row_of_each_window(whole: Path):
@@ -222,7 +215,7 @@ def test_another_unit_file_makes_every_month_due_and_other_limits_none(tmp_path:
     unit = unit_made()
     readings = readings_made(unit)
     arrive(tmp_path, unit, readings)
-    again = cut(readings, FIRST + 60 * DAY, FIRST + 60 * DAY + HOUR)
+    again = otherwise(readings, FIRST + 60 * DAY, FIRST + 60 * DAY + HOUR)
     watch = Watch(
         "w", "conversion", timedelta(hours=8), 1.0, None, "low", 0.0, timedelta(0), timedelta(0), True
     )

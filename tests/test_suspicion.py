@@ -17,8 +17,8 @@ from ingest.balance import problem_of
 from ingest.cells import DOWN, STARTING, Cells, make_cells
 from ingest.pairs import pairs
 from ingest.suspects import global_test
+from monitor.days import rows
 from monitor.fit import ALONE, CHANGE, LENGTHS, LEVEL, Trial, counted, failures, fits, series_of
-from monitor.months import rows
 from monitor.run import run_pass
 from monitor.store import cells as stored
 from monitor.store import days
