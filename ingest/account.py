@@ -10,7 +10,7 @@ is accepted or rejected for one reason.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field, fields, replace
 from typing import Any, Self
 
@@ -73,6 +73,24 @@ REASONS: tuple[tuple[str, str], ...] = (
 )
 
 
+# Lines of a text export that hold no readings, and are no fault.
+ASIDES = {
+    "above": "above the header",
+    "descriptions": "of descriptions",
+    "units": "of units",
+    "sums": "of sums or ends",
+}
+
+
+@dataclass(frozen=True, slots=True)
+class Aside:
+    """A line that holds no readings: number in the file, what it is (a key of ASIDES), and its text."""
+
+    row: int
+    kind: str
+    text: str
+
+
 @dataclass(frozen=True, slots=True)
 class Evidence:
     """One rejected row or reading: where it stands, what stands there, and a place in REASONS."""
@@ -106,7 +124,9 @@ class Account:
     `readings = accepted + superseded + duplicates + rejected + unasked + empty`. `empty` are blank cells of a
     wide export: nothing was stored for that tag at that time. `bad` and `unknown` are those of the readings
     taken from the file that have bad quality or no stated quality. `rejections` holds (reason's place in
-    REASONS, readings); `unasked_tags` (tag, readings).
+    REASONS, readings); `unasked_tags` (tag, readings). Lines that hold no readings are no rows: `asides`
+    holds (key of ASIDES, lines), `aside_lines` (row, key, text) of the first of each. `converted` holds (tag,
+    unit of the export, unit of the unit file) of the values that were converted.
     """
 
     export: str
@@ -122,6 +142,9 @@ class Account:
     rejections: tuple[tuple[int, int], ...]
     evidence: tuple[Evidence, ...]
     unasked_tags: tuple[tuple[str, int], ...]
+    asides: tuple[tuple[str, int], ...] = ()
+    aside_lines: tuple[tuple[int, str, str], ...] = ()
+    converted: tuple[tuple[str, str, str], ...] = ()
 
     @classmethod
     def from_stored(cls, stored: Mapping[str, Any]) -> Self:
@@ -187,7 +210,15 @@ class Account:
             what, remedy = REASONS[reason]
             lines.append(f"{count} rejected: the row or cell {what}. {remedy}")
             lines += [f"  {e.describe(self.export)}" for e in self.evidence if e.reason == reason]
-        return tuple(lines)
+        return (*lines, *self._beside())
+
+    def _beside(self) -> Iterator[str]:
+        """Say which lines hold no readings."""
+        if self.asides:
+            kinds = ", ".join(f"{count} {ASIDES[kind]}" for kind, count in self.asides)
+            yield f"Lines that hold no readings: {kinds}."
+            for row, kind, text in self.aside_lines:
+                yield f"  {self.export}:{row}: {text!r} is {ASIDES[kind]}"
 
     def _counts(self) -> Iterator[str]:
         """What became of the readings; places of the account without a reading are left out."""
@@ -230,6 +261,21 @@ class Tally:
     unasked: Counter[str] = field(default_factory=Counter)
     rejections: Counter[int] = field(default_factory=Counter)
     evidence: list[Evidence] = field(default_factory=list)
+    asides: Counter[str] = field(default_factory=Counter)
+    aside_lines: list[Aside] = field(default_factory=list)
+
+    def put_aside(self, asides: Iterable[Aside]) -> None:
+        """Count lines that hold no readings and keep the first of each kind.
+
+        Parameters
+        ----------
+        asides : iterable of Aside
+            In the order of the file.
+        """
+        for one in asides:
+            if self.asides[one.kind] < KEPT:
+                self.aside_lines.append(one)
+            self.asides[one.kind] += 1
 
     def room(self, reason: int) -> int:
         """Tell how many more rows are kept as evidence for a reason.
@@ -313,4 +359,6 @@ class Tally:
             rejections=tuple(sorted(self.rejections.items())),
             evidence=tuple(sorted(self.evidence, key=lambda e: (e.reason, e.row))),
             unasked_tags=tuple(sorted(self.unasked.items())),
+            asides=tuple((kind, self.asides[kind]) for kind in ASIDES if self.asides[kind]),
+            aside_lines=tuple((one.row, one.kind, one.text[:TEXT]) for one in self.aside_lines),
         )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -22,14 +22,16 @@ from ingest.account import (
     Account,
     Tally,
 )
+from ingest.asides import of_heading
 from ingest.columns import coded
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
 from ingest.lines import Block
+from ingest.qualities import read_qualities, texts
 from ingest.readings import BAD, UNKNOWN, Readings, Series, concatenated
 from ingest.textfiles import value_columns
 from ingest.timestamps import Stamps, resolved
-from ingest.values import Values, read_qualities, texts
+from ingest.values import Values
 
 MOST_TAGS = 100_000
 _UNASKED, _NAMELESS = -1, -2
@@ -57,6 +59,8 @@ class Batches:
 
     def __iter__(self) -> Iterator[Readings]:
         """Give the readings batch by batch in the order of the file; hours that come twice come last."""
+        if self.dialect.heading is not None:
+            self.tally.put_aside(of_heading(self.dialect.heading))
         for block in self.blocks:
             self._count_rows(block)
             if len(block.rows):
@@ -72,10 +76,12 @@ class Batches:
         Account
             Every reading of the file is in it.
         """
-        return self.tally.account()
+        converted = tuple((c.tag, c.written, c.stated) for c in self.dialect.conversions if c.changes)
+        return replace(self.tally.account(), converted=converted)
 
     def _count_rows(self, block: Block) -> None:
         tally, width = self.tally, self.dialect.width
+        tally.put_aside(block.asides)
         for fault in block.faults:
             for row, text in fault.first[: tally.room(fault.reason)]:
                 tally.keep(row, None, text, fault.reason)
@@ -86,7 +92,7 @@ class Batches:
 
     def _stamps(self, block: Block) -> Stamps:
         """The times of a block; remembers which way time runs down the file."""
-        stamps = self.dialect.clock.read(block.columns[self.dialect.layout.time])
+        stamps = self.dialect.clock.read(self.dialect.layout.times(block.columns))
         sure = np.flatnonzero((stamps.reason == ACCEPTED) & ~stamps.doubled)
         if len(sure):
             first, last = (int(stamps.time[i]) for i in (sure[0], sure[-1]))
@@ -102,13 +108,13 @@ class Batches:
             self.shared.append(rows.take(stamps.doubled))
         header, layout = self.dialect.header, self.dialect.layout
         asked = value_columns(header, layout, self.wanted)
-        for i in set(range(len(header))) - {layout.time, *asked}:
+        for i in set(range(len(header))) - {layout.time, *layout.others, *asked}:
             self.tally.unasked[header[i]] += len(block.rows)
         return {header[i]: self._column(header[i], block, i, stamps) for i in asked}
 
     def _column(self, tag: str, block: Block, place: int, stamps: Stamps) -> Series:
         """One tag of a wide block; where its cell is blank nothing was stored, and there is no reading."""
-        values = self.dialect.numbers.read(block.columns[place])
+        values = self._values(tag, block.columns[place])
         reason = _either(stamps.reason, values.reason)
         if values.blank.any():
             reason = np.where(values.blank, np.int8(ACCEPTED), reason)
@@ -124,10 +130,10 @@ class Batches:
 
     def _long(self, block: Block) -> Readings:
         layout = self.dialect.layout
-        places, names = self._tags(block.columns[layout.tag or 0])
+        places, names = self._tags(block)
         stamps = self._stamps(block)
         value, quality, reason = self._judged(
-            block, self.dialect.numbers.read(block.columns[layout.value or 0])
+            block, self._values(layout.only, block.columns[layout.value or 0])
         )
         reason = _either(stamps.reason, reason)
         if len(places) and places.min() < 0:
@@ -158,10 +164,22 @@ class Batches:
         reason = np.where(excused, np.int8(ACCEPTED), values.reason) if excused.any() else values.reason
         return value, quality, _either(reason, wrong)
 
-    def _tags(self, column: Any) -> tuple[Places, list[str]]:
+    def _values(self, tag: str | None, column: Any) -> Values:
+        """A column of values in the unit of the unit file."""
+        values = self.dialect.numbers.read(column)
+        for one in self.dialect.conversions:
+            if one.tag == tag and one.changes:
+                return replace(values, value=values.value * one.factor + one.offset)
+        return values
+
+    def _tags(self, block: Block) -> tuple[Places, list[str]]:
         """For each row the place of its tag among the names; negative where it has none or nobody asked."""
-        codes, words = coded(column)
-        names = [name.strip() for name in texts(words)]
+        layout = self.dialect.layout
+        if layout.tag is None:
+            codes, names = np.zeros(len(block.rows), np.int32), [layout.only or ""]
+        else:
+            codes, words = coded(block.columns[layout.tag])
+            names = [name.strip() for name in texts(words)]
         known = sorted({name for name in names if name and (self.wanted is None or name in self.wanted)})
         order = {name: place for place, name in enumerate(known)}
         table = [order.get(name, _UNASKED) if name else _NAMELESS for name in names]
@@ -216,9 +234,13 @@ class Batches:
     def _text(self, block: Block, value: int) -> Callable[[int, int], object]:
         """What stands in a row of a block, in the column that a reason is about."""
         layout = self.dialect.layout
-        about = dict.fromkeys((TIME, OFFSET, YEAR, GAP), layout.time)
-        about |= {TAG: layout.tag or 0, QUALITY: layout.quality or 0}
-        return lambda i, reason: block.columns[about.get(reason, value)][i].as_py()
+        about = {TAG: layout.tag or 0, QUALITY: layout.quality or 0}
+        at_fault = (TIME, OFFSET, YEAR, GAP)
+        return lambda i, reason: (
+            layout.times({k: column[i : i + 1] for k, column in block.columns.items()})[0].as_py()
+            if reason in at_fault
+            else block.columns[about.get(reason, value)][i].as_py()
+        )
 
     def _resolved(self, tag: str, series: Series) -> Series:
         """One tag's readings in hours that come twice, once the whole file is known.

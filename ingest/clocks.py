@@ -6,6 +6,8 @@ As in `dialect`: what has two meanings is settled by the unit file or refused, w
 from __future__ import annotations
 
 import re
+from collections.abc import Collection, Sequence
+from dataclasses import dataclass
 from typing import Any, NoReturn
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
@@ -13,15 +15,36 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from ingest.columns import NOTHING, Look, first_match, flags, matches, single
+from ingest.columns import NOTHING, Look, first_match, flags, is_text, matches, single
 from ingest.errors import ExportError
-from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US, PATTERNS, Clock
-from ingest.values import is_text
+from ingest.timestamps import DAY_NUMBERS, EARLIEST_US, EPOCHS, LATEST_US, PATTERNS, SHORT, Clock
+from ingest.unit import ExportRules
 
-_EPOCH = {"epoch s": r"^\s*\d{9,10}([.,]\d+)?\s*$", "epoch ms": r"^\s*\d{12,13}([.,]\d+)?\s*$"}
-_DAY, _MONTH = r"(1[3-9]|2\d|3[01])", r"(0?[1-9]|1[0-2])"
-_ORDERS = {"day first": rf"^\s*{_DAY}[-/.]{_MONTH}[-/.]\d", "month first": rf"^\s*{_MONTH}[-/.]{_DAY}[-/.]\d"}
-_STATED = r"\d[T ]+\d.*(Z|[+-]\d{2}(:?\d{2})?)\s*$"
+_NUMBERS = {
+    "epoch s": r"^\s*\d{9,10}([.,]\d+)?\s*$",
+    "epoch ms": r"^\s*\d{12,13}([.,]\d+)?\s*$",
+    "day number": r"^\s*[3-7]\d{4}([.,]\d+)?\s*$",
+}
+_ORDERS = ("day first", "month first", "year first")
+_DAY, _MONTH = r"(0?[1-9]|[12]\d|3[01])", r"(0?[1-9]|1[0-2])"
+# Dates that there can be in each order of their parts; of a year with four digits nobody asks.
+_POSSIBLE = {
+    "day first": rf"^\s*{_DAY}[-/.]{_MONTH}[-/.]\d",
+    "month first": rf"^\s*{_MONTH}[-/.]{_DAY}[-/.]\d",
+    "year first": rf"^\s*\d\d?[-/.]{_MONTH}[-/.]{_DAY}(\D|$)",
+}
+_STATED = r"\d(, ?|[T ]+)\d.*(Z|[+-]\d{2}(:?\d{2})?)\s*$"
+_HALF = r"\d[ \x{a0}\x{202f}]?[AaPp]\.?[Mm]\b"
+_DAY_US = 86_400_000_000
+
+
+@dataclass(frozen=True, slots=True)
+class _Date:
+    """One date as it stands in the file, and the orders of its parts that it allows."""
+
+    row: int
+    text: str
+    orders: tuple[str, ...]
 
 
 def decide_clock(
@@ -31,7 +54,7 @@ def decide_clock(
     look: Look,
     *,
     zone: str | None,
-    date_order: str | None,
+    rules: ExportRules,
 ) -> Clock:
     """Find how the export writes time.
 
@@ -47,8 +70,8 @@ def decide_clock(
         Gives columns.
     zone : str or None
         Zone of times without offset; None where nobody stated one.
-    date_order : str or None
-        'day first' or 'month first' for a file that does not tell; None where nobody stated one.
+    rules : ExportRules
+        Order of dates and origin of day numbers for a file that does not tell.
 
     Returns
     -------
@@ -62,23 +85,28 @@ def decide_clock(
     if pa.types.is_timestamp(times.type):
         offset = times.type.tz is not None
         return Clock("timestamp", offset, None if offset else _zone(place, zone, name), 6)
-    if not is_text(times.type):
-        return _clock_of_numbers(place, times)
-    form, count = _form(export, rows, times)
+    form, count = _form(export, rows, times) if is_text(times.type) else (_form_of_numbers(place, times), 0)
     if form in EPOCHS:
         return Clock(form, offset=True, zone=None, fraction=0)
+    if form == "day number":
+        origin = f"{form} {rules.day_numbers or 'from 1900'}"
+        return Clock(origin, offset=False, zone=_zone(place, zone, name), fraction=3)
     if form != "year first":
-        form = _date_order(export, at, look, date_order)
+        more = SHORT if form.endswith(SHORT) else ""
+        form = _date_order(export, at, look, rules.date_order, _ORDERS if more else _ORDERS[:2]) + more
     offset = 2 * matches(times, _STATED) > count
     digits = 9 if matches(times, r"[.,]\d{7,9}\D*$") else 6
-    return Clock(form, offset, None if offset else _zone(place, zone, name), digits)
+    halves = 2 * matches(times, _HALF) > count
+    return Clock(form, offset, None if offset else _zone(place, zone, name), digits, halves)
 
 
 def _form(export: str, rows: Any, times: Any) -> tuple[str, int]:
     """The form that most of the first block's times have, and how many; no text has two of these forms."""
-    forms = {**PATTERNS, **_EPOCH}
-    counts = {form: matches(times, forms[form]) for form in forms if form != "month first"}
-    counts["day first"] = max(counts["day first"], matches(times, forms["month first"]))
+    forms = {**PATTERNS, **_NUMBERS}
+    counts = {form: matches(times, forms[form]) for form in forms}
+    counts["day first"] = max(counts["day first"], counts.pop("month first"))
+    short = max(counts.pop(order + SHORT) for order in _ORDERS)
+    counts["day first" + SHORT] = short
     second, first = sorted(counts, key=lambda name: counts[name])[-2:]
     if counts[first] > counts[second]:
         return first, counts[first]
@@ -104,59 +132,90 @@ def _zone(place: str, zone: str | None, name: str) -> str:
         raise ExportError(f"{place}: there is no time zone {zone!r}", remedy=remedy) from error
 
 
-def _clock_of_numbers(place: str, column: Any) -> Clock:
-    """Seconds and milliseconds since 1970 cannot be mistaken for one another between 1990 and 2100."""
+def _form_of_numbers(place: str, column: Any) -> str:
+    """Day numbers, seconds and milliseconds of 1990 to 2099 cannot be mistaken for one another."""
     numeric = pa.types.is_integer(column.type) or pa.types.is_floating(column.type)
     number = pc.drop_null(column).cast(pa.float64(), safe=False) if numeric else pa.array([], pa.float64())
-    for form, us in EPOCHS.items():
-        within = pc.and_(pc.greater_equal(number, EARLIEST_US / us), pc.less(number, LATEST_US / us))
+    of_1970 = DAY_NUMBERS["day number from 1900"]
+    for form, us, shift in (
+        *((form, us, 0) for form, us in EPOCHS.items()),
+        ("day number", _DAY_US, of_1970),
+    ):
+        low, high = EARLIEST_US / us + shift, LATEST_US / us + shift
+        within = pc.and_(pc.greater_equal(number, low), pc.less(number, high))
         if 2 * np.count_nonzero(flags(within)) > len(number):
-            return Clock(form, offset=True, zone=None, fraction=0)
+            return form
     raise ExportError(
-        f"{place}: what stands in the time column ({column.type}) is no seconds or milliseconds since 1970",
+        f"{place}: what stands in the time column ({column.type}) is no seconds or milliseconds since 1970,"
+        " nor day numbers of a spreadsheet",
         remedy="Export times as 2026-03-29T01:30Z.",
     )
 
 
-def _date_order(export: str, at: int, look: Look, stated: str | None) -> str:
-    """Day first or month first: whichever the first dates with a number above 12 allow, else as stated."""
-    unclear = (0, "")
+def _date_order(export: str, at: int, look: Look, stated: str | None, orders: Sequence[str]) -> str:
+    """The order of day, month and year: the only one that all dates allow, else as stated."""
+    stated = stated if stated in orders else None
+    against: dict[str, _Date] = {}
+    unclear = _Date(0, "", ())
     for rows, (column,) in look([at]):
-        told = {order: first_match(column, pattern) for order, pattern in _ORDERS.items()}
-        found = {order: (int(rows[m[0]]), m[1]) for order, m in told.items() if m}
-        if len(found) > 1 or found.keys() - {stated or next(iter(found), "")}:
-            _refuse_order(export, found, stated)
-        if found:
-            return next(iter(found))
-        first = first_match(column, PATTERNS["day first"])
-        unclear = unclear if unclear[0] or not first else (int(rows[first[0]]), first[1])
-    if stated is None:
-        _refuse_either_order(export, *unclear)
-    return stated
+        seen = _telling(rows, column, orders)
+        against = {**seen, **against}
+        if stated in against or len(against) == len(orders):
+            _refuse_order(export, against, stated)
+        if len(against) == len(orders) - 1:
+            return next(order for order in orders if order not in against)
+        first = first_match(column, "|".join(_POSSIBLE[order] for order in orders))
+        unclear = unclear if unclear.row or not first else _Date(int(rows[first[0]]), first[1], ())
+    left = [order for order in orders if order not in against]
+    return stated or _refuse_either_order(export, unclear, left)
 
 
-def _refuse_order(export: str, found: dict[str, tuple[int, str]], stated: str | None) -> NoReturn:
+def _telling(rows: Any, column: Any, orders: Sequence[str]) -> dict[str, _Date]:
+    """For each order the first date that cannot be in it, but in another."""
+    fits = {order: flags(pc.match_substring_regex(column, _POSSIBLE[order])) for order in orders}
+    some = np.logical_or.reduce(list(fits.values()))
+    found = {}
+    for order in orders:
+        if (some & ~fits[order]).any():
+            i = int(np.argmax(some & ~fits[order]))
+            others = tuple(other for other in orders if fits[other][i])
+            found[order] = _Date(int(rows[i]), column[i].as_py().strip(), others)
+    return found
+
+
+def _refuse_order(export: str, against: dict[str, _Date], stated: str | None) -> NoReturn:
     """The dates contradict the stated order, or one another."""
-    others = {order: shown for order, shown in found.items() if order != stated}
-    order, (row, text) = next(iter(others.items()))
-    what = f"{export}:{row}: {text!r} can only be {order}"
+    first, *others = sorted(against.values(), key=lambda date: date.row)
+    date = first if stated is None else against[stated]
+    what = f"{export}:{date.row}: {date.text!r} can only be {_or(date.orders)}"
     if stated is not None:
         raise ExportError(
             f"{what}, but date_order = {stated!r} is stated",
             remedy="Mend or remove date_order under [exports] in the unit file.",
         )
-    _, (other_row, other) = list(others.items())[1]
+    other = next(date for date in others if date.orders != first.orders)
     raise ExportError(
-        f"{what}, but {other!r} in row {other_row} can only be the other way round",
+        f"{what}, but {other.text!r} in row {other.row} can only be {_or(other.orders)}",
         remedy="Export times as 2026-03-29T01:30Z.",
     )
 
 
-def _refuse_either_order(export: str, row: int, text: str) -> NoReturn:
-    first, second, *rest = text.replace("/", ".").replace("-", ".").split(".")
-    year = rest[0][:4]
+def _refuse_either_order(export: str, date: _Date, orders: Collection[str]) -> NoReturn:
+    ways = " but ".join(f"{_as_iso(date.text, order)} {order}" for order in orders)
+    stated = _or([repr(order) for order in orders])
     raise ExportError(
-        f"{export}:{row}: {text!r} is {year}-{second:0>2}-{first:0>2} day first"
-        f" but {year}-{first:0>2}-{second:0>2} month first, and no date in the file tells which",
-        remedy="Write date_order = 'day first' or 'month first' under [exports] in the unit file.",
+        f"{export}:{date.row}: {date.text!r} is {ways}, and no date in the file tells which",
+        remedy=f"Write date_order = {stated} under [exports] in the unit file.",
     )
+
+
+def _as_iso(text: str, order: str) -> str:
+    """A date as it would be in one order of its parts."""
+    places = {"day first": (2, 1, 0), "month first": (2, 0, 1), "year first": (0, 1, 2)}[order]
+    parts = re.findall(r"\d+", text)[:3]
+    year, month, day = (int(parts[place]) for place in places)
+    return f"{year if year > 99 else year + (1900 if year >= 90 else 2000)}-{month:02}-{day:02}"
+
+
+def _or(words: Sequence[str]) -> str:
+    return " or ".join(words)

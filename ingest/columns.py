@@ -138,6 +138,22 @@ def coded(array: Any) -> tuple[NDArray[np.int32], Any]:
     return (np.where(present(where), codes, np.int32(-1)) if where.null_count else codes), array.dictionary
 
 
+def is_text(kind: Any) -> bool:
+    """Tell whether an Arrow type holds text.
+
+    Parameters
+    ----------
+    kind : pyarrow.DataType
+        Any type.
+
+    Returns
+    -------
+    bool
+        True for every width of string.
+    """
+    return bool(pa.types.is_string(kind) or pa.types.is_large_string(kind) or pa.types.is_string_view(kind))
+
+
 def first_match(texts: Any, pattern: str) -> tuple[int, str] | None:
     """Find the first text that matches a pattern.
 

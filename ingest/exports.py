@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterator
+from collections.abc import Collection, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from types import MappingProxyType
 
 import numpy as np
 
@@ -13,11 +14,13 @@ from ingest.batches import Batches
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
 from ingest.lines import Block, opened
+from ingest.measures import Stated
 from ingest.parquets import MAGIC, open_parquet, parquet_blocks
 from ingest.readings import QUALITIES, Readings
 from ingest.textfiles import open_text, text_blocks, value_columns
 from ingest.unit import ExportRules
 
+NO_UNITS: Mapping[str, tuple[Stated, ...]] = MappingProxyType({})
 _SAMPLE = 3  # rows that `describe` shows
 
 
@@ -47,13 +50,14 @@ def open_export(
     rules: ExportRules,
     wanted: frozenset[str] | None,
     time_zone: str | None,
+    units: Mapping[str, tuple[Stated, ...]] = NO_UNITS,
 ) -> Batches:
     """Find out how an export is to be read and begin to read it.
 
     Parameters
     ----------
     path : pathlib.Path
-        CSV text, gzipped where its name ends in .gz, or Parquet.
+        CSV text, compressed where its name ends in .gz or .zst, or Parquet.
     number : int
         Number of the export in the ledger; becomes `Series.source`.
     rules : ExportRules
@@ -62,6 +66,8 @@ def open_export(
         Tags somebody asks for; None takes all.
     time_zone : str or None
         Zone of times without offset where the rules name none; None refuses such times.
+    units : mapping of str to tuple of Stated
+        What the unit files state about the unit of each tag, to hold a row of units against.
 
     Returns
     -------
@@ -69,12 +75,17 @@ def open_export(
         Iterate for `Readings`, then call `account()`.
     """
     zone = rules.time_zone or time_zone
-    file_dialect, blocks = _opened(path, rules, wanted, zone)
+    file_dialect, blocks = _opened(path, rules, wanted, zone, units=units)
     return Batches(number, file_dialect, wanted, blocks, Tally(path.name))
 
 
 def describe(
-    path: Path, *, rules: ExportRules, wanted: frozenset[str] | None, time_zone: str | None
+    path: Path,
+    *,
+    rules: ExportRules,
+    wanted: frozenset[str] | None,
+    time_zone: str | None,
+    units: Mapping[str, tuple[Stated, ...]] = NO_UNITS,
 ) -> Description:
     """Read a whole export and tell how; nothing is stored.
 
@@ -88,13 +99,15 @@ def describe(
         Tags somebody asks for; None takes all.
     time_zone : str or None
         As in `open_export`.
+    units : mapping of str to tuple of Stated
+        As in `open_export`.
 
     Returns
     -------
     Description
         Its account is as read: nothing is merged.
     """
-    batches = open_export(path, number=0, rules=rules, wanted=wanted, time_zone=time_zone)
+    batches = open_export(path, number=0, rules=rules, wanted=wanted, time_zone=time_zone, units=units)
     sample: tuple[SampleRow, ...] = ()
     for readings in batches:
         sample = sample or _sample(readings)
@@ -102,7 +115,12 @@ def describe(
 
 
 def _opened(
-    path: Path, rules: ExportRules, wanted: Collection[str] | None, zone: str | None
+    path: Path,
+    rules: ExportRules,
+    wanted: Collection[str] | None,
+    zone: str | None,
+    *,
+    units: Mapping[str, tuple[Stated, ...]],
 ) -> tuple[Dialect, Iterator[Block]]:
     """The dialect and the blocks to come; what begins like Parquet is Parquet, whatever its name."""
     parquet = path.suffix.lower() in (".parquet", ".pq")
@@ -111,14 +129,13 @@ def _opened(
     if not magic:
         raise ExportError(f"{path.name}: is empty", remedy="Export it again; an empty file holds no reading.")
     if not (parquet or magic == MAGIC):
-        text, dialect = open_text(path, rules, wanted, zone)
-        return dialect, text_blocks(text, dialect, value_columns(dialect.header, dialect.layout, wanted))
+        text, dialect = open_text(path, rules, wanted, zone, units=units)
+        columns = value_columns(dialect.header, dialect.layout, wanted)
+        return dialect, text_blocks(text, dialect, columns, wanted or ())
     file, dialect = open_parquet(path, rules, wanted, zone)
     layout = dialect.layout
-    others = [i for i in (layout.tag, layout.quality) if i is not None]
-    return dialect, parquet_blocks(
-        file, [layout.time, *value_columns(dialect.header, layout, wanted), *others]
-    )
+    columns = [layout.time, *value_columns(dialect.header, layout, wanted), *layout.others]
+    return dialect, parquet_blocks(file, columns)
 
 
 def _sample(readings: Readings) -> tuple[SampleRow, ...]:

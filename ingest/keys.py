@@ -18,7 +18,8 @@ NESTED = ("uncertainty", "status")  # forms that are a table with a section of t
 BASES = ("dry", "wet", "as analysed")
 ANALYZED = (*FRACTION_KINDS, "volume fraction", "species flow")
 QUALITIES = ("words", "opc ua", "opc da")
-DATE_ORDERS = ("day first", "month first")
+DATE_ORDERS = ("day first", "month first", "year first")
+DAY_NUMBERS = ("from 1900", "from 1904")
 DECIMALS = (",", ".")
 
 
@@ -174,8 +175,9 @@ TABLE: tuple[Key, ...] = (
     Key("exports", "missing_words", "texts", "words in the value column that mean no reading", '["No Data"]', default=[]),
     Key("exports", "state_words", "numbers", "words in the value column that stand for a number, such as those of a status", "{ Sample = 0, Calibrating = 1 }"),
     Key("exports", "quality", "choice", "what the quality column holds, where it does not tell by itself", '"words"', choices=QUALITIES),
-    Key("exports", "date_order", "choice", "order of dates such as 03/04/2026, where a file does not tell by itself", '"day first"', choices=DATE_ORDERS),
+    Key("exports", "date_order", "choice", "order of dates such as 03/04/2026 or 26-03-04, where a file does not tell by itself", '"day first"', choices=DATE_ORDERS),
     Key("exports", "decimal", "choice", "decimal mark of numbers such as 1,234, where a file does not tell by itself", '","', choices=DECIMALS),
+    Key("exports", "day_numbers", "choice", "what the day numbers of a spreadsheet count from; left out, from 1900", '"from 1904"', choices=DAY_NUMBERS),
 )  # fmt: skip
 
 

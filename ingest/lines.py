@@ -16,7 +16,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from ingest import files
-from ingest.account import COLUMNS, KEPT, QUOTES, RETURN
+from ingest.account import COLUMNS, KEPT, QUOTES, RETURN, Aside
 from ingest.errors import ExportError
 from ingest.files import Told
 
@@ -43,6 +43,7 @@ class Lines:
     data: bytes
     rows: NDArray[np.int64]
     faults: tuple[Fault, ...] = ()
+    asides: tuple[Aside, ...] = ()  # lines that hold no readings and are left out, too
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,6 +53,7 @@ class Block:
     rows: NDArray[np.int64]
     columns: dict[int, Any]
     faults: tuple[Fault, ...] = ()
+    asides: tuple[Aside, ...] = ()
 
 
 @contextmanager

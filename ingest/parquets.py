@@ -15,16 +15,15 @@ from numpy.typing import NDArray
 
 from ingest import lines
 from ingest.clocks import decide_clock
-from ingest.dialect import (
-    Dialect,
-    Layout,
-    decide_layout,
-)
+from ingest.columns import is_text
+from ingest.dialect import Dialect
 from ingest.errors import ExportError
+from ingest.layouts import Layout, Place, decide_layout
 from ingest.lines import Block
+from ingest.qualities import decide_quality
 from ingest.textfiles import value_columns
 from ingest.unit import ExportRules
-from ingest.values import decide_numbers, decide_quality, is_text
+from ingest.values import decide_numbers
 
 MAGIC = b"PAR1"
 _ROWS = 1 << 16  # read at a time
@@ -97,11 +96,11 @@ def open_parquet(
         header = tuple(raw.schema_arrow.names)
         _refuse_size(path.name, raw.metadata, len(header))
     file = ParquetExport(path, header)
-    layout = decide_layout(path.name, header, wanted or (), file.look)
+    layout = decide_layout(Place(path.name, 0), header, wanted or (), file.look)
     values = value_columns(header, layout, wanted)
     _refuse_types(path, layout, values)
     time = (layout.time, header[layout.time])
-    clock = decide_clock(path.name, 0, time, file.look, zone=zone, date_order=rules.date_order)
+    clock = decide_clock(path.name, 0, time, layout.seen(file.look), zone=zone, rules=rules)
     numbers = decide_numbers(path.name, values, file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
     return file, Dialect("", "", header, 0, layout, clock, numbers, quality)

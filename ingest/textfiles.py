@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterator, Sequence
+from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -13,25 +13,24 @@ import pyarrow.compute as pc
 import pyarrow.csv as pcsv
 from numpy.typing import NDArray
 
+from ingest.asides import without_sums
 from ingest.clocks import decide_clock
 from ingest.columns import plain, present, single
-from ingest.dialect import (
-    Dialect,
-    Layout,
-    decide_encoding,
-    decide_layout,
-    decide_separator,
-    fields,
-)
+from ingest.dialect import Dialect
+from ingest.encodings import decide_encoding
 from ingest.errors import ExportError
+from ingest.headings import Heading, decide_heading
+from ingest.layouts import Layout, Place, decide_layout
 from ingest.lines import BLOCK, Block, Lines, blocks, opened, screened, wrong_columns
+from ingest.measures import Conversion, Stated, conversions
+from ingest.qualities import decide_quality
 from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US
 from ingest.unit import ExportRules
-from ingest.values import decide_numbers, decide_quality
+from ingest.values import decide_numbers
 
 _LF, _CR = b"\n\r"
 _WORDS = pa.dictionary(pa.int32(), pa.string())
-_FIRST_LINES = 50  # what the separator is judged by
+_FIRST_LINES = 100  # what the head of an export is looked for in
 _PATIENCE = 8  # blocks that must be read as text before the quick way is given up
 
 
@@ -41,12 +40,15 @@ class TextFile:
 
     path: Path
     codec: str
-    separator: str
-    header: tuple[str, ...]
-    header_row: int
+    heading: Heading
+
+    @property
+    def separator(self) -> str:
+        """Give the character between fields."""
+        return self.heading.separator
 
     def lines(self) -> Iterator[Lines]:
-        """Read the rows below the header.
+        """Read the rows below the head.
 
         Yields
         ------
@@ -54,10 +56,10 @@ class TextFile:
             May be empty.
         """
         for row, data in blocks(self.path, self.codec):
-            lines = screened(row, data, self.separator)
-            if len(lines.rows) and lines.rows[0] == self.header_row:
-                lines = Lines(lines.data[lines.data.index(b"\n") + 1 :], lines.rows[1:], lines.faults)
-            yield lines
+            skip = self.heading.last + 1 - row  # lines of the head that stand in this block
+            rest = data.split(b"\n", skip)[-1] if skip > 0 else data
+            if rest:
+                yield screened(max(row, row + skip), rest, self.separator)
 
     def look(self, columns: Sequence[int]) -> Iterator[tuple[NDArray[np.int64], list[Any]]]:
         """Show columns as text, block by block.
@@ -97,14 +99,15 @@ class TextFile:
             None where something does not fit its type.
         """
         if len(lines.rows) == 0:
-            return Block(lines.rows, {i: pa.array([], kind) for i, kind in types.items()}, lines.faults)
+            nothing = {i: pa.array([], kind) for i, kind in types.items()}
+            return Block(lines.rows, nothing, lines.faults, lines.asides)
         wrong: list[int] = []
 
         def leave_out(row: Any) -> str:
             wrong.append(row.number - 1)
             return "skip"
 
-        names = [str(i) for i in range(len(self.header))]
+        names = [str(i) for i in range(len(self.heading.header))]
         try:
             table = pcsv.read_csv(
                 pa.BufferReader(lines.data),
@@ -135,13 +138,19 @@ class TextFile:
                 remedy="Export without quotes or line breaks inside fields.",
             )
         if not wrong:
-            return Block(lines.rows, columns, lines.faults)
+            return Block(lines.rows, columns, lines.faults, lines.asides)
         at = np.array(wrong, np.int64)
-        return Block(np.delete(lines.rows, at), columns, (*lines.faults, wrong_columns(lines, at)))
+        faults = (*lines.faults, wrong_columns(lines, at))
+        return Block(np.delete(lines.rows, at), columns, faults, lines.asides)
 
 
 def open_text(
-    path: Path, rules: ExportRules, wanted: Collection[str] | None, zone: str | None
+    path: Path,
+    rules: ExportRules,
+    wanted: Collection[str] | None,
+    zone: str | None,
+    *,
+    units: Mapping[str, tuple[Stated, ...]],
 ) -> tuple[TextFile, Dialect]:
     """Find out how a CSV export is to be read.
 
@@ -155,6 +164,8 @@ def open_text(
         Tags somebody asks for; None: all.
     zone : str or None
         Zone of times without offset.
+    units : mapping of str to tuple of Stated
+        What the unit files state about the unit of each tag.
 
     Returns
     -------
@@ -163,20 +174,38 @@ def open_text(
     Dialect
         To say it with.
     """
-    file, encoding = _begin(path)
-    place = f"{path.name}:{file.header_row}"
+    file, encoding = _begin(path, wanted or ())
+    heading = file.heading
+    header, place = heading.header, Place(path.name, heading.row, tuple(text for _, text in heading.above))
     if next(file.look([0]), None) is None:
         raise ExportError(
             f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
         )
-    layout = decide_layout(place, file.header, wanted or (), file.look)
-    time = (layout.time, file.header[layout.time])
-    clock = decide_clock(path.name, file.header_row, time, file.look, zone=zone, date_order=rules.date_order)
-    numbers = decide_numbers(path.name, value_columns(file.header, layout, wanted), file.look, rules)
+    layout = decide_layout(place, header, wanted or (), file.look)
+    time = (layout.time, header[layout.time])
+    look = layout.seen(file.look)
+    clock = decide_clock(path.name, heading.row, time, look, zone=zone, rules=rules)
+    numbers = decide_numbers(path.name, value_columns(header, layout, wanted), file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
-    return file, Dialect(
-        encoding, file.separator, file.header, file.header_row, layout, clock, numbers, quality
-    )
+    converted = _conversions(path.name, heading, layout, units)
+    decided = (encoding, file.separator, header, heading.row)
+    return file, Dialect(*decided, layout, clock, numbers, quality, converted, heading)
+
+
+def _conversions(
+    export: str, heading: Heading, layout: Layout, units: Mapping[str, tuple[Stated, ...]]
+) -> tuple[Conversion, ...]:
+    """What a row of units below the header asks for; of a long export it says nothing."""
+    for row in heading.below:
+        if row.kind == "units" and layout.tag is None:
+            names = {
+                i: name for i, name in enumerate(heading.header) if i not in (layout.time, *layout.others)
+            }
+            if layout.value is not None and layout.only is not None:
+                names = {layout.value: layout.only}
+            written = {name: row.cells[i] for i, name in names.items()}
+            return conversions(f"{export}:{row.row}", written, units)
+    return ()
 
 
 def value_columns(header: Sequence[str], layout: Layout, wanted: Collection[str] | None) -> list[int]:
@@ -199,10 +228,13 @@ def value_columns(header: Sequence[str], layout: Layout, wanted: Collection[str]
     if layout.value is not None:
         return [layout.value]
     asked = {name for name in header if name} if wanted is None else wanted
-    return [i for i, name in enumerate(header) if i != layout.time and name in asked]
+    apart = (layout.time, *layout.others)
+    return [i for i, name in enumerate(header) if i not in apart and name in asked]
 
 
-def text_blocks(file: TextFile, dialect: Dialect, columns: Sequence[int]) -> Iterator[Block]:
+def text_blocks(
+    file: TextFile, dialect: Dialect, columns: Sequence[int], wanted: Collection[str]
+) -> Iterator[Block]:
     """Read a CSV export: numbers at once where a whole block is clean, else as text for a closer look.
 
     Parameters
@@ -213,6 +245,8 @@ def text_blocks(file: TextFile, dialect: Dialect, columns: Sequence[int]) -> Ite
         How it is read.
     columns : sequence of int
         Columns of values.
+    wanted : collection of str
+        Tags somebody asks for, which are no names of sums.
 
     Yields
     ------
@@ -221,8 +255,14 @@ def text_blocks(file: TextFile, dialect: Dialect, columns: Sequence[int]) -> Ite
     """
     text = _types(dialect, columns, quick=False)
     spoilt = 0
-    for lines in file.lines():
+    worded = pa.types.is_string(_types(dialect, columns, quick=True)[dialect.layout.time])
+    for whole in file.lines():
+        lines = without_sums(whole, file.separator, wanted) if worded else whole
         block = _quick(file, dialect, columns, lines) if spoilt < _PATIENCE else None
+        if not worded and (block is None or block.faults):  # times that are none would have been seen
+            lines = without_sums(whole, file.separator, wanted)
+            if lines is not whole:
+                block = _quick(file, dialect, columns, lines)
         spoilt = spoilt + 1 if block is None else 0
         block = file.parse(lines, text) if block is None else block
         if block is None:
@@ -260,30 +300,31 @@ def _holds_blanks(data: bytes, separator: int) -> bool:
     )
 
 
-def _begin(path: Path) -> tuple[TextFile, str]:
-    """Encoding, separator and header."""
+def _begin(path: Path, wanted: Collection[str]) -> tuple[TextFile, str]:
+    """Encoding, and what stands at the head."""
     with opened(path) as raw:
         codec, encoding = decide_encoding(path.name, raw.read(BLOCK))
     lines = _first_lines(path, codec)
     if not lines:
         raise ExportError(f"{path.name}: holds blank lines only", remedy="Export it again.")
-    header_row, header = lines[0]
-    if "\r" in header:
+    row, first = lines[0]
+    if "\r" in first:
         raise ExportError(
-            f"{path.name}:{header_row}: the lines end in carriage returns alone",
+            f"{path.name}:{row}: the lines end in carriage returns alone",
             remedy="Export with line feeds at the ends of lines.",
         )
-    separator = decide_separator(path.name, [line for _, line in lines], header_row)
-    if screened(header_row, header.encode() + b"\n", separator).faults:
+    heading = decide_heading(path.name, lines, wanted)
+    header = next(text for number, text in lines if number == heading.row)
+    if screened(heading.row, header.encode() + b"\n", heading.separator).faults:
         raise ExportError(
-            f"{path.name}:{header_row}: a quote in the header does not open and close with its field",
+            f"{path.name}:{heading.row}: a quote in the header does not open and close with its field",
             remedy="Quote whole names or none.",
         )
-    return TextFile(path, codec, separator, tuple(fields(header, separator)), header_row), encoding
+    return TextFile(path, codec, heading), encoding
 
 
 def _first_lines(path: Path, codec: str) -> list[tuple[int, str]]:
-    """The header and the first rows, blank lines left out, each with its number."""
+    """The first lines, blank ones left out, each with its number."""
     lines: list[tuple[int, str]] = []
     for row, data in blocks(path, codec):
         head = data.decode().split("\n", _FIRST_LINES)[:_FIRST_LINES]
@@ -297,17 +338,19 @@ def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int
     """What each column is read as."""
     layout, clock = dialect.layout, dialect.clock
     time = pa.string()
-    if quick and clock.form == "year first":
+    if quick and clock.form == "year first" and layout.clock is None and not clock.halves:
         time = pa.timestamp("ns" if clock.fraction > 6 else "us", "UTC" if clock.offset else None)
     elif quick and clock.form in EPOCHS:
         time = pa.float64()
     types = {layout.time: time, **dict.fromkeys(columns, pa.float64() if quick else pa.string())}
+    types |= {layout.clock: pa.string()} if layout.clock is not None else {}
     return types | {i: _WORDS for i in (layout.tag, layout.quality) if i is not None}
 
 
 def _settings(dialect: Dialect, words: Collection[str]) -> dict[str, Any]:
     """Some words become null at once, as they are and in the usual capitals."""
     forms = {form for word in words for form in (word, word.upper(), word.title(), word.capitalize())}
+    forms |= {"NaN"} if "nan" in words else set()
     return {
         "null_values": sorted(forms),
         "timestamp_parsers": [pcsv.ISO8601],

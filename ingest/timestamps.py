@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from functools import lru_cache
@@ -20,15 +21,31 @@ EARLIEST_US = 631_152_000_000_000  # 1990-01-01
 LATEST_US = 4_102_444_800_000_000  # 2100-01-01
 _PER_SECOND = {"s": 1, "ms": 1_000, "us": 1_000_000, "ns": 1_000_000_000}
 EPOCHS = {"epoch s": 1_000_000.0, "epoch ms": 1_000.0}  # us in one unit
+# Day numbers of spreadsheets: the number of 1970-01-01 in each system. That the older one counts a 29th of
+# February 1900 matters before March 1900 only. Those of 1990 to 2099 are 32874 to 73050.
+DAY_NUMBERS = {"day number from 1900": 25_569, "day number from 1904": 24_107}
+_DAY_MS = 86_400_000
 
-_DATES = {
-    "year first": r"(?P<y>\d{4})[-/.](?P<m>\d{1,2})[-/.](?P<d>\d{1,2})",
-    "day first": r"(?P<d>\d{1,2})[-/.](?P<m>\d{1,2})[-/.](?P<y>\d{4})",
-    "month first": r"(?P<m>\d{1,2})[-/.](?P<d>\d{1,2})[-/.](?P<y>\d{4})",
+_PLACES = {"year first": ("y", "m", "d"), "day first": ("d", "m", "y"), "month first": ("m", "d", "y")}
+SHORT = ", two digits of the year"
+
+
+def _date(order: str, year: str) -> str:
+    """Pattern of a date; in one date the same mark stands twice, or as good as."""
+    digits = {"y": year, "m": r"\d{1,2}", "d": r"\d{1,2}"}
+    return "[-/.]".join(f"(?P<{part}>{digits[part]})" for part in _PLACES[order])
+
+
+_CLOCK = (
+    r"(?:(?:, ?|[T ]+)(?P<H>\d{1,2})(?::(?P<M>\d{2})(?::(?P<S>\d{2})(?:[.,](?P<f>\d{1,9}))?)?)?"
+    r"(?:[ \x{a0}\x{202f}]?(?P<p>[AaPp])\.?[Mm]\.?)?)?"
+)
+_OFFSET = r"(?: ?(?P<z>Z|[+-]\d{2}(?::?\d{2})?))?"
+PATTERNS = {
+    order + more: rf"^\s*{_date(order, year)}{_CLOCK}{_OFFSET}\s*$"
+    for more, year in (("", r"\d{4}"), (SHORT, r"\d{2}"))
+    for order in _PLACES
 }
-_CLOCK = r"(?:[T ]+(?P<H>\d{1,2})(?::(?P<M>\d{2})(?::(?P<S>\d{2})(?:[.,](?P<f>\d{1,9}))?)?)?)?"
-_OFFSET = r" ?(?P<z>Z|[+-])?(?P<zh>\d{2})?(?::?(?P<zm>\d{2}))?"
-PATTERNS = {order: rf"^\s*{date}{_CLOCK}(?:{_OFFSET})?\s*$" for order, date in _DATES.items()}
 
 Times = NDArray[np.int64]
 Codes = NDArray[np.int8]
@@ -38,14 +55,16 @@ Codes = NDArray[np.int8]
 class Clock:
     """How an export writes time.
 
-    `form` is 'year first', 'day first', 'month first', 'epoch s', 'epoch ms' or 'timestamp'; `offset` tells
-    whether the times state their offset from UTC; `zone` is the zone of those that do not.
+    `form` is 'timestamp' or a key of PATTERNS, EPOCHS or DAY_NUMBERS; `offset` tells whether the times state
+    their offset from UTC; `zone` is the zone of those that do not. Where `halves`, the clock has 12 hours and
+    each time says which half of the day it means.
     """
 
     form: str
     offset: bool
     zone: str | None
     fraction: int  # digits of a second written
+    halves: bool = False
 
     def read(self, column: Any) -> Stamps:
         """Read a column of times.
@@ -67,7 +86,10 @@ class Clock:
         if self.form in EPOCHS:
             time, reason = _from_numbers(column, EPOCHS[self.form])
             return self._placed(time, reason, stated=np.True_)
-        time, reason, stated = _from_text(column, self.form)
+        if self.form in DAY_NUMBERS:
+            time, reason = _from_day_numbers(column, DAY_NUMBERS[self.form])
+            return self._placed(time, reason, stated=np.False_)
+        time, reason, stated = _from_text(column, self.form, halves=self.halves)
         return self._placed(time, reason, stated=stated)
 
     def _placed(self, time: Times, reason: Codes, *, stated: Any) -> Stamps:
@@ -241,6 +263,22 @@ def _from_timestamps(column: Any) -> tuple[Times, Codes]:
 
 def _from_numbers(column: Any, us: float) -> tuple[Times, Codes]:
     """Seconds or milliseconds since the epoch."""
+    number, there = _numbers(column)
+    micros = np.rint(number * us)
+    fine = np.isfinite(micros) & (np.abs(micros) < 2.0**62)
+    return np.where(fine, micros, 0).astype(np.int64), np.where(there, 0, TIME).astype(np.int8)
+
+
+def _from_day_numbers(column: Any, of_1970: int) -> tuple[Times, Codes]:
+    """Days and their parts, local time, rounded to the ms: a float holds them to some microseconds."""
+    number, there = _numbers(column)
+    ms = np.rint((number - of_1970) * _DAY_MS)
+    fine = np.isfinite(ms) & (np.abs(ms) < 2.0**52)
+    return np.where(fine, ms, 0).astype(np.int64) * 1_000, np.where(there, 0, TIME).astype(np.int8)
+
+
+def _numbers(column: Any) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+    """Plain numbers with a point or a comma, and where there are any."""
     number = column
     if not pa.types.is_floating(column.type) and not pa.types.is_integer(column.type):
         text = pc.utf8_trim_whitespace(column)
@@ -248,38 +286,64 @@ def _from_numbers(column: Any, us: float) -> tuple[Times, Codes]:
         number = pc.replace_substring(pc.if_else(fits, text, None), ",", ".")
     number = single(number.cast(pa.float64()))
     there = present(number)
-    micros = np.rint(np.where(there, plain(number, np.float64), 0.0) * us)
-    fine = np.isfinite(micros) & (np.abs(micros) < 2.0**62)
-    return np.where(fine, micros, 0).astype(np.int64), np.where(there, 0, TIME).astype(np.int8)
+    return np.where(there, plain(number, np.float64), 0.0), there
 
 
-def _from_text(column: Any, form: str) -> tuple[Times, Codes, NDArray[np.bool_]]:
+def _from_text(column: Any, form: str, *, halves: bool) -> tuple[Times, Codes, NDArray[np.bool_]]:
     """Calendar times; each distinct text is read once."""
     codes, words = coded(column)
-    time, good, stated = _from_words(words, form)
+    time, good, stated = _from_words(words, form, halves=halves)
     time, good, stated = np.append(time, 0), np.append(good, False), np.append(stated, True)
     return time[codes], np.where(good[codes], 0, TIME).astype(np.int8), stated[codes]
 
 
-def _from_words(words: Any, form: str) -> tuple[Times, NDArray[np.bool_], NDArray[np.bool_]]:
-    """Wall-clock or UTC times of distinct texts, which are times at all, and which state an offset."""
+def _from_words(words: Any, form: str, *, halves: bool) -> tuple[Times, NDArray[np.bool_], NDArray[np.bool_]]:
+    """Distinct texts: time [us], whether it is one, and whether it states its offset."""
     found = pc.extract_regex(words, PATTERNS[form])
     good = present(found)
     part = dict(zip((f.name for f in found.type), found.flatten(), strict=True))
-    y, m, d, hour, minute, second = (_whole(part[k]) for k in "ymdHMS")
-    zone_hour, zone_minute = _whole(part["zh"]), _whole(part["zm"])
+    day, exists = _days(part, short=form.endswith(SHORT))
+    clock, runs = _seconds(part, halves=halves)
+    shift, placed = _shifts(part["z"])
+    good &= exists & runs & placed
     fraction = _whole(pc.utf8_slice_codeunits(pc.utf8_rpad(part["f"], 6, "0"), 0, 6))
-    mark = {text: flags(pc.equal(part["z"], text)) for text in ("Z", "+", "-")}
-    stated = mark["Z"] | mark["+"] | mark["-"]
-    numbered = flags(pc.not_equal(part["zh"], ""))
-    good &= (m >= 1) & (m <= 12) & (d >= 1) & (hour < 24) & (minute < 60) & (second < 60)
-    good &= (zone_hour < 24) & (zone_minute < 60) & (numbered == (mark["+"] | mark["-"]))
+    micros = (day * 86_400 + clock - shift) * 1_000_000 + fraction
+    return np.where(good, micros, 0), good, flags(pc.not_equal(part["z"], ""))
+
+
+def _shifts(offset: Any) -> tuple[Times, NDArray[np.bool_]]:
+    """Seconds that the clock of an offset is ahead of UTC, and whether there is such an offset."""
+    digits = pc.replace_substring_regex(offset, r"[^\d]", "")
+    hour, minute = (_whole(pc.utf8_slice_codeunits(digits, *cut)) for cut in ((0, 2), (2, 4)))
+    west = flags(pc.starts_with(offset, "-"))
+    return (hour * 60 + minute) * np.where(west, -60, 60), (hour < 24) & (minute < 60)
+
+
+def _days(part: Mapping[str, Any], *, short: bool) -> tuple[Times, NDArray[np.bool_]]:
+    """Days since 1970, and whether there is such a day; years of two digits are 1990 to 2089."""
+    y, m, d = (_whole(part[k]) for k in "ymd")
+    if short:
+        y = np.where(y >= 90, 1900, 2000) + y
+    good = (m >= 1) & (m <= 12) & (d >= 1)
     month = np.where(good, (y - 1970) * 12 + m - 1, 0).astype("datetime64[M]")
     day = month.astype("datetime64[D]").astype(np.int64) + d - 1
-    good &= day < (month + 1).astype("datetime64[D]").astype(np.int64)
-    seconds = day * 86_400 + hour * 3_600 + minute * 60 + second
-    shift = (zone_hour * 60 + zone_minute) * np.where(mark["-"], -60, 60)
-    return np.where(good, (seconds - shift) * 1_000_000 + fraction, 0), good, stated
+    return day, good & (day < (month + 1).astype("datetime64[D]").astype(np.int64))
+
+
+def _seconds(part: Mapping[str, Any], *, halves: bool) -> tuple[Times, NDArray[np.bool_]]:
+    """Whole seconds of the day, and whether the clock shows such a time; noon is 12 PM, midnight 12 AM."""
+    hour, minute, second = (_whole(part[k]) for k in "HMS")
+    half = pc.utf8_lower(part["p"])
+    afternoon = flags(pc.equal(half, "p"))
+    marked = afternoon | flags(pc.equal(half, "a"))
+    unmarked_ok = flags(pc.equal(part["H"], "")) if halves else True
+    good = (
+        (minute < 60)
+        & (second < 60)
+        & np.where(marked, (hour >= 1) & (hour <= 12), (hour < 24) & unmarked_ok)
+    )
+    hour = np.where(marked, hour % 12 + 12 * afternoon, hour)
+    return hour * 3_600 + minute * 60 + second, good
 
 
 def _whole(text: Any) -> Times:

@@ -217,9 +217,10 @@ class ExportRules:
     time_zone: str | None
     missing_words: tuple[str, ...]
     quality: str | None  # 'words', 'opc ua', 'opc da' or None (found out)
-    date_order: str | None = None  # 'day first', 'month first' or None (found out)
+    date_order: str | None = None  # 'day first', 'month first', 'year first' or None (found out)
     decimal: str | None = None  # ',', '.' or None (found out)
     state_words: tuple[tuple[str, float], ...] = ()  # words in the value column, and the number of each
+    day_numbers: str | None = None  # 'from 1904', else from 1900
 
 
 @dataclass(frozen=True, slots=True)

@@ -149,6 +149,7 @@ def _build(read: Draft, key: str) -> Unit:
             quality=exports.get("quality"),
             date_order=exports.get("date_order"),
             decimal=exports.get("decimal"),
+            day_numbers=exports.get("day_numbers"),
         ),
         hold_up=_hold_up(read.once["hold_up"]),
         healthy=_healthy(read.once["healthy"]),

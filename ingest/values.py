@@ -1,12 +1,12 @@
-"""Values and qualities as exports write them: numbers, words for "no value", quality words and codes.
+"""Values as exports write them: numbers, marks between thousands, words for "no value".
 
-Which of the ways an export uses is found from what has one meaning only, and refused where nothing tells.
+Which decimal mark an export uses is found from what has one meaning only, and refused where nothing tells.
 """
 
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Collection, Iterable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, NoReturn
 
@@ -15,25 +15,36 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
-from ingest.account import INFINITE, NUMBER, QUALITY
-from ingest.columns import Look, coded, first_match, flags, floats, matches, present, single
+from ingest.account import INFINITE, NUMBER
+from ingest.columns import Look, first_match, flags, floats, is_text, matches, present, single
 from ingest.errors import ExportError
-from ingest.readings import BAD, GOOD, UNCERTAIN, UNKNOWN
 from ingest.unit import ExportRules
 
-MISSING_WORDS = ("bad", "no data", "-", "#n/a", "err", "")  # whatever their capitals; common practice
+MISSING_WORDS = ("bad", "no data", "-", "#n/a", "err", "nan", "")  # whatever their capitals; common practice
 
 MARKS = {".": "point", ",": "comma"}
+_OTHER = {".": ",", ",": "."}
 NUMBERS = {
     ".": r"^[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?$",
     ",": r"^[+-]?(\d+,?\d*|,\d+)([eE][+-]?\d+)?$",
 }
 _NOT_FINITE = r"^[+-]?(inf|infinity|nan)$"
 _MINUS = "\u2212"
+_SPACES = r"[\x{a0}\x{2009}\x{202f}]"  # no-break, thin, and narrow no-break
 
-_GROUPED = r"^\s*[+\-\x{2212}]?[1-9]\d{0,2},\d{3}\s*$"  # 1,234: a decimal comma, or a mark between thousands
-_POINT = r"^\s*[+\-\x{2212}]?\d*\.\d+([eE][+-]?\d+)?\s*$"
-_COMMA = r"^\s*[+\-\x{2212}]?\d*,\d+([eE][+-]?\d+)?\s*$"
+# With the decimal mark known, three digits apart can only be thousands; one mark throughout a number.
+_GROUPED = {
+    mark: rf"^[+-]?[1-9]\d{{0,2}}(([{other}]\d{{3}})+|( \d{{3}})+|('\d{{3}})+)([{mark}]\d*)?$"
+    for mark, other in _OTHER.items()
+}
+_SIGN, _GROUP = r"^\s*[+\-\x{2212}]?", r"[1-9]\d{0,2}"
+_DECIMALS = {mark: rf"{_SIGN}\d*[{mark}]\d+([eE][+-]?\d+)?\s*$" for mark in MARKS}
+_EITHER = {mark: rf"{_SIGN}{_GROUP}[{mark}]\d{{3}}\s*$" for mark in MARKS}  # 1,234: 1.234 or 1234
+_THOUSANDS = {
+    mark: rf"{_SIGN}{_GROUP}(([{other} '\x{{2019}}\x{{a0}}\x{{2009}}\x{{202f}}]\d{{3}})+[{mark}]\d+"
+    rf"|([{other}]\d{{3}}){{2,}})\s*$"
+    for mark, other in _OTHER.items()
+}
 
 Codes = NDArray[np.int8]
 
@@ -54,6 +65,11 @@ class Numbers:
     decimal: str
     missing: frozenset[str]
     states: tuple[tuple[str, float], ...] = ()  # words that stand for a number, whatever their capitals
+
+    @property
+    def parts(self) -> str:
+        """Give the mark that may part thousands since it is not the decimal mark."""
+        return _OTHER[self.decimal]
 
     def read(self, column: Any) -> Values:
         """Read a column of values.
@@ -94,165 +110,30 @@ class Numbers:
         small = pc.utf8_lower(text)
         blank = flags(pc.equal(small, "")) | ~present(text)
         missing = flags(pc.is_in(small, pa.array(sorted(self.missing), small.type))) | blank
-        fits = pc.match_substring_regex(text, NUMBERS[self.decimal])
-        number = pc.if_else(pc.and_(fits, pa.array(~missing)), text, pa.scalar(None, text.type))
+        fits = flags(pc.match_substring_regex(text, NUMBERS[self.decimal])) & ~missing
+        text, fits = self._ungrouped(text, fits, ~fits & ~missing)
+        number = pc.if_else(pa.array(fits), text, pa.scalar(None, text.type))
         value = floats(single(pc.replace_substring(number, self.decimal, ".").cast(pa.float64())))
         odd = flags(pc.match_substring_regex(small, _NOT_FINITE)) | np.isinf(value)
-        reason = np.where(missing | flags(fits) & ~odd, 0, np.where(odd, INFINITE, NUMBER)).astype(np.int8)
+        reason = np.where(missing | fits & ~odd, 0, np.where(odd, INFINITE, NUMBER)).astype(np.int8)
         return Values(self._emptied(value), np.where(missing, np.int8(0), reason), blank)
+
+    def _ungrouped(
+        self, text: Any, fits: NDArray[np.bool_], unclear: NDArray[np.bool_]
+    ) -> tuple[Any, NDArray[np.bool_]]:
+        """Leave the marks between thousands out of the numbers that have them."""
+        if not unclear.any():
+            return text, fits
+        plainer = pc.replace_substring(pc.replace_substring_regex(text, _SPACES, " "), "\u2019", "'")
+        grouped = flags(pc.match_substring_regex(plainer, _GROUPED[self.decimal])) & unclear
+        if not grouped.any():
+            return text, fits
+        bare = pc.replace_substring_regex(plainer, f"[ '{_OTHER[self.decimal]}]", "")
+        return pc.if_else(pa.array(grouped), bare, text), fits | grouped
 
 
 def _is_number(text: str) -> bool:
     return re.fullmatch(NUMBERS["."], text) is not None
-
-
-def is_text(kind: Any) -> bool:
-    """Tell whether an Arrow type holds text.
-
-    Parameters
-    ----------
-    kind : pyarrow.DataType
-        Any type.
-
-    Returns
-    -------
-    bool
-        True for every width of string.
-    """
-    return bool(pa.types.is_string(kind) or pa.types.is_large_string(kind) or pa.types.is_string_view(kind))
-
-
-def quality_of_word(text: str) -> int | None:
-    """Give the quality that a word states; the symbolic names of OPC UA begin with one of the three.
-
-    Parameters
-    ----------
-    text : str
-        As it stands in the file.
-
-    Returns
-    -------
-    int or None
-        A place in readings.QUALITIES; None where the word says none.
-    """
-    word = text.strip().casefold()
-    for start, quality in (("good", GOOD), ("uncertain", UNCERTAIN), ("bad", BAD)):
-        if word.startswith(start):
-            return quality
-    return {"": UNKNOWN, "unknown": UNKNOWN, "ok": GOOD}.get(word)
-
-
-def quality_of_opc_ua(text: str) -> int | None:
-    """Give the quality of an OPC UA status code, by its top two bits alone.
-
-    Source: OPC UA Part 4 (IEC 62541-4): 00 good, 01 uncertain, 10 bad, 11 reserved.
-
-    Parameters
-    ----------
-    text : str
-        Decimal (signed or not) or hexadecimal with 0x.
-
-    Returns
-    -------
-    int or None
-        A place in readings.QUALITIES; None where it is no code.
-    """
-    code = whole(text)
-    if code is None:
-        return None if text.strip() else UNKNOWN
-    if not -(2**31) <= code < 2**32:
-        return None
-    return {0: GOOD, 1: UNCERTAIN, 2: BAD}.get((code & 0xFFFFFFFF) >> 30)
-
-
-def quality_of_opc_da(text: str) -> int | None:
-    """Give the quality of an OPC Data Access quality word, by the mask 0xC0.
-
-    Source: layout QQSSSSLL of its low byte as in OPC UA Part 8, A.3.2.3; QQ = 10 is not in use.
-
-    Parameters
-    ----------
-    text : str
-        Decimal or hexadecimal with 0x.
-
-    Returns
-    -------
-    int or None
-        A place in readings.QUALITIES; None where it is no code.
-    """
-    code = whole(text)
-    if code is None:
-        return None if text.strip() else UNKNOWN
-    if not 0 <= code < 2**16:
-        return None
-    return {0xC0: GOOD, 0x40: UNCERTAIN, 0x00: BAD}.get(code & 0xC0)
-
-
-QUALITY_FORMS: dict[str, Callable[[str], int | None]] = {
-    "words": quality_of_word,
-    "opc ua": quality_of_opc_ua,
-    "opc da": quality_of_opc_da,
-}
-
-
-def whole(text: str) -> int | None:
-    """Read a whole number, decimal or hexadecimal with 0x.
-
-    Parameters
-    ----------
-    text : str
-        '192', '0xC0', '192.0', '-2147483648'.
-
-    Returns
-    -------
-    int or None
-        None where the text is no whole number.
-    """
-    text = text.strip().casefold().removesuffix(".0")
-    try:
-        return int(text, 16) if text.startswith("0x") else int(text)
-    except ValueError:
-        return None
-
-
-def read_qualities(column: Any, form: str) -> tuple[Codes, Codes]:
-    """Read a column of qualities; each distinct text is looked up once.
-
-    Parameters
-    ----------
-    column : pyarrow.Array (n,)
-        Text or whole numbers.
-    form : str
-        A key of QUALITY_FORMS.
-
-    Returns
-    -------
-    quality : numpy.ndarray of int8 (n,)
-        Places in readings.QUALITIES; unknown where the cell is empty.
-    reason : numpy.ndarray of int8 (n,)
-        Places in account.REASONS.
-    """
-    codes, words = coded(column)
-    found = [QUALITY_FORMS[form](text) for text in texts(words)]
-    table = np.array([UNKNOWN if q is None else q for q in found] + [UNKNOWN], np.int8)
-    wrong = np.array([QUALITY if q is None else 0 for q in found] + [0], np.int8)
-    return table[codes], wrong[codes]
-
-
-def texts(words: Any) -> Iterable[str]:
-    """Give distinct values of a column as text.
-
-    Parameters
-    ----------
-    words : pyarrow.Array
-        Text or numbers.
-
-    Returns
-    -------
-    iterable of str
-        Nothing in place of null.
-    """
-    return ("" if word is None else str(word) for word in words.to_pylist())
 
 
 def decide_numbers(export: str, columns: Sequence[int], look: Look, rules: ExportRules) -> Numbers:
@@ -280,103 +161,55 @@ def decide_numbers(export: str, columns: Sequence[int], look: Look, rules: Expor
         written = [column for column in block if is_text(column.type)]
         if not written:
             return Numbers(".", missing, rules.state_words)
-        mark = _mark(written, settled=rules.decimal is not None)
+        mark = _mark(written)
         if mark is not None and rules.decimal in (None, mark):
             return Numbers(mark, missing, rules.state_words)
         if mark is not None:
-            _refuse_mark(export, *_shown(rows, written, _COMMA if mark == "," else _POINT)[0], mark)
-        unclear = unclear or _shown(rows, written, _GROUPED)
+            _refuse_mark(export, *_shown(rows, written, mark), mark)
+        unclear = unclear or [shown for one in MARKS if (shown := _first(rows, written, _EITHER[one]))]
     if unclear and rules.decimal is None:
-        _refuse_either_mark(export, *unclear[0])
+        _refuse_either_mark(export, *min(unclear))
     return Numbers(rules.decimal or ".", missing, rules.state_words)
 
 
-def _mark(columns: Sequence[Any], *, settled: bool) -> str | None:
-    """The decimal mark that most numbers show; `settled`: a comma is no mark between thousands."""
-    point, comma = (sum(matches(c, pattern) for c in columns) for pattern in (_POINT, _COMMA))
-    if not settled:
-        comma -= sum(matches(c, _GROUPED) for c in columns)
+def _mark(columns: Sequence[Any]) -> str | None:
+    """The decimal mark that most numbers show which can be read in one way only."""
+    point, comma = (
+        sum(
+            matches(c, _DECIMALS[mark]) - matches(c, _EITHER[mark]) + matches(c, _THOUSANDS[mark])
+            for c in columns
+        )
+        for mark in MARKS
+    )
     return None if point == comma else "." if point > comma else ","
 
 
-def _shown(rows: NDArray[np.int64], columns: Sequence[Any], pattern: str) -> list[tuple[int, str]]:
-    """Row and text of the first cell of each column that matches a pattern, the topmost first."""
+def _first(rows: NDArray[np.int64], columns: Sequence[Any], pattern: str) -> tuple[int, str] | None:
+    """Row and text of the topmost cell that matches a pattern."""
     found = (first_match(column, pattern) for column in columns)
-    return sorted((int(rows[match[0]]), match[1]) for match in found if match)
+    return min(((int(rows[match[0]]), match[1]) for match in found if match), default=None)
+
+
+def _shown(rows: NDArray[np.int64], columns: Sequence[Any], mark: str) -> tuple[int, str]:
+    """Row and text of the topmost cell with a decimal mark that can be read in one way only."""
+    sure = [pc.if_else(pc.match_substring_regex(c, _EITHER[mark]), None, c) for c in columns]
+    found = [_first(rows, sure, patterns[mark]) for patterns in (_DECIMALS, _THOUSANDS)]
+    return min(one for one in found if one)
 
 
 def _refuse_mark(export: str, row: int, text: str, mark: str) -> NoReturn:
-    stated = "." if mark == "," else ","
     raise ExportError(
-        f"{export}:{row}: {text!r} has a {MARKS[mark]}, which no number has with decimal = {stated!r}",
-        remedy="Mend or remove decimal under [exports] in the unit file,"
-        " or export without marks between thousands.",
+        f"{export}:{row}: {text!r} has a decimal {MARKS[mark]}, but decimal = {_OTHER[mark]!r} is stated",
+        remedy="Mend or remove decimal under [exports] in the unit file.",
     )
 
 
 def _refuse_either_mark(export: str, row: int, text: str) -> NoReturn:
-    meant = text.replace(",", ".")
+    mark = "," if "," in text else "."
+    meant, grouped = text.replace(",", "."), text.replace(mark, "")
     raise ExportError(
-        f"{export}:{row}: {text!r} is {meant} with a decimal comma but"
-        f" {text.replace(',', '')} with marks between thousands, and no number tells which",
-        remedy=f"If {meant} is meant, write decimal = ',' under [exports] in the unit file;"
-        " else export without marks between thousands.",
+        f"{export}:{row}: {text!r} is {meant} with a decimal {MARKS[mark]} but"
+        f" {grouped} with marks between thousands, and no number tells which",
+        remedy=f"If {meant} is meant, write decimal = {mark!r} under [exports] in the unit file;"
+        f" if {grouped} is, decimal = {_OTHER[mark]!r}.",
     )
-
-
-def decide_quality(place: str, column: int | None, look: Look, rules: ExportRules) -> str | None:
-    """Find how the export writes quality, unless the unit file says it.
-
-    Parameters
-    ----------
-    place : str
-        `file` or `file:row`, for the error.
-    column : int or None
-        The quality column.
-    look : callable
-        Gives columns.
-    rules : ExportRules
-        Its `quality` stands above what is found.
-
-    Returns
-    -------
-    str or None
-        A key of values.QUALITY_FORMS; None without a quality column.
-    """
-    if column is None:
-        return None
-    if rules.quality is not None:
-        return rules.quality
-    seen: set[str] = set()
-    for _, (qualities,) in look([column]):
-        seen |= {text.strip() for text in texts(single(qualities).unique())} - {""}
-        forms = _quality_forms(seen)
-        if len(forms) == 1:
-            return forms[0]
-        if forms:
-            break
-    if not seen:
-        return "words"
-    sample = ", ".join(repr(text) for text in sorted(seen)[:4])
-    raise ExportError(
-        f"{place}: nothing tells whether qualities such as {sample} are words, OPC UA status codes"
-        " (0 is good) or OPC DA qualities (0 is bad)",
-        remedy="Set quality under [exports] in the unit file to 'words', 'opc ua' or 'opc da'.",
-    )
-
-
-def _quality_forms(seen: Collection[str]) -> list[str]:
-    """The forms for which there is something that no other form could mean.
-
-    OPC UA codes keep their meaning in the upper 16 of 32 bits, OPC DA qualities have 16 bits in all with good
-    and uncertain in 0xC0. Small numbers without those bits mean something else in each house.
-    """
-    codes = [code for code in map(whole, seen) if code is not None]
-    forms = []
-    if any(quality_of_word(text) is not None for text in seen):
-        forms.append("words")
-    if any(code < 0 or code >= 2**16 for code in codes):
-        forms.append("opc ua")
-    if any(0 < code < 2**16 and code & 0xC0 in (0x40, 0xC0) for code in codes):
-        forms.append("opc da")
-    return forms

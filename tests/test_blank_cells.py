@@ -91,7 +91,7 @@ def test_a_null_of_a_wide_parquet_is_no_reading_and_a_nan_or_word_is_a_bad_one(
 
 
 def test_a_blank_cell_beside_a_time_that_is_none_is_blank_and_costs_nothing(tmp_path: Path):
-    text = wide("1,2") + "\nAverage,1,\n"
+    text = wide("1,2") + "\nyesterday,1,\n"
     _, account = read(saved(tmp_path, text), wanted=ASKED)
     assert account.rejections == ((TIME, 1),)
     assert (account.accepted, account.empty) == (2, 1)

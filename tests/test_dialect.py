@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from zoneinfo import ZoneInfo
@@ -15,20 +16,14 @@ from hypothesis import strategies as st
 
 from ingest import lines
 from ingest.batches import Batches
-from ingest.dialect import Dialect, decide_encoding, decide_separator
+from ingest.dialect import Dialect
+from ingest.encodings import decide_encoding
 from ingest.errors import ExportError
+from ingest.headings import decide_separator
+from ingest.qualities import decide_quality, quality_of_opc_da, quality_of_opc_ua, quality_of_word
 from ingest.timestamps import Clock, localised, resolved
 from ingest.unit import ExportRules
-from ingest.values import (
-    MISSING_WORDS,
-    NUMBERS,
-    Numbers,
-    decide_numbers,
-    decide_quality,
-    quality_of_opc_da,
-    quality_of_opc_ua,
-    quality_of_word,
-)
+from ingest.values import MISSING_WORDS, NUMBERS, Numbers, decide_numbers
 from tests.exports_made import (
     NO_RULES,
     TAGS,
@@ -123,15 +118,17 @@ def test_a_stated_decimal_mark_settles_what_no_number_tells():
     assert stated(".", ["1", "2"]).decimal == "."
     assert stated(",", ["7"], ["2,5"]).decimal == ","
     assert stated(".", ["1.234"]).decimal == "."
+    assert stated(".", ["1,234"]).read(pa.array(["1,234"])).value.tolist() == [1234.0]
+    assert stated(",", ["1.234"]).read(pa.array(["1.234"])).value.tolist() == [1234.0]
 
 
 @pytest.mark.parametrize(
     ("mark", "blocks", "says"),
     [
-        (",", (["7", "2.5"],), r"x\.csv:3: '2\.5' has a point, which no number has with decimal = ','"),
-        (",", (["7"], ["1.234"]), r"x\.csv:3: '1\.234' has a point"),
-        (".", (["7", "2,5"],), r"x\.csv:3: '2,5' has a comma, which no number has with decimal = '\.'"),
-        (".", (["1,234"], ["7"]), r"x\.csv:2: '1,234' has a comma"),
+        (",", (["7", "2.5"],), r"x\.csv:3: '2\.5' has a decimal point, but decimal = ',' is stated"),
+        (",", (["1.234"], ["1,234.5"]), r"x\.csv:3: '1,234\.5' has a decimal point"),
+        (".", (["7", "2,5"],), r"x\.csv:3: '2,5' has a decimal comma, but decimal = '\.' is stated"),
+        (".", (["1,234"], ["1.234.567"]), r"x\.csv:3: '1\.234\.567' has a decimal comma"),
     ],
 )
 def test_an_export_that_contradicts_the_stated_decimal_mark_is_refused_with_a_row(
@@ -272,28 +269,28 @@ SENTENCES = {
         "Text in UTF-8, separated by semicolon; line 1 names the columns.",
         "Wide: times in 'time', a column for each of 3 tags.",
         "Times are calendar times, year first, without offset: read as clock time of Europe/Berlin.",
-        "Decimal mark: comma.",
+        "Decimal mark: comma; a point, blank or apostrophe before three digits parts thousands.",
         "Blank cells: nothing was stored then, no reading.",
         "Words that mean bad quality, whatever their capitals:"
-        " '#n/a', '-', 'bad', 'err', 'no data', 'offline'.",
+        " '#n/a', '-', 'bad', 'err', 'nan', 'no data', 'offline'.",
         "No quality column: every number counts as usable.",
     ),
     "long": (
         "Text in UTF-8, separated by comma; line 1 names the columns.",
         "Long: times in 'time', tags in 'tag', values in 'value'.",
         "Times are calendar times, year first, with their offset from UTC.",
-        "Decimal mark: point.",
+        "Decimal mark: point; a comma, blank or apostrophe before three digits parts thousands.",
         "Blank cells: bad quality.",
-        "Words that mean bad quality, whatever their capitals: '#n/a', '-', 'bad', 'err', 'no data'.",
+        "Words that mean bad quality, whatever their capitals: '#n/a', '-', 'bad', 'err', 'nan', 'no data'.",
         "Quality in 'quality', as OPC DA qualities (192 is good).",
     ),
     "Parquet": (
         "Parquet.",
         "Wide: times in 'time', a column for each of 3 tags.",
         "Times are time stamps, with their offset from UTC.",
-        "Decimal mark: point.",
+        "Decimal mark: point; a comma, blank or apostrophe before three digits parts thousands.",
         "Blank cells: nothing was stored then, no reading.",
-        "Words that mean bad quality, whatever their capitals: '#n/a', '-', 'bad', 'err', 'no data'.",
+        "Words that mean bad quality, whatever their capitals: '#n/a', '-', 'bad', 'err', 'nan', 'no data'.",
         "No quality column: every number counts as usable.",
     ),
 }
@@ -336,9 +333,10 @@ def test_what_is_taken_for_a_number_is_one_to_python_too(text: str):
     for mark in NUMBERS:
         read = Numbers(mark, frozenset()).read(pa.array([text]))
         assert read.blank[0] == (not text.strip())
+        other = "." if mark == "," else ","
         if read.reason[0] == 0 and not read.blank[0]:
-            assert read.value[0] == float(text.replace(",", "."))
-            assert mark == "," or "," not in text
+            assert read.value[0] == float(text.replace(other, "").replace(mark, "."))
+            assert other not in text or re.match(rf"\s*[+-]?[1-9]\d{{0,2}}[{other}]\d{{3}}(\D|$)", text)
 
 
 @given(st.datetimes(datetime(1990, 1, 2), datetime(2099, 12, 30)), st.integers(-14 * 60, 14 * 60))  # noqa: DTZ001
