@@ -195,6 +195,15 @@ class Healthy:
 
 
 @dataclass(frozen=True, slots=True)
+class Prices:
+    """What a kilogram of wanted product is worth and one of key reactant costs, in one currency."""
+
+    currency: str
+    wanted_per_kg: float
+    key_reactant_per_kg: float
+
+
+@dataclass(frozen=True, slots=True)
 class Watch:
     """Limits on one windowed figure. `low`/`high` in the figure's unit; None means no such limit."""
 
@@ -251,5 +260,6 @@ class Unit:
     analyzers: tuple[Analyzer, ...] = ()
     healthy: Healthy | None = None
     events: tuple[Event, ...] = ()  # in the order of time
+    prices: Prices | None = None
     budget: tuple[tuple[str, float], ...] = ()  # figure, and the value that it is held against
     guarantee: tuple[tuple[str, float], ...] = ()

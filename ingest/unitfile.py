@@ -25,6 +25,7 @@ from ingest.unit import (
     Instrument,
     Node,
     Operating,
+    Prices,
     SharedError,
     Species,
     Stream,
@@ -153,6 +154,7 @@ def _build(read: Draft, key: str) -> Unit:
         ),
         hold_up=_hold_up(read.once["hold_up"]),
         healthy=_healthy(read.once["healthy"]),
+        prices=_prices(read.once["prices"]),
         budget=tuple((read.once["budget"].get("figure") or {}).items()),
         guarantee=tuple((read.once["guarantee"].get("figure") or {}).items()),
         events=tuple(sorted((_event(entry) for entry in read.many["event"]), key=lambda event: event.at)),
@@ -270,6 +272,13 @@ def _healthy(entry: Entry) -> Healthy | None:
     if entry.get("from") is None:
         return None
     return Healthy(entry.get("from"), entry.get("to"), entry.get("operating_point"))
+
+
+def _prices(entry: Entry) -> Prices | None:
+    """Make the prices, or None when the section is not there."""
+    if not entry.values:
+        return None
+    return Prices(**{key: entry.get(key) for key in table.rows("prices")})
 
 
 def _event(entry: Entry) -> Event:

@@ -36,6 +36,7 @@ HEADINGS = {
     "watch": "[[watch]]",
     "budget": "[budget]",
     "guarantee": "[guarantee]",
+    "prices": "[prices]",
     "exports": "[exports]",
 }
 START = """# The unit file
@@ -83,6 +84,7 @@ ABOUT = {
     "budget": "Figures under their own names, in their own units, that the monthly summary is held against. Its other"
     " figures are compared with earlier months alone.",
     "guarantee": "The same, for what was warranted.",
+    "prices": "What a loss is worth. Nothing else depends on it.",
     "exports": "What the exports themselves do not tell.",
 }
 

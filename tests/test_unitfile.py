@@ -12,7 +12,7 @@ import pytest
 
 from ingest import draft, entries, keys, unitfile, unitrules
 from ingest.instrumentrules import KIND_RULES
-from ingest.unit import FRACTION_KINDS, KINDS, Uncertainty, Unit
+from ingest.unit import FRACTION_KINDS, KINDS, Prices, Uncertainty, Unit
 from monitor.amounts import amount_names
 from monitor.figures import figures_of
 from tests.keys_reference import reference
@@ -262,3 +262,9 @@ def test_the_reference_of_keys_is_the_table_of_keys():
 def test_budget_and_guarantee_are_numbers_by_figure():
     assert dict(DEMO_UNIT.budget)["yield on feed"] == 83.0
     assert dict(DEMO_UNIT.guarantee) == {"yield on feed": 80.0, "conversion": 95.0}
+
+
+def test_prices_are_read_as_they_are_stated_and_may_be_left_out(tmp_path):
+    text = '[prices]\ncurrency = "EUR"\nwanted_per_kg = 1.6\nkey_reactant_per_kg = 0.9\n'
+    assert loaded(tmp_path, DEMO + text).prices == Prices("EUR", 1.6, 0.9)
+    assert DEMO_UNIT.prices is None
