@@ -17,8 +17,11 @@ from typing import Any, Self
 import numpy as np
 from numpy.typing import NDArray
 
+from ingest.shown import shown
+
 KEPT = 3  # rows kept as evidence for each reason, tags named where more were not asked for
 TEXT = 120  # characters kept of each
+_SHOWN = 80  # characters of a tag in a sentence
 
 # Codes of what can be wrong with one reading, in the order of the table below; 0 is nothing. The ledger keeps
 # them: a new one goes to the end.
@@ -113,7 +116,7 @@ class Evidence:
         str
             `march.csv:4182 [AI-204]: 'n.a.' is not a number`.
         """
-        tag = f" [{self.tag}]" if self.tag is not None else ""
+        tag = f" [{shown(self.tag, _SHOWN)}]" if self.tag is not None else ""
         return f"{export}:{self.row}{tag}: {self.text!r} {REASONS[self.reason][0]}"
 
 
@@ -232,7 +235,7 @@ class Account:
         if self.duplicates:
             yield f"{self.duplicates} known already"
         if self.unasked:
-            names = [name or "a column without name" for name, _ in self.unasked_tags]
+            names = [shown(name, _SHOWN) or "a column without name" for name, _ in self.unasked_tags]
             more = f" and {len(names) - KEPT} more" if len(names) > KEPT else ""
             yield f"{self.unasked} of tags that no unit file names ({', '.join(names[:KEPT])}{more})"
         yield f"{self.rejected} rejected"

@@ -5,15 +5,17 @@ from __future__ import annotations
 from collections.abc import Collection, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
+from os import SEEK_END
 from pathlib import Path
-from typing import Any
+from typing import Any, BinaryIO, NoReturn
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
-from ingest import lines
+from ingest import files, lines
 from ingest.clocks import decide_clock
 from ingest.columns import is_text
 from ingest.dialect import Dialect
@@ -26,7 +28,10 @@ from ingest.unit import ExportRules
 from ingest.values import decide_numbers
 
 MAGIC = b"PAR1"
-_ROWS = 1 << 16  # read at a time
+LONGEST_TEXT = 1 << 10  # bytes of one text in a column that is read
+LARGEST_FOOTER = 32 << 20  # bytes; 25 columns in a thousand groups of rows take 4 MB
+_ROWS, _CELLS = 1 << 16, 1 << 22  # read at a time
+_TEXTS, _TEXT = 32 << 20, 128  # bytes in all and per row that texts of one column and group may take
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,16 +62,31 @@ class ParquetExport:
 
 @contextmanager
 def _opened(path: Path) -> Iterator[Any]:
-    """The file; what Arrow refuses becomes an ExportError."""
+    """The file, columns of text as dictionaries; what Arrow refuses becomes an ExportError."""
     try:
-        with pq.ParquetFile(path) as file:
-            yield file
-    except (pa.ArrowException, OSError) as error:
+        with files.opened(path) as raw:
+            _refuse_footer(path.name, raw)
+            about = pq.read_metadata(raw)
+            with pq.ParquetFile(
+                raw,
+                metadata=about,
+                read_dictionary=[c.path for c in about.schema if c.name == c.path and _is_utf8(c)],
+                buffer_size=lines.BLOCK,
+                pre_buffer=False,
+                page_checksum_verification=True,
+                arrow_extensions_enabled=False,
+            ) as file:
+                yield file
+    except (pa.ArrowException, OSError, UnicodeDecodeError) as error:
         said = str(error).splitlines()[0][:120]
         raise ExportError(
             f"{path.name}: the Parquet file is damaged or cut short ({said})",
             remedy="Export or copy the file again.",
         ) from error
+
+
+def _is_utf8(column: Any) -> bool:
+    return bool(column.physical_type == "BYTE_ARRAY" and column.converted_type == "UTF8")
 
 
 def open_parquet(
@@ -122,13 +142,51 @@ def parquet_blocks(file: ParquetExport, columns: Sequence[int]) -> Iterator[Bloc
         Rows numbered from 1.
     """
     names = [file.header[i] for i in columns]
+    size = max(1, min(_ROWS, _CELLS // max(len(names), 1)))
     row = 1
     with _opened(file.path) as raw:
-        for batch in raw.iter_batches(batch_size=_ROWS, columns=names, use_threads=False):
+        _refuse_texts(file.path.name, raw.metadata, frozenset(names))
+        for batch in raw.iter_batches(batch_size=size, columns=names, use_threads=False):
             rows = np.arange(row, row + batch.num_rows)
             row += batch.num_rows
             read = zip(columns, names, strict=True)
-            yield Block(rows, {i: _plain(batch.column(name)) for i, name in read})
+            yield Block(rows, {i: _plain(file.path.name, name, batch.column(name)) for i, name in read})
+
+
+def _refuse_footer(export: str, raw: BinaryIO) -> None:
+    """The last eight bytes tell how long the footer is, before it is read."""
+    size = raw.seek(0, SEEK_END)
+    raw.seek(max(size - 8, 0))
+    length = int.from_bytes(raw.read(8)[:4], "little")
+    raw.seek(0)
+    if LARGEST_FOOTER < length <= size:
+        raise ExportError(
+            f"{export}: a footer of {length >> 20} MiB, more than {LARGEST_FOOTER >> 20}",
+            remedy="Export the tags of the unit file only, or in long form.",
+        )
+
+
+def _refuse_texts(export: str, about: Any, names: Collection[str]) -> None:
+    """The footer tells how much text there is before it is read; a dictionary may still repeat a long one."""
+    for i in range(about.num_row_groups):
+        group = about.row_group(i)
+        for column in (group.column(k) for k in range(group.num_columns)):
+            most = _TEXTS + _TEXT * column.num_values
+            if (
+                column.path_in_schema in names
+                and column.physical_type == "BYTE_ARRAY"
+                and column.total_uncompressed_size > most
+            ):
+                _refuse_text(
+                    export, column.path_in_schema, f"more than {most >> 20} MiB in one group of rows"
+                )
+
+
+def _refuse_text(export: str, column: str, how_much: str) -> NoReturn:
+    raise ExportError(
+        f"{export} [{column}]: holds long texts, {how_much}",
+        remedy="Export values as numbers, tags and qualities as short words.",
+    )
 
 
 def _refuse_size(export: str, about: Any, columns: int) -> None:
@@ -159,14 +217,25 @@ def _refuse_types(path: Path, layout: Layout, values: Sequence[int]) -> None:
             )
 
 
-def _plain(column: Any) -> Any:
-    """A column in a type that is read: dictionaries hold text, text is plain, nulls alone are numbers."""
+def _plain(export: str, name: str, column: Any) -> Any:
+    """A column in a type that is read: dictionaries hold short text, nulls alone are numbers."""
     kind = column.type
-    if pa.types.is_dictionary(kind) and not is_text(kind.value_type):
-        return column.dictionary_decode()
     if pa.types.is_null(kind):
         return column.cast(pa.float64())
-    return column.cast(pa.string()) if pa.types.is_string_view(kind) else column
+    if not pa.types.is_dictionary(kind):
+        return column.cast(pa.string()) if pa.types.is_string_view(kind) else column
+    if not is_text(kind.value_type):
+        return column.dictionary_decode()
+    try:
+        column.validate(full=True)  # every row has its place in the dictionary, and the text is text
+    except pa.ArrowInvalid as error:
+        raise ExportError(
+            f"{export} [{name}]: holds text that is not UTF-8", remedy="Export text as UTF-8."
+        ) from error
+    longest = pc.max(pc.binary_length(column.dictionary)).as_py() or 0
+    if longest > LONGEST_TEXT:
+        _refuse_text(export, name, f"one of {longest} bytes")
+    return column
 
 
 def _spread(column: Any) -> Any:
