@@ -19,6 +19,7 @@ from ingest.errors import ExportError, StoreError
 from ingest.exports import open_export
 from ingest.files import opened
 from ingest.found import found
+from ingest.measures import Stated, stated_units
 from ingest.passes import Pass
 from ingest.records import Export, Seen
 from ingest.shown import shown
@@ -67,12 +68,19 @@ class _Asked:
 
     tags: frozenset[str]
     rules: ExportRules
+    units: Mapping[str, tuple[Stated, ...]]
 
     def entry(self, tags: Iterable[str]) -> dict[str, Any]:
         """What the ledger keeps of it: with another one an export that was set aside is tried again."""
         rules = {**asdict(self.rules), "missing_words": list(self.rules.missing_words)}
         rules["state_words"] = [list(pair) for pair in self.rules.state_words]
-        return {"tags": sorted(tags), "rules": rules, "program": database.program_version()}
+        units = {tag: [one.unit for one in self.units.get(tag, ())] for tag in sorted(tags)}
+        return {"tags": sorted(tags), "rules": rules, "units": units, "program": database.program_version()}
+
+    def converted_otherwise(self, export: Export) -> bool:
+        """Tell whether an export was converted to a unit that is not stated any more."""
+        converted = export.account.get("converted", ())
+        return any(unit != one.unit for tag, _, unit in converted for one in self.units.get(tag, ()))
 
 
 @dataclass(frozen=True, slots=True)
@@ -163,7 +171,7 @@ def _asked(units: Sequence[Unit]) -> _Asked:
         raise StoreError(
             f"unit {SITE}: the store keeps its archive by that name", remedy="Rename the unit file."
         )
-    return _Asked(frozenset().union(*(_tags(unit) for unit in units)), said[first])
+    return _Asked(frozenset().union(*(_tags(unit) for unit in units)), said[first], stated_units(units))
 
 
 def _said(value: str | tuple[str, ...] | None) -> str:
@@ -261,7 +269,12 @@ def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> _Taken |
     """Read one export into the archive, or leave no trace of it there."""
     try:
         batches = open_export(
-            file.path, number=file.number, rules=asked.rules, wanted=file.tags, time_zone=None
+            file.path,
+            number=file.number,
+            rules=asked.rules,
+            wanted=file.tags,
+            time_zone=None,
+            units=asked.units,
         )
         for readings in batches:
             archive.add({tag: series for tag, series in readings.items() if tag in file.added})
@@ -343,8 +356,9 @@ def _notes(pass_: Pass, asked: _Asked) -> tuple[str, ...]:
     """What the archive lacks or holds otherwise than the units ask now."""
     taken = [export for export in pass_.exports() if export.status == "taken"]
     lacking = [export.name for export in taken if _unasked_then(export) & asked.tags]
-    rules = asked.entry(())["rules"]
-    otherwise = [export.name for export in taken if export.asked["rules"] != rules]
+    rules = _in_force(asked.entry(())["rules"])
+    otherwise = [export.name for export in taken if _in_force(export.asked["rules"]) != rules]
+    converted = [export.name for export in taken if asked.converted_otherwise(export)]
     notes = []
     if lacking:
         notes.append(f"{_names(lacking)}: holds tags asked for only since; give it to a pass again")
@@ -353,7 +367,17 @@ def _notes(pass_: Pass, asked: _Asked) -> tuple[str, ...]:
             f"{_names(otherwise)}: was read by other rules under [exports] than those stated now;"
             " to read all alike, take every export into a new store"
         )
+    if converted:
+        notes.append(
+            f"{_names(converted)}: was converted to units that the unit file does not state any more;"
+            " take every export into a new store"
+        )
     return tuple(notes)
+
+
+def _in_force(rules: Mapping[str, Any]) -> dict[str, Any]:
+    """The rules that say something; one that an older program did not know said nothing then."""
+    return {key: said for key, said in rules.items() if said}
 
 
 def _names(names: Sequence[str]) -> str:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import gzip
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -14,7 +14,8 @@ import pyarrow.parquet as pq
 
 from ingest.account import Account
 from ingest.batches import Batches
-from ingest.exports import open_export
+from ingest.exports import NO_UNITS, open_export
+from ingest.measures import Stated
 from ingest.readings import BAD, UNKNOWN, Readings, Series, join
 from ingest.unit import ExportRules
 
@@ -128,9 +129,10 @@ def opened(
     rules: ExportRules = NO_RULES,
     wanted: Sequence[str] | None = TAGS,
     number: int = 7,
+    units: Mapping[str, tuple[Stated, ...]] = NO_UNITS,
 ) -> Batches:
     asked = None if wanted is None else frozenset(wanted)
-    return open_export(path, number=number, rules=rules, wanted=asked, time_zone=zone)
+    return open_export(path, number=number, rules=rules, wanted=asked, time_zone=zone, units=units)
 
 
 def read(path: Path, **how) -> tuple[Readings, Account]:

@@ -53,6 +53,7 @@ def check(file: Path, store: Path | None, as_json: bool) -> None:
 def describe(export: Path, unit_file: Path, as_json: bool) -> None:
     """Show how an EXPORT would be read: dialect, first rows, account. Nothing is stored."""
     from ingest.exports import describe as described
+    from ingest.measures import stated_units
     from ingest.unitfile import load
     from monitor.telling import described as told
 
@@ -60,7 +61,8 @@ def describe(export: Path, unit_file: Path, as_json: bool) -> None:
     tags = frozenset(one.tag for one in unit.instruments if one.tag is not None)
     if not export.is_file():
         raise ExportError(f"{export}: there is no such file", remedy="Check the name.")
-    found = described(export, rules=unit.exports, wanted=tags, time_zone=unit.time_zone)
+    units = stated_units([unit])
+    found = described(export, rules=unit.exports, wanted=tags, time_zone=unit.time_zone, units=units)
     say(asdict(found), told(found, unit), as_json=as_json)
 
 
