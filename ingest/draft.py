@@ -13,7 +13,8 @@ from ingest.entries import Entry, missing, nearest, read_table
 from ingest.errors import OutletError, Problem
 from ingest.keys import rows
 
-ONCE = ("unit", "chemistry", "operating", "catalyst", "healthy", "hold_up", "budget", "guarantee", "prices", "exports")
+ONCE: tuple[str, ...] = ("unit", "chemistry", "operating", "catalyst", "healthy", "hold_up")
+ONCE += ("budget", "guarantee", "prices", "exports")
 MANY = ("node", "stream", "instrument", "analyzer", "shared", "event", "watch")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")
