@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import astuple, dataclass, fields, replace
+from dataclasses import dataclass, fields, replace
 from datetime import timedelta
 from functools import lru_cache
 from pathlib import Path
@@ -47,7 +47,7 @@ PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored
 DERIVED = ("cells", "states", "figures-")
 # What a unit file says that no stored number depends on: a change of it makes nothing due.
 BESIDE: dict[str, Any] = {
-    "name": "", "watches": (), "healthy": None, "events": (), "budget": (), "guarantee": ()
+    "name": "", "watches": (), "healthy": None, "events": (), "budget": (), "guarantee": (), "prices": None
 }  # fmt: skip
 SOLVED = STATUS.index("solved")
 _US = timedelta(microseconds=1)
@@ -57,12 +57,36 @@ Read = Callable[[Path], Readings]
 
 @dataclass(frozen=True, slots=True)
 class Worked:
-    """What was worked out of one unit: months written, days, their cells, how many the balance solved."""
+    """What was worked out of one unit: months written, days, their cells, how many the balance solved.
+
+    `since_us` is from when on cells have changed, None if none did.
+    """
 
     months: tuple[str, ...] = ()
     days: int = 0
     cells: int = 0
     solved: int = 0
+    since_us: int | None = None
+
+    def and_then(self, later: Worked) -> Worked:
+        """Give what was worked out with what followed.
+
+        Parameters
+        ----------
+        later : Worked
+            In later months.
+
+        Returns
+        -------
+        Worked
+        """
+        return Worked(
+            self.months + later.months,
+            self.days + later.days,
+            self.cells + later.cells,
+            self.solved + later.solved,
+            later.since_us if self.since_us is None else self.since_us,
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,7 +155,7 @@ def catch_up(
         progress(unit, done, done + 1 + len(due))
         desk, made = _work(job, month, desk)
         done += 1
-        worked = Worked(*(a + b for a, b in zip(astuple(worked), astuple(made), strict=True)))
+        worked = worked.and_then(made)
         following = next((later for later in record.months if later > month), None)
         if following and following not in due and _goes_on(job, desk, following):
             due.insert(0, following)
@@ -251,7 +275,8 @@ def _work(job: _Job, month: str, desk: _Desk) -> tuple[_Desk, Worked]:
     )
     status = [days[day].states.status for day in changed]
     solved = sum(int((one == SOLVED).sum()) for one in status)
-    return handed, Worked((month,) if runs else (), len(changed), sum(map(len, status)), solved)
+    since_us = changed[0] * DAY_US if changed else None
+    return handed, Worked((month,) if runs else (), len(changed), sum(map(len, status)), solved, since_us)
 
 
 def _between(run: tuple[int, int]) -> range:

@@ -8,7 +8,7 @@ depends on nothing later, and no chunk can move an episode.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import timedelta
 
@@ -84,7 +84,7 @@ def unit_episodes(
     OutletError
         A watch names a figure or window that is not there.
     """
-    found = [_none()]
+    found = []
     for watch in unit.watches:
         figure = _watched(watch, frames)
         end_us = np.asarray(pd.DatetimeIndex(figure.index).tz_convert(None), dtype="datetime64[us]").astype(
@@ -92,6 +92,22 @@ def unit_episodes(
         )
         value, half_width = (figure[field].to_numpy(np.float64) for field in ("value", "half_width"))
         found.append(limit_episodes(watch, end_us, value, half_width, operating))
+    return whole_episodes(found)
+
+
+def whole_episodes(found: Sequence[pd.DataFrame]) -> pd.DataFrame:
+    """Put episodes together, in the order they were raised.
+
+    Parameters
+    ----------
+    found : sequence of DataFrame
+        As `limit_episodes` gives them; those raised at one time keep their order.
+
+    Returns
+    -------
+    DataFrame
+        Columns `EPISODE_COLUMNS`.
+    """
     whole = pd.concat([one for one in found if len(one)] or [_none()], ignore_index=True)
     return whole.sort_values("raised", kind="stable", ignore_index=True)
 
@@ -138,14 +154,12 @@ def limit_episodes(
         msg = f"rows differ: {len(end_us)} ends, {len(value)} values, {len(operating)} operating conditions"
         raise ValueError(msg)
     idle = np.isin(operating, SUPPRESSED)
-    parts = [_none()]
+    parts = []
     for side, limit, way in (("low", watch.low, -1.0), ("high", watch.high, 1.0)):
         if limit is not None:
             found = _raised(way * value, way * limit, half_width, end_us, watch=watch)
             parts.append(_table(watch, side, limit, found, (end_us, value, idle)))
-    return pd.concat([one for one in parts if len(one)] or [_none()], ignore_index=True).sort_values(
-        "raised", kind="stable", ignore_index=True
-    )
+    return whole_episodes(parts)
 
 
 def _watched(watch: Watch, frames: Mapping[timedelta, pd.DataFrame]) -> pd.DataFrame:

@@ -11,20 +11,14 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
-from numpy.typing import NDArray
 
-from ingest.columns import plain, single
 from ingest.intake import SETTLE, Outcome, take_in
 from ingest.ledger import Store
-from ingest.parts import times_us
 from ingest.passes import Pass
-from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.catchup import Worked, catch_up
-from monitor.days import figure_step, plan_of
-from monitor.drift import MICROSECOND, unit_episodes
-from monitor.layout import BAR, figure_stage, unflat
-from monitor.windows import MODES
+from monitor.days import plan_of
+from monitor.watched import bring_up
 
 Progress = Callable[[str, int, int], None]
 
@@ -115,44 +109,9 @@ def run_pass(
     return PassResult(pass_.number, taken.outcomes, told, taken.notes, steps)
 
 
-def episodes_of(view: Snapshot, unit: Unit) -> pd.DataFrame:
-    """Find the episodes of a unit in the stored figures; the whole record is looked at.
-
-    Parameters
-    ----------
-    view : Snapshot
-        With figures and cells of the same pass.
-    unit : Unit
-        Gives the watches.
-
-    Returns
-    -------
-    DataFrame
-        As `drift.unit_episodes` gives it.
-    """
-    frames = {}
-    for window in sorted({watch.window for watch in unit.watches}):
-        watched = [watch for watch in unit.watches if watch.window == window]
-        names = [BAR.join((w.figure, MODES[w.steady], f)) for w in watched for f in ("value", "half_width")]
-        table = view.read(unit.key, figure_stage(window), columns=["end", *dict.fromkeys(names)])
-        frames[window] = unflat(table.to_pandas(ignore_metadata=True).set_index("end"))
-    return unit_episodes(unit, frames, _operating(view, unit))
-
-
-def _operating(view: Snapshot, unit: Unit) -> NDArray[np.int8]:
-    """Give the operating condition of the cell that ends with each row of figures."""
-    table = view.read(unit.key, "cells", columns=["start", "operating"])
-    step_us = figure_step(unit) // MICROSECOND
-    with_row = (times_us(table) + unit.cell // MICROSECOND) % step_us == 0
-    codes: NDArray[np.int8] = plain(single(table.column("operating")), np.int8)
-    return np.asarray(codes[with_row])
-
-
 def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
     """Bring a unit's episodes up to date and tell what became of it."""
-    view = pass_.view()
-    if view.months(unit.key, "cells"):
-        pass_.replace_episodes(unit.key, episodes_of(view, unit))
+    bring_up(pass_, unit, worked.since_us)
     episodes = pass_.view().episodes(unit.key)
     return UnitResult(
         unit=unit.key,

@@ -12,85 +12,31 @@ import pandas as pd
 import pytest
 
 from demo_data import exports as demo
-from ingest.archive import SITE, STAGE
+from ingest.archive import SITE
 from ingest.cells import DOWN, STARTING, cells_from_frame
 from ingest.errors import UnitFileError
 from ingest.ledger import Store
-from ingest.readings import Series, by_month, join, write_month
 from ingest.unit import Unit, Watch
 from ingest.unitfile import load
 from monitor.amounts import amounts_of
-from monitor.catchup import Worked, catch_up
 from monitor.days import plan_of
 from monitor.drift import unit_episodes
 from monitor.layout import figure_stage, unflat
 from monitor.run import PassResult, run_pass
 from monitor.windows import MODES, window_figures
-from tests.units_made import DAY, HOUR, MINUTE, made_unit
-
-FIRST = int(pd.Timestamp("2026-01-20T00:00Z").timestamp()) * 1_000_000
-DAYS = 75  # January to April, so that two whole months lie inside
-MONTH_END = int(pd.Timestamp("2026-03-01T00:00Z").timestamp()) * 1_000_000
-
-
-def told_nobody(what: str, done: int, total: int) -> None:
-    assert 0 <= done <= total, what
-
-
-def unit_made(**changes: object) -> Unit:
-    usual = {"cell": timedelta(hours=1), "windows": (timedelta(hours=8), timedelta(days=7))}
-    return made_unit(**{**usual, **changes})
-
-
-def readings_made(unit: Unit) -> dict[str, Series]:
-    """A signal for each tag over DAYS; down for a day in every ten, and over the end of February."""
-    found = {}
-    for number, one in enumerate(i for i in unit.instruments if i.tag):
-        step = 5 * MINUTE if one.analyzer is None else one.cycle // timedelta(microseconds=1)
-        time = np.arange(FIRST, FIRST + DAYS * DAY, step, dtype=np.int64)
-        noise = np.random.default_rng(number).standard_normal(len(time))
-        value = 49 + 0.3 * noise
-        if one.analyzer is None:
-            down = (time // DAY % 10 == 7) | (np.abs(time - MONTH_END + 30 * MINUTE) < 3 * HOUR)
-            value = np.where(down, 1.0, 100 + noise)
-        count = len(time)
-        found[one.tag or ""] = Series(
-            time, value, np.full(count, 2, np.int8), np.ones(count, np.int32), np.arange(count)
-        )
-    return found
-
-
-def cut(readings: dict[str, Series], first: int, last: int) -> dict[str, Series]:
-    return {tag: s.take(slice(*np.searchsorted(s.time, [first, last]))) for tag, s in readings.items()}
-
-
-def arrive(folder: Path, unit: Unit, readings: dict[str, Series]) -> Worked:
-    """Put readings into the archive of a store and catch up, as a pass does after its intake."""
-    with Store(folder).begin() as pass_:
-        before = pass_.view()
-        for month, new in by_month(readings).items():
-            part = before.parts.get((SITE, STAGE, month))
-            held = stored_readings(folder / part.file) if part else {}
-            whole = {tag: join([held[tag], s] if tag in held else [s])[0] for tag, s in new.items()}
-            whole = {**held, **whole}
-            pass_.write_file(
-                SITE, STAGE, month, rows=1, size=0, fill=lambda path, whole=whole: write_month(path, whole)
-            )
-        edges = [(int(s.time[0]), int(s.time[-1]) + 1) for s in readings.values()]
-        span = min(first for first, _ in edges), max(last for _, last in edges)
-        return catch_up(pass_, before, plan_of(unit), [span], told_nobody)
-
-
-def stored_readings(path: Path) -> dict[str, Series]:
-    from ingest.readings import read_months
-
-    return read_months([path], ["FI-1.PV", "AI-2 n-butane.PV", "AI-2 isobutane.PV"], -(2**62), 2**62)
-
-
-def derived(folder: Path) -> dict[tuple[str, str, str], str]:
-    """What was worked out of the readings: the hash of every part."""
-    parts = Store(folder).snapshot().parts
-    return {key: part.sha256 for key, part in parts.items() if key[0] != SITE}
+from tests.passes_made import (
+    DAYS,
+    FIRST,
+    MONTH_END,
+    arrive,
+    cut,
+    derived,
+    otherwise,
+    readings_made,
+    told_nobody,
+    unit_made,
+)
+from tests.units_made import DAY, HOUR
 
 
 def stored_figures(folder: Path, unit: Unit, window: timedelta) -> pd.DataFrame:
@@ -133,12 +79,6 @@ def test_a_gap_of_months_that_is_filled_later_leaves_no_trace(whole: Path, tmp_p
     assert Store(tmp_path).snapshot().months(unit.key, "cells") == ["2026-01", "2026-04"]
     arrive(tmp_path, unit, cut(readings, february, april))
     assert derived(tmp_path) == derived(whole)
-
-
-def otherwise(readings: dict[str, Series], first: int, last: int) -> dict[str, Series]:
-    """The readings of a span, the flow half a percent higher than it was."""
-    found = cut(readings, first, last)
-    return {**found, "FI-1.PV": replace(found["FI-1.PV"], value=1.005 * found["FI-1.PV"].value)}
 
 
 def test_one_late_reading_recomputes_its_month_and_no_other(whole: Path, tmp_path: Path):
@@ -229,7 +169,7 @@ def test_a_window_taken_out_of_the_unit_file_leaves_the_store(tmp_path: Path):
     arrive(tmp_path, unit, readings)
     arrive(tmp_path, replace(unit, windows=(timedelta(hours=8),)), readings)
     stages = {stage for owner, stage, _ in Store(tmp_path).snapshot().parts if owner == unit.key}
-    assert stages == {"cells", "states", "figures-8h", "plan"}
+    assert stages == {"cells", "states", "figures-8h", "plan", "watches"}
 
 
 def test_a_watch_on_a_figure_that_is_not_there_is_told_before_any_work():
