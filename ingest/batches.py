@@ -26,7 +26,7 @@ from ingest.asides import of_heading
 from ingest.columns import coded
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
-from ingest.lines import Block
+from ingest.lines import LONGEST_NAME, Block
 from ingest.qualities import read_qualities, texts
 from ingest.readings import BAD, UNKNOWN, Readings, Series, concatenated
 from ingest.textfiles import value_columns
@@ -180,6 +180,7 @@ class Batches:
         else:
             codes, words = coded(block.columns[layout.tag])
             names = [name.strip() for name in texts(words)]
+        self._refuse_long(names, int(block.rows[0]))
         known = sorted({name for name in names if name and (self.wanted is None or name in self.wanted)})
         order = {name: place for place, name in enumerate(known)}
         table = [order.get(name, _UNASKED) if name else _NAMELESS for name in names]
@@ -192,6 +193,16 @@ class Batches:
         small = len(known) < 2**15  # 16 bits sort faster
         lookup: Places = np.array([*table, _NAMELESS], np.int16 if small else np.int32)
         return lookup[codes], known
+
+    def _refuse_long(self, names: list[str], row: int) -> None:
+        """Names are kept in the account, so that they have a greatest length."""
+        longest = max(map(len, names), default=0)
+        if longest > LONGEST_NAME:
+            raise ExportError(
+                f"{self.tally.export}:{row}: from here on a name of {longest} characters,"
+                f" more than {LONGEST_NAME}",
+                remedy="Give columns and tags shorter names.",
+            )
 
     def _leave(self, spare: list[tuple[str, int]]) -> None:
         """Count readings of tags nobody asked for."""

@@ -15,6 +15,7 @@ import pyarrow.compute as pc
 
 from ingest.columns import NOTHING, Look, is_text, matches
 from ingest.errors import ExportError
+from ingest.lines import LONGEST_NAME
 from ingest.timestamps import PATTERNS
 
 MOST_COLUMNS = 5_000
@@ -182,6 +183,12 @@ def _refuse_header(place: Place, header: Sequence[str]) -> None:
         raise ExportError(
             f"{place}: {len(header)} columns, more than {MOST_COLUMNS}",
             remedy="Export the tags of the unit file only, or in long form.",
+        )
+    longest = max(map(len, header), default=0)
+    if longest > LONGEST_NAME:
+        raise ExportError(
+            f"{place}: a name of {longest} characters, more than {LONGEST_NAME}",
+            remedy="Give columns and tags shorter names.",
         )
     twice = sorted({name for name in header if header.count(name) > 1})
     if twice:

@@ -38,6 +38,7 @@ ODD_TAGS = ("../../x", "C:\\x", "=cmd()", "two\nlines", "t" * 400)
 ASKED = ("FI-1.PV", "FI-2.PV", *ODD_TAGS)
 GOOD_ROWS = 60
 FIRST = datetime(2026, 4, 1, tzinfo=UTC)  # the good file's times are in March
+QUOTE = '"'
 HEADER = "time,FI-1.PV,FI-2.PV\n"
 
 
@@ -370,6 +371,24 @@ def _texts() -> dict[str, Broken]:
         "a field of a million characters": taken(
             "x.csv", SMALL + f"{moment(60)},{'9' * 1_000_000},1\n", 101, 1
         ),
+        "a field of a million digits in the first row": taken(
+            "x.csv", HEADER + f"{moment(60)},{'9' * 1_000_000},1\n" + rows(50), 101, 1
+        ),
+        "a field of a million digits and a letter in the first row": taken(
+            "x.csv", HEADER + f"{moment(60)},{'9' * 1_000_000}x,1\n" + rows(50), 101, 1
+        ),
+        "a million blanks in a field of the first row": taken(
+            "x.csv", HEADER + f"{moment(60)},x{' ' * 1_000_000}x,1\n" + rows(50), 101, 1
+        ),
+        "a million quotes in the first row": taken(
+            "x.csv", HEADER + f"{moment(60)},{QUOTE * 999_999},1\n" + rows(50), 100, 2
+        ),
+        "a line of a million characters above the header": taken(
+            "x.csv", "unit: " + "9 " * 500_000 + "\n" + SMALL, 100
+        ),
+        "a line of a million characters that could be a header": taken(
+            "x.csv", "time," + "9 " * 500_000 + "\n" + SMALL, 100
+        ),
         "a first line of 2 million characters": aside(
             "x.csv", "t" * 2_000_000 + "\n" + SMALL, "a line longer than"
         ),
@@ -436,6 +455,12 @@ def _tags() -> dict[str, Broken]:
         ),
         "odd tags that nobody asks for": taken(
             "x.csv", SMALL.replace("FI-1.PV", "../../../etc/x").replace("FI-2.PV", "=1+1"), 0
+        ),
+        "a tag of 10,000 characters": aside(
+            "x.csv", LONG + long_rows("t" * 10_000), "a name of 10000 characters"
+        ),
+        "a column named by 10,000 characters": aside(
+            "x.csv", SMALL.replace("FI-2.PV", "t" * 10_000), "a name of 10000 characters"
         ),
         "a tag with a line break in Parquet that nobody asks for": taken(
             "x.parquet",
