@@ -10,6 +10,7 @@ import pandas as pd
 from ingest.account import REASONS, Account
 from ingest.errors import StoreError
 from ingest.records import Export
+from monitor import wording
 
 TAKEN, IN_PART, ASIDE = "taken", "taken, some rejected", "set aside"
 SHAPES = {TAKEN: "\u25cf", IN_PART: "\u25d0", ASIDE: "\u25b2"}
@@ -170,4 +171,4 @@ def faults(account: Account) -> Iterator[tuple[str, str, tuple[str, ...]]]:
     for reason, count in account.rejections:
         what, remedy = REASONS[reason]
         rows = tuple(one.describe(account.export) for one in account.evidence if one.reason == reason)
-        yield f"{count:,} rejected: the row or cell {what}", remedy, rows
+        yield f"{wording.number(count, 0)} rejected: the row or cell {what}", remedy, rows

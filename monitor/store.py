@@ -13,7 +13,9 @@ from ingest.balance import problem_of
 from ingest.cells import RUNNING, Cells, cells_from_frame
 from ingest.errors import StoreError
 from ingest.ledger import Store
+from ingest.records import Export
 from ingest.unit import Unit
+from monitor import deliveries
 from monitor.amounts import amounts_of
 from monitor.axes import microseconds
 from monitor.figures import figures_of
@@ -331,6 +333,41 @@ def episodes(folder: Path, unit: str) -> pd.DataFrame:
     numbers = {name: pd.Series(dtype=float) for name in ("limit", "worst")}
     times = {name: pd.Series(dtype="datetime64[us, UTC]") for name in EPISODE_TIMES}
     return pd.DataFrame({**words, **numbers, **times, "suppressed": pd.Series(dtype=bool)})
+
+
+def exports(folder: Path) -> pd.DataFrame:
+    """Give all exports taken in or set aside.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+
+    Returns
+    -------
+    DataFrame
+        As `deliveries.table` gives it, newest first.
+    """
+    return deliveries.table(Store(folder).exports())
+
+
+def entries(folder: Path, numbers: Sequence[int]) -> list[Export]:
+    """Give some exports with all that the ledger holds of them.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    numbers : sequence of int
+        Of the exports.
+
+    Returns
+    -------
+    list of Export
+        In the order of the numbers.
+    """
+    known = {one.number: one for one in Store(folder).exports()}
+    return [known[number] for number in numbers]
 
 
 def last_export(folder: Path) -> datetime | None:

@@ -59,7 +59,7 @@ def as_rows(frame: pd.DataFrame) -> list[dict[Any, Any]]:
 def _cells(row: dict[Any, Any]) -> list[str]:
     """One export as the cells of its line."""
     moment = wording.local_time(row["taken_at"].to_pydatetime(), "UTC")
-    counts = (f"{row[name]:,}" for name in COLUMNS)
+    counts = (_number(row[name]) for name in COLUMNS)
     return [str(row["number"]), moment, row["status"], *counts, row["name"]]
 
 
@@ -82,21 +82,23 @@ def told(export: Export) -> Iterator[str]:
         One line.
     """
     moment = wording.local_time(datetime.fromisoformat(export.taken_at), "UTC")
-    yield f"{export.number} {export.name}: {deliveries.status_of(export)}, {moment}, {export.size:,} bytes"
+    size = f"{_number(export.size)} bytes"
+    yield f"{export.number} {export.name}: {deliveries.status_of(export)}, {moment}, {size}"
     account = deliveries.account_of(export)
     if account is None:
         yield from (f"  {line}" for line in export.error.splitlines())
         return
     yield from (f"  {line}" for line in export.account.get("dialect", ()))
-    places = " + ".join(f"{count:,} {words}" for count, words in deliveries.sum_of(account))
-    yield f"  {account.rows:,} rows; {account.readings:,} readings = {places}"
+    places = " + ".join(f"{_number(count)} {words}" for count, words in deliveries.sum_of(account))
+    yield f"  {_number(account.rows)} rows; {_number(account.readings)} readings = {places}"
     if account.bad or account.unknown:
-        yield f"  as read: {account.bad:,} of bad quality, {account.unknown:,} without a stated quality"
+        unknown = f"{_number(account.unknown)} without a stated quality"
+        yield f"  as read: {_number(account.bad)} of bad quality, {unknown}"
     for what, remedy, rows in deliveries.faults(account):
         yield f"  {what}. {remedy}"
         yield from (f"    {row}" for row in rows)
     for tag, count in account.unasked_tags:
-        yield f"  not asked for: {tag or 'a column without name'}, {count:,} readings"
+        yield f"  not asked for: {tag or 'a column without name'}, {_number(count)} readings"
 
 
 def as_table(export: Export) -> dict[str, Any]:
@@ -149,7 +151,7 @@ def in_one_line(result: PassResult, now: datetime, zone: str) -> str:
     accounts = [one.account for one in result.exports if one.account]
     taken = f" ({_readings(sum(one.accepted for one in accounts))} accepted" if accounts else ""
     rejected = sum(one.rejected for one in accounts)
-    taken += (f", {rejected:,} rejected)" if rejected else ")") if taken else ""
+    taken += (f", {_number(rejected)} rejected)" if rejected else ")") if taken else ""
     units = (f"{one.unit}: {_worked(one)}" for one in result.units)
     return "; ".join([f"{wording.local_time(now, zone)}  pass {result.number}: {files}{taken}", *units])
 
@@ -157,8 +159,12 @@ def in_one_line(result: PassResult, now: datetime, zone: str) -> str:
 def _worked(one: UnitResult) -> str:
     """What a pass did for one unit."""
     still = sum(episode.cleared is None for episode in one.episodes)
-    return f"{one.cells:,} cells, {still or 'no'} episode{'s' if still > 1 else ''} open"
+    return f"{_number(one.cells)} cells, {still or 'no'} episode{'s' if still > 1 else ''} open"
 
 
 def _readings(count: int) -> str:
-    return f"{count:,} reading" if count == 1 else f"{count:,} readings"
+    return f"{_number(count)} reading" if count == 1 else f"{_number(count)} readings"
+
+
+def _number(count: int) -> str:
+    return wording.number(count, 0)

@@ -17,6 +17,7 @@ import streamlit as st
 
 from ingest.cells import OPERATING
 from ingest.instruments import balance_instruments
+from ingest.records import Export
 from ingest.unit import Unit
 from ingest.unitfile import load
 from monitor import board, store, witnesses
@@ -276,6 +277,35 @@ def episodes(unit: Unit) -> Frame:
         One row per episode; times tz-aware UTC, `cleared` NaT while open.
     """
     found: Frame = _now("episodes", unit.key)
+    return found
+
+
+def exports() -> Frame:
+    """Give all exports taken in or set aside.
+
+    Returns
+    -------
+    DataFrame
+        As `deliveries.table` gives it, newest first.
+    """
+    found: Frame = _now("exports")
+    return found
+
+
+def entries(numbers: tuple[int, ...]) -> list[Export]:
+    """Give some exports with their whole accounts.
+
+    Parameters
+    ----------
+    numbers : tuple of int
+        Of the exports.
+
+    Returns
+    -------
+    list of Export
+        In the order of the numbers.
+    """
+    found: list[Export] = _now("entries", numbers)
     return found
 
 

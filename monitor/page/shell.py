@@ -96,6 +96,25 @@ color:var(--o-quiet);max-width:75rem}
 .o .foot p{font-size:.85rem}
 .o .empty{border-left:4px solid var(--o-grid);padding:.5rem 1rem;margin:1rem 0;max-width:50rem}
 .o code{font-size:.9em}
+.o h3{font-size:.95rem;font-weight:600;margin:.5rem 0 .15rem;padding:0;letter-spacing:0}
+.o .exports{border-top:1px solid var(--o-grid)}
+.o details{border-bottom:1px solid var(--o-grid)}
+.o summary{display:grid;grid-template-columns:.8rem 12.5rem minmax(9rem,22rem) 10.5rem minmax(12rem,1fr);
+gap:0 1rem;padding:.3rem 0;cursor:pointer;align-items:baseline}
+.o summary::before{content:"\u25b8";color:var(--o-quiet);font-size:1.2em;line-height:1}
+.o details[open]>summary::before{content:"\u25be"}
+.o summary .name{font-weight:600;overflow-wrap:anywhere}
+.o summary .sum{font-size:.95rem}
+.o .some{font-weight:600}
+.o details>div{padding:0 0 .8rem 1.8rem}
+.o .account{display:flex;flex-wrap:wrap;gap:.2rem 3rem;align-items:flex-start}
+.o .account>div{max-width:44rem}
+.o table.sums{width:auto}
+.o .sums td{text-align:right}
+.o .sums .total td,.o .sums .total th{border-top:1px solid var(--o-quiet);color:var(--o-text)}
+.o .row{font-size:.9rem;padding-left:.9rem;border-left:4px solid var(--o-grid);overflow-wrap:anywhere}
+@media (max-width:900px){.o summary{grid-template-columns:.8rem 1fr}.o summary span{grid-column:2}
+.o details>div{padding-left:1.8rem}}
 .stMultiSelect [data-testid=stMultiSelectTagsContainer] [data-tag]{background-color:var(--o-tag);color:#fff}
 @media print{.stAppHeader,.stPopover,[data-testid=stPageLink]{display:none}}
 """
@@ -219,7 +238,8 @@ def nothing_yet() -> None:
     """Say that the store is empty, and how to fill it."""
     empty(
         "Nothing has been taken in yet.",
-        "Run `outlet run` on the folder of exports: the figures appear here within half a minute.",
+        "Run `outlet run` on the folder of exports, or leave `outlet follow` running: the figures appear "
+        "here within half a minute. What could not be read is told under Intake.",
     )
 
 
