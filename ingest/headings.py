@@ -12,7 +12,7 @@ from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 
 from ingest.errors import ExportError
-from ingest.layouts import roles
+from ingest.layouts import Layout, roles
 from ingest.values import MISSING_WORDS
 
 SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
@@ -20,7 +20,7 @@ SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
 _MOST_BELOW = 3  # rows of descriptions and units
 TIME_LIKE = re.compile(r"\d{1,4}[-/.]\d{1,2}[-/.]\d{2,4}|\d:\d{2}")
 _NUMBER = re.compile(r"[+\-\u2212]?[\d.,' ]*\d[\d.,' ]*([eE][+-]?\d+)?")
-_UNITS = re.compile(r"(eng(ineering|\.)? ?)?units?|uom|eu|einheit(en)?", re.IGNORECASE)
+_UNITS = re.compile(r"(?:(?:eng(?:ineering|\.)? ?)?units?|uom|eu|einheit(?:en)?)", re.IGNORECASE)
 # What engineering units look like; only to tell a row of units from one of descriptions.
 _UNIT = re.compile(
     r"(mol|vol|wt|mass|m|v|w)?[ .-]*%.*|pp[mb].*|.{1,12}/ ?(h|hr|hour|s|sec|min|d|day|m3|k?g|k?mol|mol|l)"
@@ -38,16 +38,49 @@ class NamesRow:
     cells: tuple[str, ...]
 
 
+_UNIT_LINE = re.compile(
+    rf"""^["\s\#*/]*{_UNITS.pattern}"?\s*[:=,;|\t]["\s:=,;|]*(.+?)["\s,;|]*$""", re.IGNORECASE
+)
+_BRACKETED = re.compile(r"(.+?)\s*[(\[]([^()\[\]]+)[)\]]")
+
+
 @dataclass(frozen=True, slots=True)
 class Heading:
     """The head of a text export; `row` is the number of the header line, `last` of its last line."""
 
     separator: str
-    header: tuple[str, ...]
+    header: tuple[str, ...]  # tags without the units that stand in brackets behind them
     row: int
     last: int
     above: tuple[tuple[int, str], ...]  # lines that are not blank, with their numbers
     below: tuple[NamesRow, ...]
+    bracketed: tuple[tuple[str, str], ...]  # tag, unit
+
+    def units(self, layout: Layout) -> tuple[int, dict[str, str]]:
+        """Find the units that are written for the tags.
+
+        Parameters
+        ----------
+        layout : Layout
+            Which columns hold what.
+
+        Returns
+        -------
+        int
+            The row they stand in.
+        dict of str to str
+            Tag to unit as written; a column of tags takes none.
+        """
+        for one in self.below:
+            if one.kind == "units" and layout.only is not None and layout.value is not None:
+                return one.row, {layout.only: one.cells[layout.value]}
+            if one.kind == "units" and layout.value is None:
+                apart = (layout.time, *layout.others)
+                return one.row, {name: one.cells[i] for i, name in enumerate(self.header) if i not in apart}
+        for row, text in self.above if layout.only is not None else ():
+            if found := _UNIT_LINE.match(text):
+                return row, {layout.only or "": found[1]}
+        return self.row, dict(self.bracketed)
 
 
 def decide_heading(export: str, lines: Sequence[tuple[int, str]], wanted: Collection[str]) -> Heading:
@@ -69,9 +102,13 @@ def decide_heading(export: str, lines: Sequence[tuple[int, str]], wanted: Collec
     at = _header_place([text for _, text in lines], wanted)
     row = lines[at][0]
     separator = decide_separator(export, [text for _, text in lines[at:]], row)
-    header = tuple(fields(lines[at][1], separator))
-    below = _below(header, [(n, fields(text, separator)) for n, text in lines[at + 1 :]], wanted)
-    return Heading(separator, header, row, below[-1].row if below else row, tuple(lines[:at]), below)
+    cells = fields(lines[at][1], separator)
+    split = [_BRACKETED.fullmatch(cell) if cell not in wanted else None for cell in cells]
+    parts = [(found[1], found[2]) if found and found[1] in wanted else None for found in split]
+    header = tuple(part[0] if part else cell for part, cell in zip(parts, cells, strict=True))
+    below = _below(header, [(n, fields(text, separator)) for n, text in lines[at + 1 :]])
+    last = below[-1].row if below else row
+    return Heading(separator, header, row, last, tuple(lines[:at]), below, tuple(filter(None, parts)))
 
 
 def _header_place(lines: Sequence[str], wanted: Collection[str]) -> int:
@@ -93,7 +130,8 @@ def _likeness(row: Sequence[str], wanted: Collection[str]) -> tuple[int, int, in
     timed = bool(named["time"])
     if any(TIME_LIKE.search(cell) for cell in row) or (not timed and any(map(_NUMBER.fullmatch, row))):
         return -1, 0, 0
-    known = sum(map(len, named.values())) + sum(cell in wanted for cell in row)
+    tags = (cell in wanted or _BRACKETED.sub(r"\1", cell) in wanted for cell in row)
+    known = sum(map(len, named.values())) + sum(tags)
     return int(timed), known, 0 if timed else sum(map(bool, row))
 
 
@@ -161,11 +199,9 @@ def fields(line: str, separator: str) -> list[str]:
         return [line]
 
 
-def _below(
-    header: Sequence[str], lines: Sequence[tuple[int, list[str]]], wanted: Collection[str]
-) -> tuple[NamesRow, ...]:
+def _below(header: Sequence[str], lines: Sequence[tuple[int, list[str]]]) -> tuple[NamesRow, ...]:
     """Rows of descriptions and units that follow the header."""
-    named = roles(header, wanted)
+    named = roles(header, ())
     beside = {i for role in ("time", "tag", "quality") for i in named[role]}
     found: list[NamesRow] = []
     for row, cells in lines[:_MOST_BELOW]:

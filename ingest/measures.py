@@ -130,7 +130,7 @@ def _conversion(place: str, tag: str, written: str, one: Stated) -> Conversion |
     raise ExportError(
         f"{place} [{tag}]: {written!r} cannot be converted to {one.unit!r}, the unit of {one.instrument}"
         f" ({one.kind})",
-        remedy=f"State the unit of the export at {one.instrument} in the unit file, or mend it in the export.",
+        remedy=f"State the unit of the export at {one.instrument} in the unit file, or mend the export.",
     )
 
 

@@ -22,7 +22,7 @@ from ingest.errors import ExportError
 from ingest.headings import Heading, decide_heading
 from ingest.layouts import Layout, Place, decide_layout
 from ingest.lines import BLOCK, Block, Lines, blocks, opened, screened, wrong_columns
-from ingest.measures import Conversion, Stated, conversions
+from ingest.measures import Stated, conversions
 from ingest.qualities import decide_quality
 from ingest.timestamps import EARLIEST_US, EPOCHS, LATEST_US
 from ingest.unit import ExportRules
@@ -187,25 +187,10 @@ def open_text(
     clock = decide_clock(path.name, heading.row, time, look, zone=zone, rules=rules)
     numbers = decide_numbers(path.name, value_columns(header, layout, wanted), file.look, rules)
     quality = decide_quality(path.name, layout.quality, file.look, rules)
-    converted = _conversions(path.name, heading, layout, units)
+    row, written = heading.units(layout)
+    converted = conversions(f"{path.name}:{row}", written, units)
     decided = (encoding, file.separator, header, heading.row)
     return file, Dialect(*decided, layout, clock, numbers, quality, converted, heading)
-
-
-def _conversions(
-    export: str, heading: Heading, layout: Layout, units: Mapping[str, tuple[Stated, ...]]
-) -> tuple[Conversion, ...]:
-    """What a row of units below the header asks for; of a long export it says nothing."""
-    for row in heading.below:
-        if row.kind == "units" and layout.tag is None:
-            names = {
-                i: name for i, name in enumerate(heading.header) if i not in (layout.time, *layout.others)
-            }
-            if layout.value is not None and layout.only is not None:
-                names = {layout.value: layout.only}
-            written = {name: row.cells[i] for i, name in names.items()}
-            return conversions(f"{export}:{row.row}", written, units)
-    return ()
 
 
 def value_columns(header: Sequence[str], layout: Layout, wanted: Collection[str] | None) -> list[int]:
