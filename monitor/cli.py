@@ -11,8 +11,10 @@ import sys
 import click
 
 from ingest.errors import OutletError
+from monitor.commands.alerting import alerts
 from monitor.commands.asking import check, describe, lag, suspects
 from monitor.commands.keeping import exports, verify
+from monitor.commands.reporting import exclude, month
 from monitor.commands.running import demo, follow, page, run
 from monitor.commands.shared import FINE, STOPPED, STOPPED_WORDS, YOURS
 
@@ -63,5 +65,5 @@ def outlet() -> None:
     """
 
 
-for one in (demo, check, describe, run, follow, page, lag, suspects, exports, verify):
+for one in (demo, check, describe, run, follow, page, alerts, lag, suspects, exports, verify, month, exclude):
     outlet.add_command(one)
