@@ -1,4 +1,4 @@
-"""One truth in every dialect gives the same readings; what has two meanings is refused until one is stated."""
+"""One truth gives the same readings in every dialect; what has two meanings is refused until one is stated."""
 
 from __future__ import annotations
 
