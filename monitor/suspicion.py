@@ -169,7 +169,7 @@ def _finding(unit: Unit, problem: Problem, cells: Cells, failure: Failure) -> Fi
     window = test.residuals.take(slice(worst, worst + 1))
     first = int(np.searchsorted(cells.start, test.start[worst]))
     inside = rows(cells, slice(first, first + max(1, round(test.length / unit.cell))))
-    figures, with_all = _main_figures(unit, problem, inside)
+    figures, with_all = main_figures(unit, problem, inside)
     singles = _singles(window)
     both = [] if singles else _pairs(window)
     told = singles or both[:MOST]
@@ -239,11 +239,11 @@ def _suspect(
         right = put_right(unit, problem, right, name, size)
     return Suspect(
         parts=tuple(
-            Part(name, size, TWO_SIDED_95 * error, CHECKS[_sort(unit, name)]) for name, size, error in parts
+            Part(name, size, TWO_SIDED_95 * error, check_of(unit, name)) for name, size, error in parts
         ),
         is_likeliest=is_likeliest,
         is_plausible=_is_plausible((parts, is_likeliest)),
-        without=_main_figures(unit, problem, right)[1],
+        without=main_figures(unit, problem, right)[1],
     )
 
 
@@ -279,14 +279,37 @@ def put_right(unit: Unit, problem: Problem, cells: Cells, cause: str, size: floa
     return replace(cells, value=value)
 
 
-def _main_figures(unit: Unit, problem: Problem, cells: Cells) -> tuple[tuple[Figure, ...], tuple[float, ...]]:
-    """Give the key figures of some cells in one window, as operated; NaN where one is missing."""
+def main_figures(unit: Unit, problem: Problem, cells: Cells) -> tuple[tuple[Figure, ...], tuple[float, ...]]:
+    """Give the key figures of some cells in one window, as operated, and their values; NaN where one is missing.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor.
+    problem : Problem
+        Its balance.
+    cells : Cells
+        The window.
+    """
     _, amounts = amounts_of(unit, problem, cells)
     figures = figures_of(unit, amounts.names)
     first, last = _span(unit, cells)
     value = window_at(unit, amounts, figures, first, last)["value"]
     main = key_figures(unit, figures)
     return main, tuple(float(value[one.name, "as operated"]) for one in main)
+
+
+def check_of(unit: Unit, cause: str) -> str:
+    """Give what to check first where a cause is suspected.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reactor.
+    cause : str
+        One of `fit.causes_of`.
+    """
+    return CHECKS[_sort(unit, cause)]
 
 
 def _sort(unit: Unit, cause: str) -> str:

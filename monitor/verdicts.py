@@ -1,0 +1,184 @@
+"""The verdicts of a unit's episodes, kept with them: made once eight hours are there, and where data changed.
+
+A verdict is a pure function of the unit file, the healthy time, the window and two days before it. It is
+taken over from the last pass where none of these changed; so an old episode costs a comparison of names.
+"""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from datetime import timedelta
+from functools import lru_cache
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from ingest.balance import Problem
+from ingest.cells import Cells, cells_from_frame
+from ingest.parts import times_us
+from ingest.snapshot import Snapshot
+from ingest.unit import Unit
+from monitor.explain import LEAD, Reference, explain, picture_of
+from monitor.healthy import LENGTH, Baseline, baseline_of
+from monitor.verdict import COLUMN, as_text, read
+
+METHOD = "1"  # to be raised when the same cells give another verdict
+BEFORE = timedelta(days=30)  # healthy time where none is stated: so much before the episode
+APART = timedelta(days=1)  # left out between that and the onset
+_US = timedelta(microseconds=1)
+
+Span = tuple[int, int]
+
+
+@dataclass(frozen=True, slots=True)
+class _Window:
+    """What a verdict rests on [us UTC]: the window, the healthy time, and whether more is still to come."""
+
+    span: Span
+    healthy: Span
+    is_provisional: bool
+
+
+def with_verdicts(
+    before: Snapshot, view: Snapshot, unit: Unit, problem: Problem, episodes: pd.DataFrame
+) -> pd.DataFrame:
+    """Give the episodes of a unit with their verdicts.
+
+    Parameters
+    ----------
+    before : Snapshot
+        The store as the last pass left it.
+    view : Snapshot
+        The store with the cells of this pass.
+    unit : Unit
+        The reactor.
+    problem : Problem
+        Its balance.
+    episodes : DataFrame
+        As `drift.unit_episodes` gives them.
+
+    Returns
+    -------
+    DataFrame
+        With one more column: the verdict as text, empty where nothing of the window is there.
+    """
+    known = {_key(row): str(row.get(COLUMN, "")) for row in before.episodes(unit.key).to_dict("records")}
+    end_us = _end_us(view, unit)
+    refer = lru_cache(maxsize=4)(lambda span: _reference(view, unit, problem, span))
+    told = []
+    for row in episodes.to_dict("records"):
+        window = _window(unit, row, end_us)
+        mark = _mark(unit, window)
+        old = read({COLUMN: known.get(_key(row), "")})
+        if old is not None and old.mark == mark and _same(before, view, unit, window):
+            told.append(known[_key(row)])
+        else:
+            told.append(_verdict(view, unit, problem, window, refer))
+    return episodes.assign(**{COLUMN: pd.Series(told, index=episodes.index, dtype="str")})
+
+
+def _key(row: Mapping[Any, Any]) -> tuple[str, str, str]:
+    return str(row["watch"]), str(row["side"]), str(row["raised"])
+
+
+def _end_us(view: Snapshot, unit: Unit) -> int:
+    """Give the end of the record [us UTC]."""
+    months = view.months(unit.key, "cells")
+    starts = times_us(view.read(unit.key, "cells", first=_instant(months[-1]), columns=["start"]))
+    return int(starts[-1]) + unit.cell // _US
+
+
+def _instant(month: str) -> int:
+    return int(np.datetime64(month, "us").astype(np.int64))
+
+
+def _window(unit: Unit, row: Mapping[Any, Any], end_us: int) -> _Window:
+    """Give the eight hours after the onset; less of them where the record or the episode ends before."""
+    onset = row.get("onset")
+    since = row["first_crossed"] if onset is None or pd.isna(onset) else onset
+    wanted = _us(since) + LENGTH // _US
+    until = min(wanted, end_us, end_us if pd.isna(row["cleared"]) else _us(row["cleared"]))
+    until = max(until, _us(row["raised"]))
+    cell = unit.cell // _US
+    until = until // cell * cell
+    healthy = (_us(since) - (BEFORE + APART) // _US, _us(since) - APART // _US)
+    if unit.healthy:
+        healthy = (_us(unit.healthy.first), _us(unit.healthy.last))
+    return _Window((until - LENGTH // _US, until), healthy, bool(end_us < wanted and pd.isna(row["cleared"])))
+
+
+def _us(moment: Any) -> int:
+    return round(float(moment.timestamp()) * 1e6)
+
+
+def _mark(unit: Unit, window: _Window) -> str:
+    """Tell in one word what a verdict is made with, but for the data."""
+    return hashlib.sha256(f"{METHOD} {unit!r} {window!r}".encode()).hexdigest()[:16]
+
+
+def _same(before: Snapshot, view: Snapshot, unit: Unit, window: _Window) -> bool:
+    """Tell whether the cells of a window, of the time before and of its healthy time are what they were."""
+    return all(
+        before.paths(unit.key, "cells", first=first, last=last)
+        == view.paths(unit.key, "cells", first=first, last=last)
+        or before.read(unit.key, "cells", first=first, last=last).equals(
+            view.read(unit.key, "cells", first=first, last=last)
+        )
+        for first, last in (_with_lead(window), window.healthy)
+    )
+
+
+def _with_lead(window: _Window) -> Span:
+    return window.span[0] - LEAD // _US, window.span[1]
+
+
+def _cells(view: Snapshot, unit: Unit, span: Span) -> Cells | None:
+    """Read cells; None where there are none, or not all up to the end follow one another."""
+    table = view.read(unit.key, "cells", first=span[0], last=span[1])
+    if not table.num_rows:
+        return None
+    cells = cells_from_frame(unit, table.to_pandas(ignore_metadata=True).set_index("start"))
+    holes = np.flatnonzero(np.diff(cells.start) > unit.cell // _US)
+    since = int(holes[-1]) + 1 if len(holes) else 0
+    return Cells(*(getattr(cells, name)[since:] for name in Cells.__slots__))
+
+
+def _reference(view: Snapshot, unit: Unit, problem: Problem, span: Span) -> Reference:
+    """Make the healthy time ready; what is learnt of it is learnt when it is first asked for."""
+    cells = _cells(view, unit, span)
+    if cells is None:
+        return Reference((), unit.healthy is not None, None, lambda there: None)
+    found = cells
+
+    @lru_cache(maxsize=8)
+    def learn(there: bytes) -> Baseline | None:
+        return baseline_of(unit, problem, found, np.frombuffer(there, dtype=bool))
+
+    held = (int(found.start[0]), int(found.start[-1]) + unit.cell // _US)
+    return Reference(held, unit.healthy is not None, picture_of(unit, problem, found), learn)
+
+
+def _verdict(
+    view: Snapshot,
+    unit: Unit,
+    problem: Problem,
+    window: _Window,
+    refer: Callable[[Span], Reference],
+) -> str:
+    cells = _cells(view, unit, _with_lead(window))
+    if cells is None or cells.start[-1] < window.span[0]:
+        return ""
+    first = max(window.span[0], int(cells.start[0]))
+    found = explain(
+        unit,
+        problem,
+        refer(window.healthy),
+        cells,
+        first,
+        is_provisional=window.is_provisional,
+        mark=_mark(unit, window),
+    )
+    return as_text(found)
