@@ -1,0 +1,360 @@
+"""One unit over one span, from the store to the summary: the only place of it that reads."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Mapping
+from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+
+from ingest import journal
+from ingest.archive import SITE, STAGE
+from ingest.balance import Problem, problem_of
+from ingest.cells import look_back, reach
+from ingest.errors import StoreError
+from ingest.journal import Line
+from ingest.ledger import Store
+from ingest.readings import read_months
+from ingest.snapshot import Snapshot
+from ingest.unit import Unit
+from monitor import store, wording
+from monitor.amounts import amount_names
+from monitor.figures import Figure, figures_of
+from monitor.summary import comparisons, exclusions, results, span, terms, tonnes, witness
+from monitor.summary.charge import Charge, charge_of
+from monitor.summary.comparisons import level_of
+from monitor.summary.differences import Level
+from monitor.summary.record import Record, read
+from monitor.summary.span import Part, Span
+from monitor.summary.table import Summary, settled
+from monitor.windows import MODES
+
+NOTES = ("note", "shift note")
+_US = timedelta(microseconds=1)
+
+
+@dataclass(frozen=True, slots=True)
+class Stamp:
+    """Who prepares a summary and with what: name, hash of the unit file, version of the program."""
+
+    prepared_by: str
+    unit_file: str
+    program: str
+
+
+@dataclass(frozen=True, slots=True)
+class _Job:
+    """What all tables of one summary share."""
+
+    unit: Unit
+    problem: Problem
+    figures: tuple[Figure, ...]  # as stored
+    shown: tuple[Figure, ...]  # with raw routes beside selectivity, and the load
+    rates: tuple[Figure, ...]  # what is counted in tonnes
+    span: Span
+    parts: tuple[Part, ...]
+    snapshot: Snapshot
+    lines: tuple[Line, ...]
+
+
+def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
+    """Make the summary of one unit over one span.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    asked : Span
+    stamp : Stamp
+
+    Returns
+    -------
+    Summary
+        A draft: its revision is 0.
+
+    Raises
+    ------
+    StoreError
+        The store holds nothing of the span.
+    UnitFileError
+        Budget or guarantee names a figure that the readings do not give.
+    """
+    job = _job(folder, unit, asked)
+    left_out = exclusions.on_word(job.lines, asked)
+    record = _record(job, asked, left_out)
+    if record is None:
+        raise StoreError(
+            f"{folder}: holds no cells of {unit.key} in {asked.name}",
+            remedy=f"Take exports of it in: outlet run --unit {unit.key}.toml --store {folder} EXPORT...",
+        )
+    made = tonnes.made_of(unit, asked, job.parts, record, job.rates)
+    days = results.by_day(unit, asked, record, job.shown)
+    figures = pd.concat(
+        [results.of_part(unit, asked, record, job.shown, part=part, days=days) for part in job.parts],
+        ignore_index=True,
+    )
+    charge = _charges(job)
+    episodes = store.episodes(folder, unit.key)
+    until = wording.utc(int(record.cells.start[-1])) + unit.cell
+    tables = {
+        "identity": _identity(job, stamp, until),
+        "hours": _hours(job, record, made, figures, left_out),
+        "tonnes": _tonnes(job, made),
+        "figures": figures,
+        "comparisons": _comparisons(job, record, charge),
+        "catalyst": _catalyst(job, charge),
+        "days": _days(job, made, days),
+        "figures by day": _by_day(job, days),
+        "balances": witness.balances(unit, asked, record, job.shown, days),
+        "instruments": witness.instruments(unit, job.problem, record),
+        "alerts": witness.alerts(episodes, job.lines, asked, pd.Timestamp(until)),
+        "exclusions": pd.concat([exclusions.by_condition(unit, record.cells), left_out], ignore_index=True),
+        "words": _words(job),
+        "definitions": terms.definitions(job.shown, made.decimals),
+    }
+    return Summary(
+        unit=unit.key,
+        unit_name=unit.name,
+        span=asked.key,
+        span_name=asked.name,
+        decimals=made.decimals,
+        revision=0,
+        tables={name: settled(_in_plant_time(frame, unit.time_zone)) for name, frame in tables.items()},
+    )
+
+
+def _job(folder: Path, unit: Unit, asked: Span) -> _Job:
+    figures = figures_of(unit, amount_names(unit))
+    return _Job(
+        unit=unit,
+        problem=problem_of(unit),
+        figures=figures,
+        shown=_shown(unit, figures),
+        rates=tonnes.rates_of(unit, figures),
+        span=asked,
+        parts=span.parts_of(unit, asked),
+        snapshot=Store(folder).snapshot(),
+        lines=journal.lines(folder, unit=unit.key),
+    )
+
+
+def _shown(unit: Unit, figures: tuple[Figure, ...]) -> tuple[Figure, ...]:
+    """Put the raw routes behind the selectivity that they belong to, and the load at the end."""
+    at = next((place for place, one in enumerate(figures) if one.name == results.SELECTIVITY), -1) + 1
+    load = tonnes.rates_of(unit, figures)[:1]
+    return (*figures[:at], *results.routes_of(unit, figures), *figures[at:], *load)
+
+
+def _record(job: _Job, asked: Span, left_out: pd.DataFrame) -> Record | None:
+    edges = (wording.utc(asked.first_us), wording.utc(asked.last_us))
+    return read(job.snapshot, job.unit, job.problem, edges, left_out)
+
+
+def _charges(job: _Job) -> dict[str, Charge | None]:
+    """Sum up the charge of each part up to its end."""
+    return {
+        part.name: None
+        if part.charged is None
+        else charge_of(
+            job.snapshot, job.unit, job.problem, job.shown, (part.charged, wording.utc(part.last_us))
+        )
+        for part in job.parts
+    }
+
+
+def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]) -> pd.DataFrame:
+    """Compare every part with what lies before it and with what was stated."""
+    earlier: dict[str, Level] = {}
+    names = ("last month", "same month last year") if job.span.is_month else ("days before", "a year before")
+    for name, other in zip(names, (span.before(job.span), span.year_before(job.span)), strict=True):
+        there = _record(job, other, exclusions.on_word(job.lines, other))
+        if there is not None:
+            whole = Part(other.name, other.first_us, other.last_us, None)
+            earlier[name] = level_of(job.unit, there, job.shown, whole)
+    here = {part.name: level_of(job.unit, record, job.shown, part) for part in job.parts}
+    sources = record.amounts.systematic.shape[2]
+    targets = comparisons.targets_of(job.unit, job.shown, sources)
+    against = {}
+    for part in job.parts:
+        charge = charges[part.name]
+        since = {} if charge is None else {"since the charge": charge.level}
+        against[part.name] = earlier | since | targets
+    # What has no better side is compared by nobody, but for the load.
+    told = [one for one in job.shown if one.higher_is_better is not None or one in job.rates]
+    table = comparisons.table(job.shown, here, against)
+    return table[table["figure"].isin([one.name for one in told])]
+
+
+def _identity(job: _Job, stamp: Stamp, until: datetime) -> pd.DataFrame:
+    zone = job.unit.time_zone
+    digest, count = _readings(job)
+    edges = [
+        _iso(pd.Timestamp(edge, unit="us", tz="UTC"), zone) for edge in (job.span.first_us, job.span.last_us)
+    ]
+    charged = [span.charge_name(part.charged, zone) for part in job.parts]
+    items = {
+        "unit": job.unit.name,
+        "unit file": job.unit.key,
+        "span": job.span.name,
+        "from": edges[0],
+        "to": edges[1],
+        "time zone": zone,
+        "catalyst": ", ".join(dict.fromkeys(charged)),
+        "record until": _iso(pd.Timestamp(until), zone),
+        "prepared by": stamp.prepared_by,
+        "program": f"outlet {stamp.program}",
+        "unit file sha256": stamp.unit_file,
+        "readings": f"{count}",
+        "readings sha256": digest,
+    }
+    return pd.DataFrame({"item": list(items), "text": list(items.values())})
+
+
+def _readings(job: _Job) -> tuple[str, int]:
+    """Hash the readings that the cells of the span were made of; how many there are."""
+    first = job.span.first_us - look_back(job.unit) // _US
+    last = job.span.last_us + reach(job.unit) // _US
+    tags = sorted(one.tag for one in job.unit.instruments if one.tag is not None)
+    found = read_months(job.snapshot.paths(SITE, STAGE, first=first, last=last), tags, first, last)
+    digest, count = hashlib.sha256(), 0
+    for tag in tags:
+        if tag in found:
+            series = found[tag]
+            digest.update(f"{tag}\n{len(series.time)}\n".encode())
+            for part in (series.time, series.value, series.quality):
+                digest.update(np.ascontiguousarray(part).tobytes())
+            count += len(series.time)
+    return digest.hexdigest(), count
+
+
+def _hours(
+    job: _Job, record: Record, made: tonnes.Made, figures: pd.DataFrame, left_out: pd.DataFrame
+) -> pd.DataFrame:
+    """List the hours of each part by condition, then what of the whole span was not seen or left out."""
+    columns = ["calendar [h]", *(f"{name} [h]" for name in tonnes.CONDITIONS)]
+    frames = [
+        pd.DataFrame(
+            {
+                "part": part,
+                "item": [one.removesuffix(" [h]") for one in columns],
+                "hours": row[columns].to_numpy(),
+            }
+        )
+        for part, row in made.parts.iterrows()
+    ]
+    beside = {"left out by people": float(left_out["hours"].sum())}
+    beside |= {
+        f"{name} without a usable channel": hours
+        for name, hours in witness.unavailable_h(job.unit, record).items()
+    }
+    beside["balance solved"] = float(record.solved.sum()) * job.unit.cell.total_seconds() / 3600
+    frames.append(pd.DataFrame({"part": span.WHOLE, "item": list(beside), "hours": list(beside.values())}))
+    table = pd.concat(frames, ignore_index=True)
+    calendar = table[table["item"] == "calendar"].set_index("part")["hours"]
+    table["of calendar [%]"] = 100 * table["hours"] / table["part"].map(calendar)
+    return table
+
+
+def _tonnes(job: _Job, made: tonnes.Made) -> pd.DataFrame:
+    """List tonnes by part and flow, with what was not seen."""
+    running = made.parts["calendar [h]"] - made.parts["down [h]"]
+    pieces = []
+    for part in made.parts.index:
+        seen = made.seen_h.loc[part, list(made.flows)].to_numpy(float)
+        total = made.parts.loc[part, list(made.flows)].to_numpy(float)
+        rate = total / np.where(seen > 0, seen, np.nan)
+        pieces.append(
+            pd.DataFrame(
+                {
+                    "part": part,
+                    "flow": [name.removesuffix(" [t]") for name in made.flows],
+                    "tonnes": total,
+                    "±": made.half_width.loc[part, list(made.flows)].to_numpy(float),
+                    "seen in [h]": seen,
+                    "not seen in [h]": running[part] - seen,
+                    "at the mean rate": rate * running[part],
+                }
+            )
+        )
+    return pd.concat(pieces, ignore_index=True).round({"at the mean rate": made.decimals})
+
+
+def _catalyst(job: _Job, charges: Mapping[str, Charge | None]) -> pd.DataFrame:
+    """Tell age, time on stream and tonnes of each charge up to the end of its part."""
+    zone = job.unit.time_zone
+    parts = job.parts if len(job.parts) == 1 else job.parts[:-1]
+    known = [one for one in (charges[part.name] for part in parts) if one is not None]
+    return pd.DataFrame(
+        {
+            "charge": [span.charge_name(one.charged, zone) for one in known],
+            "charged": [pd.Timestamp(one.charged) for one in known],
+            "age [d]": [one.age_days for one in known],
+            "record from": [one.record_from for one in known],
+            "on stream [h]": [one.on_stream_h for one in known],
+            f"{job.unit.wanted} made [t]": [one.made_t for one in known],
+        }
+    )
+
+
+def _days(job: _Job, made: tonnes.Made, days: pd.DataFrame) -> pd.DataFrame:
+    """List hours, tonnes and load by day."""
+    frame = made.days.copy()
+    frame.insert(0, "day", [f"{day}" for day in job.span.days])
+    if job.rates:
+        load = job.rates[0].name
+        frame[f"{load} [t/h]"] = days[load, "as operated", "value"].to_numpy()
+    return frame
+
+
+def _by_day(job: _Job, days: pd.DataFrame) -> pd.DataFrame:
+    """List every figure by day: value and half-width in both modes."""
+    columns: dict[str, object] = {"day": [f"{day}" for day in job.span.days]}
+    for mode in MODES:
+        columns[f"coverage | {mode} | %"] = 100 * days[job.shown[0].name, mode, "coverage"].to_numpy()
+    for one in job.shown:
+        for mode in MODES:
+            columns[f"{one.name} | {mode} | {one.unit}"] = days[one.name, mode, "value"].to_numpy()
+            columns[f"{one.name} | {mode} | ±"] = days[one.name, mode, "half_width"].to_numpy()
+    return pd.DataFrame(columns)
+
+
+def _words(job: _Job) -> pd.DataFrame:
+    """List what people know of the span: events of the unit file, notes of the journal."""
+    low, high = wording.utc(job.span.first_us), wording.utc(job.span.last_us)
+    rows = [
+        (pd.Timestamp(one.at).tz_convert("UTC"), one.kind, one.instrument or "", one.name, "unit file", 0)
+        for one in job.unit.events
+        if low <= one.at < high
+    ]
+    for line in job.lines:
+        at = datetime.fromisoformat(line.written).astimezone(UTC)
+        if line.act in NOTES and (low <= at < high or line.subject == job.span.key):
+            rows.append((pd.Timestamp(at), line.act, line.subject, line.note, line.who, line.number))
+    columns = ["when", "kind", "about", "text", "by", "number"]
+    frame = pd.DataFrame(rows, columns=columns).astype({"when": "datetime64[us, UTC]", "number": int})
+    return frame.sort_values(["when", "number"], kind="stable", ignore_index=True)
+
+
+def _in_plant_time(frame: pd.DataFrame, zone: str) -> pd.DataFrame:
+    """Write instants in plant time with their offset, which sorts and has one meaning everywhere."""
+    columns = {
+        str(name): [_iso(one, zone) for one in column]
+        if isinstance(column.dtype, pd.DatetimeTZDtype)
+        else column.to_numpy()
+        for name, column in frame.items()
+    }
+    return pd.DataFrame(columns)
+
+
+def _iso(moment: pd.Timestamp | None, zone: str) -> str:
+    """Write an instant in plant time; nothing for one that did not come yet."""
+    if moment is None or pd.isna(moment):
+        return ""
+    text = f"{moment.tz_convert(zone):%Y-%m-%d %H:%M %z}"
+    return f"{text[:-2]}:{text[-2:]}"

@@ -1,0 +1,152 @@
+"""What the store holds of one span, brought to amounts once more: cells without holes, states, amounts."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, fields
+from datetime import datetime
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from ingest.balance import Problem
+from ingest.cells import NOT_KNOWN, RUNNING, Cells, cells_from_frame
+from ingest.conditions import MISSING
+from ingest.reconcile import NOT_CONVERGED, SOLVED, States
+from ingest.snapshot import Snapshot
+from ingest.unit import Unit
+from monitor.amounts import Amounts, amounts_of, with_formed
+
+PIECE = 8192  # cells reconciled in one go; keeps the errors of one piece within some tens of MB
+EXCLUDED = -1  # operating condition of cells that people left out: neither down nor running
+PER_CELL = ("start", "kmol", "random", "systematic", "operating")
+
+
+@dataclass(frozen=True, slots=True)
+class Record:
+    """One span on one grid: t cells from the first to the last that the store holds, holes filled in."""
+
+    cells: Cells
+    states: States
+    amounts: Amounts
+
+    @property
+    def unsolved(self) -> NDArray[np.bool_]:
+        """Tell which cells' balance did not converge."""
+        found: NDArray[np.bool_] = self.states.status == NOT_CONVERGED
+        return found
+
+    @property
+    def solved(self) -> NDArray[np.bool_]:
+        """Tell which cells' balance was solved."""
+        found: NDArray[np.bool_] = self.states.status == SOLVED
+        return found
+
+
+def read(
+    snapshot: Snapshot, unit: Unit, problem: Problem, edges: tuple[datetime, datetime], excluded: pd.DataFrame
+) -> Record | None:
+    """Read the cells of a span and work out their amounts.
+
+    Parameters
+    ----------
+    snapshot : Snapshot
+        The store as one pass left it.
+    unit : Unit
+        One reactor.
+    problem : Problem
+        Its balance.
+    edges : tuple of datetime
+        From the first cell start to before the second, zone-aware.
+    excluded : DataFrame
+        Columns start and end: spans that people left out of the steady figures.
+
+    Returns
+    -------
+    Record or None
+        None where the store holds no cell of the span. Amounts carry EXCLUDED where a running cell starts in
+        an excluded span.
+    """
+    table = snapshot.read(unit.key, "cells", first=edges[0], last=edges[1])
+    if not table.num_rows:
+        return None
+    frame = table.to_pandas(ignore_metadata=True).set_index("start")
+    cells = filled(cells_from_frame(unit, frame), int(unit.cell.total_seconds() * 1e6))
+    states, amounts = _worked(unit, problem, cells)
+    out = inside(cells.start, excluded) & (cells.operating == RUNNING)
+    operating = np.where(out, EXCLUDED, amounts.operating).astype(np.int8)
+    return Record(cells, states, _with(amounts, operating=operating))
+
+
+def filled(cells: Cells, cell_us: int) -> Cells:
+    """Put cells on a grid without holes; what is put in is missing and of no known condition.
+
+    Parameters
+    ----------
+    cells : Cells
+        At least one, ascending.
+    cell_us : int
+        Length of a cell [us].
+
+    Returns
+    -------
+    Cells
+        The same where there were no holes.
+    """
+    count = int(cells.start[-1] - cells.start[0]) // cell_us + 1
+    if count == len(cells.start):
+        return cells
+    at = (cells.start - cells.start[0]) // cell_us
+    shape = (count, cells.value.shape[1])
+    new = Cells(
+        start=cells.start[0] + cell_us * np.arange(count),
+        value=np.full(shape, np.nan),
+        share=np.zeros(shape, np.float32),
+        condition=np.full(shape, MISSING, np.int8),
+        operating=np.full(count, NOT_KNOWN, np.int8),
+    )
+    for field in fields(Cells)[1:]:
+        getattr(new, field.name)[at] = getattr(cells, field.name)
+    return new
+
+
+def inside(start_us: NDArray[np.int64], spans: pd.DataFrame) -> NDArray[np.bool_]:
+    """Tell which instants lie in any of some spans.
+
+    Parameters
+    ----------
+    start_us : ndarray of int64, shape (t,)
+        [us UTC].
+    spans : DataFrame
+        Columns start and end, zone-aware; the end is outside.
+
+    Returns
+    -------
+    ndarray of bool, shape (t,)
+    """
+    found = np.zeros(len(start_us), dtype=bool)
+    for first, last in zip(spans["start"], spans["end"], strict=True):
+        low, high = (int(pd.Timestamp(edge).as_unit("us").value) for edge in (first, last))
+        found |= (start_us >= low) & (start_us < high)
+    return found
+
+
+def _worked(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amounts]:
+    """Bring the cells to balance, some at a time."""
+    pieces = [
+        amounts_of(unit, problem, _rows(cells, slice(at, at + PIECE)))
+        for at in range(0, len(cells.start), PIECE)
+    ]
+    states = States(
+        *(np.concatenate([getattr(one, field.name) for one, _ in pieces]) for field in fields(States))
+    )
+    joined = {name: np.concatenate([getattr(one, name) for _, one in pieces]) for name in PER_CELL}
+    return states, with_formed(unit, _with(pieces[0][1], **joined))
+
+
+def _rows(cells: Cells, which: slice) -> Cells:
+    return Cells(*(getattr(cells, field.name)[which] for field in fields(Cells)))
+
+
+def _with(amounts: Amounts, **changed: NDArray[np.generic]) -> Amounts:
+    return Amounts(**{**{f.name: getattr(amounts, f.name) for f in fields(Amounts)}, **changed})
