@@ -21,7 +21,7 @@ from ingest.ledger import Store
 from ingest.readings import read_months
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
-from monitor import store, wording
+from monitor import desk, store, wording
 from monitor.amounts import amount_names
 from monitor.figures import Figure, figures_of
 from monitor.summary import comparisons, exclusions, results, span, terms, tonnes, witness
@@ -113,7 +113,9 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
         "figures by day": _by_day(job, days),
         "balances": witness.balances(unit, asked, record, job.shown, days),
         "instruments": witness.instruments(unit, job.problem, record),
-        "alerts": witness.alerts(episodes, job.lines, asked, pd.Timestamp(until)),
+        "alerts": witness.alerts(
+            episodes, witness.closing(desk.known(folder, unit.key), job.lines), asked, pd.Timestamp(until)
+        ),
         "exclusions": pd.concat([exclusions.by_condition(unit, record.cells), left_out], ignore_index=True),
         "words": _words(job),
         "definitions": terms.definitions(job.shown, made.decimals),

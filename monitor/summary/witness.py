@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 
 import numpy as np
 import pandas as pd
@@ -12,6 +12,7 @@ from ingest.cells import DOWN
 from ingest.conditions import CONDITIONS, takes_part
 from ingest.journal import Line
 from ingest.unit import Unit
+from monitor.alerts import CLOSE, Alert
 from monitor.figures import Figure
 from monitor.summary.record import Record
 from monitor.summary.span import Span
@@ -106,7 +107,10 @@ def instruments(unit: Unit, problem: Problem, record: Record) -> pd.DataFrame:
 
 
 def alerts(
-    episodes: pd.DataFrame, lines: Iterable[Line], span: Span, known_until: pd.Timestamp
+    episodes: pd.DataFrame,
+    closed: Mapping[tuple[str, str, pd.Timestamp], Line],
+    span: Span,
+    known_until: pd.Timestamp,
 ) -> pd.DataFrame:
     """List the alerts that stood in a span, with what people made of them.
 
@@ -114,8 +118,8 @@ def alerts(
     ----------
     episodes : DataFrame
         As `store.episodes` gives them.
-    lines : iterable of Line
-        Of the unit's journal: what closes an alert names its cause.
+    closed : mapping of (str, str, Timestamp) to Line
+        By watch, side and raised: the journal's line with which a person closed an alert and named its cause.
     span : Span
     known_until : Timestamp
         End of the record; an open alert lasts until then.
@@ -128,8 +132,7 @@ def alerts(
     low, high = (pd.Timestamp(edge, unit="us", tz="UTC") for edge in (span.first_us, span.last_us))
     kept = episodes[(episodes["raised"] < high) & ~(episodes["cleared"] <= low)]
     kept = kept.sort_values(["raised", "watch", "side"], ignore_index=True)
-    closed = {line.subject: line for line in lines if line.act == "close"}
-    found = [closed.get(alert_key(row)) for row in kept.itertuples()]
+    found = [closed.get(key) for key in zip(kept["watch"], kept["side"], kept["raised"], strict=True)]
     cleared = kept["cleared"].fillna(known_until)
     begun, ended = kept["raised"].where(kept["raised"] > low, low), cleared.where(cleared < high, high)
     frame = kept[["watch", "figure", "side", "limit", "priority", "raised", "cleared", "worst", "suppressed"]]
@@ -144,19 +147,25 @@ def alerts(
     )
 
 
-def alert_key(row: object) -> str:
-    """Give the stable key of an alert, as the journal names it.
+def closing(alerts: Iterable[Alert], lines: Iterable[Line]) -> dict[tuple[str, str, pd.Timestamp], Line]:
+    """Find the lines with which people closed alerts.
 
     Parameters
     ----------
-    row : object
-        One episode: watch, side, raised.
+    alerts : iterable of Alert
+        Of the unit.
+    lines : iterable of Line
+        Of its journal; of two lines about one alert the later counts.
 
     Returns
     -------
-    str
+    dict of (str, str, Timestamp) to Line
+        By watch, side and raised.
     """
-    return f"{row.watch} {row.side} {row.raised:%Y-%m-%dT%H:%M:%SZ}"  # type: ignore[attr-defined]
+    closed = {line.subject: line for line in lines if line.act == CLOSE}
+    return {
+        (one.watch, one.side, pd.Timestamp(one.raised)): closed[one.id] for one in alerts if one.id in closed
+    }
 
 
 def _outcome(line: Line | None) -> str:
