@@ -23,7 +23,7 @@ from ingest.account import (
     Tally,
 )
 from ingest.asides import of_heading
-from ingest.columns import coded
+from ingest.columns import coded, said
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
 from ingest.lines import LONGEST_NAME, Block
@@ -248,9 +248,9 @@ class Batches:
         about = {TAG: layout.tag or 0, QUALITY: layout.quality or 0}
         at_fault = (TIME, OFFSET, YEAR, GAP)
         return lambda i, reason: (
-            layout.times({k: column[i : i + 1] for k, column in block.columns.items()})[0].as_py()
+            said(layout.times({k: column[i : i + 1] for k, column in block.columns.items()}), 0)
             if reason in at_fault
-            else block.columns[about.get(reason, value)][i].as_py()
+            else said(block.columns[about.get(reason, value)], i)
         )
 
     def _resolved(self, tag: str, series: Series) -> Series:

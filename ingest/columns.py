@@ -154,6 +154,27 @@ def is_text(kind: Any) -> bool:
     return bool(pa.types.is_string(kind) or pa.types.is_large_string(kind) or pa.types.is_string_view(kind))
 
 
+def said(column: Any, place: int) -> object:
+    """Give what stands in one place of a column.
+
+    Parameters
+    ----------
+    column : pyarrow.Array (n,)
+        Any type.
+    place : int
+        0 to n - 1.
+
+    Returns
+    -------
+    object
+        Text for a time, since Arrow's times reach further than Python's; None for null.
+    """
+    one = column.slice(place, 1)
+    if pa.types.is_timestamp(one.type):
+        one = one.cast(pa.timestamp(one.type.unit)).cast(pa.string())
+    return one[0].as_py()
+
+
 def first_match(texts: Any, pattern: str) -> tuple[int, str] | None:
     """Find the first text that matches a pattern.
 

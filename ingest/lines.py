@@ -104,7 +104,9 @@ def _expanded(raw: BinaryIO, suffix: str) -> AbstractContextManager[BinaryIO]:
     return nullcontext(raw)
 
 
-def blocks(path: Path, codec: str, told: Told | None = None) -> Iterator[tuple[int, bytes]]:
+def blocks(
+    path: Path, codec: str, told: Told | None = None, *, size: int | None = None
+) -> Iterator[tuple[int, bytes]]:
     """Read a text file as blocks of whole lines.
 
     Parameters
@@ -115,6 +117,8 @@ def blocks(path: Path, codec: str, told: Told | None = None) -> Iterator[tuple[i
         Python's name of the encoding; 'utf-8' passes bytes through once they are known to be UTF-8.
     told : callable or None
         As in `opened`.
+    size : int or None
+        Bytes read at a time; None for BLOCK.
 
     Yields
     ------
@@ -124,7 +128,7 @@ def blocks(path: Path, codec: str, told: Told | None = None) -> Iterator[tuple[i
         UTF-8, ending with a line feed.
     """
     row, rest = 1, b""
-    for chunk in _decoded(path, codec, told):
+    for chunk in _decoded(path, codec, told, size or BLOCK):
         data = rest + chunk
         cut = data.rfind(b"\n") + 1
         # A chunk is no longer than a line may be, so that only the first line can be longer.
@@ -270,12 +274,12 @@ def _whole_line_ends(data: bytes, raw: NDArray[np.uint8], ends: NDArray[np.int64
     return bool(np.count_nonzero(raw == _CR) == np.count_nonzero(raw[np.maximum(ends - 1, 0)] == _CR))
 
 
-def _decoded(path: Path, codec: str, told: Told | None) -> Iterator[bytes]:
+def _decoded(path: Path, codec: str, told: Told | None, at_once: int) -> Iterator[bytes]:
     """The file's bytes as UTF-8, a block at a time, without byte order mark."""
     decoder = codecs.getincrementaldecoder(codec)()
     size = 0
     with opened(path, told) as file:
-        while chunk := file.read(BLOCK if codec == "utf-8" else BLOCK // 2):  # as UTF-8 it may be longer
+        while chunk := file.read(at_once if codec == "utf-8" else at_once // 2):  # as UTF-8 it may be longer
             size += len(chunk)
             if size > LARGEST_EXPANDED:
                 raise ExportError(

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, NoReturn
 
 import numpy as np
 import pyarrow as pa
@@ -13,6 +13,7 @@ import pyarrow.compute as pc
 import pyarrow.csv as pcsv
 from numpy.typing import NDArray
 
+from ingest.account import REASONS
 from ingest.asides import without_sums
 from ingest.clocks import decide_clock
 from ingest.columns import plain, present, single
@@ -31,6 +32,7 @@ from ingest.values import decide_numbers
 _LF, _CR = b"\n\r"
 _WORDS = pa.dictionary(pa.int32(), pa.string())
 _FIRST_LINES = 100  # what the head of an export is looked for in
+_LOOK = BLOCK  # bytes by which a decision is judged, however few are read at a time
 _PATIENCE = 8  # blocks that must be read as text before the quick way is given up
 
 
@@ -47,15 +49,20 @@ class TextFile:
         """Give the character between fields."""
         return self.heading.separator
 
-    def lines(self) -> Iterator[Lines]:
+    def lines(self, size: int | None = None) -> Iterator[Lines]:
         """Read the rows below the head.
+
+        Parameters
+        ----------
+        size : int or None
+            Bytes read at a time; None for the usual.
 
         Yields
         ------
         Lines
             May be empty.
         """
-        for row, data in blocks(self.path, self.codec):
+        for row, data in blocks(self.path, self.codec, size=size):
             skip = self.heading.last + 1 - row  # lines of the head that stand in this block
             rest = data.split(b"\n", skip)[-1] if skip > 0 else data
             if rest:
@@ -76,7 +83,7 @@ class TextFile:
         list of pyarrow.Array (n,)
             One per column.
         """
-        for lines in self.lines():
+        for lines in self.lines(_LOOK):
             block = self.parse(lines, dict.fromkeys(columns, pa.string()))
             if block is not None and len(block.rows):
                 yield block.rows, [single(block.columns[i]) for i in columns]
@@ -178,9 +185,7 @@ def open_text(
     heading = file.heading
     header, place = heading.header, Place(path.name, heading.row, tuple(text for _, text in heading.above))
     if next(file.look([0]), None) is None:
-        raise ExportError(
-            f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
-        )
+        _refuse_no_rows(file, place)
     layout = decide_layout(place, header, wanted or (), file.look)
     time = (layout.time, header[layout.time])
     look = layout.seen(file.look)
@@ -191,6 +196,19 @@ def open_text(
     converted = conversions(f"{path.name}:{row}", written, units)
     decided = (encoding, file.separator, header, heading.row)
     return file, Dialect(*decided, layout, clock, numbers, quality, converted, heading)
+
+
+def _refuse_no_rows(file: TextFile, place: Place) -> NoReturn:
+    """There is nothing below the header, or nothing that can be split into fields."""
+    for fault in (fault for lines in file.lines() for fault in lines.faults):
+        row, text = fault.first[0]
+        what, remedy = REASONS[fault.reason]
+        raise ExportError(
+            f"{file.path.name}:{row}: {text[:60]!r} {what}, and no row can be read", remedy=remedy
+        )
+    raise ExportError(
+        f"{place}: holds a header and no rows", remedy="Export a span of time that has readings."
+    )
 
 
 def value_columns(header: Sequence[str], layout: Layout, wanted: Collection[str] | None) -> list[int]:
@@ -310,13 +328,13 @@ def _begin(path: Path, wanted: Collection[str]) -> tuple[TextFile, str]:
 
 def _first_lines(path: Path, codec: str) -> list[tuple[int, str]]:
     """The first lines, blank ones left out, each with its number."""
-    lines: list[tuple[int, str]] = []
-    for row, data in blocks(path, codec):
-        head = data.decode().split("\n", _FIRST_LINES)[:_FIRST_LINES]
-        lines += [(row + i, line.rstrip("\r")) for i, line in enumerate(head) if line.strip()]
-        if len(lines) > 1:
+    found: list[tuple[int, str]] = []
+    for row, data in blocks(path, codec, size=_LOOK):
+        head = data.decode().split("\n")[:-1]
+        found += [(row + i, line.rstrip("\r")) for i, line in enumerate(head) if line.strip()]
+        if len(found) >= _FIRST_LINES:
             break
-    return lines
+    return found[:_FIRST_LINES]
 
 
 def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int, Any]:

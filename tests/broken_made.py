@@ -298,6 +298,12 @@ def _parquets() -> dict[str, Broken]:
             0,
             100,
         ),
+        "Parquet with times in years beyond four digits": taken(
+            "x.parquet",
+            as_parquet(table(time=pa.array([2**62, -(2**62)] * 25).cast(pa.timestamp("us", "UTC")))),
+            0,
+            100,
+        ),
         "Parquet with infinities": taken(
             "x.parquet",
             as_parquet(table(**{"FI-1.PV": pa.array([np.inf, -np.inf, 1e308, np.nan, 5e-324] * 10)})),
@@ -429,6 +435,7 @@ def _texts() -> dict[str, Broken]:
             "x.csv", b"time,FI-1.PV,\x80\n" + rows(5).encode(), "neither UTF-8"
         ),
         "carriage returns alone": aside("x.csv", SMALL.replace("\n", "\r"), "carriage returns"),
+        "carriage returns twice": aside("x.csv", SMALL.replace("\n", "\r\r\n"), "carriage return"),
         "a carriage return inside a row": taken("x.csv", SMALL + f"{moment(60)},1\r,2\n", 100, 2),
         "a quote that opens in the header": aside("x.csv", SMALL.replace("FI-1", '"FI-1'), "quote"),
         "a quote that never closes": taken("x.csv", SMALL + f'{moment(60)},"1,2\n' + rows(5, 61), 110, 2),
