@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import json
 import os
+import shutil
 import socket
 import sqlite3
 import time
-from collections.abc import Iterator
-from contextlib import closing, contextmanager
+from collections.abc import Iterator, Sequence
+from contextlib import ExitStack, closing, contextmanager, suppress
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
@@ -22,22 +23,23 @@ HOLDER = "pass.holder"
 APPLICATION_ID = 0x4F75746C  # "Outl" in the file's header says that the file is ours
 BUSY_S = 30.0  # a commit waits so long for another one; each takes milliseconds
 
-# SQLite's primary result codes (sqlite.org/rescode.html) that a user can mend; any other is our bug.
+# SQLite's result codes (sqlite.org/rescode.html) that a user can mend; any other is our bug.
+NO_RIGHT = "Give this account the right to write in the store's folder."
+NO_ROOM = "Make room, then run the same pass again; nothing is lost."
 FAULTS = {
     sqlite3.SQLITE_BUSY: ("is being written by another program", "Try again in a moment."),
-    sqlite3.SQLITE_READONLY: (
-        "cannot be written",
-        "Give this account the right to write in the store's folder (reading needs it too).",
-    ),
-    sqlite3.SQLITE_CANTOPEN: (
-        "cannot be opened",
-        "Give this account the right to write in the store's folder (reading needs it too).",
-    ),
-    sqlite3.SQLITE_IOERR: ("the disk reports a fault", "Look to the disk; nothing of this pass is kept."),
-    sqlite3.SQLITE_FULL: ("the disk is full", "Make room, then run the same pass again; nothing is lost."),
+    sqlite3.SQLITE_READONLY: ("cannot be written", NO_RIGHT),
+    sqlite3.SQLITE_CANTOPEN: ("cannot be opened", NO_RIGHT),
+    sqlite3.SQLITE_IOERR: ("the disk reports a fault", "Look to the disk, then run the same pass again."),
+    sqlite3.SQLITE_FULL: ("the disk is full", NO_ROOM),
+    sqlite3.SQLITE_IOERR_SHMSIZE: ("the disk is full", NO_ROOM),
     sqlite3.SQLITE_CORRUPT: ("is damaged", "Put the store back from a copy, or take the exports in anew."),
     sqlite3.SQLITE_NOTADB: ("is not a ledger of this program", "Name another folder with --store."),
 }
+# A reader of a ledger in WAL mode makes two small files beside it, and with them it can look while a pass
+# commits. Where a full disk or a missing right forbids them it looks by itself, or at a file that is at rest.
+WAYS = (("rw", "NORMAL"), ("rw", "EXCLUSIVE"), ("ro&immutable=1", "NORMAL"))
+HINDERED = {sqlite3.SQLITE_READONLY, sqlite3.SQLITE_CANTOPEN, sqlite3.SQLITE_IOERR, sqlite3.SQLITE_FULL}
 
 
 def now() -> str:
@@ -85,8 +87,8 @@ def program_version() -> str:
 
 
 @contextmanager
-def open_ledger(folder: Path) -> Iterator[sqlite3.Connection]:
-    """Open the ledger of a store; what SQLite has to say comes out as StoreError.
+def reading(folder: Path) -> Iterator[sqlite3.Connection]:
+    """Open the ledger of a store for one look at it, also on a full disk and without the right to write.
 
     Parameters
     ----------
@@ -96,17 +98,12 @@ def open_ledger(folder: Path) -> Iterator[sqlite3.Connection]:
     Yields
     ------
     sqlite3.Connection
-        In autocommit; closed at the end.
+        In one transaction: all that is read belongs together.
     """
-    path = folder / LEDGER
-    if not has_ledger(folder):
-        raise StoreError(
-            f"{folder}: there is no store here", remedy="Take exports in first, or name another --store."
-        )
-    with _in_words(path), closing(_connect(path, "rw", BUSY_S)) as ledger:
-        ledger.execute("PRAGMA synchronous = FULL")
+    path = _there(folder)
+    with _in_words(path), _reader(path) as ledger:
         _bring_up(ledger, path)
-        ledger.execute("PRAGMA foreign_keys = ON")
+        ledger.execute("BEGIN")
         yield ledger
 
 
@@ -123,7 +120,11 @@ def writing(folder: Path) -> Iterator[sqlite3.Connection]:
     ------
     sqlite3.Connection
     """
-    with open_ledger(folder) as ledger:
+    path = _there(folder)
+    with _in_words(path), closing(_connect(path, "rw", BUSY_S)) as ledger:
+        ledger.execute("PRAGMA synchronous = FULL")
+        _bring_up(ledger, path)
+        ledger.execute("PRAGMA foreign_keys = ON")
         ledger.execute("BEGIN IMMEDIATE")
         yield ledger
         ledger.execute("COMMIT")
@@ -148,24 +149,6 @@ def make_ledger(folder: Path) -> None:
             ledger.execute("COMMIT")
 
 
-def has_ledger(folder: Path) -> bool:
-    """Tell whether a folder holds a ledger that has its tables.
-
-    Parameters
-    ----------
-    folder : Path
-
-    Returns
-    -------
-    bool
-    """
-    path = folder / LEDGER
-    if not path.is_file():
-        return False
-    with _in_words(path), closing(_connect(path, "rw", BUSY_S)) as ledger:
-        return not _is_empty(ledger)
-
-
 @contextmanager
 def only_one(folder: Path, wait_s: float) -> Iterator[None]:
     """Hold the lock between passes; it falls with the process, however that ends.
@@ -184,7 +167,7 @@ def only_one(folder: Path, wait_s: float) -> Iterator[None]:
     path = folder / LOCK
     # SQLite's own file lock is the one that works alike on Linux, macOS and Windows.
     with _in_words(path), closing(_connect(path, "rwc", 0.0)) as lock:
-        _take(lock, folder, time.monotonic() + wait_s)
+        _take(lock, folder, wait_s)
         holder = folder / HOLDER
         holder.write_text(
             json.dumps({"pid": os.getpid(), "host": socket.gethostname(), "since": now()}), encoding="utf-8"
@@ -192,12 +175,14 @@ def only_one(folder: Path, wait_s: float) -> Iterator[None]:
         try:
             yield
         finally:
-            holder.unlink(missing_ok=True)
+            with suppress(OSError):  # it is only read while the lock is held
+                holder.unlink()
             lock.rollback()
 
 
-def _take(lock: sqlite3.Connection, folder: Path, until: float) -> None:
-    """Take the lock, trying until the monotonic clock reads `until`."""
+def _take(lock: sqlite3.Connection, folder: Path, wait_s: float) -> None:
+    """Take the lock, trying for so long [s]."""
+    until = time.monotonic() + wait_s
     while True:
         try:
             lock.execute("BEGIN EXCLUSIVE")
@@ -205,21 +190,22 @@ def _take(lock: sqlite3.Connection, folder: Path, until: float) -> None:
             if fault.sqlite_errorcode & 0xFF != sqlite3.SQLITE_BUSY:
                 raise
             if time.monotonic() >= until:
-                raise _held(folder) from None
+                raise _held(folder, wait_s) from None
             time.sleep(0.05)
         else:
             return
 
 
-def _held(folder: Path) -> StoreError:
-    """Say who holds the lock."""
+def _held(folder: Path, wait_s: float) -> StoreError:
+    """Say who holds the lock, and how long it was waited for."""
     try:
         who = json.loads((folder / HOLDER).read_text(encoding="utf-8"))
         by = f"process {who['pid']} on {who['host']} since {who['since']}"
     except (OSError, ValueError, KeyError):  # the holder is just writing or removing it
         by = "a process that has only just begun or ended"
     return StoreError(
-        f"{folder}: another pass is running: {by}", remedy="Wait until it has finished, or end that process."
+        f"{folder}: another pass is running: {by} (waited {wait_s:g} s)",
+        remedy="Wait until it has finished, or end that process.",
     )
 
 
@@ -229,6 +215,59 @@ def _connect(path: Path, mode: str, busy_s: float) -> sqlite3.Connection:
     return sqlite3.connect(uri, uri=True, isolation_level=None, timeout=busy_s)
 
 
+@contextmanager
+def _reader(path: Path) -> Iterator[sqlite3.Connection]:
+    """Open a ledger in the first of the ways to read that is open; say why the first of all is not."""
+    still = _at_rest(path)
+    with ExitStack() as opened:
+        ledger, shared = _first_open(opened, path, WAYS if still else WAYS[:-1])
+        yield ledger
+        if not shared and _at_rest(path) != still:
+            raise StoreError(f"{path}: was written while it was being read", remedy="Look again.")
+
+
+def _first_open(
+    opened: ExitStack, path: Path, ways: Sequence[tuple[str, str]]
+) -> tuple[sqlite3.Connection, bool]:
+    """Try ways to read one by one; tell whether others may write meanwhile."""
+    said: sqlite3.OperationalError | None = None
+    for mode, locking in ways:
+        try:
+            ledger = opened.enter_context(closing(_connect(path, mode, BUSY_S)))
+            ledger.execute(f"PRAGMA locking_mode = {locking}")
+            ledger.execute("SELECT count(*) FROM sqlite_schema").fetchone()
+        except sqlite3.OperationalError as fault:
+            opened.close()
+            if fault.sqlite_errorcode & 0xFF not in HINDERED:
+                raise
+            said = said or fault
+        else:
+            return ledger, "immutable" not in mode
+    raise said or AssertionError("no way to read")
+
+
+def _at_rest(path: Path) -> tuple[int, int, int] | None:
+    """Tell a ledger that nobody has open by its inode, time and size; None while commits stand beside it."""
+    ahead = path.with_name(f"{path.name}-wal")
+    if ahead.exists() and ahead.stat().st_size:
+        return None
+    stat = path.stat()
+    return stat.st_ino, stat.st_mtime_ns, stat.st_size
+
+
+def _there(folder: Path) -> Path:
+    """Give the place of the ledger of a folder that holds one."""
+    if not (folder / LEDGER).is_file():
+        raise _no_store(folder)
+    return folder / LEDGER
+
+
+def _no_store(folder: Path) -> StoreError:
+    return StoreError(
+        f"{folder}: there is no store here", remedy="Take exports in first, or name another --store."
+    )
+
+
 def _is_empty(ledger: sqlite3.Connection) -> bool:
     """Tell whether a file holds no table yet: new, or its maker died before the first commit."""
     return not ledger.execute("SELECT count(*) FROM sqlite_schema").fetchone()[0]
@@ -236,6 +275,8 @@ def _is_empty(ledger: sqlite3.Connection) -> bool:
 
 def _bring_up(ledger: sqlite3.Connection, path: Path) -> None:
     """Bring a ledger of an earlier version of this program to the present one, whole or not at all."""
+    if _is_empty(ledger):
+        raise _no_store(path.parent)
     if _version(ledger, path) < migrations.VERSION:
         ledger.execute("BEGIN IMMEDIATE")
         _migrate(ledger, _version(ledger, path))  # looked at again: another process may have been faster
@@ -272,7 +313,16 @@ def _in_words(path: Path) -> Iterator[None]:
     try:
         yield
     except sqlite3.DatabaseError as fault:
-        known = FAULTS.get(getattr(fault, "sqlite_errorcode", 0) & 0xFF)
+        code = getattr(fault, "sqlite_errorcode", 0)
+        known = FAULTS.get(code) or FAULTS.get(code & 0xFF)
         if known is None:
             raise
-        raise StoreError(f"{path}: {known[0]} ({fault})", remedy=known[1]) from fault
+        room = _room(path) if known[1] is NO_ROOM else ""
+        raise StoreError(f"{path}: {known[0]}{room} ({fault})", remedy=known[1]) from fault
+
+
+def _room(path: Path) -> str:
+    """Say how much room a commit needs: at most every page of the ledger once more, and what is new."""
+    size = path.stat().st_size if path.exists() else 0
+    free = shutil.disk_usage(path.parent).free
+    return f": it needs up to {size / 1e6 + 1:.2f} MB, {free / 1e6:.2f} MB are free"

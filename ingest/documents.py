@@ -102,7 +102,7 @@ def latest(folder: Path, unit: str, kind: str, key: str) -> Document | None:
     Document or None
         None if there is none.
     """
-    with database.open_ledger(folder) as ledger:
+    with database.reading(folder) as ledger:
         return _latest(ledger, unit, kind, key)
 
 
@@ -126,7 +126,7 @@ def revisions(folder: Path, unit: str, kind: str, key: str | None = None) -> tup
         "SELECT * FROM documents WHERE (unit, kind) = (?, ?) AND (? IS NULL OR key = ?)"
         " ORDER BY key, revision"
     )
-    with database.open_ledger(folder) as ledger:
+    with database.reading(folder) as ledger:
         return tuple(_document(*row) for row in ledger.execute(query, (unit, kind, key, key)))
 
 

@@ -4,6 +4,7 @@ OutletError                 anything the user can mend; two lines, exit code 2
 ├── UnitFileError           the unit file: all problems at once, each with its key
 ├── ExportError             one export cannot be read; the others go on
 ├── StoreError              the store is locked, damaged, or not ours
+│   └── GoneError           a part is no longer there: a later pass has replaced it, or it was lost
 └── BalanceError            the unit as described cannot be reconciled
 """
 
@@ -81,6 +82,10 @@ class ExportError(OutletError):
 
 class StoreError(OutletError):
     """The store is locked, damaged, of another version, or not ours."""
+
+
+class GoneError(StoreError):
+    """A part is no longer there: a later pass has replaced it, or it was lost."""
 
 
 class BalanceError(OutletError):

@@ -135,7 +135,7 @@ def lines(folder: Path, *, unit: str | None = None, after: int = 0) -> tuple[Lin
         "SELECT number, written, who, act, unit, subject, note, detail FROM journal"
         " WHERE number > ? AND (? IS NULL OR unit = ?) ORDER BY number"
     )
-    with database.open_ledger(folder) as ledger:
+    with database.reading(folder) as ledger:
         return tuple(_line(*row) for row in ledger.execute(query, (after, unit, unit)))
 
 

@@ -4,18 +4,21 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TypeVar
 
 import pyarrow as pa
 
 from ingest import database, documents, parts, records
+from ingest.errors import GoneError
 from ingest.parts import Part
 from ingest.passes import Pass
 from ingest.records import Export, PassEntry
 from ingest.snapshot import Instant, Snapshot
 
+Answer = TypeVar("Answer")
 LOCK_WAIT_S = 30.0
 VISIBLE = (  # all that a pass leaves to be read; clock times and the list of passes do not belong to it
     "SELECT unit, stage, month, sha256, rows FROM parts ORDER BY unit, stage, month",
@@ -63,9 +66,29 @@ class Store:
         -------
         Snapshot
         """
-        with database.open_ledger(self.folder) as ledger:
-            ledger.execute("BEGIN")  # one view for all of what follows
+        with database.reading(self.folder) as ledger:
             return records.read_snapshot(self.folder, ledger)
+
+    def look(self, question: Callable[[Snapshot], Answer]) -> Answer:
+        """Ask a snapshot of this moment, and a newer one if passes replaced meanwhile what it was to read.
+
+        Parameters
+        ----------
+        question : callable
+            A function of a snapshot; all that it reads is of one pass.
+
+        Returns
+        -------
+        object
+            What it answers.
+        """
+        while True:
+            snapshot = self.snapshot()
+            try:
+                return question(snapshot)
+            except GoneError:
+                if self.snapshot().generation == snapshot.generation:
+                    raise
 
     def read(
         self,
@@ -91,7 +114,8 @@ class Store:
         pyarrow.Table
             As `Snapshot.read`.
         """
-        return self.snapshot().read(unit, stage, first=first, last=last, columns=columns)
+        wanted = None if columns is None else list(columns)  # it may have to be read twice
+        return self.look(lambda view: view.read(unit, stage, first=first, last=last, columns=wanted))
 
     def exports(self) -> list[Export]:
         """List all exports taken in or set aside.
@@ -101,7 +125,7 @@ class Store:
         list of Export
             By number.
         """
-        with database.open_ledger(self.folder) as ledger:
+        with database.reading(self.folder) as ledger:
             return records.read_exports(ledger)
 
     def passes(self) -> list[PassEntry]:
@@ -112,7 +136,7 @@ class Store:
         list of PassEntry
             By number.
         """
-        with database.open_ledger(self.folder) as ledger:
+        with database.reading(self.folder) as ledger:
             return [PassEntry(*row) for row in ledger.execute("SELECT * FROM passes ORDER BY number")]
 
     def content_hash(self) -> str:
@@ -123,8 +147,7 @@ class Store:
         str
             64 hexadecimal digits.
         """
-        with database.open_ledger(self.folder) as ledger:
-            ledger.execute("BEGIN")
+        with database.reading(self.folder) as ledger:
             visible = [ledger.execute(query).fetchall() for query in VISIBLE]
         return hashlib.sha256(json.dumps(visible).encode()).hexdigest()
 
@@ -136,14 +159,23 @@ class Store:
         list of Finding
             Empty when all is well.
         """
-        with database.open_ledger(self.folder) as ledger:
+        while True:
+            generation, findings = self._verified()
+            if not findings or self.snapshot().generation == generation:
+                return findings
+
+    def _verified(self) -> tuple[int, list[Finding]]:
+        """Verify one generation; what a pass that committed meanwhile took away stands there as missing."""
+        with database.reading(self.folder) as ledger:
             said = [str(line) for (line,) in ledger.execute("PRAGMA integrity_check")]
-            named = records.read_snapshot(self.folder, ledger).parts.values()
+            snapshot = records.read_snapshot(self.folder, ledger)
             said += [f"{one}: holds another text than was written" for one in documents.damaged(ledger)]
         remedy = "Put the store back from a copy, or take the exports in anew."
         faults = [Finding(database.LEDGER, line, remedy) for line in said if line != "ok"]
-        checked = ((part, _fault(self.folder / part.file, part)) for part in named)
-        return faults + [Finding(part.file, fault, remedy) for part, fault in checked if fault]
+        checked = ((part, _fault(self.folder / part.file, part)) for part in snapshot.parts.values())
+        return snapshot.generation, faults + [
+            Finding(part.file, fault, remedy) for part, fault in checked if fault
+        ]
 
 
 def _fault(path: Path, part: Part) -> str:

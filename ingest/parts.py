@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import hashlib
 import os
 import re
@@ -23,6 +24,17 @@ from ingest.errors import StoreError
 TIME_COLUMNS = ("time", "start", "end")  # what labels a row: readings, cells and states, figures
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 NAME = re.compile(r"(?P<stage>[a-z0-9][a-z0-9-]*)-(?P<month>\d{4}-\d{2})-(?P<hash>[0-9a-f]{12})\.parquet")
+RIGHT = "Give this account the right to write there"
+ROOM = "Make room"
+REMEDIES = {
+    errno.ENOSPC: ROOM,
+    errno.EDQUOT: ROOM,
+    errno.EFBIG: ROOM,
+    errno.EACCES: RIGHT,
+    errno.EPERM: RIGHT,
+    errno.EROFS: RIGHT,
+    errno.EIO: "Look to the disk",
+}
 UNFINISHED = re.compile(r"\.[a-z0-9-]+\.unfinished(\.part)?")
 
 
@@ -204,6 +216,19 @@ def _mask(inside: NDArray[np.bool_]) -> pa.BooleanArray:
     return pa.BooleanArray.from_buffers(pa.bool_(), len(inside), [None, bits])
 
 
+def make_folder(folder: Path) -> None:
+    """Make a folder, and those above it, so that their names outlast a power cut.
+
+    Parameters
+    ----------
+    folder : Path
+        Left alone if it is there.
+    """
+    new = [path for path in (folder, *folder.parents) if not path.exists()]
+    folder.mkdir(parents=True, exist_ok=True)
+    sync_folders(path.parent for path in new)
+
+
 def make_part(
     folder: Path, key: tuple[str, str, str], *, made_by: int, rows: int, fill: Callable[[Path], None]
 ) -> Part:
@@ -260,13 +285,13 @@ def disk_trouble(folder: Path, fault: OSError, needed: int = 0) -> StoreError:
     StoreError
         To be raised from `fault`.
     """
-    room = ""
-    if needed:
+    room, remedy = "", REMEDIES.get(fault.errno or 0, f"{ROOM} or {RIGHT[0].lower()}{RIGHT[1:]}")
+    if needed and remedy is not RIGHT:
         free = shutil.disk_usage(folder).free
-        room = f"; the next part needs up to {needed / 1e6:.1f} MB, {free / 1e6:.1f} MB are free"
+        room = f"; the next part needs up to {needed / 1e6:.2f} MB, {free / 1e6:.2f} MB are free"
     return StoreError(
         f"{folder}: nothing was taken in: {fault.strerror or fault}{room}",
-        remedy="Make room or give this account the right to write there, then run the same pass again.",
+        remedy=f"{remedy}, then run the same pass again.",
     )
 
 

@@ -50,7 +50,7 @@ class Pass:
         """Take the lock, sweep what dead passes left and look at the store."""
         with ExitStack() as entering:
             try:
-                self._folder.mkdir(parents=True, exist_ok=True)
+                parts.make_folder(self._folder)
                 entering.enter_context(database.only_one(self._folder, self._wait_s))
                 database.make_ledger(self._folder)
                 self._look()
@@ -66,12 +66,12 @@ class Pass:
         """Commit, or forget everything; then let the next pass in."""
         with self._held:
             kept = _files(self._before)
-            try:
-                if kind is None:
-                    self._commit()
-                    kept |= _files(self._now)
-            finally:
-                _sweep(self._folder / file for file in self._made - kept)
+            if kind is None:
+                # Where a commit fails nothing is swept: it may have reached the disk all the same. The next
+                # pass sees what the ledger says.
+                self._commit()
+                kept |= _files(self._now)
+            _sweep(self._folder / file for file in self._made - kept)
 
     def view(self) -> Snapshot:
         """Give the store as it will be if the pass ends now.
@@ -271,7 +271,7 @@ class Pass:
 
     def _look(self) -> None:
         """See what the last pass left."""
-        with database.open_ledger(self._folder) as ledger:
+        with database.reading(self._folder) as ledger:
             self._before = self._now = records.read_snapshot(self._folder, ledger)
             self._exports = {export.sha256: export for export in records.read_exports(ledger)}
             self._seen = {path: Seen(*row) for path, *row in ledger.execute("SELECT * FROM seen")}
@@ -280,7 +280,10 @@ class Pass:
     def _commit(self) -> None:
         """Make all of the pass visible at once: parts to the disk first, then the commit that names them."""
         written = [p for key, p in self._now.parts.items() if p != self._before.parts.get(key)]
-        parts.sync_folders({self._folder, *(self._folder / part.unit for part in written)})
+        try:
+            parts.sync_folders({self._folder, *(self._folder / part.unit for part in written)})
+        except OSError as fault:
+            raise parts.disk_trouble(self._folder, fault) from fault
         recorded = [self._exports[content] for content in self._recorded]
         entry = PassEntry(
             self.number,
@@ -308,7 +311,7 @@ def _files(snapshot: Snapshot) -> set[str]:
 
 
 def _sweep(files: Iterable[Path]) -> None:
-    """Remove files that nobody names; one that Windows holds open is left for the next sweep."""
+    """Remove files that nobody names; one that cannot be removed now is left for the next sweep."""
     for file in files:
-        with suppress(PermissionError):
-            file.unlink(missing_ok=True)
+        with suppress(OSError):
+            file.unlink()

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 import pyarrow as pa
 
 from ingest import episodes, parts
-from ingest.errors import StoreError
+from ingest.errors import GoneError, StoreError
 from ingest.parts import Part
 
 if TYPE_CHECKING:
@@ -123,7 +123,7 @@ def _read(path: Path, columns: list[str] | None, first_us: int | None, last_us: 
     try:
         return parts.read_part(path, columns, first_us, last_us)
     except FileNotFoundError as fault:
-        raise StoreError(
+        raise GoneError(
             f"{path.name}: is no longer there",
             remedy="Look again: a later pass has replaced it. If that does not help run 'outlet verify'.",
         ) from fault

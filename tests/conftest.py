@@ -20,6 +20,12 @@ def _chromium() -> str | None:
     return None
 
 
+def pytest_runtest_setup(item: pytest.Item) -> None:
+    """Leave out what takes minutes, unless it is asked for."""
+    if item.get_closest_marker("long") and not os.environ.get("OUTLET_LONG"):
+        pytest.skip("takes minutes: set OUTLET_LONG=1 to run it")
+
+
 @pytest.fixture(scope="session")
 def chromium() -> str:
     """Path of a Chromium; a machine that must have one fails, any other skips with the reason."""
