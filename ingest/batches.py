@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -27,6 +27,7 @@ from ingest.columns import coded, said
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
 from ingest.lines import LONGEST_NAME, Block
+from ingest.measures import Conversion, Stated, conversions
 from ingest.qualities import read_qualities, texts
 from ingest.readings import BAD, UNKNOWN, Readings, Series, concatenated
 from ingest.textfiles import value_columns
@@ -52,6 +53,8 @@ class Batches:
     wanted: frozenset[str] | None
     blocks: Iterator[Block]
     tally: Tally
+    units: Mapping[str, tuple[Stated, ...]]
+    converted: dict[tuple[str, str], tuple[Conversion, ...]] = field(default_factory=dict)
     first_us: int | None = None  # the first and last time down the file that have one meaning only
     last_us: int | None = None
     doubled: dict[str, list[Series]] = field(default_factory=dict)
@@ -76,8 +79,9 @@ class Batches:
         Account
             Every reading of the file is in it.
         """
-        converted = tuple((c.tag, c.written, c.stated) for c in self.dialect.conversions if c.changes)
-        return replace(self.tally.account(), converted=converted)
+        done = (*self.dialect.conversions, *(one for found in self.converted.values() for one in found))
+        converted = sorted({(one.tag, one.written, one.stated) for one in done if one.changes})
+        return replace(self.tally.account(), converted=tuple(converted))
 
     def _count_rows(self, block: Block) -> None:
         tally, width = self.tally, self.dialect.width
@@ -135,6 +139,8 @@ class Batches:
         value, quality, reason = self._judged(
             block, self._values(layout.only, block.columns[layout.value or 0])
         )
+        if layout.unit is not None:
+            value = self._united(block, places, names, value)
         reason = _either(stamps.reason, reason)
         if len(places) and places.min() < 0:
             reason = np.where(
@@ -171,6 +177,23 @@ class Batches:
             if one.tag == tag and one.changes:
                 return replace(values, value=values.value * one.factor + one.offset)
         return values
+
+    def _united(
+        self, block: Block, places: Places, names: list[str], value: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Values in the units of the unit file, where a column states the unit of each."""
+        codes, words = coded(block.columns[self.dialect.layout.unit or 0])
+        written = [*(text.strip() for text in texts(words)), ""]  # the last for cells that are empty
+        pairs = np.where(places < 0, -1, places.astype(np.int64) * len(written) + codes % len(written))
+        for pair, first in zip(*np.unique(pairs, return_index=True), strict=True):
+            if pair >= 0:
+                tag, unit = names[pair // len(written)], written[pair % len(written)]
+                if (tag, unit) not in self.converted:
+                    place = f"{self.tally.export}:{block.rows[first]}"
+                    self.converted[tag, unit] = conversions(place, {tag: unit}, self.units)
+                for one in self.converted[tag, unit]:
+                    value = np.where(pairs == pair, value * one.factor + one.offset, value)
+        return value
 
     def _tags(self, block: Block) -> tuple[Places, list[str]]:
         """For each row the place of its tag among the names; negative where it has none or nobody asked."""

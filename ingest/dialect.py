@@ -76,6 +76,8 @@ class Dialect:
         known = (layout.time, layout.value, *layout.others)
         spare = [name for i, name in enumerate(self.header) if i not in known]
         left = (f"Columns not read: {', '.join(spare)}.",) if spare else ()
+        if layout.unit is not None:
+            left = (f"Units in '{self.header[layout.unit]}', held against the unit file.", *left)
         value = self.header[layout.value]
         if layout.tag is None:
             return (f"One tag, {layout.only}: times in {time}, values in '{value}'.", *left)

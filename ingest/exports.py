@@ -76,7 +76,7 @@ def open_export(
     """
     zone = rules.time_zone or time_zone
     file_dialect, blocks = _opened(path, rules, wanted, zone, units=units)
-    return Batches(number, file_dialect, wanted, blocks, Tally(path.name))
+    return Batches(number, file_dialect, wanted, blocks, Tally(path.name), units)
 
 
 def describe(

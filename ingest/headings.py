@@ -41,6 +41,7 @@ class NamesRow:
 _UNIT_LINE = re.compile(
     rf"""^["\s\#*/]*{_UNITS.pattern}"?\s*[:=,;|\t]["\s:=,;|]*(.+?)["\s,;|]*$""", re.IGNORECASE
 )
+_ZONE_LINE = re.compile(r"""^["\s\#*/]*(?:time ?zone|zeitzone)"?\s*[:=,;|\t](.*)$""", re.IGNORECASE)
 _BRACKETED = re.compile(r"(.+?)\s*[(\[]([^()\[\]]+)[)\]]")
 
 
@@ -55,6 +56,22 @@ class Heading:
     above: tuple[tuple[int, str], ...]  # lines that are not blank, with their numbers
     below: tuple[NamesRow, ...]
     bracketed: tuple[tuple[str, str], ...]  # tag, unit
+
+    def said_of(self, column: int) -> str:
+        """Give all that is said of a column of times: its name, what stands below it, the zone above.
+
+        Parameters
+        ----------
+        column : int
+            Its place.
+
+        Returns
+        -------
+        str
+            In one line.
+        """
+        zones = (match[1] for _, text in self.above if (match := _ZONE_LINE.match(text)))
+        return " ".join([self.header[column], *(row.cells[column] for row in self.below), *zones])
 
     def units(self, layout: Layout) -> tuple[int, dict[str, str]]:
         """Find the units that are written for the tags.

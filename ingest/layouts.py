@@ -28,6 +28,7 @@ ROLES = {
     ),
     "tag": ("tag", "tag name", "tagname", "point", "signal"),
     "value": ("value", "val", "reading", "wert"),
+    "unit": ("unit", "units", "uom", "eu", "eng unit", "eng units", "engineering units", "einheit"),
     "quality": ("quality", "status", "quality code", "status code", "qualität"),
 }
 
@@ -44,8 +45,8 @@ class Layout:
     """Which columns hold what.
 
     A wide export has a column for each tag: `tag`, `value` and `quality` are None. Else a row holds one
-    reading, of the tag in its column `tag`, or all of the one tag `only`. `clock` is the time of day where it
-    stands apart from its date in `time`.
+    reading, of the tag in its column `tag`, or all of the one tag `only`, and perhaps its `unit`. `clock` is
+    the time of day where it stands apart from its date in `time`.
     """
 
     time: int
@@ -54,6 +55,7 @@ class Layout:
     quality: int | None = None
     clock: int | None = None
     only: str | None = None
+    unit: int | None = None
 
     @property
     def is_long(self) -> bool:
@@ -63,7 +65,7 @@ class Layout:
     @property
     def others(self) -> tuple[int, ...]:
         """Give the columns that are read beside time and values."""
-        return tuple(i for i in (self.tag, self.quality, self.clock) if i is not None)
+        return tuple(i for i in (self.tag, self.quality, self.clock, self.unit) if i is not None)
 
     def times(self, columns: dict[int, Any]) -> Any:
         """Give the times of some rows as one column.
@@ -161,11 +163,12 @@ def decide_layout(place: Place, header: Sequence[str], wanted: Collection[str], 
     time, clock = _time_columns(place, header, named["time"], look)
     tag, value, quality = (named[name] for name in ("tag", "value", "quality"))
     rest = [i for i in range(len(header)) if i not in (time, clock, *tag, *value, *quality)]
-    one = quality[0] if quality else None
+    one, unit = (found[0] if len(found) == 1 else None for found in (quality, named["unit"]))
     if len(tag) == len(value) == 1 and len(quality) <= 1:
-        return Layout(time, tag[0], value[0], one, clock)
+        return Layout(time, tag[0], value[0], one, clock, unit=unit)
     if not tag and len(value) == 1 and len(quality) <= 1:
-        return Layout(time, None, value[0], one, clock, _only_tag(place, header[value[0]], wanted))
+        only = _only_tag(place, header[value[0]], wanted)
+        return Layout(time, None, value[0], one, clock, only, unit)
     if not tag and not value and len(quality) == len(rest) == 1:
         return Layout(time, None, rest[0], one, clock, header[rest[0]])
     found = [header[i] for i in (*tag, *value, *quality)]

@@ -205,7 +205,7 @@ def _refuse_types(path: Path, layout: Layout, values: Sequence[int]) -> None:
     """Values are numbers or text, tags and qualities whole numbers or text; a column of nulls may be any."""
     with _opened(path) as raw:
         schema = raw.schema_arrow
-    names = [i for i in (layout.tag, layout.quality) if i is not None]
+    names = [i for i in (layout.tag, layout.quality, layout.unit) if i is not None]
     for i in (*values, *names):
         kind = schema.field(i).type
         inner = kind.value_type if pa.types.is_dictionary(kind) else kind

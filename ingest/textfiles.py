@@ -187,7 +187,7 @@ def open_text(
     if next(file.look([0]), None) is None:
         _refuse_no_rows(file, place)
     layout = decide_layout(place, header, wanted or (), file.look)
-    time = (layout.time, header[layout.time])
+    time = (layout.time, heading.said_of(layout.time))
     look = layout.seen(file.look)
     clock = decide_clock(path.name, heading.row, time, look, zone=zone, rules=rules)
     numbers = decide_numbers(path.name, value_columns(header, layout, wanted), file.look, rules)
@@ -347,7 +347,7 @@ def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int
         time = pa.float64()
     types = {layout.time: time, **dict.fromkeys(columns, pa.float64() if quick else pa.string())}
     types |= {layout.clock: pa.string()} if layout.clock is not None else {}
-    return types | {i: _WORDS for i in (layout.tag, layout.quality) if i is not None}
+    return types | {i: _WORDS for i in (layout.tag, layout.quality, layout.unit) if i is not None}
 
 
 def _settings(dialect: Dialect, words: Collection[str]) -> dict[str, Any]:

@@ -314,8 +314,10 @@ def test_every_decision_is_told(tmp_path: Path, layout: str):
 
 
 def test_columns_of_a_long_export_that_are_not_read_are_told(tmp_path: Path):
-    text = "time,tag,value,unit,comment\n2026-01-01T00:00Z,A,1,kg/h,\n"
-    assert "Columns not read: unit, comment." in opened(saved(tmp_path, text), wanted=TAGS).dialect.describe()
+    text = "time,tag,value,source,comment\n2026-01-01T00:00Z,A,1,kg/h,\n"
+    assert (
+        "Columns not read: source, comment." in opened(saved(tmp_path, text), wanted=TAGS).dialect.describe()
+    )
 
 
 # If the quick and the thorough way differed, a fault elsewhere in a block would change numbers.

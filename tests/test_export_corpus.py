@@ -1,4 +1,4 @@
-"""One truth gives the same readings in every dialect; what has two meanings is refused until one is stated."""
+"""One truth, the same readings in every dialect; what has two meanings is refused until one is stated."""
 
 from __future__ import annotations
 
@@ -340,6 +340,37 @@ def test_a_unit_above_the_header_of_one_tag_is_held_against_the_unit_file(tmp_pa
     readings, account = read(saved(tmp_path, text), units=UNITS)
     assert readings["FI-1.PV"].value.tolist() == [1500.0, 2500.0]
     assert account.converted == (("FI-1.PV", "t/h", "kg/h"),)
+
+
+def test_a_column_of_units_is_held_against_the_unit_file_row_by_row(tmp_path: Path):
+    head, at = "time,tag,value,unit\n", "2026-03-13T06:0"
+    rows = [
+        ("FI-1.PV", "5", "t/h"),
+        ("TI-3.PV", "41", "degF"),
+        ("FI-1.PV", "6", "kg/h"),
+        ("LI-9", "1", "furlong"),
+    ]
+    text = head + "".join(f"{at}{i}Z,{','.join(row)}\n" for i, row in enumerate(rows))
+    readings, account = read(saved(tmp_path, text), units=UNITS)
+    assert readings["FI-1.PV"].value.tolist() == [5000.0, 6.0]
+    np.testing.assert_allclose(readings["TI-3.PV"].value, [5.0])  # (41 - 32) * 5/9
+    assert account.converted == (("FI-1.PV", "t/h", "kg/h"), ("TI-3.PV", "degF", "degC"))
+    assert account.unasked_tags == (("LI-9", 1),)
+    bad = saved(tmp_path, text + f"{at}9Z,FI-1.PV,5,kPa\n", name="x.csv")
+    with pytest.raises(ExportError, match=r"x\.csv:6 \[FI-1\.PV\]: 'kPa' cannot be converted to 'kg/h'"):
+        read(bad, units=UNITS)
+
+
+@pytest.mark.parametrize(
+    "text",
+    ["time (UTC),A\n{}", "time,A\n[UTC],kg/h\n{}", "Time zone: UTC\ntime,A\n{}"],
+    ids=["name", "row of units", "line above"],
+)
+def test_times_that_say_they_are_utc_are_not_read_in_another_zone(tmp_path: Path, text: str):
+    path = saved(tmp_path, text.format("2026-03-13 06:00,1.5\n"))
+    with pytest.raises(ExportError, match="does not hold times of the stated zone 'Europe/Berlin'"):
+        read(path, wanted=("A",), zone=BERLIN)
+    assert read(path, wanted=("A",), zone="UTC")[0]["A"].value.tolist() == [1.5]
 
 
 def test_lines_that_hold_no_readings_are_told_with_the_first_of_each_kind(tmp_path: Path):
