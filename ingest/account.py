@@ -213,10 +213,16 @@ class Account:
             what, remedy = REASONS[reason]
             lines.append(f"{count} rejected: the row or cell {what}. {remedy}")
             lines += [f"  {e.describe(self.export)}" for e in self.evidence if e.reason == reason]
-        return (*lines, *self._beside())
+        return (*lines, *self.beside())
 
-    def _beside(self) -> Iterator[str]:
-        """Say which lines hold no readings."""
+    def beside(self) -> Iterator[str]:
+        """Say which lines hold no readings, with the first of each kind.
+
+        Yields
+        ------
+        str
+            One line.
+        """
         if self.asides:
             kinds = ", ".join(f"{count} {ASIDES[kind]}" for kind, count in self.asides)
             yield f"Lines that hold no readings: {kinds}."

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from difflib import get_close_matches
+from pathlib import Path
 
 import pandas as pd
 
 from ingest.account import REASONS, Account
 from ingest.errors import StoreError
 from ingest.records import Export
+from ingest.shown import shown
 from monitor import wording
 
 TAKEN, IN_PART, ASIDE = "taken", "taken, some rejected", "set aside"
@@ -115,7 +117,7 @@ def named(exports: Sequence[Export], which: str) -> list[Export]:
     exports : sequence of Export
         Of the ledger.
     which : str
-        `12` or `march.csv`.
+        `12`, `march.csv`, or a path to such a file.
 
     Returns
     -------
@@ -127,12 +129,13 @@ def named(exports: Sequence[Export], which: str) -> list[Export]:
     StoreError
         There is none.
     """
-    found = [one for one in exports if which in (str(one.number), one.name)]
+    name = shown(Path(which).name)
+    found = [one for one in exports if one.name == name or str(one.number) == which]
     if not found:
-        near = get_close_matches(which, [one.name for one in exports], n=1)
+        near = get_close_matches(name, [one.name for one in exports], n=1)
         meant = f"; did you mean {near[0]}?" if near else ""
         raise StoreError(
-            f"{which}: no export of this number or name was taken in{meant}",
+            f"{shown(which)}: no export of this number or name was taken in{meant}",
             remedy="See 'outlet exports' for all numbers and names.",
         )
     return found

@@ -18,6 +18,7 @@ from typing import Any, Self
 
 from ingest.errors import OutletError
 from ingest.intake import SUFFIXES
+from ingest.shown import shown
 from ingest.unit import Unit
 from ingest.unitfile import load
 from monitor.progress import Bar
@@ -94,7 +95,7 @@ class Arrivals:
         paths : sequence of Path
             That were given to it, also of other places.
         left : set of str
-            Names of those that it left; they are tried again later and later.
+            Names, as they are shown, of those that it left; they are tried again later and later.
         now_s : float
             As in `see`.
         """
@@ -102,7 +103,7 @@ class Arrivals:
             one = self._files.get(path)
             if one is None:
                 continue
-            one.is_done = path.name not in left
+            one.is_done = shown(path.name) not in left
             one.pause_s = min(max(2 * one.pause_s, self.settle_s, 1.0), LONGEST_S)
             one.not_before_s = now_s + one.pause_s
 
@@ -117,7 +118,8 @@ def listing(folder: Path) -> dict[Path, Identity]:
     Returns
     -------
     dict of Path to tuple of int
-        By name. What is no file is listed too: a pass tells what is wrong with it.
+        By name. A link or a pipe is listed too: a pass tells what is wrong with it. Folders inside are left
+        alone.
     """
     with os.scandir(folder) as found:
         named = sorted(

@@ -94,6 +94,7 @@ def told(export: Export) -> Iterator[str]:
     if account.bad or account.unknown:
         unknown = f"{_number(account.unknown)} without a stated quality"
         yield f"  as read: {_number(account.bad)} of bad quality, {unknown}"
+    yield from (f"  {line}" for line in account.beside())
     for what, remedy, rows in deliveries.faults(account):
         yield f"  {what}. {remedy}"
         yield from (f"    {row}" for row in rows)

@@ -142,3 +142,25 @@ def test_an_empty_store_lists_no_export(tmp_path: Path):
     assert json.loads(outlet("exports", "--store", made.folder, "--json", folder=tmp_path).stdout) == {
         "exports": []
     }
+
+
+def test_lines_that_hold_no_readings_are_told_with_their_account(tmp_path: Path):
+    made = Store(tmp_path / "store")
+    (tmp_path / "units.csv").write_text(
+        "time,FI-1.PV,FI-2.PV\n,kg/h,kg/h\n2026-03-01T00:00:00Z,1,2\n2026-03-01T00:10:00Z,3,4\n",
+        encoding="utf-8",
+    )
+    take(made, tmp_path / "units.csv")
+    (export,) = made.exports()
+    account = deliveries.account_of(export)
+    assert account.asides == (("units", 1),)
+    told = "\n".join(tellexports.told(export))
+    assert "2 rows; 4 readings = 4 accepted" in told
+    assert "Lines that hold no readings: 1 of units." in told
+    assert "units.csv:2: ',kg/h,kg/h' is of units" in told
+
+
+def test_an_export_is_found_by_a_path_to_it(store: Store, tmp_path: Path):
+    assert [one.name for one in deliveries.named(store.exports(), str(tmp_path / "third.csv"))] == [
+        "third.csv"
+    ]

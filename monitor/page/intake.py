@@ -72,8 +72,8 @@ def _deliveries(unit: Unit, frame: pd.DataFrame, steps: str) -> None:
             f"Longest time without a delivery: {wording.duration(gap[1] - gap[0])}, from {begin} to {end}."
         )
     shell.write(
-        "<h2>What arrived when</h2><p class='quiet'>Readings by the time at which their export was taken in, on a "
-        f"logarithmic scale. {escape(words)}</p>"
+        "<h2>What arrived when</h2><p class='quiet'>Readings by the time at which their export was taken in, "
+        f"on a logarithmic scale. {escape(words)}</p>"
     )
     shell.draw(incoming.chart(bins, unit.time_zone, shell.ink()), f"deliveries {steps}")
 
@@ -134,7 +134,7 @@ def _inside(one: Export, account: Account | None) -> str:
     if account is None:
         what, *remedy = one.error.splitlines()
         return f"{facts}<p>{escape(what)}</p><p class='quiet'>{escape(' '.join(remedy).strip())}</p>"
-    parts = (_ledger(account), _faults(account), _unasked(account), _read(one))
+    parts = (_ledger(account), _faults(account), _beside(account), _unasked(account), _read(one))
     return (
         facts + "<div class='account'>" + "".join(f"<div>{part}</div>" for part in parts if part) + "</div>"
     )
@@ -162,6 +162,13 @@ def _faults(account: Account) -> str:
         for what, remedy, rows in deliveries.faults(account)
     )
     return f"<h3>Rejected</h3>{told}" if told else ""
+
+
+def _beside(account: Account) -> str:
+    """Lines that hold no readings, above, between and below the rows."""
+    kinds, *lines = (*account.beside(), "")
+    told = "".join(f"<p class='row'>{escape(line.strip())}</p>" for line in lines if line)
+    return f"<h3>Beside the rows</h3><p>{escape(kinds)}</p>{told}" if kinds else ""
 
 
 def _unasked(account: Account) -> str:
