@@ -5,7 +5,8 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from datetime import datetime, timedelta
+from datetime import UTC, datetime, timedelta
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -14,10 +15,16 @@ import pandas as pd
 
 from ingest.intake import SETTLE, Outcome, take_in
 from ingest.ledger import Store
+from ingest.parts import month_edges, times_us
 from ingest.passes import Pass
+from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.catchup import Worked, catch_up
-from monitor.days import plan_of
+from monitor.days import Plan, plan_of
+from monitor.desk import known, put
+from monitor.register import registered
+from monitor.verdict import COLUMN
+from monitor.verdicts import with_verdicts
 from monitor.watched import bring_up
 
 Progress = Callable[[str, int, int], None]
@@ -103,16 +110,23 @@ def run_pass(
         clock.append(time.process_time())
         worked = [catch_up(pass_, before, plan, taken.touched[plan.unit.key], progress) for plan in plans]
         clock.append(time.process_time())
-        told = tuple(_tell(pass_, plan.unit, one) for plan, one in zip(plans, worked, strict=True))
+        told = tuple(_tell(pass_, before, plan, one) for plan, one in zip(plans, worked, strict=True))
+        for plan in plans:
+            _register(pass_, store, plan.unit)
         clock.append(time.process_time())
     steps = dict(zip(("exports", "months", "episodes"), np.diff(clock).round(3).tolist(), strict=True))
     return PassResult(pass_.number, taken.outcomes, told, taken.notes, steps)
 
 
-def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
-    """Bring a unit's episodes up to date and tell what became of it."""
+def _tell(pass_: Pass, before: Snapshot, plan: Plan, worked: Worked) -> UnitResult:
+    """Bring a unit's episodes and their verdicts up to date and tell what became of it."""
+    unit = plan.unit
     bring_up(pass_, unit, worked.since_us)
     episodes = pass_.view().episodes(unit.key)
+    if len(episodes):
+        bare = episodes.drop(columns=COLUMN, errors="ignore")
+        episodes = with_verdicts(before, pass_.view(), unit, plan.problem, bare)
+        pass_.replace_episodes(unit.key, episodes)
     return UnitResult(
         unit=unit.key,
         time_zone=unit.time_zone,
@@ -122,6 +136,19 @@ def _tell(pass_: Pass, unit: Unit, worked: Worked) -> UnitResult:
         solved=worked.solved,
         episodes=tuple(_episode(one) for one in episodes.itertuples()),
     )
+
+
+def _register(pass_: Pass, store: Path, unit: Unit) -> None:
+    """Bring a unit's alerts up to date with its episodes, within the commit of the pass."""
+    view = pass_.view()
+    months = view.months(unit.key, "cells")
+    if not months:
+        return
+    starts = times_us(view.read(unit.key, "cells", first=month_edges(months[-1])[0], columns=["start"]))
+    newest = datetime.fromtimestamp(0, UTC) + timedelta(microseconds=int(starts[-1])) + unit.cell
+    names = [watch.name for watch in unit.watches]
+    changed = registered(unit.key, known(store, unit.key), view.episodes(unit.key), names, newest)
+    pass_.at_commit(partial(put, alerts=changed))
 
 
 def _episode(row: Any) -> Episode:

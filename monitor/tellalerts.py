@@ -199,7 +199,7 @@ def healthy(found: Health) -> Iterator[str]:
     """
     share = "" if found.false_share is None else f" ({100 * found.false_share:.0f} % of them false)"
     yield (
-        f"last {PERIOD.days} days: {found.raised} raised ({found.per_day:.2f} a day),"
+        f"last {PERIOD.days} days of the record: {found.raised} raised ({found.per_day:.2f} a day),"
         f" {found.chattering} chattering, {found.fleeting} fleeting, {found.stale} longer than a day,"
         f" {found.shelved} shelved, {found.closed} closed{share}"
     )

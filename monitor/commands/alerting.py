@@ -58,13 +58,15 @@ def list_(unit_files: Sequence[Path], store: Path, every: bool, as_json: bool) -
     from monitor.alerthealth import health
     from monitor.alerts import grouped
     from monitor.desk import read
+    from monitor.store import edges
     from monitor.tellalerts import as_table, healthy, listed
 
     now, told, units = datetime.now(UTC), [], {}
     for unit in map(load, unit_files):
         found = read(store, unit.key, now)
         shown = [(alert, state) for alert, state in found if every or state.open]
-        counts = health(found, now)
+        known = edges(store, unit.key)
+        counts = health(found, min(now, known[1] + unit.cell) if known else now)
         units[unit.key] = {"alerts": [as_table(*one) for one in shown], "health": asdict(counts)}
         told += [f"{unit.name} [{unit.key}]", *listed(grouped(shown), unit.time_zone), *healthy(counts)]
     say({"units": units}, told, as_json=as_json)
