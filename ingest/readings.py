@@ -16,7 +16,7 @@ import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
 from ingest.columns import plain
-from ingest.errors import StoreError
+from ingest.errors import GoneError, StoreError
 
 BAD, UNCERTAIN, GOOD, UNKNOWN = range(4)
 QUALITIES = ("bad", "uncertain", "good", "unknown")  # unknown: the export states none; usable
@@ -364,6 +364,11 @@ def _month(path: Path) -> Iterator[pq.ParquetFile]:
     try:
         with pq.ParquetFile(path) as file:
             yield file
+    except FileNotFoundError as error:
+        raise GoneError(
+            f"{path.name}: is no longer there",
+            remedy="Look again: a later pass has replaced it. If that does not help run 'outlet verify'.",
+        ) from error
     except (OSError, KeyError, TypeError, pa.ArrowException) as error:
         raise StoreError(
             f"{path.name}: not a whole month of readings ({type(error).__name__})",

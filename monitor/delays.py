@@ -70,7 +70,11 @@ def delays(folder: Path, unit: Unit, days: int) -> Delays:
     StoreError
         There are no readings of the unit.
     """
-    view = Store(folder).snapshot()
+    return Store(folder).look(lambda view: _delays(folder, view, unit, days))
+
+
+def _delays(folder: Path, view: Snapshot, unit: Unit, days: int) -> Delays:
+    """Estimate them from one view of the store."""
     tags = tuple(one.tag for one in unit.instruments if one.tag is not None)
     first, last = _record(folder, view, unit, tags)
     begin = max(first, last - days * timedelta(days=1) // _US)

@@ -14,6 +14,7 @@ from ingest.cells import RUNNING, Cells, cells_from_frame
 from ingest.errors import StoreError
 from ingest.ledger import Store
 from ingest.records import Export
+from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor import deliveries
 from monitor.amounts import amounts_of
@@ -62,7 +63,10 @@ def edges(folder: Path, unit: str) -> tuple[pd.Timestamp, pd.Timestamp] | None:
     tuple of Timestamp or None
         None when the unit has no cells.
     """
-    snapshot = Store(folder).snapshot()
+    return Store(folder).look(lambda snapshot: _edges(snapshot, unit))
+
+
+def _edges(snapshot: Snapshot, unit: str) -> tuple[pd.Timestamp, pd.Timestamp] | None:
     months = snapshot.months(unit, "cells")
     if not months:
         return None

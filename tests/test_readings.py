@@ -12,7 +12,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from ingest.errors import StoreError
+from ingest.errors import GoneError, StoreError
 from ingest.readings import (
     BAD,
     GOOD,
@@ -200,3 +200,8 @@ def test_a_damaged_month_is_said_to_be_so(tmp_path: Path, content: bytes):
     (tmp_path / "m.parquet").write_bytes(content)
     with pytest.raises(StoreError, match=r"m\.parquet: not a whole month of readings"):
         read_months([tmp_path / "m.parquet"], ["A"], 0, 1)
+
+
+def test_a_month_that_a_later_pass_replaced_is_told_apart_from_a_damaged_one(tmp_path):
+    with pytest.raises(GoneError, match=r"m\.parquet: is no longer there\n  Look again"):
+        read_months([tmp_path / "m.parquet"], ["FI-1.PV"], 0, 1)
