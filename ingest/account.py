@@ -130,6 +130,7 @@ class Account:
     REASONS, readings); `unasked_tags` (tag, readings). Lines that hold no readings are no rows: `asides`
     holds (key of ASIDES, lines), `aside_lines` (row, key, text) of the first of each. `converted` holds (tag,
     unit of the export, unit of the unit file) of the values that were converted.
+    `superseded_by` holds (number of the export in the ledger, readings that it replaced).
     """
 
     export: str
@@ -148,6 +149,7 @@ class Account:
     asides: tuple[tuple[str, int], ...] = ()
     aside_lines: tuple[tuple[int, str, str], ...] = ()
     converted: tuple[tuple[str, str, str], ...] = ()
+    superseded_by: tuple[tuple[int, int], ...] = ()
 
     @classmethod
     def from_stored(cls, stored: Mapping[str, Any]) -> Self:

@@ -29,11 +29,28 @@ Span = tuple[int, int]  # first <= t < last [us since 1970, UTC]
 
 @dataclass(slots=True)
 class Merged:
-    """What merging did: readings lost or repeated by number of the export, spans changed by tag."""
+    """What merging did: readings lost or repeated by number of the export, spans changed by tag.
+
+    `winners` tells to which export readings were lost: (number of the loser, number of the winner) -> count.
+    """
 
     superseded: Counter[int] = field(default_factory=Counter)
     duplicates: Counter[int] = field(default_factory=Counter)
     touched: dict[str, list[Span]] = field(default_factory=dict)
+    winners: Counter[tuple[int, int]] = field(default_factory=Counter)
+
+    def lose(self, lost: Mapping[int, int], winner: int) -> None:
+        """Count readings that were replaced.
+
+        Parameters
+        ----------
+        lost : mapping of int to int
+            Number of the export -> readings.
+        winner : int
+            Number of the export that replaced them.
+        """
+        self.superseded.update(lost)
+        self.winners.update({(loser, winner): count for loser, count in lost.items() if count})
 
     def copy(self) -> Merged:
         """Give a copy that later merging leaves alone.
@@ -43,7 +60,7 @@ class Merged:
         Merged
         """
         touched = {tag: list(spans) for tag, spans in self.touched.items()}
-        return Merged(self.superseded.copy(), self.duplicates.copy(), touched)
+        return Merged(self.superseded.copy(), self.duplicates.copy(), touched, self.winners.copy())
 
 
 @dataclass(slots=True)
@@ -149,7 +166,7 @@ class Archive:
         """One series per export, in the order in which they came."""
         for number, group in groupby(pieces, key=_number):
             series, superseded, duplicates = join(list(group))
-            self.merged.superseded[number] += superseded
+            self.merged.lose({number: superseded}, number)
             self.merged.duplicates[number] += duplicates
             yield series
 
@@ -159,7 +176,7 @@ class Archive:
         is_later = old.source > number
         later = old.take(is_later)
         before = old.take(~is_later) if len(later) else old
-        self.merged.superseded.update(replaced(before, new))
+        self.merged.lose(replaced(before, new), number)
         whole, _, duplicates = merge(before, new)
         self.merged.duplicates[number] += duplicates
         if len(later):
@@ -169,10 +186,10 @@ class Archive:
 
     def _put_over(self, whole: Series, later: Series) -> Series:
         """Merge what exports of higher numbers said back over a series."""
-        self.merged.superseded.update(replaced(whole, later))
         result, _, _ = merge(whole, later)
         numbers, counts = np.unique(later.source, return_counts=True)
         for number, count in zip(numbers.tolist(), counts.tolist(), strict=True):
+            self.merged.lose(replaced(whole, later.take(later.source == number)), number)
             self.merged.duplicates[number] += count - int(np.count_nonzero(result.source == number))
         return result
 

@@ -6,6 +6,7 @@ import hashlib
 import json
 import os
 import time
+from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
 from datetime import timedelta
@@ -314,7 +315,8 @@ def _enter(pass_: Pass, asked: _Asked, file: _File, read: _Taken, merged: Merged
         superseded=earlier.get("superseded", 0) + merged.superseded[file.number],
         duplicates=earlier.get("duplicates", 0) + merged.duplicates[file.number],
     )
-    told = {**asdict(settled), "dialect": read.dialect}
+    by = _superseded_by(earlier, merged, file.number)
+    told = {**asdict(settled), "dialect": read.dialect, "superseded_by": by}
     told = json.loads(json.dumps(told))  # lists, as they come back from the ledger
     pass_.record_export(_entry(pass_, file, asked, status="taken", error="", account=told))
     return _outcome(file.path, "taken", settled.describe()[0], settled)
@@ -348,8 +350,16 @@ def _amend(pass_: Pass, merged: Merged, entered: set[int]) -> None:
                 "accepted": export.account["accepted"] - superseded - duplicates,
                 "superseded": export.account["superseded"] + superseded,
                 "duplicates": export.account["duplicates"] + duplicates,
+                "superseded_by": _superseded_by(export.account, merged, export.number),
             }
             pass_.record_export(replace(export, account=account))
+
+
+def _superseded_by(account: Mapping[str, Any], merged: Merged, number: int) -> list[list[int]]:
+    """Who replaced readings of an export, before this pass and in it: numbers with counts."""
+    counts = Counter(dict(account.get("superseded_by", ())))
+    counts.update({winner: count for (loser, winner), count in merged.winners.items() if loser == number})
+    return [list(pair) for pair in sorted(counts.items())]
 
 
 def _notes(pass_: Pass, asked: _Asked) -> tuple[str, ...]:

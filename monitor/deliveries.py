@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from difflib import get_close_matches
 from pathlib import Path
 
@@ -156,6 +156,28 @@ def sum_of(account: Account) -> tuple[tuple[int, str], ...]:
     """
     counts = ((getattr(account, name), words) for name, words in PLACES.items())
     return tuple((count, words) for count, words in counts if count or words == PLACES["accepted"])
+
+
+def winners(account: Account, number: int, names: Mapping[int, str]) -> Iterator[str]:
+    """Tell who replaced readings of an export.
+
+    Parameters
+    ----------
+    account : Account
+        Of the export.
+    number : int
+        Its own.
+    names : mapping of int to str
+        Of all exports by number.
+
+    Yields
+    ------
+    str
+        `12 superseded by april.csv (export 14)`.
+    """
+    for winner, count in account.superseded_by:
+        by = "later rows of itself" if winner == number else f"{names.get(winner, '')} (export {winner})"
+        yield f"{wording.number(count, 0)} superseded by {by}"
 
 
 def faults(account: Account) -> Iterator[tuple[str, str, tuple[str, ...]]]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from datetime import datetime
 from typing import Any
 
@@ -68,13 +68,15 @@ def _padded(cell: str, size: int, place: int) -> str:
     return cell.ljust(size) if place in (1, 2, 3 + len(COLUMNS)) else cell.rjust(size)
 
 
-def told(export: Export) -> Iterator[str]:
+def told(export: Export, names: Mapping[int, str]) -> Iterator[str]:
     """Tell the whole account of one export.
 
     Parameters
     ----------
     export : Export
         Of the ledger.
+    names : mapping of int to str
+        Of all exports by number.
 
     Yields
     ------
@@ -94,6 +96,7 @@ def told(export: Export) -> Iterator[str]:
     if account.bad or account.unknown:
         unknown = f"{_number(account.unknown)} without a stated quality"
         yield f"  as read: {_number(account.bad)} of bad quality, {unknown}"
+    yield from (f"  {line}" for line in deliveries.winners(account, export.number, names))
     yield from (f"  {line}" for line in account.beside())
     for what, remedy, rows in deliveries.faults(account):
         yield f"  {what}. {remedy}"

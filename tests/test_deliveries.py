@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
 import pytest
 
@@ -14,7 +15,7 @@ from ingest.exports import describe
 from ingest.ledger import Store
 from monitor import deliveries, tellexports
 from tests.test_cli import outlet
-from tests.test_intake import BOTH, TAGS, take, wide
+from tests.test_intake import BOTH, TAGS, take, unit_of, wide
 
 BAD_ROWS = {
     "2026-03-01T00:00:00Z": (1.0, 2.0),
@@ -97,7 +98,7 @@ def test_the_filter_takes_words_as_they_are_written(store: Store):
 
 def test_the_account_tells_each_fault_with_place_text_reason_and_remedy(store: Store):
     (export,) = deliveries.named(store.exports(), "third.csv")
-    told = "\n".join(tellexports.told(export))
+    told = "\n".join(tellexports.told(export, {}))
     assert "4 rows; 8 readings = 4 accepted + 3 rejected + 1 left blank" in told
     assert "third.csv:3 [FI-1.PV]: '1.5 kg' is not a number" in told
     assert "third.csv:4 [FI-2.PV]: 'not a time' is not a time" in told
@@ -154,7 +155,7 @@ def test_lines_that_hold_no_readings_are_told_with_their_account(tmp_path: Path)
     (export,) = made.exports()
     account = deliveries.account_of(export)
     assert account.asides == (("units", 1),)
-    told = "\n".join(tellexports.told(export))
+    told = "\n".join(tellexports.told(export, {}))
     assert "2 rows; 4 readings = 4 accepted" in told
     assert "Lines that hold no readings: 1 of units." in told
     assert "units.csv:2: ',kg/h,kg/h' is of units" in told
@@ -164,3 +165,39 @@ def test_an_export_is_found_by_a_path_to_it(store: Store, tmp_path: Path):
     assert [one.name for one in deliveries.named(store.exports(), str(tmp_path / "third.csv"))] == [
         "third.csv"
     ]
+
+
+def test_an_account_tells_which_exports_replaced_its_readings(store: Store, tmp_path: Path):
+    # the same minute once more: the second row counts, and then a third file says it otherwise
+    lines = ["time,FI-1.PV,FI-2.PV", *(f"2026-03-07T00:00:00Z,{value},7" for value in (1, 2))]
+    (tmp_path / "twice.csv").write_text("\n".join(lines) + "\n", encoding="utf-8")
+    take(store, tmp_path / "twice.csv")
+    take(store, wide(tmp_path / "later.csv", {"2026-03-07T00:00:00Z": (3.0, 7.0)}))
+    names = {one.number: one.name for one in store.exports()}
+    (twice,) = deliveries.named(store.exports(), "twice.csv")
+    account = deliveries.account_of(twice)
+    assert sum(count for _, count in account.superseded_by) == account.superseded == 2
+    later = next(number for number, name in names.items() if name == "later.csv")
+    assert list(deliveries.winners(account, twice.number, names)) == [
+        "1 superseded by later rows of itself", f"1 superseded by later.csv (export {later})",
+    ]  # fmt: skip
+    assert f"  1 superseded by later.csv (export {later})" in list(tellexports.told(twice, names))
+
+
+def test_who_replaced_what_adds_up_in_whatever_order_exports_are_taken_in(tmp_path: Path):
+    # law: an export taken in again with a lower number than others keeps what those said
+    rng = np.random.default_rng(5)
+    store, one = Store(tmp_path / "store"), unit_of("FI-1")
+    for number in range(6):
+        minutes = sorted(rng.choice(12, size=6, replace=False).tolist())
+        rows = {
+            f"2026-03-01T00:{5 * m:02}:00Z": (int(rng.integers(3)), int(rng.integers(3))) for m in minutes
+        }
+        take(store, wide(tmp_path / f"{number}.csv", rows), units=(one,) if number % 2 else (BOTH,))
+    take(store, *sorted(tmp_path.glob("*.csv")), units=(BOTH,))  # the tags not asked for before
+    accounts = {e.number: deliveries.account_of(e) for e in store.exports()}
+    assert sum(account.superseded for account in accounts.values()) > 10
+    for number, account in accounts.items():
+        assert account.adds_up
+        assert sum(count for _, count in account.superseded_by) == account.superseded
+        assert all(winner >= number for winner, _ in account.superseded_by)

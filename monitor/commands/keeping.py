@@ -33,7 +33,8 @@ def exports(store: Path, name: str, which: str | None, as_json: bool) -> None:
         say({"exports": as_rows(frame)}, listed(frame), as_json=as_json)
         return
     found = named(entries, which)
-    lines = (line for one in found for line in told(one))
+    names = {one.number: one.name for one in entries}
+    lines = (line for one in found for line in told(one, names))
     say({"exports": [as_table(one) for one in found]}, lines, as_json=as_json)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from datetime import datetime, timedelta
 from html import escape
 
@@ -55,7 +56,9 @@ def _body(key: str, steps: str, status: str, name: str) -> None:
     sheet = _sheet(len(found))
     shown = found.iloc[(sheet - 1) * SHEET : sheet * SHEET]
     entries = data.entries(tuple(shown["number"].tolist()))
-    shell.write("<div class='exports'>" + "".join(_export(unit, one) for one in entries) + "</div>")
+    names = dict(zip(frame["number"].tolist(), frame["name"].tolist(), strict=True))
+    lines = "".join(_export(unit, one, names) for one in entries)
+    shell.write(f"<div class='exports'>{lines}</div>")
 
 
 def _deliveries(unit: Unit, frame: pd.DataFrame, steps: str) -> None:
@@ -104,7 +107,7 @@ def _sheet(count: int) -> int:
     return int(st.number_input(label, min_value=1, max_value=sheets, step=1, key="sheet", width=300))
 
 
-def _export(unit: Unit, one: Export) -> str:
+def _export(unit: Unit, one: Export, names: Mapping[int, str]) -> str:
     """One export as a line that opens to its account."""
     status, account = deliveries.status_of(one), deliveries.account_of(one)
     css = {deliveries.ASIDE: "alarm", deliveries.IN_PART: "some"}.get(status, "")
@@ -113,7 +116,7 @@ def _export(unit: Unit, one: Export) -> str:
     return (
         f"<details><summary><span class='{css}'>{deliveries.SHAPES[status]} {status}</span>"
         f"<span class='name'>{escape(one.name)}</span><span class='quiet'>{when}</span>"
-        f"<span class='sum'>{sums}</span></summary><div>{_inside(one, account)}</div></details>"
+        f"<span class='sum'>{sums}</span></summary><div>{_inside(one, account, names)}</div></details>"
     )
 
 
@@ -127,14 +130,20 @@ def _number(count: int) -> str:
     return wording.number(count, 0)
 
 
-def _inside(one: Export, account: Account | None) -> str:
+def _inside(one: Export, account: Account | None, names: Mapping[int, str]) -> str:
     """What an export opens to."""
     size = f"{_number(one.size)} bytes"
     facts = f"<p class='quiet'>Export {one.number}, {size}, taken in by pass {one.made_by}.</p>"
     if account is None:
         what, *remedy = one.error.splitlines()
         return f"{facts}<p>{escape(what)}</p><p class='quiet'>{escape(' '.join(remedy).strip())}</p>"
-    parts = (_ledger(account), _faults(account), _beside(account), _unasked(account), _read(one))
+    parts = (
+        _ledger(account) + _winners(one, account, names),
+        _faults(account),
+        _beside(account),
+        _unasked(account),
+        _read(one),
+    )
     return (
         facts + "<div class='account'>" + "".join(f"<div>{part}</div>" for part in parts if part) + "</div>"
     )
@@ -152,6 +161,12 @@ def _ledger(account: Account) -> str:
         f"<h3>What became of {_number(account.rows)} rows</h3><table class='sums'>{rows}{total}</table>"
         f"<p class='quiet'>As read: {quality}.</p>"
     )
+
+
+def _winners(one: Export, account: Account, names: Mapping[int, str]) -> str:
+    """Who replaced readings of the export."""
+    told = deliveries.winners(account, one.number, names)
+    return "".join(f"<p>{escape(line)}.</p>" for line in told)
 
 
 def _faults(account: Account) -> str:
