@@ -72,7 +72,8 @@ def test_a_pass_killed_at_any_step_leaves_one_whole_state_and_run_again_the_undi
 ):
     answer = steps_tried(disksteps, work, kind, "kill", "few")
     assert answer["wrong"] == []
-    assert answer["after"]["left"] == answer["after"]["missing"] == answer["after"]["findings"] == []
+    assert answer["after"]["missing"] == answer["after"]["findings"] == []
+    assert len(answer["after"]["left"]) == (2 if kind == "next pass" else 0)  # months written anew, emptied
     # What the steps are is seen, not supposed: else a pass that escapes the counting would pass.
     steps = {step.split(" /")[0] for step in answer["steps"]}
     assert {"make", "write", "sync", "rename", "remove", "sql BEGIN IMMEDIATE", "sql COMMIT"} <= steps
