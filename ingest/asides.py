@@ -51,7 +51,7 @@ def without_sums(lines: Lines, separator: str, wanted: Collection[str]) -> Lines
         return lines
     ends = np.flatnonzero(raw == _LF)
     starts = np.append(0, ends[:-1] + 1)
-    perhaps = np.flatnonzero(_may_be_sums(raw, starts))
+    perhaps = _like_sums(raw, starts)
     texts = {int(i): lines.data[starts[i] : ends[i]].decode("utf-8", "replace") for i in perhaps}
     found = [i for i, text in texts.items() if _is_sum(fields(text.rstrip("\r"), separator), wanted)]
     if not found:
@@ -63,21 +63,22 @@ def without_sums(lines: Lines, separator: str, wanted: Collection[str]) -> Lines
     return Lines(kept, lines.rows[keep], lines.faults, (*lines.asides, *asides))
 
 
-def _may_be_sums(raw: NDArray[np.uint8], starts: NDArray[np.int64]) -> NDArray[np.bool_]:
+def _like_sums(raw: NDArray[np.uint8], starts: NDArray[np.int64]) -> NDArray[np.intp]:
     """Lines that begin, after a quote, like a word for a sum, or with a mark and no number."""
     last = len(raw) - 1
-    at = starts + (raw[starts] == _QUOTE)
+    worded = np.flatnonzero(~_NUMERIC[raw[starts]])
+    at = starts[worded] + (raw[starts[worded]] == _QUOTE)
     first, second, third = (raw[np.minimum(at + i, last)] for i in range(3))
     small = [byte.astype(np.int64) | 0x20 for byte in (first, second, third)]
     word = np.isin((small[0] << 16) | (small[1] << 8) | small[2], _BEGINNINGS)
-    found: NDArray[np.bool_] = word | (_MARKS[first] & ~_NUMERIC[second])
+    found: NDArray[np.intp] = worded[word | (_MARKS[first] & ~_NUMERIC[second])]
     return found
 
 
 def _is_sum(cells: Collection[str], wanted: Collection[str]) -> bool:
     """Whether a line is called a sum or an end, and has no time that a reading could be of."""
     name, *rest = cells
-    if name in wanted or any(TIME_LIKE.search(cell) for cell in rest):
+    if name in wanted or any(TIME_LIKE.fullmatch(cell) for cell in rest):
         return False
     return _NAMES.fullmatch(name.strip(" #*-=_()<>[]:.")) is not None
 

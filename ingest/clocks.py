@@ -25,6 +25,7 @@ _NUMBERS = {
     "epoch ms": r"^\s*\d{12,13}([.,]\d+)?\s*$",
     "day number": r"^\s*[3-7]\d{4}([.,]\d+)?\s*$",
 }
+_NUMBER = r"^\s*\d+([.,]\d+)?\s*$"
 _ORDERS = ("day first", "month first", "year first")
 _DAY, _MONTH = r"(0?[1-9]|[12]\d|3[01])", r"(0?[1-9]|1[0-2])"
 # Dates that there can be in each order of their parts; of a year with four digits nobody asks.
@@ -36,6 +37,7 @@ _POSSIBLE = {
 _STATED = r"\d(, ?|[T ]+)\d.*(Z|[+-]\d{2}(:?\d{2})?)\s*$"
 _HALF = r"\d[ \x{a0}\x{202f}]?[AaPp]\.?[Mm]\b"
 _DAY_US = 86_400_000_000
+_UTC = {"UTC", "Etc/UTC", "GMT"}
 
 
 @dataclass(frozen=True, slots=True)
@@ -108,6 +110,8 @@ def _form(export: str, rows: Any, times: Any) -> tuple[str, int]:
     short = max(counts.pop(order + SHORT) for order in _ORDERS)
     counts["day first" + SHORT] = short
     second, first = sorted(counts, key=lambda name: counts[name])[-2:]
+    if first == "day number" and matches(times, _NUMBER) > counts[first]:
+        counts[first] = 0  # seconds or minutes that pass by such numbers
     if counts[first] > counts[second]:
         return first, counts[first]
     at, text = first_match(times, r"\S") or (0, "")
@@ -121,15 +125,26 @@ def _zone(place: str, zone: str | None, name: str) -> str:
     remedy = "Set time_zone under [exports] in the unit file, e.g. to 'Europe/Berlin' or 'UTC'."
     if zone is None:
         raise ExportError(f"{place}: times state no offset, and no time zone is stated", remedy=remedy)
-    if {"utc", "gmt"} & set(re.findall(r"[a-z]+", name.casefold())) and zone not in ("UTC", "Etc/UTC", "GMT"):
+    said = _said_zone(name)
+    if said is not None and zone != said and {zone, said} - _UTC:
         raise ExportError(
             f"{place}: the column {name!r} does not hold times of the stated zone {zone!r}",
-            remedy="Set time_zone under [exports] to 'UTC' in the unit file.",
+            remedy=f"Set time_zone under [exports] to {said!r} in the unit file.",
         )
     try:
         return ZoneInfo(zone).key
     except (ZoneInfoNotFoundError, ValueError) as error:
         raise ExportError(f"{place}: there is no time zone {zone!r}", remedy=remedy) from error
+
+
+def _said_zone(name: str) -> str | None:
+    """The zone that a column's name states, if it states UTC or a fixed distance from it."""
+    found = re.search(r"\b(?:utc|gmt)(?:\s*([+-])\s*0?(\d{1,2})(?::?00)?)?\b", name.casefold())
+    if found is None:
+        return None
+    if not int(found[2] or 0):
+        return "UTC"
+    return f"Etc/GMT{'-' if found[1] == '+' else '+'}{found[2]}"  # POSIX counts to the west
 
 
 def _form_of_numbers(place: str, column: Any) -> str:
@@ -142,8 +157,8 @@ def _form_of_numbers(place: str, column: Any) -> str:
         ("day number", _DAY_US, of_1970),
     ):
         low, high = EARLIEST_US / us + shift, LATEST_US / us + shift
-        within = pc.and_(pc.greater_equal(number, low), pc.less(number, high))
-        if 2 * np.count_nonzero(flags(within)) > len(number):
+        within = np.count_nonzero(flags(pc.and_(pc.greater_equal(number, low), pc.less(number, high))))
+        if 2 * within > len(number) and (form in EPOCHS or within == len(number)):
             return form
     raise ExportError(
         f"{place}: what stands in the time column ({column.type}) is no seconds or milliseconds since 1970,"

@@ -18,7 +18,7 @@ from ingest.values import MISSING_WORDS
 SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
 
 _MOST_BELOW = 3  # rows of descriptions and units
-TIME_LIKE = re.compile(r"\d{1,4}[-/.]\d{1,2}[-/.]\d{2,4}|\d:\d{2}")
+TIME_LIKE = re.compile(r"\d{1,4}[-/.]\d{1,2}[-/.]\d{2,4}([T ,].*)?|\d{1,2}:\d{2}(:\d{2}.*)?")
 _NUMBER = re.compile(r"[+\-\u2212]?[\d.,' ]*\d[\d.,' ]*([eE][+-]?\d+)?")
 _UNITS = re.compile(r"(?:(?:eng(?:ineering|\.)? ?)?units?|uom|eu|einheit(?:en)?)", re.IGNORECASE)
 # What engineering units look like; only to tell a row of units from one of descriptions.
@@ -120,12 +120,23 @@ def decide_heading(export: str, lines: Sequence[tuple[int, str]], wanted: Collec
     row = lines[at][0]
     separator = decide_separator(export, [text for _, text in lines[at:]], row)
     cells = fields(lines[at][1], separator)
+    _refuse_values(f"{export}:{row}", cells, wanted)
     split = [_BRACKETED.fullmatch(cell) if cell not in wanted else None for cell in cells]
     parts = [(found[1], found[2]) if found and found[1] in wanted else None for found in split]
     header = tuple(part[0] if part else cell for part, cell in zip(parts, cells, strict=True))
     below = _below(header, [(n, fields(text, separator)) for n, text in lines[at + 1 :]])
     last = below[-1].row if below else row
     return Heading(separator, header, row, last, tuple(lines[:at]), below, tuple(filter(None, parts)))
+
+
+def _refuse_values(place: str, cells: Sequence[str], wanted: Collection[str]) -> None:
+    """A row of readings taken for the header would be lost, and its values taken for tags."""
+    times = [cell for cell in cells if TIME_LIKE.fullmatch(cell) and cell not in wanted]
+    if times:
+        raise ExportError(
+            f"{place}: {times[0]!r} is a time, but this line should name the columns",
+            remedy="Export with the names of the columns in one line above the rows.",
+        )
 
 
 def _header_place(lines: Sequence[str], wanted: Collection[str]) -> int:
@@ -145,7 +156,8 @@ def _likeness(row: Sequence[str], wanted: Collection[str]) -> tuple[int, int, in
     """How much a line is like a header: time named, known names, names at all; -1 for one of values."""
     named = roles(row, wanted)
     timed = bool(named["time"])
-    if any(TIME_LIKE.search(cell) for cell in row) or (not timed and any(map(_NUMBER.fullmatch, row))):
+    others = [cell for cell in row if cell not in wanted]
+    if any(map(TIME_LIKE.fullmatch, others)) or (not timed and any(map(_NUMBER.fullmatch, others))):
         return -1, 0, 0
     tags = (cell in wanted or _BRACKETED.sub(r"\1", cell) in wanted for cell in row)
     known = sum(map(len, named.values())) + sum(tags)
@@ -232,7 +244,7 @@ def _below(header: Sequence[str], lines: Sequence[tuple[int, list[str]]]) -> tup
 
 def _are_names(cells: Sequence[str], values: Sequence[str]) -> bool:
     """Whether a row holds words in place of times and numbers, and more than words for no value."""
-    if any(TIME_LIKE.search(cell) or _NUMBER.fullmatch(cell) for cell in cells):
+    if any(TIME_LIKE.fullmatch(cell) or _NUMBER.fullmatch(cell) for cell in cells):
         return False
     return any(value.casefold() not in MISSING_WORDS for value in values)
 

@@ -157,6 +157,18 @@ REFUSED: dict[str, tuple[str, bytes, str, str]] = {
         r"x\.csv:1: the header 'Dear all' names one",
         "in the first line",
     ),
+    "no header": (
+        "x.csv",
+        b"2026-01-01T00:00Z,1\n2026-01-01T00:01Z,2\n",
+        r"x\.csv:1: '2026-01-01T00:00Z' is a time, but this line should name the columns",
+        "names of the columns in one line",
+    ),
+    "seconds that pass": (
+        "x.csv",
+        b"time,A\n0,1\n30000,1\n40000,1\n50000,1\n",
+        r"x\.csv:2: '0' is no known form of time",
+        "Export times",
+    ),
     "no time column": ("x.csv", b"A,B\n1,2\n3,4\n", r"x\.csv:1: no time column", "Name the column"),
     "two time columns": (
         "x.csv",

@@ -11,6 +11,7 @@ import numpy as np
 import pyarrow as pa
 import pytest
 
+from ingest import lines
 from ingest.account import Account
 from ingest.errors import ExportError
 from ingest.measures import Stated
@@ -373,6 +374,16 @@ def test_times_that_say_they_are_utc_are_not_read_in_another_zone(tmp_path: Path
     assert read(path, wanted=("A",), zone="UTC")[0]["A"].value.tolist() == [1.5]
 
 
+@pytest.mark.parametrize("name", ["time (UTC+1)", "time GMT+01:00", "time [utc + 01]"])
+def test_times_that_say_how_far_they_are_from_utc_need_that_zone(tmp_path: Path, name: str):
+    path = saved(tmp_path, f"{name},A\n2026-03-13 06:00,1.5\n")
+    with pytest.raises(ExportError, match="does not hold times of the stated zone 'Europe/Berlin'") as caught:
+        read(path, wanted=("A",), zone=BERLIN)
+    assert caught.match("Set time_zone under .exports. to 'Etc/GMT-1'")
+    time = read(path, wanted=("A",), zone="Etc/GMT-1")[0]["A"].time  # an hour east of UTC, by POSIX's sign
+    assert time.tolist() == [micros(datetime(2026, 3, 13, 5, tzinfo=UTC))]
+
+
 def test_lines_that_hold_no_readings_are_told_with_the_first_of_each_kind(tmp_path: Path):
     case = CASES["wide, all around"]
     ((name, raw),) = case.files()
@@ -392,6 +403,26 @@ def test_a_tag_that_is_called_like_a_sum_keeps_its_readings(tmp_path: Path):
     readings, account = read(saved(tmp_path, text), wanted=("SUM", "Max"))
     assert {tag: series.value.tolist() for tag, series in readings.items()} == {"SUM": [1.5], "Max": [2.5]}
     assert (account.rejected, account.asides) == (1, ())
+
+
+def test_the_head_is_the_same_however_little_is_read_at_a_time(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+):
+    case = CASES["wide, all around"]
+    ((name, raw),) = case.files()
+    monkeypatch.setattr(lines, "BLOCK", 16)
+    readings, account = read(saved_raw(tmp_path, name, raw), units=UNITS)
+    assert_same(readings, case.truth, case)
+    assert sum(count for _, count in account.asides) == 9
+
+
+def test_tags_that_look_like_dates_are_tags_where_somebody_asked_for_them(tmp_path: Path):
+    text = "Report,,\nmoment,10.20.300,12:30\n2026-03-13T06:00Z,1.5,2.5\n"
+    readings, _ = read(saved(tmp_path, text), wanted=("10.20.300", "12:30"))
+    assert {tag: series.value.tolist() for tag, series in readings.items()} == {
+        "10.20.300": [1.5],
+        "12:30": [2.5],
+    }
 
 
 def test_a_sum_in_the_middle_of_the_rows_costs_no_reading(tmp_path: Path):
