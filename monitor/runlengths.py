@@ -25,6 +25,10 @@ BROWNIAN_EXCESS = 1.166  # twice the mean excess of a normal random walk over a 
 NODES_PER_SD = 5  # an integrand as smooth as a normal density is then exact to eight digits and more
 LEAST_NODES = 40
 WIDEST = 500.0  # no threshold is looked for beyond so many standard deviations
+LEAST_TOTALS, LASTS, REACH_SD = 14, 14, 5.0  # nodes that keep run lengths of autocorrelated values within 2 %
+LONGEST, TELLING = 1e5, 2e4  # the longest that can be told so, and one that is told well
+ERRORS, MATCHES = 7, 3  # errors of an expectation looked at; rounds until the excess has settled
+SPAN = 0.25  # share of the wanted interval in which charts are counted
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,6 +121,46 @@ def ewma(weight: float, limit: float, shift: float = 0.0) -> float:
     return float(1.0 + step[0] @ length)
 
 
+def cusum_autocorrelated(reference: float, threshold: float, shift: float = 0.0, *, phi: float) -> float:
+    """Average run length of a one-sided tabular CUSUM on values that depend on the one before.
+
+    Parameters
+    ----------
+    reference, threshold, shift : float
+        As in `cusum`; the standard deviation is that of the values.
+    phi : float
+        Correlation of a value with the one before it, of a first-order autoregression; 0 to below 1.
+
+    Returns
+    -------
+    float
+        [values], from a sum of zero and a value drawn from all values; infinite where it is beyond 1e5.
+
+    Notes
+    -----
+    The integral equation of `cusum` with the last value as second variable, solved on Chebyshev nodes.
+    """
+    long_run, spread = math.sqrt((1 + phi) / (1 - phi)), math.sqrt(1.0 - phi**2)
+    if _siegmund_at((shift - reference) / long_run, threshold / long_run) > LONGEST:
+        return math.inf  # without the excess over the threshold already
+    totals = _chebyshev(0.0, threshold, LEAST_TOTALS + int(threshold / 2.5))
+    lasts = _chebyshev(-REACH_SD, REACH_SD, LASTS)
+    total, last = (axis.ravel() for axis in np.meshgrid(totals, lasts, indexing="ij"))
+    low, high = (np.clip(phi * last + side * REACH_SD * spread, -REACH_SD, REACH_SD) for side in (-1, 1))
+    zero = np.clip(reference - shift - total, low, high)  # below it the sum is set back to zero
+    alarm = np.clip(reference - shift - total + threshold, low, high)
+    step = np.zeros((len(total), len(totals), len(lasts)))
+    for first, end in ((low, zero), (zero, (zero + alarm) / 2), ((zero + alarm) / 2, alarm)):
+        value, weight = _between(first, end)
+        weight *= _density((value - phi * last[:, None]) / spread) / spread
+        after = np.clip(total[:, None] + value - reference + shift, 0.0, threshold)
+        step += (weight[..., None] * _basis(totals, after)).transpose(0, 2, 1) @ _basis(lasts, value)
+    length = np.linalg.solve(np.eye(len(total)) - step.reshape(len(total), -1), np.ones(len(total)))
+    value, weight = _nodes(-REACH_SD, REACH_SD, sd=1.0)
+    found = float(weight * _density(value) @ _basis(lasts, value) @ length[: len(lasts)])
+    return found if 1.0 <= found <= LONGEST else math.inf
+
+
 def rules(which: Sequence[Rule], shift: float = 0.0) -> float:
     """Average run length of a chart with limits that values may cross so many times in so many.
 
@@ -157,10 +201,7 @@ def siegmund(reference: float, threshold: float, shift: float = 0.0) -> float:
     float
         [values]; close where reference less shift is well below one standard deviation.
     """
-    drift, height = shift - reference, threshold + BROWNIAN_EXCESS
-    if abs(drift) * height < 1e-6:
-        return height**2
-    return (math.exp(-2 * drift * height) + 2 * drift * height - 1) / (2 * drift**2)
+    return _siegmund_at(shift - reference, threshold + BROWNIAN_EXCESS)
 
 
 def cusum_threshold(reference: float, wanted: float) -> float:
@@ -179,6 +220,55 @@ def cusum_threshold(reference: float, wanted: float) -> float:
         [sd]; 0 where even single values beyond the reference are rarer than that.
     """
     return _matched(lambda threshold: cusum(reference, threshold), wanted)
+
+
+def drift_threshold(reference: float, wanted: float, *, phi: float, unsure: float) -> float:
+    """Give the threshold of a one-sided CUSUM on deviations from an expectation that may itself be off.
+
+    Parameters
+    ----------
+    reference : float
+        As in `cusum`, in standard deviations of the values.
+    wanted : float
+        Mean time between false alarms [values].
+    phi : float
+        As in `cusum_autocorrelated`.
+    unsure : float
+        Standard error of the expectation, at most half of the reference [sd].
+
+    Returns
+    -------
+    float
+        [sd]; at least the reference, so that no single value alarms that moved less than twice that.
+
+    Notes
+    -----
+    The share of charts that alarm within a quarter of `wanted`, over all the errors that the expectation may
+    have, is what it would be at that rate without any. Errors enter by Siegmund's formula with the long-run
+    standard deviation; its excess over the threshold is that of the integral equation without errors.
+    """
+    long_run = math.sqrt((1 + phi) / (1 - phi))
+    error, weight = np.polynomial.hermite_e.hermegauss(ERRORS)
+    drifts = ((unsure * error - reference) / long_run).tolist()
+
+    def alarms(height: float) -> float:
+        rates = np.array([SPAN * wanted / _siegmund_at(drift, height) for drift in drifts])
+        return float(weight @ -np.expm1(-rates)) / float(weight.sum())
+
+    height = _falling(alarms, -math.expm1(-SPAN), 1.0)
+    return max(reference, height * long_run - _excess(reference, min(wanted, TELLING), phi))
+
+
+def _excess(reference: float, wanted: float, phi: float) -> float:
+    """How much higher than a threshold the one of Siegmund's formula is at a run length [sd]."""
+    long_run = math.sqrt((1 + phi) / (1 - phi))
+    height = _height_of(reference / long_run, wanted) * long_run
+    excess = BROWNIAN_EXCESS * long_run
+    for _ in range(MATCHES):
+        threshold = max(reference, height - excess)
+        length = cusum_autocorrelated(reference, threshold, phi=phi)
+        excess = _height_of(reference / long_run, min(length, LONGEST)) * long_run - threshold
+    return excess
 
 
 def ewma_limit(weight: float, wanted: float) -> float:
@@ -226,11 +316,57 @@ def brownian_delay(shift: float, variance_rate: float, wanted: float) -> float:
     return float(2 * scale * (math.expm1(-nu) + nu))
 
 
+def _siegmund_at(drift: float, height: float) -> float:
+    """Mean time for a Brownian motion kept above zero to reach a height, finite for any argument."""
+    if abs(drift) * height < 1e-6:
+        return height**2
+    steep = min(-2 * drift * height, 600.0)
+    return (math.exp(steep) + 2 * drift * height - 1) / (2 * drift**2)
+
+
+def _height_of(reference: float, length: float) -> float:
+    """Height at which Siegmund's formula gives a run length."""
+    return float(brentq(lambda height: math.log(_siegmund_at(-reference, height) / length), 1e-6, WIDEST))
+
+
+def _falling(share: Callable[[float], float], wanted: float, first: float) -> float:
+    """Find the argument at which a falling function is what is wanted; the widest if it never is."""
+    high = first
+    while share(high) > wanted and high < WIDEST:
+        high *= 1.5
+    if share(high) > wanted:
+        return high
+    return float(brentq(lambda height: share(height) - wanted, first * 1e-3, high))
+
+
 def _nodes(low: float, high: float, *, sd: float) -> tuple[Array, Array]:
     """Gauss-Legendre nodes and weights of an interval, close enough for a density of that spread."""
     node, weight = np.polynomial.legendre.leggauss(LEAST_NODES + math.ceil(NODES_PER_SD * (high - low) / sd))
     half = (high - low) / 2
     return low + half * (node + 1.0), half * weight
+
+
+def _chebyshev(low: float, high: float, count: int) -> Array:
+    """Chebyshev nodes of an interval, its ends among them, ascending."""
+    return low + (high - low) * (1.0 - np.cos(np.pi * np.arange(count) / (count - 1))) / 2.0
+
+
+def _basis(nodes: Array, at: Array) -> Array:
+    """Weights of the values at Chebyshev nodes in the polynomial through them, one row for each place."""
+    sign = (-1.0) ** np.arange(len(nodes))
+    sign[[0, -1]] /= 2.0
+    apart = at[..., None] - nodes
+    met = apart == 0.0
+    parts = sign / np.where(met, 1.0, apart)
+    through = parts / parts.sum(axis=-1, keepdims=True)
+    return np.asarray(np.where(met.any(axis=-1, keepdims=True), met, through), dtype=np.float64)
+
+
+def _between(first: Array, end: Array) -> tuple[Array, Array]:
+    """Gauss-Legendre nodes and weights of many intervals (intervals, nodes); some may be empty."""
+    node, weight = np.polynomial.legendre.leggauss(16)
+    half = (end - first)[:, None] / 2.0
+    return first[:, None] + half * (node + 1.0), half * weight
 
 
 def _density(value: Array) -> Array:

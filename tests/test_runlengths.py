@@ -173,3 +173,46 @@ def test_no_chart_on_fine_steps_beats_the_yardstick_and_a_good_one_comes_close()
     delay = step * runlengths.cusum(reference, threshold, shift / sd)
     yardstick = runlengths.brownian_delay(shift, sd**2 * step, 720.0)
     assert yardstick < delay < 1.1 * yardstick
+
+
+def test_values_that_do_not_depend_on_the_one_before_run_as_long_as_independent_ones():
+    for reference, threshold in ((0.5, 4.0), (0.25, 8.0), (1.5, 1.6)):
+        found = runlengths.cusum_autocorrelated(reference, threshold, phi=0.0)
+        assert found == pytest.approx(runlengths.cusum(reference, threshold), rel=1e-3)
+
+
+@pytest.mark.parametrize(("reference", "threshold", "phi"), [(0.9, 5.0, 0.75), (0.3, 9.0, 0.3)])
+def test_an_autocorrelated_chart_runs_as_long_as_it_does_when_played(
+    reference: float, threshold: float, phi: float
+):
+    # a law: the mean of 1,500 played charts lies within four of its standard errors, and 2 %
+    rng, runs = np.random.default_rng(11), 1500
+    value, total, alarmed = rng.standard_normal(runs), np.zeros(runs), np.zeros(runs)
+    for place in range(1, 6000):
+        value = phi * value + math.sqrt(1 - phi**2) * rng.standard_normal(runs)
+        total = np.maximum(0.0, total + value - reference)
+        alarmed = np.where((alarmed == 0) & (total > threshold), place, alarmed)
+    assert (alarmed > 0).mean() > 0.995
+    played = alarmed[alarmed > 0]
+    error = 4 * played.std() / math.sqrt(len(played))
+    exact = runlengths.cusum_autocorrelated(reference, threshold, phi=phi)
+    assert abs(played.mean() - exact) < error + 0.02 * exact
+
+
+def test_a_drift_threshold_gives_the_run_length_that_is_wanted_where_the_expectation_is_sure():
+    for reference, phi in ((0.3, 0.0), (0.9, 0.75), (0.5, 0.5)):
+        threshold = runlengths.drift_threshold(reference, 1440, phi=phi, unsure=0.0)
+        found = runlengths.cusum_autocorrelated(reference, threshold, phi=phi)
+        assert found == pytest.approx(1440, rel=0.02)
+
+
+def test_a_drift_threshold_rises_with_the_doubt_about_the_expectation_and_is_never_below_the_reference():
+    found = [runlengths.drift_threshold(0.9, 2880, phi=0.75, unsure=one) for one in (0.0, 0.2, 0.45)]
+    assert found == sorted(found)
+    assert found[-1] > 1.2 * found[0]
+    # without noise to speak of a value has to move by twice the reference
+    assert runlengths.drift_threshold(6.0, 1440, phi=0.5, unsure=0.0) == 6.0
+
+
+def test_a_run_length_past_all_counting_is_infinite():
+    assert runlengths.cusum_autocorrelated(3.0, 40.0, phi=0.2) == math.inf
