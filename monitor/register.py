@@ -6,7 +6,6 @@ revised, and where there is no such episode any more it is withdrawn, with the r
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterable, Sequence
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta
@@ -15,6 +14,7 @@ from typing import Any
 import pandas as pd
 
 from monitor.alerts import Alert
+from monitor.verdict import read
 
 OLD = timedelta(hours=24)  # what was over for so long when it was first seen is past: nobody had to act
 GONE_WATCH = "the unit file no longer has this watch"
@@ -68,7 +68,8 @@ def registered(
 def _alert(unit: str, row: dict[Any, Any], newest: datetime) -> Alert:
     """An episode as an alert without an id."""
     cleared = None if pd.isna(row["cleared"]) else row["cleared"].to_pydatetime()
-    verdict = json.loads(row.get("verdict") or "{}")
+    verdict = read(row)
+    stands = verdict is not None and not verdict.is_provisional
     return Alert(
         id="",
         unit=unit,
@@ -83,8 +84,8 @@ def _alert(unit: str, row: dict[Any, Any], newest: datetime) -> Alert:
         cleared=cleared,
         suppressed=bool(row["suppressed"]),
         past=cleared is not None and cleared < newest - OLD,
-        cause=verdict.get("word", ""),
-        suspects=tuple(verdict.get("suspects", ())),
+        cause=verdict.word if verdict is not None and stands else "",
+        suspects=tuple(one.name for one in verdict.suspects) if verdict is not None and stands else (),
     )
 
 

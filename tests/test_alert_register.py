@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-import json
+from dataclasses import fields
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
@@ -10,6 +10,7 @@ import pandas as pd
 
 from monitor.alerts import Alert
 from monitor.register import GONE_DATA, GONE_WATCH, registered
+from monitor.verdict import Suspect, Verdict, as_text
 
 START = pd.Timestamp("2026-03-01T00:00Z")
 WATCHES = ("yield, shift", "closure")
@@ -109,8 +110,17 @@ def test_what_was_over_a_day_ago_when_it_was_first_seen_is_past_and_stays_so():
     assert [one.past for one in later] == [True, False]
 
 
+def verdict(*, is_provisional: bool) -> str:
+    """A verdict with nothing in it but what people are told first."""
+    nothing = {field.name: () for field in fields(Verdict)}
+    numbers = dict.fromkeys(("balance_p", "reaction_p", "misfit_p"), 1.0)
+    suspect = Suspect("AI-220 oxygen", "instrument", 0.97, 0.05, 0.01, "the oxygen channel")
+    told = {"word": "instrument", "is_provisional": is_provisional, "suspects": (suspect,), "loss": None}
+    return as_text(Verdict(**{**nothing, **numbers, **told, "onset_us": None}))
+
+
 def test_the_verdict_that_was_told_is_part_of_the_alert():
     known = passed((), episode(90, None))
-    verdict = json.dumps({"word": "instrument", "suspects": ["AI-220 oxygen"]})
-    (alert,) = passed(known, episode(90, None, verdict=verdict))
+    assert passed(known, episode(90, None, verdict=verdict(is_provisional=True))) == ()
+    (alert,) = passed(known, episode(90, None, verdict=verdict(is_provisional=False)))
     assert (alert.cause, alert.suspects) == ("instrument", ("AI-220 oxygen",))
