@@ -201,3 +201,13 @@ def test_who_replaced_what_adds_up_in_whatever_order_exports_are_taken_in(tmp_pa
         assert account.adds_up
         assert sum(count for _, count in account.superseded_by) == account.superseded
         assert all(winner >= number for winner, _ in account.superseded_by)
+
+
+@pytest.mark.parametrize(("which", "what"), [("thrid.csv", "thrid.csv: no export"), ("99", "99: no export")])
+def test_an_export_that_is_not_there_is_told_in_two_lines(
+    store: Store, tmp_path: Path, which: str, what: str
+):
+    done = outlet("exports", which, "--store", store.folder, folder=tmp_path)
+    assert done.returncode == 2
+    assert done.stderr.startswith(what)
+    assert done.stderr.splitlines()[1:] == ["  See 'outlet exports' for all numbers and names."]

@@ -51,7 +51,7 @@ class Running:
     def warnings(self) -> str:
         return (self.folder / "err").read_text()
 
-    def until(self, holds: Callable[[], object], seconds: float = 30) -> None:
+    def until(self, holds: Callable[[], object], seconds: float = 60) -> None:
         end = time.monotonic() + seconds
         while not holds():
             assert self.process.poll() is None, self.warnings
@@ -202,6 +202,15 @@ def test_whatever_comes_between_is_told_once_and_then_it_goes_on(folder: Path, p
         running.until(lambda: len(running.passes) > before)
         assert [one["status"] for one in running.passes[-1]["exports"]] == ["taken"]
 
+        # another pass holds the store
+        before = len(running.passes)
+        with Store(folder / "store").begin():
+            shutil.copy(plant[0], arriving / "again.csv")
+            time.sleep(1.5)
+            assert len(running.passes) == before
+        running.until(lambda: len(running.passes) > before)
+        assert [one["status"] for one in running.passes[-1]["exports"]] == ["taken already"]
+
         # a unit file is spoilt and mended; meanwhile the unit is used as it was
         good = unit_file.read_text(encoding="utf-8")
         unit_file.write_text(good.replace("deadband", "deadbnd", 1), encoding="utf-8")
@@ -274,7 +283,8 @@ follower = Follower([folder / "unit.toml"], folder / "store", [folder / "in"], s
 head, *rows = Path(sys.argv[2]).read_text().splitlines()[:300]
 for number in range(60):
     # the same hours told again, each time a little otherwise, so that the record stays as long as it is
-    told_again = [row.replace(",2", f",2{number:02}") for row in rows[120:]]
+    columns = (row.split(",", 2) for row in rows[120:])
+    told_again = [f"{time},{5600 + number},{others}" for time, _, others in columns]
     (folder / "in" / "again.csv").write_text("\\n".join([head, *told_again]) + "\\n")
     follower.look(float(number))
     if number in (9, 59):
