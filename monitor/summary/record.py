@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from ingest.balance import Problem
 from ingest.cells import NOT_KNOWN, RUNNING, Cells, cells_from_frame
 from ingest.conditions import MISSING
+from ingest.parts import instant_us
 from ingest.reconcile import NOT_CONVERGED, SOLVED, States
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
@@ -126,8 +127,7 @@ def inside(start_us: NDArray[np.int64], spans: pd.DataFrame) -> NDArray[np.bool_
     """
     found = np.zeros(len(start_us), dtype=bool)
     for first, last in zip(spans["start"], spans["end"], strict=True):
-        low, high = (int(pd.Timestamp(edge).as_unit("us").value) for edge in (first, last))
-        found |= (start_us >= low) & (start_us < high)
+        found |= (start_us >= instant_us(first)) & (start_us < instant_us(last))
     return found
 
 

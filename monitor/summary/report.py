@@ -45,13 +45,15 @@ th.group { text-align: center; border-left: 0.4mm solid #fff; background: #eef1f
 figure { margin: 0; break-inside: avoid; }
 figcaption { font-weight: 600; font-size: 9pt; margin: 2mm 0 1mm; }
 svg { width: 100%; height: auto; }
+.wide { grid-template-columns: 7fr 5fr; }
 .new { break-before: page; }
 td.t { white-space: nowrap; }
 td.long { overflow-wrap: anywhere; min-width: 60mm; }
 tr.part td { font-weight: 600; padding-top: 2mm; border-bottom-color: #7d8a92; }
 footer { margin-top: 6mm; border-top: 0.3mm solid #7d8a92; padding-top: 2mm; font-size: 7.5pt;
   color: #4f5d66; }
-@media print { body { padding: 0; max-width: none; } h2.new { margin-top: 0; } }
+@media print { body { padding: 0; max-width: none; } h2.wide { grid-template-columns: 7fr 5fr; }
+.new { margin-top: 0; } }
 """
 # Columns of the long tables that a page has room for; the workbook holds all.
 SHOWN: Mapping[str, Sequence[str]] = {
@@ -124,7 +126,7 @@ def _sections(summary: Summary) -> Iterable[str]:
     yield '<h2 class="new">Figures by day</h2>'
     yield _by_day(summary)
     yield '<h2 class="new">Balance by day</h2>'
-    yield '<div class="two">'
+    yield '<div class="two wide">'
     yield _table(summary, "balances")
     yield _picture("Closures by day as read [%], 95 % interval", pictures.closures_by_day(summary), "c")
     yield "</div>"

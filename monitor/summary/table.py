@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -188,26 +188,24 @@ def _settled(column: pd.Series) -> pd.Series:
 
 
 def _plain(tables: Mapping[str, pd.DataFrame]) -> dict[str, Any]:
-    """Tables as JSON knows them: columns by name, missing numbers as null."""
+    """Tables as JSON knows them: columns in a list, since the store sorts names; missing numbers as null."""
     return {
-        name: {column: [_json(one) for one in frame[column]] for column in frame}
+        name: [[column, frame[column].dtype.kind == "f", _json(frame[column])] for column in names(frame)]
         for name, frame in tables.items()
     }
 
 
-def _json(value: Any) -> Any:
-    if isinstance(value, str):
-        return value
-    return None if math.isnan(value) else float(value)
+def _json(column: pd.Series) -> list[str | float | None]:
+    if column.dtype.kind == "f":
+        return [None if math.isnan(value) else value for value in column.tolist()]
+    return [str(value) for value in column]
 
 
-def _frame(columns: Mapping[str, list[Any]]) -> pd.DataFrame:
-    """A table from its columns; a column without any text is of numbers."""
-    made = {}
-    for name, values in columns.items():
-        texts = any(isinstance(one, str) for one in values)
-        made[name] = pd.Series(values, dtype="str" if texts or not values else "float64")
-    return pd.DataFrame(made)
+def _frame(columns: Sequence[tuple[str, bool, list[Any]]]) -> pd.DataFrame:
+    """A table from its columns, each of numbers or of texts."""
+    return pd.DataFrame(
+        {name: pd.Series(values, dtype="float64" if numbers else "str") for name, numbers, values in columns}
+    )
 
 
 def _table_changes(name: str, old: pd.DataFrame, new: pd.DataFrame) -> list[tuple[str, ...]]:

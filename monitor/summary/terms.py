@@ -63,6 +63,6 @@ def _terms(decimals: int) -> dict[str, str]:
         "5 % below, 5 % above": "Percentiles of the cells while the unit was not down.",
         "adjustment": "Reconciled prediction minus reading, in standard uncertainties of the reading; it "
         "should stay within the number beside it.",
-        "fit above its bound": "Share of cells whose weighted sum of squares lies above what chi-square "
+        "above bound": "Share of cells whose weighted sum of squares lies above what chi-square "
         "allows 19 times in 20: 5 % is what chance gives.",
     }

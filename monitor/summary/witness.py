@@ -51,7 +51,7 @@ def balances(
     columns = {
         "balance solved [h]": _count(record.solved, place, span) * cell_h,
         "balance not solved [h]": _count(record.unsolved, place, span) * cell_h,
-        "fit above its bound [%]": _share(above.to_numpy(), known.to_numpy(), place, span),
+        "above bound [%]": _share(above.to_numpy(), known.to_numpy(), place, span),
     }
     for one in figures:
         if one.name.endswith(CLOSURE):
@@ -86,7 +86,7 @@ def instruments(unit: Unit, problem: Problem, record: Record) -> pd.DataFrame:
             "tag": [one.tag or "" for one in unit.instruments],
             "kind": [one.kind for one in unit.instruments],
             "stream": [one.stream or "" for one in unit.instruments],
-            "unit": [one.unit for one in unit.instruments],
+            "unit": [one.unit.removeprefix("-") for one in unit.instruments],
             "mean": value.mean().to_numpy(),
             "5 % below": value.quantile(0.05).to_numpy(),
             "5 % above": value.quantile(0.95).to_numpy(),

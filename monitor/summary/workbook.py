@@ -123,15 +123,14 @@ class _Writer:
         """Give a format with the house font, made once."""
         key = tuple(sorted(wanted.items()))
         if key not in self._formats:
-            plain = {"font_name": "Arial", "font_size": 9, "font_color": INK, "valign": "top"}
+            plain = {"font_name": "Arial", "font_size": 9, "font_color": INK, "valign": "vcenter"}
             self._formats[key] = self.book.add_format(plain | wanted)
         return self._formats[key]
 
-    def header(self) -> Any:
-        """Give the format of headings."""
-        return self.format(
-            bold=True, text_wrap=True, bottom=1, bg_color="#eef1f0", valign="vcenter", align="center"
-        )
+    def header(self, *, of_numbers: bool) -> Any:
+        """Give the format of headings, on the side on which the column is read."""
+        side = {"align": "right"} if of_numbers else {"align": "left", "indent": 1}
+        return self.format(bold=True, text_wrap=True, bottom=1, bg_color="#eef1f0", **side)
 
     def number(self, places: int) -> Any:
         """Give the format of a number with some decimals."""
@@ -153,6 +152,7 @@ class _Writer:
     def front(self) -> None:
         """Write the first sheet: title, what this is, hours, tonnes, catalyst, and the figures read first."""
         sheet = self.page("summary")
+        sheet.fit_to_pages(1, 1)
         for column, width in enumerate((26, 36, 9, *[11] * 8)):
             sheet.set_column(column, column, width)
         sheet.write_string(0, 0, neutral(self.summary.unit_name), self.format(bold=True, font_size=16))
@@ -194,10 +194,11 @@ class _Writer:
         text = self.format(text_wrap=name == "definitions", align="left", indent=1)
         first = {at: row for row, at in enumerate(self.summary.tables[name].index)}
         for column, title in enumerate(names(frame)):
-            sheet.write_string(top, column, neutral(title), self.header())
+            sheet.write_string(top, column, neutral(title), self.header(of_numbers=title in places))
             for row, (at, value) in enumerate(frame[title].items(), start=top + 1):
                 if title not in places:
-                    sheet.write_string(row, column, neutral(str(value)), text)
+                    if value:
+                        sheet.write_string(row, column, neutral(str(value)), text)
                 elif math.isfinite(value):
                     sheet.write_number(row, column, value, self.number(places[title][first[at]]))
 
