@@ -248,17 +248,23 @@ def _first_open(
 
 def _at_rest(path: Path) -> tuple[int, int, int] | None:
     """Tell a ledger that nobody has open by its inode, time and size; None while commits stand beside it."""
-    ahead = path.with_name(f"{path.name}-wal")
-    if ahead.exists() and ahead.stat().st_size:
-        return None
+    with suppress(FileNotFoundError):  # who closes a ledger last takes the file away
+        if path.with_name(f"{path.name}-wal").stat().st_size:
+            return None
     stat = path.stat()
     return stat.st_ino, stat.st_mtime_ns, stat.st_size
 
 
 def _there(folder: Path) -> Path:
     """Give the place of the ledger of a folder that holds one."""
-    if not (folder / LEDGER).is_file():
-        raise _no_store(folder)
+    try:
+        if not (folder / LEDGER).is_file():
+            raise _no_store(folder)
+    except PermissionError as fault:
+        raise StoreError(
+            f"{folder}: may not be looked into",
+            remedy="Give this account the right to read the store's folder.",
+        ) from fault
     return folder / LEDGER
 
 
@@ -322,7 +328,7 @@ def _in_words(path: Path) -> Iterator[None]:
 
 
 def _room(path: Path) -> str:
-    """Say how much room a commit needs: at most every page of the ledger once more, and what is new."""
+    """Say how much room a commit needs: every page of the ledger once more at most, and what is new."""
     size = path.stat().st_size if path.exists() else 0
     free = shutil.disk_usage(path.parent).free
-    return f": it needs up to {size / 1e6 + 1:.2f} MB, {free / 1e6:.2f} MB are free"
+    return f": it needs about {size / 1e6 + 1:.2f} MB, {free / 1e6:.2f} MB are free"

@@ -127,6 +127,10 @@ def _read(path: Path, columns: list[str] | None, first_us: int | None, last_us: 
             f"{path.name}: is no longer there",
             remedy="Look again: a later pass has replaced it. If that does not help run 'outlet verify'.",
         ) from fault
+    except PermissionError as fault:
+        raise StoreError(
+            f"{path.name}: may not be read", remedy="Give this account the right to read the store's files."
+        ) from fault
     except (OSError, pa.ArrowException) as fault:
         raise StoreError(
             f"{path.name}: is damaged ({str(fault).splitlines()[0]})",
