@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from contextlib import suppress
 from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 
@@ -43,7 +44,10 @@ def version(folder: Path) -> str | None:
     ledger, ahead = folder / "ledger.sqlite", folder / "ledger.sqlite-wal"
     if not ledger.exists():
         return None
-    stats = [path.stat() for path in (ledger, ahead) if path.exists()]
+    stats = []
+    for path in (ledger, ahead):
+        with suppress(FileNotFoundError):  # who closes the ledger last takes the file ahead of it away
+            stats.append(path.stat())
     # A reader makes an empty write-ahead file and takes it away again: that is no commit.
     return " ".join(f"{s.st_ino}:{s.st_mtime_ns}:{s.st_size}" for s in stats if s.st_size)
 
