@@ -52,6 +52,7 @@ def _again(export: Export, number: int, time: datetime, made_by: int) -> Export:
         "readings": readings,
         "accepted": readings,
         "superseded": 0,
+        "superseded_by": [],
         "rows": readings // 18,
     }
     taken_at = time.isoformat(timespec="seconds")

@@ -64,7 +64,7 @@ def test_every_export_of_a_sheet_stands_there_with_its_sum(monkeypatch, store):
 
 
 def test_what_was_rejected_is_told_with_evidence_reason_and_remedy(monkeypatch, store):
-    said = words(intake(monkeypatch, store, name="night-shift"))
+    said = words(intake(monkeypatch, store, named="night-shift"))
     (export,) = deliveries.named(store.exports(), "night-shift.csv")
     account = deliveries.account_of(export)
     assert account.rejected == 4  # by hand: '5700 kg', 'inf' and two readings of the row without a time
@@ -75,8 +75,15 @@ def test_what_was_rejected_is_told_with_evidence_reason_and_remedy(monkeypatch, 
     assert "not asked for: no unit file names these tags SPARE-9.PV 4" in said.replace("Not", "not")
 
 
+def test_who_superseded_readings_is_told_by_name(monkeypatch, store):
+    said = words(intake(monkeypatch, store, named="larkmoor-1"))
+    # By hand: the night shift says three good readings otherwise than the first export.
+    (export,) = deliveries.named(store.exports(), "night-shift.csv")
+    assert f"3 superseded by night-shift.csv (export {export.number})." in said
+
+
 def test_what_was_set_aside_is_told_in_its_two_lines_and_a_name_is_no_markup(monkeypatch, store):
-    test = intake(monkeypatch, store, status=deliveries.ASIDE)
+    test = intake(monkeypatch, store, exports=deliveries.ASIDE)
     (export,) = (one for one in store.exports() if one.status == "set aside")
     for line in export.error.splitlines():
         assert line.strip() in words(test)
@@ -85,7 +92,7 @@ def test_what_was_set_aside_is_told_in_its_two_lines_and_a_name_is_no_markup(mon
 
 
 def test_how_an_export_was_read_is_told(monkeypatch, store):
-    said = words(intake(monkeypatch, store, name="night-shift"))
+    said = words(intake(monkeypatch, store, named="night-shift"))
     (export,) = deliveries.named(store.exports(), "night-shift.csv")
     assert export.account["dialect"]
     for line in export.account["dialect"]:
@@ -112,7 +119,7 @@ def test_thousands_of_exports_come_in_sheets_and_a_filter_leads_back_to_the_firs
 
 
 def test_a_filter_that_fits_nothing_says_so(monkeypatch, store):
-    assert "No export of that kind." in words(intake(monkeypatch, store, name="nowhere"))
+    assert "No export of that kind." in words(intake(monkeypatch, store, named="nowhere"))
 
 
 def test_the_longest_gap_is_told_in_words(monkeypatch, store):
@@ -182,7 +189,7 @@ def opened(chromium: str, store: Store) -> Iterator[object]:
 @pytest.mark.parametrize(("wide", "scheme"), [(True, "light"), (False, "dark")], ids=["1920", "390"])
 def test_an_export_opens_to_what_the_ledger_holds_of_it(opened, store: Store, wide: bool, scheme: str):
     page = opened(wide=wide, scheme=scheme)
-    line = page.locator("details", has_text="night-shift.csv")
+    line = page.locator("details", has=page.locator("summary", has_text="night-shift.csv"))
     assert not line.locator("table").first.is_visible()
     line.locator("summary").focus()
     page.keyboard.press("Enter")

@@ -111,16 +111,16 @@ def follow(
         click.echo(words, err=True)
 
     with Stop() as stop:
-        follower = Follower(
-            unit_files,
-            store,
-            folders,
-            settle=timedelta(seconds=settle),
-            tell=tell,
-            warn=warn,
-            check=stop.check,
-        )
         try:
+            follower = Follower(
+                unit_files,
+                store,
+                folders,
+                settle=timedelta(seconds=settle),
+                tell=tell,
+                warn=warn,
+                check=stop.check,
+            )
             keep_looking(follower, every=timedelta(seconds=every))
         except KeyboardInterrupt:
             if not stop.is_asked:

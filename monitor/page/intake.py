@@ -36,8 +36,8 @@ def view() -> None:
         return
     with st.container(horizontal=True, vertical_alignment="bottom", gap="large"):
         steps = spans.choice("Deliveries", [*STEPS], USUAL_STEPS, "deliveries")
-        status = spans.choice("Exports", [ALL, *deliveries.SHAPES], ALL, "status")
-        name = st.text_input("Name holds", key="name", bind="query-params", width=300)
+        status = spans.choice("Exports", [ALL, *deliveries.SHAPES], ALL, "exports")
+        name = st.text_input("Name holds", key="named", bind="query-params", width=300)
     _body(unit.key, steps, status, name or "")
 
 
@@ -101,10 +101,10 @@ def _sheet(count: int) -> int:
     sheets = math.ceil(count / SHEET)
     if sheets == 1:
         return 1
-    if st.session_state.get("sheet", 1) > sheets:
-        st.session_state["sheet"] = sheets
+    if st.session_state.get("exports_sheet", 1) > sheets:
+        st.session_state["exports_sheet"] = sheets
     label = f"Sheet, 1 to {sheets}, of {SHEET} exports each"
-    return int(st.number_input(label, min_value=1, max_value=sheets, step=1, key="sheet", width=300))
+    return int(st.number_input(label, min_value=1, max_value=sheets, step=1, key="exports_sheet", width=300))
 
 
 def _export(unit: Unit, one: Export, names: Mapping[int, str]) -> str:
