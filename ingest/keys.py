@@ -12,7 +12,17 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
-from ingest.unit import EVENT_KINDS, FRACTION_KINDS, KINDS, PRIORITIES, REACTORS, ROLES, SAMPLINGS
+from ingest.unit import (
+    EVENT_KINDS,
+    FRACTION_KINDS,
+    KINDS,
+    PRIORITIES,
+    REACTORS,
+    ROLES,
+    SAMPLINGS,
+    SIDES,
+    TESTS,
+)
 
 NESTED = ("uncertainty", "status")  # forms that are a table with a section of their own
 BASES = ("dry", "wet", "as analysed")
@@ -151,7 +161,7 @@ TABLE: tuple[Key, ...] = (
     Key("operating.vote", "running_below", "number", "value below which it says running", "12.0", "with down_above"),
     Key("catalyst", "charged", "moment", "when the catalyst was charged, with its offset", "2026-02-10T06:00:00+01:00", "always"),
     Key("event", "at", "moment", "when it happened, with its offset", "2026-05-12T09:30:00+02:00", "always"),
-    Key("event", "kind", "choice", "what it was; a catalyst change or a calibration breaks ageing and expectation there", '"calibration"', "always", choices=EVENT_KINDS),
+    Key("event", "kind", "choice", "what it was; a catalyst change or a calibration breaks ageing there, a catalyst change ends the expectation", '"calibration"', "always", choices=EVENT_KINDS),
     Key("event", "name", "text", "what people call it", '"AI-220 on new span gas"', "always"),
     Key("event", "instrument", "text", "instrument or analyzer that was calibrated", '"AI-220"'),
     Key("healthy", "from", "moment", "when the healthy period begins, with its offset", "2026-03-02T00:00:00+01:00", "always"),
@@ -162,8 +172,14 @@ TABLE: tuple[Key, ...] = (
     Key("watch", "name", "text", "name of the watch; left out, it is the figure and the window", '"yield, shift"'),
     Key("watch", "figure", "text", "figure that is watched", '"yield on feed"', "always"),
     Key("watch", "window", "duration", "one of the windows of the unit", '"8h"', "always", low=1, high=366 * _DAY),
-    Key("watch", "low", "number", "limit below which an episode begins, in the unit of the figure", "76.0", "unless high is stated"),
-    Key("watch", "high", "number", "limit above which an episode begins, in the unit of the figure", "103.0", "unless low is stated"),
+    Key("watch", "test", "choice", "limits, or a test for drift away from the expectation, window by window", '"cusum"', default="limits", choices=TESTS),
+    Key("watch", "low", "number", "limit below which an episode begins, in the unit of the figure", "76.0", 'for test "limits", unless high is stated'),
+    Key("watch", "high", "number", "limit above which an episode begins, in the unit of the figure", "103.0", 'for test "limits", unless low is stated'),
+    Key("watch", "count", "number", "so many windows have to lie beyond the limit", "2", default=1, low=1, high=20),
+    Key("watch", "among", "number", "out of the last so many that do not overlap", "3", default=1, low=1, high=20),
+    Key("watch", "shift_pct", "number", "change in percent of the figure that a test for drift is made to find; for a slope within 30 d", "0.5", default=0.5, low=0.05, high=20),
+    Key("watch", "false_alarm_interval", "duration", "how often all tests for drift of the unit together may be wrong", '"60d"', default="60d", low=_DAY, high=3650 * _DAY),
+    Key("watch", "side", "choice", "which way a test for drift looks; left out, the way that is bad for the figure", '"both"', choices=SIDES),
     Key("watch", "priority", "choice", "how soon somebody has to act", '"high"', "always", choices=PRIORITIES),
     Key("watch", "deadband", "number", "how far back inside the limit the figure has to come", "0.3", default=0.0, low=0),
     Key("watch", "on_delay", "duration", "how long the limit has to be crossed", '"1h"', default="0 s", low=0, high=30 * _DAY),

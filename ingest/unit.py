@@ -20,6 +20,8 @@ PRIORITIES = ("high", "medium", "low")
 REACTORS = ("well-mixed", "packed bed", "batch")
 ROLES = ("fresh feed", "recycle")
 EVENT_KINDS = ("catalyst change", "calibration", "planned", "note")
+TESTS = ("limits", "cusum", "ewma", "slope")
+SIDES = ("low", "high", "both")
 # Why a reactor has no instantaneous selectivity, and what to do about it.
 NO_RATES = {
     "well-mixed": ("needs what the reactor holds", "write a section [hold_up]"),
@@ -205,7 +207,10 @@ class Prices:
 
 @dataclass(frozen=True, slots=True)
 class Watch:
-    """Limits on one windowed figure. `low`/`high` in the figure's unit; None means no such limit."""
+    """Limits on one windowed figure, or a test for its drift away from the expectation.
+
+    `low` and `high` are in the figure's unit; None means no such limit, and a test for drift has neither.
+    """
 
     name: str
     figure: str
@@ -217,6 +222,12 @@ class Watch:
     on_delay: timedelta
     off_delay: timedelta
     steady: bool  # watch the steady figure rather than the as-operated one
+    test: str = "limits"  # one of TESTS
+    count: int = 1  # so many windows have to lie beyond a limit
+    among: int = 1  # out of so many that do not overlap
+    shift_pct: float = 0.5  # change that a test for drift is made to find
+    false_alarm_interval: timedelta = timedelta(days=60)  # of all tests for drift of the unit together
+    side: str | None = None  # one of SIDES; None: the way that is bad for the figure
 
 
 @dataclass(frozen=True, slots=True)

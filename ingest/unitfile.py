@@ -10,7 +10,7 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
-from ingest import analyzerrules, chemistry, draft, instrumentrules, quantities, unitrules
+from ingest import analyzerrules, chemistry, draft, instrumentrules, quantities, unitrules, watchrules
 from ingest import keys as table
 from ingest.draft import Draft
 from ingest.entries import Entry
@@ -288,7 +288,6 @@ def _event(entry: Entry) -> Event:
 
 def _watch(entry: Entry) -> Watch:
     """Make one watch under its own or its made name."""
-    return Watch(
-        name=unitrules.watch_name(entry) or "",
-        **{key: entry.get(key) for key in table.rows("watch") if key != "name"},
-    )
+    values = {key: entry.get(key) for key in table.rows("watch")}
+    counted = {key: round(values[key]) for key in ("count", "among")}
+    return Watch(**{**values, **counted, "name": watchrules.watch_name(entry) or ""})

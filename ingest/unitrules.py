@@ -9,52 +9,15 @@ from collections import Counter
 from collections.abc import Callable, Iterator
 from datetime import timedelta
 
-from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantities
+from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantities, watchrules
 from ingest.draft import Draft, direction_of, twice, undeclared
 from ingest.entries import Entry, nearest
 from ingest.errors import Problem
-from ingest.unit import AUXILIARY_KINDS, NO_RATES
+from ingest.unit import AUXILIARY_KINDS
 
 HOUR = timedelta(hours=1)
 DAY = timedelta(days=1)
 VOTE_LIMITS = (("down_below", "running_above"), ("down_above", "running_below"))
-PER_PASS = ("conversion", "selectivity on converted", "yield on feed")
-
-
-def figure_names(draft: Draft) -> tuple[str, ...]:
-    """List the figures that can be watched, by the chemistry alone.
-
-    Parameters
-    ----------
-    draft : Draft
-        The file.
-
-    Returns
-    -------
-    tuple of str
-        Names of figures, as a watch writes them.
-    """
-    entry = draft.chemistry
-    wanted, unwanted = entry.get("wanted"), entry.get("unwanted") or ()
-    targets = (*unwanted, "all unwanted")
-    compositions = draft.reacting()
-    carriers = [name for name in unwanted if entry.get("key_element") in dict(compositions.get(name, ()))]
-    elements = chemistry.elements_of(list(compositions.values()))
-    return (
-        "conversion",
-        "selectivity on converted",
-        "yield on feed",
-        *(f"overall selectivity to {name}" for name in targets),
-        *(f"share of {name}" for name in (*carriers, "unseen")),
-        *(f"{chemistry.ELEMENT_NAMES.get(symbol, symbol)} closure" for symbol in elements),
-        "converted closure",
-        *(f"make of {name}" for name in (wanted, *unwanted)),
-        "specific consumption fed",
-        "specific consumption consumed",
-        *(f"instantaneous selectivity to {name}" for name in targets if draft.once["hold_up"].values),
-        *(f"{name} per pass" for name in PER_PASS if draft.many["node"]),
-        *(["recycle ratio"] if any(entry.get("role") for entry in draft.many["stream"]) else []),
-    )
 
 
 def _names_are_unique(draft: Draft) -> Iterator[Problem]:
@@ -277,90 +240,15 @@ def _events_name_instruments(draft: Draft) -> Iterator[Problem]:
             yield Problem(entry.at("instrument"), what, 'write kind = "calibration", or leave it out')
 
 
-def _watches_can_be_judged(draft: Draft) -> Iterator[Problem]:
-    """A watch names a figure and a window that exist, and limits that leave room for its deadband."""
-    windows = draft.once["unit"].get("windows") or ()
-    for watch in draft.many["watch"]:
-        yield from _figure_is_there(watch, draft)
-        if windows and watch.get("window") and watch.get("window") not in windows:
-            words = quantities.duration_words(watch.get("window"))
-            allowed = ", ".join(quantities.duration_words(window) for window in windows)
-            yield Problem(
-                watch.at("window"), f"{words} is not among the unit's windows", f"write one of {allowed}"
-            )
-        yield from _limits(watch)
-    yield from _watch_names(draft)
-
-
-def _figure_is_there(watch: Entry, draft: Draft) -> Iterator[Problem]:
-    """The figure is one of the unit's; where outlet data cannot give it, that is the reason told."""
-    figure, reactor = watch.get("figure"), draft.once["unit"].get("reactor")
-    known = figure_names(draft)
-    rates = str(figure).startswith("instantaneous selectivity")
-    if rates and reactor in NO_RATES and not draft.once["hold_up"].values:
-        what, remedy = NO_RATES[reactor]
-        yield Problem(watch.at("figure"), f"'{figure}' {what}", remedy)
-    else:
-        yield from undeclared(watch, "figure", [figure] if figure else [], known, "figure of this unit")
-
-
 def _targets_name_figures(draft: Draft) -> Iterator[Problem]:
     """Budget and guarantee name figures of the unit."""
-    known = figure_names(draft)
+    known = watchrules.figure_names(draft)
     for section in ("budget", "guarantee"):
         for name in draft.once[section].get("figure") or ():
             if name not in known:
                 yield Problem(
                     f"{section}.{name}", f"'{name}' is no figure of this unit", nearest(name, known)
                 )
-
-
-def _limits(watch: Entry) -> Iterator[Problem]:
-    """At least one limit, low below high, and a deadband smaller than the room between."""
-    low, high, deadband = watch.get("low"), watch.get("high"), watch.get("deadband")
-    if watch.lacks("low") and watch.lacks("high"):
-        yield Problem(watch.place, "has neither low nor high", "write low = ... or high = ...")
-    if low is None or high is None:
-        return
-    if low >= high:
-        yield Problem(
-            watch.at("low"), f"{low:g} is not below high = {high:g}", "write the lower limit as low"
-        )
-    elif deadband is not None and deadband >= high - low:
-        what = f"{deadband:g} is not smaller than the band of {high - low:g}"
-        yield Problem(watch.at("deadband"), what, "write a smaller deadband or wider limits")
-
-
-def watch_name(watch: Entry) -> str | None:
-    """Give the name of a watch: as written, else figure and window.
-
-    Parameters
-    ----------
-    watch : Entry
-        A watch.
-
-    Returns
-    -------
-    str or None
-        None when neither could be read.
-    """
-    if watch.get("name"):
-        return str(watch.get("name"))
-    if watch.get("figure") and watch.get("window"):
-        return f"{watch.get('figure')} {quantities.duration_words(watch.get('window'))}"
-    return None
-
-
-def _watch_names(draft: Draft) -> Iterator[Problem]:
-    """Names of watches are unique, those made from figure and window too."""
-    seen: set[str] = set()
-    for watch in draft.many["watch"]:
-        name = watch_name(watch)
-        if name in seen:
-            yield Problem(
-                watch.at("name"), f"'{name}' is the name of two watches", 'write name = "..." for one'
-            )
-        seen |= {name} if name else set()
 
 
 RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
@@ -379,6 +267,6 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _votes_can_be_cast,
     _healthy_can_be_fitted,
     _events_name_instruments,
-    _watches_can_be_judged,
+    watchrules.hold,
     _targets_name_figures,
 )

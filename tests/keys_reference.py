@@ -80,11 +80,12 @@ ABOUT = {
     "hold_up": "What a well-mixed reactor holds. With it the instantaneous selectivity is worked out: its contents have"
     " the composition of the one stream that leaves it, and what they gain counts as formed.",
     "watch": "Limits on one figure over one window. A reading beyond the limit for `on_delay` begins an episode; back"
-    " inside by `deadband` for `off_delay` ends it.",
-    "budget": "Figures under their own names, in their own units, that the monthly summary is held against. Its other"
-    " figures are compared with earlier months alone.",
-    "guarantee": "The same, for what was warranted.",
-    "prices": "What a loss is worth. Nothing else depends on it.",
+    " inside by `deadband` for `off_delay` ends it. With `count` and `among` it takes so many of the last windows that do"
+    " not overlap. A test for drift holds the figure, window by window, against what the healthy period lets one expect"
+    " at the load, catalyst age and operating point of that window: `cusum` adds up what lies beyond half of `shift_pct`"
+    " (a second sum looks for larger shifts), `ewma` averages with fading weights, `slope` looks at the trend of daily"
+    " means over 30 d. When each of them alarms follows from `false_alarm_interval` and from how the figure wandered while"
+    " healthy; there is no threshold to tune.",
     "exports": "What the exports themselves do not tell.",
 }
 

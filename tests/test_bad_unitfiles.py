@@ -32,6 +32,7 @@ def more(section: str) -> str:
 
 NO_VOTES = DEMO[: DEMO.index("[[operating.vote]]")] + DEMO[DEMO.index("[catalyst]") :]
 NO_POINT = with_edit('operating_point = ["TI-205", "FI-202", "FI-203"]', "")  # nobody else names TI-205
+NO_HEALTHY = DEMO[: DEMO.index("[healthy]")] + DEMO[DEMO.index("[[event]]") :]
 DECLARED = 'name = "oxygen in air"'
 CHANNEL = 'acetone = { tag = "AI-220.ACE", range = [0, 2], systematic = { relative_pct = 2, floor = 0.002 } }'
 WATCH = '[[watch]]\nfigure = "conversion"\nwindow = "8h"\nlow = 90\npriority = "low"\n'
@@ -622,6 +623,26 @@ BAD = {
     "two watches that would have one name": (
         more(WATCH + WATCH),
         "watch[5].name", "'conversion 8 h' is the name of two watches", 'write name = "..." for one',
+    ),
+    "a test for drift with a limit": (
+        more(WATCH.replace("low = 90", 'low = 90\ntest = "cusum"').replace("8h", "1h")),
+        "watch[4].low", "a test for drift (cusum) has no limits", "leave low out",
+    ),
+    "a test for drift without a healthy period": (
+        NO_HEALTHY + "\n" + WATCH.replace("low = 90", 'test = "ewma"'),
+        "watch[4].test", "needs a healthy period to learn from", "write a section [healthy]",
+    ),
+    "a test for drift with windows that do not divide a day": (
+        more(WATCH.replace("low = 90", 'test = "cusum"').replace("8h", "7d")),
+        "watch[4].window", "7 d do not divide a day", 'write for example window = "1h"',
+    ),
+    "more windows counted than there are": (
+        more(WATCH.replace("low = 90", "low = 90\ncount = 3\namong = 2")),
+        "watch[4].count", "3 windows are more than among = 2", "write among = 3 or more",
+    ),
+    "half a window counted": (
+        more(WATCH.replace("low = 90", "low = 90\ncount = 1.5\namong = 2")),
+        "watch[4].count", "1.5 is no whole number", "write count = 2",
     ),
     "a healthy period that ends before it begins": (
         with_edit("to = 2026-03-27T00:00:00+01:00", "to = 2026-03-01T00:00:00+01:00"),

@@ -22,6 +22,7 @@ ORDER = (
     "ingest.instrumentrules",
     "ingest.analyzerrules",
     "ingest.noderules",
+    "ingest.watchrules",
     "ingest.unitrules",
     "ingest.unitfile",
     "ingest.columns",

@@ -12,7 +12,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from ingest import draft, unitfile, unitrules
+from ingest import draft, unitfile, watchrules
 from ingest.balance import conservation_of, null_space, problem_of, sign_around, sign_of, state_of
 from ingest.errors import UnitFileError
 from monitor.amounts import amount_names
@@ -155,7 +155,7 @@ def test_the_figures_of_a_loop_can_be_watched_and_say_what_they_go_around(tmp_pa
     figures = {one.name: one for one in figures_of(unit, amount_names(unit))}
     read, problems = draft.read(unitfile.parse(tmp_path / "made.toml"))
     assert not problems
-    assert set(unitrules.figure_names(read)) == set(figures)
+    assert set(watchrules.figure_names(read)) == set(figures)
     assert figures["conversion"].definition.startswith("Around the whole unit: part of the ethylene fed")
     assert figures["conversion per pass"].definition.startswith("Around the reactor alone: part of the")
     assert "recycle over fresh" in figures["recycle ratio"].label

@@ -10,7 +10,7 @@ from pathlib import Path
 
 import pytest
 
-from ingest import draft, entries, keys, unitfile, unitrules
+from ingest import draft, entries, keys, unitfile, watchrules
 from ingest.instrumentrules import KIND_RULES
 from ingest.unit import FRACTION_KINDS, KINDS, Prices, Uncertainty, Unit
 from monitor.amounts import amount_names
@@ -173,6 +173,14 @@ def test_a_watch_is_named_by_figure_and_window_unless_it_has_a_name(tmp_path: Pa
     assert unit.watches[0].name == "yield, shift"
 
 
+def test_a_watch_has_limits_unless_it_tests_for_drift(tmp_path: Path):
+    drift = '[[watch]]\nfigure = "conversion"\nwindow = "1h"\ntest = "cusum"\npriority = "low"\n'
+    limits, watch = DEMO_UNIT.watches[0], loaded(tmp_path, f"{DEMO}\n{drift}").watches[-1]
+    assert (limits.test, limits.count, limits.among) == ("limits", 1, 1)
+    assert (watch.name, watch.test, watch.low, watch.high) == ("conversion 1 h cusum", "cusum", None, None)
+    assert (watch.shift_pct, watch.false_alarm_interval, watch.side) == (0.5, timedelta(days=60), None)
+
+
 def test_the_healthy_period_names_its_span_and_the_operating_point():
     healthy = DEMO_UNIT.healthy
     assert healthy is not None
@@ -229,9 +237,9 @@ def test_the_figures_a_watch_may_name_are_the_figures_there_are():
     read, problems = draft.read(unitfile.parse(ROOT / "config/demo.toml"))
     there = {figure.name for figure in figures_of(DEMO_UNIT, amount_names(DEMO_UNIT))}
     assert not problems
-    assert there <= set(unitrules.figure_names(read))
+    assert there <= set(watchrules.figure_names(read))
     # hydrogen and oxygen close over water, which this reactor's dry analyzer does not read
-    assert set(unitrules.figure_names(read)) - there <= {"hydrogen closure", "oxygen closure"}
+    assert set(watchrules.figure_names(read)) - there <= {"hydrogen closure", "oxygen closure"}
 
 
 def test_every_kind_has_its_row_of_keys():
