@@ -17,7 +17,18 @@ import pyarrow.compute as pc
 
 from ingest.columns import NOTHING, Look, first_match, flags, is_text, matches, single
 from ingest.errors import ExportError
-from ingest.timestamps import DAY_NUMBERS, EARLIEST_US, EPOCHS, LATEST_US, PATTERNS, SHORT, Clock
+from ingest.timestamps import (
+    DAY_NUMBERS,
+    EARLIEST_US,
+    EPOCHS,
+    LATEST_US,
+    MONTH_LEADS,
+    MONTH_NAMED,
+    PATTERNS,
+    SHORT,
+    Clock,
+    numbered,
+)
 from ingest.unit import ExportRules
 
 _NUMBERS = {
@@ -87,19 +98,24 @@ def decide_clock(
     if pa.types.is_timestamp(times.type):
         offset = times.type.tz is not None
         return Clock("timestamp", offset, None if offset else _zone(place, zone, name), 6)
+    named = is_text(times.type) and 2 * matches(times, MONTH_NAMED) > len(times)
+    leads = named and 2 * matches(times, MONTH_LEADS) > len(times)
+    times = numbered(times) if named else times
     form, count = _form(export, rows, times) if is_text(times.type) else (_form_of_numbers(place, times), 0)
     if form in EPOCHS:
         return Clock(form, offset=True, zone=None, fraction=0)
     if form == "day number":
         origin = f"{form} {rules.day_numbers or 'from 1900'}"
         return Clock(origin, offset=False, zone=_zone(place, zone, name), fraction=3)
-    if form != "year first":
+    if named and form != "year first":  # letters tell the month, and nobody puts two digits of a year first
+        form = form.replace("day first", "month first") if leads else form
+    elif form != "year first":
         more = SHORT if form.endswith(SHORT) else ""
         form = _date_order(export, at, look, rules.date_order, _ORDERS if more else _ORDERS[:2]) + more
     offset = 2 * matches(times, _STATED) > count
     digits = 9 if matches(times, r"[.,]\d{7,9}\D*$") else 6
     halves = 2 * matches(times, _HALF) > count
-    return Clock(form, offset, None if offset else _zone(place, zone, name), digits, halves)
+    return Clock(form, offset, None if offset else _zone(place, zone, name), digits, halves, named)
 
 
 def _form(export: str, rows: Any, times: Any) -> tuple[str, int]:

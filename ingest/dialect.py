@@ -85,6 +85,7 @@ class Dialect:
 
     def _of_time(self) -> tuple[str, ...]:
         form = _CLOCKS.get(self.clock.form, f"calendar times, {self.clock.form}")
+        form += ", months in letters" if self.clock.named else ""
         form += ", with AM or PM" if self.clock.halves else ""
         if self.clock.form in EPOCHS:
             return (f"Times are {form}, UTC.",)

@@ -18,7 +18,10 @@ from ingest.values import MISSING_WORDS
 SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
 
 _MOST_BELOW = 3  # rows of descriptions and units
-TIME_LIKE = re.compile(r"\d{1,4}[-/.]\d{1,2}[-/.]\d{2,4}([T ,].*)?|\d{1,2}:\d{2}(:\d{2}.*)?")
+TIME_LIKE = re.compile(
+    r"\d{1,4}[-/.]\d{1,2}[-/.]\d{2,4}([T ,].*)?|\d{1,2}:\d{2}(:\d{2}.*)?"
+    r"|\d{1,4}[- ][A-Za-z]{3}[- ]\d{2,4}( .*)?"
+)
 _NUMBER = re.compile(r"[+\-\u2212]?[\d.,' ]*\d[\d.,' ]*([eE][+-]?\d+)?")
 _UNITS = re.compile(r"(?:(?:eng(?:ineering|\.)? ?)?units?|uom|eu|einheit(?:en)?)", re.IGNORECASE)
 # What engineering units look like; only to tell a row of units from one of descriptions.

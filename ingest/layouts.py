@@ -16,7 +16,7 @@ import pyarrow.compute as pc
 from ingest.columns import NOTHING, Look, is_text, matches
 from ingest.errors import ExportError
 from ingest.lines import LONGEST_NAME
-from ingest.timestamps import PATTERNS
+from ingest.timestamps import MONTH_NAMED, PATTERNS
 
 MOST_COLUMNS = 5_000
 
@@ -235,17 +235,19 @@ def _holds_times(column: Any) -> bool:
         return False
     if pa.types.is_timestamp(column.type):
         return True
-    return is_text(column.type) and max(matches(column, p) for p in PATTERNS.values()) > len(column) / 2
+    patterns = (*PATTERNS.values(), MONTH_NAMED)
+    return is_text(column.type) and max(matches(column, p) for p in patterns) > len(column) / 2
 
 
 def _only_tag(place: Place, column: str, wanted: Collection[str]) -> str:
     """The tag of an export of one tag: the one that a line above the header states, or the file's name."""
-    stated = sorted({found[1] for line in place.above if (found := _TAG_LINE.match(line))})
+    stated = {found[1] for line in place.above if (found := _TAG_LINE.match(line))}
+    stated |= {line for line in (one.strip(' "#;,|\t') for one in place.above) if line in wanted}
     in_name = _in_name(place.export, wanted)
     tags = sorted({*stated, *in_name})
     if len(tags) == 1:
         return tags[0]
-    means = [f"{tag!r} by the lines above the header" for tag in stated]
+    means = [f"{tag!r} by the lines above the header" for tag in sorted(stated)]
     means += [f"{tag!r} by the file's name" for tag in in_name]
     said = f"may belong to {' or '.join(means)}" if tags else "state no tag"
     raise ExportError(

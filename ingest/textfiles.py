@@ -341,7 +341,8 @@ def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int
     """What each column is read as."""
     layout, clock = dialect.layout, dialect.clock
     time = pa.string()
-    if quick and clock.form == "year first" and layout.clock is None and not clock.halves:
+    plain_clock = layout.clock is None and not clock.halves and not clock.named
+    if quick and clock.form == "year first" and plain_clock:
         time = pa.timestamp("ns" if clock.fraction > 6 else "us", "UTC" if clock.offset else None)
     elif quick and clock.form in EPOCHS:
         time = pa.float64()

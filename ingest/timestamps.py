@@ -47,6 +47,11 @@ PATTERNS = {
     for order in _PLACES
 }
 
+# Beginnings of the names of months, English and German, small letters.
+_MONTHS = ("jan", "feb", "m[aä]r|mrz", "apr", "ma[yi]", "jun", "jul", "aug", "sep", "o[ck]t", "nov", "de[cz]")
+MONTH_NAMED = rf"(?i)^\s*(\d{{1,4}}[-/. ]*)?({'|'.join(_MONTHS)})\pL*[-/., ]*\d"
+MONTH_LEADS = r"^\s*\pL"
+
 Times = NDArray[np.int64]
 Codes = NDArray[np.int8]
 
@@ -57,7 +62,7 @@ class Clock:
 
     `form` is 'timestamp' or a key of PATTERNS, EPOCHS or DAY_NUMBERS; `offset` tells whether the times state
     their offset from UTC; `zone` is the zone of those that do not. Where `halves`, the clock has 12 hours and
-    each time says which half of the day it means.
+    each time says which half of the day it means; where `named`, months are in letters.
     """
 
     form: str
@@ -65,6 +70,7 @@ class Clock:
     zone: str | None
     fraction: int  # digits of a second written
     halves: bool = False
+    named: bool = False
 
     def read(self, column: Any) -> Stamps:
         """Read a column of times.
@@ -89,7 +95,10 @@ class Clock:
         if self.form in DAY_NUMBERS:
             time, reason = _from_day_numbers(column, DAY_NUMBERS[self.form])
             return self._placed(time, reason, stated=np.False_)
-        time, reason, stated = _from_text(column, self.form, halves=self.halves)
+        codes, words = coded(column)  # each distinct text is read once
+        words = numbered(words) if self.named else words
+        time, reason, stated = _from_words(words, self.form, halves=self.halves)
+        time, reason, stated = time[codes], reason[codes], stated[codes]
         return self._placed(time, reason, stated=stated)
 
     def _placed(self, time: Times, reason: Codes, *, stated: Any) -> Stamps:
@@ -153,6 +162,27 @@ def changes(zone: str) -> Changes:
         at += step
     instant, before, after = (np.array(column, np.int64) for column in zip(*found, strict=True))
     return Changes(instant + np.minimum(before, after), instant + np.maximum(before, after), before, after)
+
+
+def numbered(texts: Any) -> Any:
+    """Write months as numbers where they are in letters.
+
+    Parameters
+    ----------
+    texts : pyarrow.StringArray (n,)
+        `13-Mar-2026 06:00`, `March 13, 2026 06:00`.
+
+    Returns
+    -------
+    pyarrow.StringArray (n,)
+        `13-3-2026 06:00`, `3-13-2026 06:00`; other texts as they are.
+    """
+    for number, name in enumerate(_MONTHS, 1):
+        month = rf"(?:{name})\pL*[-/., ]*"
+        texts = pc.replace_substring_regex(texts, rf"(?i)^\s*(\d+)[-/. ]*{month}(\d)", rf"\1-{number}-\2")
+        leading = rf"(?i)^\s*{month}(\d+)[-/., ]+(\d)"
+        texts = pc.replace_substring_regex(texts, leading, rf"{number}-\1-\2")
+    return texts
 
 
 def localised(wall: Times, zone: str) -> tuple[Times, NDArray[np.bool_], NDArray[np.bool_]]:
@@ -289,16 +319,8 @@ def _numbers(column: Any) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
     return np.where(there, plain(number, np.float64), 0.0), there
 
 
-def _from_text(column: Any, form: str, *, halves: bool) -> tuple[Times, Codes, NDArray[np.bool_]]:
-    """Calendar times; each distinct text is read once."""
-    codes, words = coded(column)
-    time, good, stated = _from_words(words, form, halves=halves)
-    time, good, stated = np.append(time, 0), np.append(good, False), np.append(stated, True)
-    return time[codes], np.where(good[codes], 0, TIME).astype(np.int8), stated[codes]
-
-
-def _from_words(words: Any, form: str, *, halves: bool) -> tuple[Times, NDArray[np.bool_], NDArray[np.bool_]]:
-    """Distinct texts: time [us], whether it is one, and whether it states its offset."""
+def _from_words(words: Any, form: str, *, halves: bool) -> tuple[Times, Codes, NDArray[np.bool_]]:
+    """Distinct texts and one more for null: time [us], what is wrong, and whether it states its offset."""
     found = pc.extract_regex(words, PATTERNS[form])
     good = present(found)
     part = dict(zip((f.name for f in found.type), found.flatten(), strict=True))
@@ -308,7 +330,9 @@ def _from_words(words: Any, form: str, *, halves: bool) -> tuple[Times, NDArray[
     good &= exists & runs & placed
     fraction = _whole(pc.utf8_slice_codeunits(pc.utf8_rpad(part["f"], 6, "0"), 0, 6))
     micros = (day * 86_400 + clock - shift) * 1_000_000 + fraction
-    return np.where(good, micros, 0), good, flags(pc.not_equal(part["z"], ""))
+    stated = flags(pc.not_equal(part["z"], ""))
+    reason = np.where(np.append(good, False), 0, TIME).astype(np.int8)
+    return np.append(np.where(good, micros, 0), 0), reason, np.append(stated, True)
 
 
 def _shifts(offset: Any) -> tuple[Times, NDArray[np.bool_]]:

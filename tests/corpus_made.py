@@ -105,6 +105,10 @@ FORMS = {
     "day first, two digits": Form(local("%d.%m.%y %H:%M"), rules=replace(NO_RULES, date_order="day first")),
     "month first, two digits": Form(local("%m/%d/%y %H:%M")),  # 03/13/26 can be nothing else
     "year first, two digits": Form(local("%y-%m-%d %H:%M"), rules=replace(NO_RULES, date_order="year first")),
+    "month in letters": Form(local("%d-%b-%Y %H:%M:%S")),
+    "month in letters, two digits": Form(local("%d-%b-%y %H:%M")),
+    "month in capitals, year first": Form(lambda t: [t.strftime("%Y-%b-%d %H:%M:%SZ").upper()], zone=None),
+    "month in full, leading": Form(local("%B %d, %Y %I:%M %p")),
     "AM and PM": Form(twelve("US", " AM", " PM")),
     "am and pm": Form(twelve("US", " am", " pm")),
     "a.m. and p.m.": Form(twelve("%Y-%m-%d", " a.m.", " p.m.")),
