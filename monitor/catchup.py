@@ -39,8 +39,8 @@ from ingest.readings import Readings, in_span, month_tags, read_month
 from ingest.reconcile import STATUS
 from ingest.snapshot import Snapshot
 from monitor.days import DAY_US, Day, Plan, changed_days, rows
-from monitor.layout import table_of
-from monitor.months import days_before, figure_tables, runs_of, states_table, worked_out
+from monitor.layout import states_table, table_of
+from monitor.months import days_before, figure_tables, runs_of, worked_out
 
 METHOD = "2"  # to be raised when the same readings and unit file give other numbers: all days become due
 PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored months were worked out with
@@ -264,7 +264,7 @@ def _work(job: _Job, month: str, desk: _Desk) -> tuple[_Desk, Worked]:
     if changed:
         job.pass_.write(unit, "cells", month, table_of(cells_frame(plan.unit, cells)))
     for run in runs_of(changed):
-        _put(job, "states", states_table(plan, [days[day] for day in _between(run)]), run)
+        _put(job, "states", states_table(plan.problem, [days[day].states for day in _between(run)]), run)
     for run in runs:
         for stage, table in figure_tables(plan, days, run).items():
             _put(job, stage, table, run)

@@ -47,30 +47,34 @@ def figure_stage(window: timedelta) -> str:
     return f"figures-{hours // 24}d" if hours >= 48 and hours % 24 == 0 else f"figures-{hours}h"
 
 
-def states_frame(problem: Problem, states: States) -> pd.DataFrame:
-    """Lay states out as a frame to be stored; numbers as float32, which is far finer than any meter.
+def states_table(problem: Problem, parts: Sequence[States]) -> pa.Table:
+    """Lay states out as they are stored; numbers as float32, which is far finer than any meter.
 
     Parameters
     ----------
     problem : Problem
         Names the flows and the balance instruments.
-    states : States
-        t cells.
+    parts : sequence of States
+        One after the other, of t cells in all; at least one.
 
     Returns
     -------
-    DataFrame, shape (t, N + 2 m + 4)
-        Index `start` (UTC). NaN as in `States`.
+    pyarrow.Table, t rows
+        `start`, then N + 2 m + 4 columns. NaN as in `States`.
     """
-    columns: dict[str, NDArray[np.generic]] = {}
-    for place, (stream, species) in enumerate(problem.state):
-        columns[f"flow {stream}: {species}"] = states.flow_kmol_h[:, place].astype(np.float32)
+    columns: dict[str, pa.Array] = {}
+
+    def lay_out(field: str, names: Sequence[str]) -> None:
+        whole = np.concatenate([getattr(one, field).T for one in parts], axis=-1, dtype=np.float32)
+        columns.update({name: pa.array(row) for name, row in zip(names, np.atleast_2d(whole), strict=True)})
+
+    lay_out("flow_kmol_h", [f"flow {stream}: {species}" for stream, species in problem.state])
     for field in ("adjustment", "adjustment_sd"):
-        for place, name in enumerate(problem.names):
-            columns[f"{field} {name}"] = getattr(states, field)[:, place].astype(np.float32)
-    columns["objective"] = states.objective.astype(np.float32)
-    columns |= {field: getattr(states, field) for field in STATE_FIELDS[1:]}
-    return pd.DataFrame(columns, index=utc_index(states.start, "start"))
+        lay_out(field, [f"{field} {name}" for name in problem.names])
+    lay_out("objective", ["objective"])
+    for field in STATE_FIELDS[1:]:
+        columns[field] = pa.array(np.concatenate([getattr(one, field) for one in parts]))
+    return pa.table({"start": _instants(np.concatenate([one.start for one in parts])), **columns})
 
 
 def instrument_frame(frame: pd.DataFrame, field: str, names: Sequence[str]) -> pd.DataFrame:
@@ -79,7 +83,7 @@ def instrument_frame(frame: pd.DataFrame, field: str, names: Sequence[str]) -> p
     Parameters
     ----------
     frame : DataFrame
-        As `states_frame` gives it.
+        As `states_table` lays them out, index `start`.
     field : str
         'adjustment' or 'adjustment_sd'.
     names : sequence of str

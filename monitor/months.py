@@ -15,7 +15,7 @@ import pyarrow as pa
 
 from ingest.cells import Cells
 from monitor.days import DAY_US, Day, Plan, days_of, rows, work_day
-from monitor.layout import figure_stage, figure_table, states_frame, table_of
+from monitor.layout import figure_stage, figure_table
 from monitor.windows import rolled
 
 Run = tuple[int, int]  # first and last of days in a row, counted from 1970-01-01 (UTC)
@@ -85,23 +85,6 @@ def worked_out(plan: Plan, cells: Cells, wanted: Collection[int], known: Mapping
             before = found.get(day - 1)
             found[day] = work_day(plan, rows(cells, place), before.last if before else None)
     return found
-
-
-def states_table(plan: Plan, days: Iterable[Day]) -> pa.Table:
-    """Lay out the states of days as they are stored.
-
-    Parameters
-    ----------
-    plan : Plan
-        Of the unit.
-    days : iterable of Day
-        Ascending, at least one.
-
-    Returns
-    -------
-    pyarrow.Table
-    """
-    return pa.concat_tables([table_of(states_frame(plan.problem, day.states)) for day in days])
 
 
 def figure_tables(plan: Plan, days: Mapping[int, Day], run: Run) -> dict[str, pa.Table]:

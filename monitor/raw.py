@@ -101,26 +101,30 @@ def raw_rates(unit: Unit, problem: Problem, readings: Measured, flow: Floats) ->
     used = rows[:, :, None] != 0
     return Rates(
         value=np.where(used, rows[:, :, None] * raw, 0.0).sum(axis=1),
-        slope=np.tensordot(rows, np.nan_to_num(slope), axes=1),
+        slope=np.tensordot(rows, slope, axes=1),
     )
 
 
 def _raw_flows(unit: Unit, problem: Problem, readings: Measured, flow: Floats) -> tuple[Floats, Floats]:
-    """Give the flows as read, array (N, t), and their slopes by reading, array (N, m, t)."""
+    """Give the flows as read, array (N, t), and their slopes by reading, array (N, m, t); these 0 for NaN."""
     raw = flow.copy()
     slope = np.zeros((*problem.numerator.shape[::-1], flow.shape[1]))
-    factors = {one.name: _stream_factor(unit, problem, readings, flow, one.name) for one in unit.streams}
-    below = np.where(problem.linear[:, None], 1.0, problem.denominator @ np.nan_to_num(flow))
+    known, read = np.nan_to_num(flow), np.nan_to_num(readings.reading)
+    factors = {one.name: _stream_factor(unit, problem, readings, known, one.name) for one in unit.streams}
+    below = np.where(problem.linear[:, None], 1.0, problem.denominator @ known)
+    seen = balance_instruments(unit)
     for j, (stream, species) in enumerate(problem.state):
         readers = _readers(unit, stream, species)
+        per = np.zeros((0, flow.shape[1]))
         if readers:
             per = _mean_weights(readings, readers) * below[readers] / problem.numerator[readers, j, None]
-            raw[j] = (per * np.nan_to_num(readings.reading[readers])).sum(axis=0)
-            slope[j, readers] = per
-        if not any(balance_instruments(unit)[i].kind == "species flow" for i in readers):
-            factor, change = factors[stream]
-            slope[j] = slope[j] * factor + raw[j] * change
+            raw[j] = (per * read[readers]).sum(axis=0)
+        if not any(seen[i].kind == "species flow" for i in readers):
+            factor, meters, change = factors[stream]
+            slope[j, meters] = np.nan_to_num(raw[j] * change)
             raw[j] *= factor
+            per = per * factor
+        slope[j, readers] += np.nan_to_num(per)
     return raw, slope
 
 
@@ -141,14 +145,12 @@ def _mean_weights(readings: Measured, among: list[int]) -> Floats:
 
 def _stream_factor(
     unit: Unit, problem: Problem, readings: Measured, flow: Floats, stream: str
-) -> tuple[Floats, Floats]:
-    """Give flow as read over flow as reconciled, array (t,), and its slope by reading, (m, t)."""
+) -> tuple[Floats, list[int], Floats]:
+    """Give flow as read over flow as reconciled, array (t,), the meters, and its slope by these, (len, t)."""
     found = enumerate(balance_instruments(unit))
     meters = [i for i, one in found if one.stream == stream and one.kind in FLOW_KINDS]
-    change = np.zeros((len(problem.names), flow.shape[1]))
     if not meters:
-        return np.ones(flow.shape[1]), change
-    told = problem.numerator[meters] @ np.nan_to_num(flow)
-    change[meters] = _mean_weights(readings, meters) / np.where(told > 0, told, np.nan)
-    factor = (change[meters] * np.nan_to_num(readings.reading[meters])).sum(axis=0)
-    return factor, change
+        return np.ones(flow.shape[1]), meters, np.zeros((0, flow.shape[1]))
+    told = problem.numerator[meters] @ flow
+    change = _mean_weights(readings, meters) / np.where(told > 0, told, np.nan)
+    return (change * np.nan_to_num(readings.reading[meters])).sum(axis=0), meters, change

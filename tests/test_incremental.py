@@ -205,6 +205,18 @@ def test_one_more_day_opens_and_writes_as_many_parts_on_many_months_as_on_few(
     assert counts[0] == counts[1]
 
 
+def test_the_newest_row_of_figures_is_younger_than_a_step_and_its_window_ends_with_a_cell(tmp_path: Path):
+    unit = fine()
+    readings = cut(readings_made(unit, 2), FIRST, FIRST + DAY + 9 * HOUR + 16 * MINUTE)
+    arrive(tmp_path, unit, readings)
+    store = Store(tmp_path)
+    starts = parts.times_us(store.read(unit.key, "cells", columns=["start"]))
+    ends = parts.times_us(store.read(unit.key, figure_stage(unit.windows[0]), columns=["end"]))
+    # The last reading is of 9:15: of the cells from 9:10 and 9:15 on the last row holds those up to 9:10.
+    assert [(one - FIRST - DAY) // MINUTE for one in (starts[-1], ends[-1])] == [9 * 60 + 10, 9 * 60 + 10]
+    assert (np.diff(ends) == 10 * MINUTE).all()
+
+
 @pytest.mark.parametrize(
     ("cell", "windows", "step"),
     [

@@ -22,6 +22,7 @@ from ingest.unit import Unit
 from ingest.unitfile import load
 from monitor import board, store, witnesses
 from monitor.amounts import amount_names
+from monitor.days import figure_step
 from monitor.figures import Figure, figures_of
 
 Frame = pd.DataFrame
@@ -173,7 +174,7 @@ def latest(unit: Unit, window: timedelta) -> Frame:
     known = span(unit)
     if known is None:
         return pd.DataFrame()
-    frame = _now("figures", unit.key, window, None, (known.last - unit.cell, known.last))
+    frame = _now("figures", unit.key, window, None, (known.last - figure_step(unit), known.last))
     newest: Frame = frame.tail(1)
     return newest
 
