@@ -31,7 +31,8 @@ from monitor.ridge import Ridge
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
-SMALLEST, LARGEST = 1e-4, 0.8  # sizes of causes, as fractions, that responses are bent to
+SMALLEST = 1e-4  # size of a cause, as a fraction, below which a chord is the tangent
+LOWEST, HIGHEST = -4.0, 0.8  # sizes that responses are bent to: of what is shown nothing may be left over
 BEYOND = 0.1  # of its healthy range; so far outside an operating point is told
 
 
@@ -180,7 +181,7 @@ def bent(evidence: Evidence, size: Floats) -> Floats:
     found = evidence.response.copy()
     if evidence.shares is None or not evidence.coordinates:
         return found
-    size = np.clip(np.nan_to_num(size), -LARGEST, LARGEST)
+    size = np.clip(np.nan_to_num(size), LOWEST, HIGHEST)
     size = np.where(np.abs(size) < SMALLEST, SMALLEST, size)
     now, slope = coordinates(evidence.shares, evidence.reading[None])
     before, _ = coordinates(evidence.shares, evidence.reading - size[:, None] * evidence.cause.T)
@@ -250,7 +251,7 @@ def _reaction(unit: Unit, baseline: Baseline, cells: Cells) -> _Reaction:
         kept=kept,
         value=miss[told].mean(axis=0)[kept] if kept.any() else np.zeros(0),
         slope=slope[kept],
-        doubt=(law.doubt(mean_point[None])[0] * baseline.long_run)[kept],
+        doubt=law.doubt(mean_point[None])[0][kept],
         outside=_outside(law, mean_point, regressors(unit)),
     )
 

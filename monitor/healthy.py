@@ -54,8 +54,6 @@ class Baseline:
         Coordinates by operating point.
     miss : array (n, q)
         Coordinates of its windows less what the operating point foretells.
-    long_run : array (q,)
-        Variance of a block that a mean over many blocks goes by, autocorrelation counted in.
     """
 
     first_us: int
@@ -66,7 +64,6 @@ class Baseline:
     shares: Shares | None
     law: Ridge
     miss: Floats
-    long_run: Floats
 
 
 def baseline_of(unit: Unit, problem: Problem, cells: Cells, there: Flags) -> Baseline | None:
@@ -103,7 +100,6 @@ def baseline_of(unit: Unit, problem: Problem, cells: Cells, there: Flags) -> Bas
         shares=shares,
         law=law,
         miss=_by_window(unit, miss)[: len(told)][told],
-        long_run=_long_run(miss),
     )
 
 
@@ -233,15 +229,3 @@ def _law(point: Floats, value: Floats) -> Ridge:
 def _by_window(unit: Unit, miss: Floats) -> Floats:
     """Give the means of blocks over windows, array (windows, q)."""
     return mean_of(miss, max(1, cells_in(unit, LENGTH) // cells_in(unit, BLOCK)))
-
-
-def _long_run(miss: Floats) -> Floats:
-    """Give the variance of blocks, inflated for their autocorrelation (first-order), array (q,)."""
-    whole = np.where(2 * np.isfinite(miss).sum(axis=0) >= len(miss), miss, 0.0)
-    whole = whole[np.isfinite(whole).all(axis=1)]
-    if len(whole) < 3:
-        return np.zeros(miss.shape[1])
-    variance = whole.var(axis=0)
-    lagged = (whole[1:] * whole[:-1]).mean(axis=0) / np.maximum(variance, 1e-300)
-    phi = np.clip(lagged, 0.0, 0.95)
-    return np.asarray(variance * (1 + phi) / (1 - phi))

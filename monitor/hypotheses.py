@@ -28,7 +28,7 @@ BOTH = "conversion and by-products"
 UNSEEN = "a product that no channel sees"
 AIR = "air into the sample of "
 
-SPREADS = (0.01, 0.04, 0.16)  # of sizes, as fractions; the same for all (on the high side, no source)
+SPREADS = (0.01, 0.04, 0.16, 0.64)  # of sizes, as fractions; the same for all (on the high side, no source)
 # Odds before any evidence: half the alerts of a plant have nothing behind them that lasts (no source).
 PRIOR_NONE = 0.5
 PRIOR_OWN = 1.0  # of each instrument, against which the others are weighed

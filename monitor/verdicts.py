@@ -18,7 +18,7 @@ import pandas as pd
 
 from ingest.balance import Problem
 from ingest.cells import Cells, cells_from_frame
-from ingest.parts import times_us
+from ingest.parts import month_edges, times_us
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.explain import LEAD, Reference, explain, picture_of
@@ -65,18 +65,16 @@ def with_verdicts(
     DataFrame
         With one more column: the verdict as text, empty where nothing of the window is there.
     """
-    known = {_key(row): str(row.get(COLUMN, "")) for row in before.episodes(unit.key).to_dict("records")}
-    end_us = _end_us(view, unit)
+    known = {_key(row): row.get(COLUMN) for row in before.episodes(unit.key).to_dict("records")}
+    end_us, same = _end_us(view, unit), _same_in(before, view, unit)
     refer = lru_cache(maxsize=4)(lambda span: _reference(view, unit, problem, span))
     told = []
     for row in episodes.to_dict("records"):
-        window = _window(unit, row, end_us)
-        mark = _mark(unit, window)
-        old = read({COLUMN: known.get(_key(row), "")})
-        if old is not None and old.mark == mark and _same(before, view, unit, window):
-            told.append(known[_key(row)])
-        else:
-            told.append(_verdict(view, unit, problem, window, refer))
+        window, text = _window(unit, row, end_us), known.get(_key(row))
+        old = read({COLUMN: text})
+        is_kept = old is not None and old.mark == _mark(unit, window)
+        is_kept = is_kept and same(_with_lead(window)) and same(window.healthy)
+        told.append(text if is_kept else _verdict(view, unit, problem, window, refer))
     return episodes.assign(**{COLUMN: pd.Series(told, index=episodes.index, dtype="str")})
 
 
@@ -87,12 +85,8 @@ def _key(row: Mapping[Any, Any]) -> tuple[str, str, str]:
 def _end_us(view: Snapshot, unit: Unit) -> int:
     """Give the end of the record [us UTC]."""
     months = view.months(unit.key, "cells")
-    starts = times_us(view.read(unit.key, "cells", first=_instant(months[-1]), columns=["start"]))
+    starts = times_us(view.read(unit.key, "cells", first=month_edges(months[-1])[0], columns=["start"]))
     return int(starts[-1]) + unit.cell // _US
-
-
-def _instant(month: str) -> int:
-    return int(np.datetime64(month, "us").astype(np.int64))
 
 
 def _window(unit: Unit, row: Mapping[Any, Any], end_us: int) -> _Window:
@@ -119,16 +113,21 @@ def _mark(unit: Unit, window: _Window) -> str:
     return hashlib.sha256(f"{METHOD} {unit!r} {window!r}".encode()).hexdigest()[:16]
 
 
-def _same(before: Snapshot, view: Snapshot, unit: Unit, window: _Window) -> bool:
-    """Tell whether the cells of a window, of the time before and of its healthy time are what they were."""
-    return all(
-        before.paths(unit.key, "cells", first=first, last=last)
-        == view.paths(unit.key, "cells", first=first, last=last)
-        or before.read(unit.key, "cells", first=first, last=last).equals(
-            view.read(unit.key, "cells", first=first, last=last)
-        )
-        for first, last in (_with_lead(window), window.healthy)
+def _same_in(before: Snapshot, view: Snapshot, unit: Unit) -> Callable[[Span], bool]:
+    """Give what tells whether the cells of a span are what they were; most often no file is read for it."""
+    old, new = (
+        {month: part for (u, stage, month), part in one.parts.items() if (u, stage) == (unit.key, "cells")}
+        for one in (before, view)
     )
+    changed = {month for month in old.keys() | new.keys() if old.get(month) != new.get(month)}
+
+    def same(span: Span) -> bool:
+        if not any(month_edges(month)[0] < span[1] and span[0] < month_edges(month)[1] for month in changed):
+            return True
+        cells = [one.read(unit.key, "cells", first=span[0], last=span[1]) for one in (before, view)]
+        return bool(cells[0].equals(cells[1]))
+
+    return same
 
 
 def _with_lead(window: _Window) -> Span:

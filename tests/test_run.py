@@ -243,7 +243,8 @@ def test_the_stored_episodes_are_those_of_the_stored_figures(
     direct = unit_episodes(watched, {timedelta(hours=8): figures}, codes.astype(np.int8))
     assert len(direct) > 0
     assert len(result.units[0].episodes) == len(direct)
-    pd.testing.assert_frame_equal(Store(store).snapshot().episodes(unit.key), direct)
+    stored = Store(store).snapshot().episodes(unit.key).drop(columns="verdict")
+    pd.testing.assert_frame_equal(stored, direct)
     go(unit, store, plant[1])
 
 
