@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Collection, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from types import MappingProxyType
 
@@ -13,10 +13,12 @@ from ingest.account import Account, Tally
 from ingest.batches import Batches
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
+from ingest.files import Told
 from ingest.lines import Block, opened
 from ingest.measures import Stated
 from ingest.parquets import MAGIC, open_parquet, parquet_blocks
 from ingest.readings import QUALITIES, Readings
+from ingest.shown import shown
 from ingest.textfiles import open_text, text_blocks, value_columns
 from ingest.unit import ExportRules
 
@@ -51,6 +53,7 @@ def open_export(
     wanted: frozenset[str] | None,
     time_zone: str | None,
     units: Mapping[str, tuple[Stated, ...]] = NO_UNITS,
+    told: Told | None = None,
 ) -> Batches:
     """Find out how an export is to be read and begin to read it.
 
@@ -68,6 +71,8 @@ def open_export(
         Zone of times without offset where the rules name none; None refuses such times.
     units : mapping of str to tuple of Stated
         What the unit files state about the unit of each tag, to hold a row of units against.
+    told : callable or None
+        Told, while the batches are read, the bytes of the file that were read so far.
 
     Returns
     -------
@@ -75,8 +80,8 @@ def open_export(
         Iterate for `Readings`, then call `account()`.
     """
     zone = rules.time_zone or time_zone
-    file_dialect, blocks = _opened(path, rules, wanted, zone, units=units)
-    return Batches(number, file_dialect, wanted, blocks, Tally(path.name), units)
+    file_dialect, blocks = _opened(path, rules, wanted, zone, units=units, told=told)
+    return Batches(number, file_dialect, wanted, blocks, Tally(shown(path.name)), units)
 
 
 def describe(
@@ -121,6 +126,7 @@ def _opened(
     zone: str | None,
     *,
     units: Mapping[str, tuple[Stated, ...]],
+    told: Told | None,
 ) -> tuple[Dialect, Iterator[Block]]:
     """The dialect and the blocks to come; what begins like Parquet is Parquet, whatever its name."""
     parquet = path.suffix.lower() in (".parquet", ".pq")
@@ -131,11 +137,11 @@ def _opened(
     if not (parquet or magic == MAGIC):
         text, dialect = open_text(path, rules, wanted, zone, units=units)
         columns = value_columns(dialect.header, dialect.layout, wanted)
-        return dialect, text_blocks(text, dialect, columns, wanted or ())
+        return dialect, text_blocks(replace(text, told=told), dialect, columns, wanted or ())
     file, dialect = open_parquet(path, rules, wanted, zone)
     layout = dialect.layout
     columns = [layout.time, *value_columns(dialect.header, layout, wanted), *layout.others]
-    return dialect, parquet_blocks(file, columns)
+    return dialect, parquet_blocks(file, columns, told)
 
 
 def _sample(readings: Readings) -> tuple[SampleRow, ...]:

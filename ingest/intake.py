@@ -18,7 +18,7 @@ from ingest.account import Account
 from ingest.archive import SITE, Archive, Merged, Span, spans_of
 from ingest.errors import ExportError, StoreError
 from ingest.exports import open_export
-from ingest.files import opened
+from ingest.files import Told, opened
 from ingest.found import found
 from ingest.measures import Stated, stated_units
 from ingest.passes import Pass
@@ -104,6 +104,38 @@ class _Taken:
     dialect: tuple[str, ...]
 
 
+class _Meter:
+    """How many bytes of how many were read."""
+
+    def __init__(self, progress: Progress | None, total: int) -> None:
+        """Begin at nothing."""
+        self._progress = progress
+        self._total = total
+        self._before = 0  # bytes of the files that are done
+        self._tell(0)
+
+    def of(self, file: _File) -> Told:
+        """Follow one file; one that is written faster than it is read has to end somewhere."""
+
+        def told(count: int) -> None:
+            if count > file.seen.size:
+                raise ExportError(
+                    f"{file.path.name}: grew while it was being read", remedy="Try again later."
+                )
+            self._tell(count)
+
+        return told
+
+    def close(self, file: _File) -> None:
+        """Count a file as done, wherever its reading ended."""
+        self._before += file.seen.size
+        self._tell(0)
+
+    def _tell(self, count: int) -> None:
+        if self._progress is not None:
+            self._progress(self._before + count, self._total)
+
+
 def take_in(
     pass_: Pass,
     units: Sequence[Unit],
@@ -125,7 +157,7 @@ def take_in(
     settle : timedelta
         A file changed more recently is left for the next pass.
     progress : callable or None
-        Told the bytes read and the bytes to read, after each export.
+        Told the bytes of all files that were read so far, and those to read, as they are on disk.
 
     Returns
     -------
@@ -137,16 +169,14 @@ def take_in(
     outcomes += [_set_aside_unread(path, fault) for path, fault in meant.refused]
     archive = Archive(pass_, asked.tags.union(*(export.asked["tags"] for export in pass_.exports())))
     taken: list[tuple[_File, _Taken]] = []
-    done, total = 0, sum(file.seen.size for file in files)
+    meter = _Meter(progress, sum(file.seen.size for file in files))
     for file in files:
-        became = _read(pass_, archive, asked, file)
+        became = _read(pass_, archive, asked, file, meter.of(file))
+        meter.close(file)
         if isinstance(became, _Taken):
             taken.append((file, became))
         else:
             outcomes.append(became)
-        done += file.seen.size
-        if progress is not None:
-            progress(done, total)
     archive.finish()
     outcomes += [_enter(pass_, asked, file, read, archive.merged) for file, read in taken]
     _amend(pass_, archive.merged, {file.number for file, _ in taken})
@@ -266,7 +296,7 @@ def _unasked_then(entry: Export) -> frozenset[str]:
     return frozenset(tag for tag, _ in entry.account.get("unasked_tags", ()))
 
 
-def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> _Taken | Outcome:
+def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File, told: Told) -> _Taken | Outcome:
     """Read one export into the archive, or leave no trace of it there."""
     try:
         batches = open_export(
@@ -276,6 +306,7 @@ def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File) -> _Taken |
             wanted=file.tags,
             time_zone=None,
             units=asked.units,
+            told=told,
         )
         for readings in batches:
             archive.add({tag: series for tag, series in readings.items() if tag in file.added})

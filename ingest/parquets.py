@@ -20,6 +20,7 @@ from ingest.clocks import decide_clock
 from ingest.columns import is_text
 from ingest.dialect import Dialect
 from ingest.errors import ExportError
+from ingest.files import Told
 from ingest.layouts import Layout, Place, decide_layout
 from ingest.lines import Block
 from ingest.qualities import decide_quality
@@ -31,7 +32,7 @@ MAGIC = b"PAR1"
 LONGEST_TEXT = 1 << 10  # bytes of one text in a column that is read
 LARGEST_FOOTER = 32 << 20  # bytes; 25 columns in a thousand groups of rows take 4 MB
 _ROWS, _CELLS = 1 << 16, 1 << 22  # read at a time
-_TEXTS, _TEXT = 32 << 20, 128  # bytes in all and per row that texts of one column and group may take
+_BYTES, _CELL_BYTES = 32 << 20, 128  # bytes that a group of rows may take, in all and for each cell
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,7 +127,7 @@ def open_parquet(
     return file, Dialect("", "", header, 0, layout, clock, numbers, quality)
 
 
-def parquet_blocks(file: ParquetExport, columns: Sequence[int]) -> Iterator[Block]:
+def parquet_blocks(file: ParquetExport, columns: Sequence[int], told: Told | None = None) -> Iterator[Block]:
     """Read some columns of a Parquet export.
 
     Parameters
@@ -135,6 +136,8 @@ def parquet_blocks(file: ParquetExport, columns: Sequence[int]) -> Iterator[Bloc
         The export.
     columns : sequence of int
         Places in the header.
+    told : callable or None
+        Told the bytes of the file that the rows read so far stand for.
 
     Yields
     ------
@@ -145,10 +148,12 @@ def parquet_blocks(file: ParquetExport, columns: Sequence[int]) -> Iterator[Bloc
     size = max(1, min(_ROWS, _CELLS // max(len(names), 1)))
     row = 1
     with _opened(file.path) as raw:
-        _refuse_texts(file.path.name, raw.metadata, frozenset(names))
+        _refuse_texts(file.path.name, raw.metadata)
         for batch in raw.iter_batches(batch_size=size, columns=names, use_threads=False):
             rows = np.arange(row, row + batch.num_rows)
             row += batch.num_rows
+            if told is not None:
+                told(file.path.lstat().st_size * (row - 1) // raw.metadata.num_rows)
             read = zip(columns, names, strict=True)
             yield Block(rows, {i: _plain(file.path.name, name, batch.column(name)) for i, name in read})
 
@@ -166,25 +171,17 @@ def _refuse_footer(export: str, raw: BinaryIO) -> None:
         )
 
 
-def _refuse_texts(export: str, about: Any, names: Collection[str]) -> None:
-    """The footer tells how much text there is before it is read; a dictionary may still repeat a long one."""
-    for i in range(about.num_row_groups):
-        group = about.row_group(i)
-        for column in (group.column(k) for k in range(group.num_columns)):
-            most = _TEXTS + _TEXT * column.num_values
-            if (
-                column.path_in_schema in names
-                and column.physical_type == "BYTE_ARRAY"
-                and column.total_uncompressed_size > most
-            ):
-                _refuse_text(
-                    export, column.path_in_schema, f"more than {most >> 20} MiB in one group of rows"
-                )
+def _refuse_texts(export: str, about: Any) -> None:
+    """Hold what the footer says of each group against its rows; of odd columns Arrow dies when asked."""
+    for group in map(about.row_group, range(about.num_row_groups)):
+        most = _BYTES + _CELL_BYTES * group.num_rows * about.num_columns
+        if group.total_byte_size > most:
+            _refuse_text(export, f"{group.total_byte_size >> 20} MiB in {group.num_rows} rows")
 
 
-def _refuse_text(export: str, column: str, how_much: str) -> NoReturn:
+def _refuse_text(place: str, how_much: str) -> NoReturn:
     raise ExportError(
-        f"{export} [{column}]: holds long texts, {how_much}",
+        f"{place}: holds long texts, {how_much}",
         remedy="Export values as numbers, tags and qualities as short words.",
     )
 
@@ -234,7 +231,7 @@ def _plain(export: str, name: str, column: Any) -> Any:
         ) from error
     longest = pc.max(pc.binary_length(column.dictionary)).as_py() or 0
     if longest > LONGEST_TEXT:
-        _refuse_text(export, name, f"one of {longest} bytes")
+        _refuse_text(f"{export} [{name}]", f"one of {longest} bytes")
     return column
 
 

@@ -20,6 +20,7 @@ from ingest.columns import plain, present, single
 from ingest.dialect import Dialect
 from ingest.encodings import decide_encoding
 from ingest.errors import ExportError
+from ingest.files import Told
 from ingest.headings import Heading, decide_heading
 from ingest.layouts import Layout, Place, decide_layout
 from ingest.lines import BLOCK, Block, Lines, blocks, opened, screened, wrong_columns
@@ -43,6 +44,7 @@ class TextFile:
     path: Path
     codec: str
     heading: Heading
+    told: Told | None = None  # told the bytes read, as the rows are
 
     @property
     def separator(self) -> str:
@@ -62,7 +64,7 @@ class TextFile:
         Lines
             May be empty.
         """
-        for row, data in blocks(self.path, self.codec, size=size):
+        for row, data in blocks(self.path, self.codec, self.told, size=size):
             skip = self.heading.last + 1 - row  # lines of the head that stand in this block
             rest = data.split(b"\n", skip)[-1] if skip > 0 else data
             if rest:

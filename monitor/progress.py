@@ -7,8 +7,12 @@ import time
 from types import TracebackType
 from typing import Self
 
+from monitor.run import EXPORTS
+
 WIDTH = 24
 CLEAR = "\r\x1b[K"
+OFTEN_S = 0.1  # no eye follows more
+_SIZES = ((1e9, "GB", 1), (1e6, "MB", 0), (1e3, "kB", 0))  # bytes in one, and decimals
 
 
 class Bar:
@@ -19,6 +23,7 @@ class Bar:
         self._shown = sys.stderr.isatty()
         self._what = ""
         self._begun = time.monotonic()
+        self._written = 0.0
 
     def __enter__(self) -> Self:
         """Give the bar itself."""
@@ -33,21 +38,26 @@ class Bar:
             sys.stderr.flush()
 
     def __call__(self, what: str, done: int, total: int) -> None:
-        """Show one step.
+        """Show how far the work is, some times a second at most.
 
         Parameters
         ----------
         what : str
             What is being worked on; the time left counts from its first step.
         done, total : int
-            Steps done, and steps in all as far as is known.
+            Steps done, and steps in all as far as is known; of exports bytes.
         """
         if not self._shown:
             return
+        now = time.monotonic()
+        if what == self._what and done < total and now - self._written < OFTEN_S:
+            return
         if what != self._what:
-            self._what, self._begun = what, time.monotonic()
-        sys.stderr.write(CLEAR + line(what, done, total, passed_s=time.monotonic() - self._begun))
+            self._what, self._begun = what, now
+        told = line_of_bytes if what == EXPORTS else line
+        sys.stderr.write(CLEAR + told(what, done, total, passed_s=now - self._begun))
         sys.stderr.flush()
+        self._written = now
 
 
 def line(what: str, done: int, total: int, *, passed_s: float) -> str:
@@ -67,7 +77,40 @@ def line(what: str, done: int, total: int, *, passed_s: float) -> str:
     str
         `line3  ######..................  3 of 12, 0:09 left`; without the time left before the first step.
     """
+    left = f", {_left(done, total, passed_s)}" if done else ""
+    return f"{what}  {_marks(done, total)}  {done} of {total}{left}"
+
+
+def line_of_bytes(what: str, done: int, total: int, *, passed_s: float) -> str:
+    """Write one line of progress of work that is counted in bytes.
+
+    Parameters
+    ----------
+    what : str
+        What is being read.
+    done, total : int
+        Bytes, as they are on disk.
+    passed_s : float
+        Time since the first byte [s].
+
+    Returns
+    -------
+    str
+        `exports  ###############.........  412 of 655 MB, 93 MB/s, 0:03 left`; without pace and time left
+        before the first bytes.
+    """
+    per, unit, places = next((size for size in _SIZES if total >= size[0]), _SIZES[-1])
+    counted = f"{what}  {_marks(done, total)}  {done / per:.{places}f} of {total / per:.{places}f} {unit}"
+    if not done or passed_s <= 0:
+        return counted
+    return f"{counted}, {done / passed_s / 1e6:.0f} MB/s, {_left(done, total, passed_s)}"
+
+
+def _marks(done: int, total: int) -> str:
     filled = WIDTH * done // max(total, 1)
-    left_s = round(passed_s * (total - done) / done) if done else None
-    left = f", {left_s // 60}:{left_s % 60:02d} left" if left_s is not None else ""
-    return f"{what}  {'#' * filled}{'.' * (WIDTH - filled)}  {done} of {total}{left}"
+    return "#" * filled + "." * (WIDTH - filled)
+
+
+def _left(done: int, total: int, passed_s: float) -> str:
+    left_s = round(passed_s * (total - done) / done)
+    return f"{left_s // 60}:{left_s % 60:02d} left"

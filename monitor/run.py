@@ -28,6 +28,7 @@ from monitor.verdicts import with_verdicts
 from monitor.watched import bring_up
 
 Progress = Callable[[str, int, int], None]
+EXPORTS = "exports"  # the work that is counted in bytes; that on a unit is counted in steps
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,7 +95,7 @@ def run_pass(
     exports : sequence of Path
         Files or folders.
     progress : callable
-        Told what is being worked on, steps done, steps in all.
+        Told what is being worked on, steps done, steps in all; bytes in place of steps for EXPORTS.
     settle : timedelta
         An export changed more recently is left for the next pass.
 
@@ -106,7 +107,7 @@ def run_pass(
     with Store(store).begin() as pass_:
         clock = [time.process_time()]
         before = pass_.view()
-        taken = take_in(pass_, units, exports, settle=settle, progress=lambda *at: progress("exports", *at))
+        taken = take_in(pass_, units, exports, settle=settle, progress=lambda *at: progress(EXPORTS, *at))
         clock.append(time.process_time())
         worked = [catch_up(pass_, before, plan, taken.touched[plan.unit.key], progress) for plan in plans]
         clock.append(time.process_time())

@@ -576,7 +576,8 @@ def passed(case: Broken, good: Path, folder: Path, top: Path) -> dict[str, Any]:
     home.mkdir(parents=True)
     case.make(home / case.name)
     before = _outside(top, folder / "store")
-    with _meanwhile(case, home / case.name) as progress, store.begin() as pass_:
+    size = good.stat().st_size
+    with _meanwhile(case, home / case.name, size) as progress, store.begin() as pass_:
         paths = [good, case.elsewhere or home]
         result = take_in(pass_, [unit_made()], paths, settle=timedelta(0), progress=progress)
     after = _outside(top, folder / "store")
@@ -598,13 +599,13 @@ def _outside(top: Path, store: Path) -> set[str]:
 
 
 @contextmanager
-def _meanwhile(case: Broken, path: Path) -> Iterator[Callable[[int, int], None]]:
-    """A progress callable by which a thread, once, does something to the file when reading has begun."""
+def _meanwhile(case: Broken, path: Path, good: int) -> Iterator[Callable[[int, int], None]]:
+    """A progress callable by which a thread, once, does something to the file while it is read."""
     started = threading.Event()
 
     def progress(done: int, total: int) -> None:
         assert 0 <= done <= total
-        if case.meanwhile is not None and not started.is_set():
+        if case.meanwhile is not None and done > good and not started.is_set():
             started.set()
             thread = threading.Thread(target=case.meanwhile, args=(path,))
             thread.start()

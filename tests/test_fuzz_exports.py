@@ -9,7 +9,7 @@ from __future__ import annotations
 import io
 import os
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
@@ -90,7 +90,12 @@ def must_hold(path: Path) -> None:
         assert len(whole.splitlines()) == 2
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(lines, "BLOCK", SMALL_BLOCK)
-        assert became(path) == whole
+        assert _counted(became(path)) == _counted(whole)
+
+
+def _counted(one: Became | str) -> Became | str:
+    """Without the evidence: which three of many rejected cells are shown depends on the order of looking."""
+    return one if isinstance(one, str) else replace(one, account=replace(one.account, evidence=()))
 
 
 STAMPS: dict[str, Callable[[datetime], str]] = {

@@ -156,7 +156,7 @@ def test_progress_ends_at_the_bytes_of_all_files(store, tmp_path):
     told: list[tuple[int, int]] = []
     take(store, *files, progress=lambda done, total: told.append((done, total)))
     sizes = [file.stat().st_size for file in files]
-    assert told == [(sizes[0], sum(sizes)), (sum(sizes), sum(sizes))]
+    assert list(dict.fromkeys(told)) == [(done, sum(sizes)) for done in (0, sizes[0], sum(sizes))]
 
 
 # The same again
