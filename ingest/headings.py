@@ -235,9 +235,10 @@ def _below(header: Sequence[str], lines: Sequence[tuple[int, list[str]]]) -> tup
     """Rows of descriptions and units that follow the header."""
     named = roles(header, ())
     beside = {i for role in ("time", "tag", "quality") for i in named[role]}
+    tags = named["tag"] if named["value"] else []  # else it is a label of the rows
     found: list[NamesRow] = []
     for row, cells in lines[:_MOST_BELOW]:
-        named_tag = any(cells[i] for i in named["tag"] if i < len(cells))
+        named_tag = any(cells[i] for i in tags if i < len(cells))
         values = [cell for i, cell in enumerate(cells) if i not in beside]
         if len(cells) != len(header) or named_tag or not _are_names(cells, values):
             break

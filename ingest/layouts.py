@@ -161,9 +161,11 @@ def decide_layout(place: Place, header: Sequence[str], wanted: Collection[str], 
     _refuse_header(place, header)
     named = roles(header, wanted)
     time, clock = _time_columns(place, header, named["time"], look)
-    tag, value, quality = (named[name] for name in ("tag", "value", "quality"))
+    tag, value, quality, units = (
+        [i for i in named[name] if i not in (time, clock)] for name in ("tag", "value", "quality", "unit")
+    )
     rest = [i for i in range(len(header)) if i not in (time, clock, *tag, *value, *quality)]
-    one, unit = (found[0] if len(found) == 1 else None for found in (quality, named["unit"]))
+    one, unit = (found[0] if len(found) == 1 else None for found in (quality, units))
     if len(tag) == len(value) == 1 and len(quality) <= 1:
         return Layout(time, tag[0], value[0], one, clock, unit=unit)
     if not tag and len(value) == 1 and len(quality) <= 1:

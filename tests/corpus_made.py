@@ -276,6 +276,8 @@ def _by_detail() -> Iterator[tuple[str, Case]]:
     yield "wide, other units", converted
     yield "wide, all around", replace(converted, above=_TITLE, below=(*_NAMED, *converted.below), ends=_SUMS)
     yield "wide, units in brackets", Case(names=("FI-1.PV [kg/h]", "AI-2.C4H8 (mol%)", "TI-3.PV (°C)"))
+    labels = (("Description", "Feed flow", "Butene", "Temperature"), ("Units", "kg/h", "mol%", "degC"))
+    yield "wide, labels before names", Case(form=replace(FORMS["ISO local"], columns=("Tag",)), below=labels)
     yield "wide, padded lines above", Case(above=("Report;;;", "made by;the historian;;", ";;;"))
     yield "wide, all around, UTF-16", replace(Case(above=_TITLE, below=_NAMED, ends=_SUMS), encoding="utf-16")
     for when, (zone, start) in CHANGES.items():

@@ -425,6 +425,12 @@ def test_tags_that_look_like_dates_are_tags_where_somebody_asked_for_them(tmp_pa
     }
 
 
+def test_times_may_stand_in_a_column_that_is_called_like_another(tmp_path: Path):
+    text = "unit,tag,value,quality\n24.10.2026 22:00:00,FI-1.PV,1.5,Good\n"
+    readings, _ = read(saved(tmp_path, text), zone="UTC")
+    assert readings["FI-1.PV"].time.tolist() == [micros(datetime(2026, 10, 24, 22, tzinfo=UTC))]
+
+
 def test_a_sum_in_the_middle_of_the_rows_costs_no_reading(tmp_path: Path):
     text = 'time,FI-1.PV\n13.03.2026 06:00,1.5\nAverage,1.5\n14.03.2026 06:00,2.5\n"Total:",4\n'
     readings, account = read(saved(tmp_path, text), zone="UTC")
