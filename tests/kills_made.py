@@ -142,7 +142,8 @@ def main(work: Path, days: int, kills: int) -> None:
     """Kill a pass at moments spread over all of it, one drawn by chance in each of as many equal spans."""
     trials = Kills(work, days)
     drawn = Random(1)  # noqa: S311 - moments, no secrets
-    moments = [trials.seconds * (n + drawn.random()) / kills for n in range(kills)]
+    span = 1.05 * trials.seconds  # so that some fall into the commit, and behind it
+    moments = [span * (n + drawn.random()) / kills for n in range(kills)]
     told = [trials.trial(moment) for moment in moments]
     sys.stdout.write(json.dumps({"seconds": trials.seconds, "trials": told}))
 

@@ -121,5 +121,5 @@ def test_a_pass_over_a_plant_killed_at_random_moments_harms_neither_the_store_no
     answer = told("tests.kills_made", work, days, kills)
     assert [wrong for trial in answer["trials"] for wrong in trial["wrong"]] == []
     assert len(answer["trials"]) == kills
-    assert sum(not trial["ended"] for trial in answer["trials"]) >= 0.9 * kills
+    assert sum(not trial["ended"] for trial in answer["trials"]) >= 0.8 * kills
     assert min(trial["looks"] for trial in answer["trials"]) >= 1
