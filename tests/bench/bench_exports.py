@@ -1,15 +1,18 @@
-"""Processor seconds and peak memory of reading one reactor-year in each format.
+"""Processor seconds and peak memory of reading one reactor-year in each format, and of a pass over some.
 
-`python tests/bench/bench_exports.py [share of a year, default 1.0]`; each format in its own process.
+`python -m tests.bench.bench_exports [share of a year, default 1.0]` reads each format in its own process;
+with `--pass` it takes the year in as long CSV and as wide CSV into a new store; `--write` keeps that table.
 """
 
 from __future__ import annotations
 
 import resource
+import shutil
 import subprocess
 import sys
 import tempfile
 import time
+from datetime import timedelta
 from pathlib import Path
 
 import numpy as np
@@ -20,9 +23,13 @@ import pyarrow.parquet as pq
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
 from ingest.exports import open_export
+from ingest.intake import take_in
+from ingest.ledger import Store
 from ingest.parts import sha256_of
 from ingest.readings import Series, by_month, join, write_month
 from ingest.unit import ExportRules
+from tests.bench.marked import show, table
+from tests.units_made import made_instrument, made_unit
 
 TAGS = [f"AI-{i:03}.PV" for i in range(24)]
 ROWS = 525_600
@@ -138,9 +145,45 @@ def read(path: Path) -> str:
     )
 
 
+def passed(path: Path) -> str:
+    """Take one export into a new store; what it took, as cells of a table."""
+    unit = made_unit(*(made_instrument(tag, tag=tag) for tag in TAGS), exports=ExportRules("UTC", (), None))
+    told: list[int] = []
+    begin, used = time.perf_counter(), time.process_time()
+    with Store(path.with_name("store")).begin() as pass_:
+        result = take_in(
+            pass_, [unit], [path], settle=timedelta(0), progress=lambda done, _: told.append(done)
+        )
+    wall, used = time.perf_counter() - begin, time.process_time() - used
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
+    (account,) = (one.account for one in result.outcomes)
+    assert account is not None
+    rows, size = f"{account.rows:,}", f"{path.stat().st_size / 1e6:.0f}"
+    return "|".join((path.name, rows, size, f"{used:.1f}", f"{wall:.1f}", f"{peak:.0f}", f"{len(told):,}"))
+
+
+def passes(share: float) -> None:
+    """Write the table of passes."""
+    rows = []
+    with tempfile.TemporaryDirectory() as folder:
+        for name in ("long.csv", "wide.csv"):
+            path = write(Path(folder), name, int(ROWS * share))
+            command = [sys.executable, "-m", "tests.bench.bench_exports", "--took", str(path)]
+            done = subprocess.run(command, check=True, capture_output=True, text=True)
+            rows.append(done.stdout.strip().split("|"))
+            path.unlink()
+            shutil.rmtree(path.with_name("store"))
+    head = ("export", "rows", "size [MB]", "processor [s]", "wall [s]", "peak [MB]", "steps of progress")
+    show("bench exports", table(head, rows))
+
+
 def main() -> None:
     """Make the files in a temporary folder and read each in a new process."""
-    share = float(sys.argv[1]) if len(sys.argv) > 1 else 1.0
+    numbers = [word for word in sys.argv[1:] if not word.startswith("--")]
+    share = float(numbers[0]) if numbers else 1.0
+    if "--pass" in sys.argv:
+        passes(share)
+        return
     with tempfile.TemporaryDirectory() as folder:
         for name in FORMATS:
             path = write(Path(folder), name, int(ROWS * share))
@@ -151,5 +194,7 @@ def main() -> None:
 if __name__ == "__main__":
     if sys.argv[1:2] == ["--read"]:
         sys.stdout.write(read(Path(sys.argv[2])) + "\n")
+    elif sys.argv[1:2] == ["--took"]:
+        sys.stdout.write(passed(Path(sys.argv[2])) + "\n")
     else:
         main()
