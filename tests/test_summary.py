@@ -1,4 +1,4 @@
-"""The monthly summary: ratios of sums, hours and tonnes that add up, parts, exclusions, comparisons."""
+"""The monthly summary: ratios of sums, hours and tonnes that add up, stretches, exclusions, comparisons."""
 
 from __future__ import annotations
 
@@ -215,7 +215,7 @@ def test_tonnes_of_time_not_seen_are_told_apart(tmp_path):
     assert told["tonnes"] == pytest.approx(2165.04 * told["seen in [h]"] / 720, abs=0.02)
 
 
-# --- parts
+# --- stretches
 
 
 CHARGED = "\n[catalyst]\ncharged = 2026-01-10T06:00:00Z\n"
@@ -226,23 +226,26 @@ def test_a_catalyst_change_in_mid_month_gives_two_rows_and_the_whole(tmp_path):
     new = np.arange(len(APRIL)) >= 15 * 144 + 72
     unit = made(tmp_path, selectivity=np.where(new, 0.90, 0.80), more=CHANGE)
     found = month_of(tmp_path, unit, 2026, 4)
-    parts = ["charge of 10 Jan 2026", "charge of 16 Apr 2026", WHOLE]
-    assert found.tables["figures"]["part"].unique().tolist() == parts
-    told = [row(found, "figures", figure=SELECTIVITY, part=part)["steady"] for part in parts]
+    stretches = ["charge of 10 Jan 2026", "charge of 16 Apr 2026", WHOLE]
+    assert found.tables["figures"]["stretch"].unique().tolist() == stretches
+    told = [row(found, "figures", figure=SELECTIVITY, stretch=stretch)["steady"] for stretch in stretches]
     assert told == pytest.approx([80.0, 90.0, 80 * 15.5 / 30 + 90 * 14.5 / 30], abs=1e-3)
     # the day of the change belongs to neither: 15 days before it, 14 after it
-    days = [row(found, "figures", figure=SELECTIVITY, part=part)["steady days"] for part in parts]
+    days = [
+        row(found, "figures", figure=SELECTIVITY, stretch=stretch)["steady days"] for stretch in stretches
+    ]
     assert days == [15, 14, 30]
     tonnes = [
-        Decimal(f"{row(found, 'tonnes', flow='ethylene made', part=part)['tonnes']:.3f}") for part in parts
+        Decimal(f"{row(found, 'tonnes', flow='ethylene made', stretch=stretch)['tonnes']:.3f}")
+        for stretch in stretches
     ]
     assert tonnes[0] + tonnes[1] == tonnes[2]
-    since = found.tables["comparisons"].set_index(["part", "against", "figure"])
-    # each part is compared with its own charge alone
-    assert since.loc[(parts[1], "since the charge", SELECTIVITY), "steady there"] == pytest.approx(
+    since = found.tables["comparisons"].set_index(["stretch", "against", "figure"])
+    # each stretch is compared with its own charge alone
+    assert since.loc[(stretches[1], "since the charge", SELECTIVITY), "steady there"] == pytest.approx(
         90.0, abs=1e-3
     )
-    assert found.tables["catalyst"]["charge"].tolist() == parts[:2]
+    assert found.tables["catalyst"]["charge"].tolist() == stretches[:2]
     assert found.tables["catalyst"]["age [d]"].tolist() == pytest.approx(
         [96.25, 14.5]
     )  # 10 Jan 06:00, 16 Apr 12:00
@@ -386,7 +389,7 @@ def test_since_the_charge_is_the_ratio_of_sums_over_all_of_its_record(tmp_path):
     nobody = exclusions.on_word((), month_span("UTC", 2026, 4))
     record = read(snapshot, unit, problem, span, nobody)
     figures = figures_of(unit, record.amounts.names)
-    found = charge_of(snapshot, unit, problem, figures, span)
+    found = charge_of(snapshot, unit, problem, figures, span=span, left_out=nobody)
     edges = np.array([record.cells.start[0], record.cells.start[-1] + 1])
     whole = span_figures(unit, record.amounts, figures, edges).iloc[0]
     for f, figure in enumerate(figures):

@@ -23,6 +23,7 @@ from ingest.unit import Unit
 from monitor.amounts import amounts_of, reconciled_rows
 from monitor.figures import Figure, evaluate, weighted
 from monitor.summary.differences import Level, responses
+from monitor.summary.record import EXCLUDED, inside
 from monitor.windows import MODES, TWO_SIDED_95
 
 SAMPLED_CELLS = 2880  # 20 days of 10-minute cells
@@ -51,7 +52,9 @@ def charge_of(
     unit: Unit,
     problem: Problem,
     figures: Sequence[Figure],
+    *,
     span: tuple[datetime, datetime],
+    left_out: pd.DataFrame,
 ) -> Charge | None:
     """Sum up a catalyst charge.
 
@@ -66,6 +69,8 @@ def charge_of(
     figures : sequence of Figure
     span : tuple of datetime
         When it was charged and up to when, zone-aware.
+    left_out : DataFrame
+        Columns start and end: spans that people left out of the steady figures.
 
     Returns
     -------
@@ -77,9 +82,9 @@ def charge_of(
     if not table.num_rows:
         return None
     kmol = _kmol(table, rows, problem, unit.cell / timedelta(hours=1))
-    cells = snapshot.read(unit.key, "cells", first=span[0], last=span[1], columns=["start", "operating"])
-    operating = cells.column("operating").to_numpy()
     start = table.column("start").cast(pa.int64()).to_numpy()
+    operating = _operating(snapshot, unit, span, start)
+    operating = np.where(inside(start, left_out) & (operating == RUNNING), EXCLUDED, operating)
     cell_h = unit.cell / timedelta(hours=1)
     value = _values(figures, rows, kmol, operating, cell_h)
     response = _sampled(snapshot, unit, problem, figures, start)
@@ -92,6 +97,16 @@ def charge_of(
         record_from=pd.Timestamp(int(start[0]), unit="us", tz="UTC"),
         level=Level(value, TWO_SIDED_95 * np.sqrt((response**2).sum(axis=2)), response),
     )
+
+
+def _operating(
+    snapshot: Snapshot, unit: Unit, span: tuple[datetime, datetime], start: NDArray[np.int64]
+) -> NDArray[np.int8]:
+    """Read the operating condition of the cells that have a state."""
+    table = snapshot.read(unit.key, "cells", first=span[0], last=span[1], columns=["start", "operating"])
+    place = np.searchsorted(table.column("start").cast(pa.int64()).to_numpy(), start)
+    codes: NDArray[np.int8] = table.column("operating").to_numpy().astype(np.int8)[place]
+    return codes
 
 
 def _states(snapshot: Snapshot, unit: Unit, problem: Problem, span: tuple[datetime, datetime]) -> pa.Table:

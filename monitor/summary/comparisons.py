@@ -13,14 +13,14 @@ from ingest.unit import Unit
 from monitor.figures import Figure
 from monitor.summary.differences import Level, minus, responses, stated, word
 from monitor.summary.record import Record
-from monitor.summary.span import Part
+from monitor.summary.span import Stretch
 from monitor.windows import MODES, span_figures
 
 BUDGET, GUARANTEE = "budget", "guarantee"
 
 
-def level_of(unit: Unit, record: Record, figures: Sequence[Figure], part: Part) -> Level:
-    """Give the figures of a part of a record as a level that others can be compared with.
+def level_of(unit: Unit, record: Record, figures: Sequence[Figure], stretch: Stretch) -> Level:
+    """Give the figures of a stretch of a record as a level that others can be compared with.
 
     Parameters
     ----------
@@ -28,7 +28,7 @@ def level_of(unit: Unit, record: Record, figures: Sequence[Figure], part: Part) 
         One reactor.
     record : Record
     figures : sequence of Figure
-    part : Part
+    stretch : Stretch
         Its instants.
 
     Returns
@@ -36,13 +36,13 @@ def level_of(unit: Unit, record: Record, figures: Sequence[Figure], part: Part) 
     Level
         NaN where a figure is missing.
     """
-    edges = np.array([part.first_us, part.last_us], dtype=np.int64)
+    edges = np.array([stretch.first_us, stretch.last_us], dtype=np.int64)
     row = span_figures(unit, record.amounts, figures, edges, unsolved=record.unsolved).iloc[0]
     value, half = (
         np.array([[row[one.name, mode, field] for mode in MODES] for one in figures], dtype=float)
         for field in ("value", "half_width")
     )
-    return Level(value, half, responses(unit, record.amounts, figures, part.first_us, part.last_us))
+    return Level(value, half, responses(unit, record.amounts, figures, stretch.first_us, stretch.last_us))
 
 
 def targets_of(unit: Unit, figures: Sequence[Figure], sources: int) -> dict[str, Level]:
@@ -85,36 +85,36 @@ def targets_of(unit: Unit, figures: Sequence[Figure], sources: int) -> dict[str,
 def table(
     figures: Sequence[Figure], here: Mapping[str, Level], against: Mapping[str, Mapping[str, Level]]
 ) -> pd.DataFrame:
-    """List every figure of every part against all that it is compared with.
+    """List every figure of every stretch against all that it is compared with.
 
     Parameters
     ----------
     figures : sequence of Figure
     here : mapping of str to Level
-        By part.
+        By stretch.
     against : mapping of str to mapping of str to Level
-        By part, then by what it is compared with.
+        By stretch, then by what it is compared with.
 
     Returns
     -------
     DataFrame
-        One row per part, reference and figure that both have; per mode the value there with its half-width,
+        One row per stretch, reference and figure that both have; per mode the value there and its half-width,
         the difference with its half-width for calibrations set anew and left as they were, and a word.
     """
     pieces = [
-        _against(figures, part, name, level, there)
-        for part, level in here.items()
-        for name, there in against[part].items()
+        _against(figures, stretch, name, level, there)
+        for stretch, level in here.items()
+        for name, there in against[stretch].items()
     ]
     return pd.concat(pieces, ignore_index=True) if pieces else _against(figures[:0], "", "", None, None)
 
 
 def _against(
-    figures: Sequence[Figure], part: str, name: str, here: Level | None, there: Level | None
+    figures: Sequence[Figure], stretch: str, name: str, here: Level | None, there: Level | None
 ) -> pd.DataFrame:
-    """Compare one part with one reference; figures that neither mode has are left out."""
+    """Compare one stretch with one reference; figures that neither mode has are left out."""
     columns: dict[str, object] = {
-        "part": [part] * len(figures),
+        "stretch": [stretch] * len(figures),
         "against": [name] * len(figures),
         "figure": [one.name for one in figures],
         "unit": [one.unit for one in figures],

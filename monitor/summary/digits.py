@@ -107,6 +107,7 @@ RULES: Mapping[str, Callable[[Summary, pd.DataFrame, str], list[int]]] = {
     "instruments": _of_readings,
     "exclusions": _whole,
     "words": _whole,
+    "alert counts": _whole,
 }
 
 

@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
+from zoneinfo import ZoneInfo
 
 import numpy as np
 import pandas as pd
@@ -29,7 +30,7 @@ from monitor.summary.charge import Charge, charge_of
 from monitor.summary.comparisons import level_of
 from monitor.summary.differences import Level
 from monitor.summary.record import Record, read
-from monitor.summary.span import Part, Span
+from monitor.summary.span import Span, Stretch
 from monitor.summary.table import Summary, settled
 from monitor.windows import MODES
 
@@ -56,7 +57,7 @@ class _Job:
     shown: tuple[Figure, ...]  # with raw routes beside selectivity, and the load
     rates: tuple[Figure, ...]  # what is counted in tonnes
     span: Span
-    parts: tuple[Part, ...]
+    stretches: tuple[Stretch, ...]
     snapshot: Snapshot
     lines: tuple[Line, ...]
 
@@ -93,15 +94,20 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
             f"{folder}: holds no cells of {unit.key} in {asked.name}",
             remedy=f"Take exports of it in: outlet run --unit {unit.key}.toml --store {folder} EXPORT...",
         )
-    made = tonnes.made_of(unit, asked, job.parts, record, job.rates)
+    made = tonnes.made_of(unit, asked, job.stretches, record, job.rates)
     days = results.by_day(unit, asked, record, job.shown)
     figures = pd.concat(
-        [results.of_part(unit, asked, record, job.shown, part=part, days=days) for part in job.parts],
+        [
+            results.of_stretch(unit, asked, record, job.shown, stretch=stretch, days=days)
+            for stretch in job.stretches
+        ],
         ignore_index=True,
     )
     charge = _charges(job)
     episodes = store.episodes(folder, unit.key)
     until = wording.utc(int(record.cells.start[-1])) + unit.cell
+    closed = witness.closing(desk.known(folder, unit.key), job.lines)
+    alerts = witness.alerts(episodes, closed, asked, pd.Timestamp(until))
     tables = {
         "identity": _identity(job, stamp, until),
         "hours": _hours(job, record, made, figures, left_out),
@@ -113,9 +119,8 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
         "figures by day": _by_day(job, days),
         "balances": witness.balances(unit, asked, record, job.shown, days),
         "instruments": witness.instruments(unit, job.problem, record),
-        "alerts": witness.alerts(
-            episodes, witness.closing(desk.known(folder, unit.key), job.lines), asked, pd.Timestamp(until)
-        ),
+        "alerts": alerts,
+        "alert counts": witness.counts(alerts),
         "exclusions": pd.concat([exclusions.by_condition(unit, record.cells), left_out], ignore_index=True),
         "words": _words(job),
         "definitions": terms.definitions(job.shown, made.decimals),
@@ -140,7 +145,7 @@ def _job(folder: Path, unit: Unit, asked: Span) -> _Job:
         shown=_shown(unit, figures),
         rates=tonnes.rates_of(unit, figures),
         span=asked,
-        parts=span.parts_of(unit, asked),
+        stretches=span.stretches_of(unit, asked),
         snapshot=Store(folder).snapshot(),
         lines=journal.lines(folder, unit=unit.key),
     )
@@ -159,34 +164,37 @@ def _record(job: _Job, asked: Span, left_out: pd.DataFrame) -> Record | None:
 
 
 def _charges(job: _Job) -> dict[str, Charge | None]:
-    """Sum up the charge of each part up to its end."""
-    return {
-        part.name: None
-        if part.charged is None
-        else charge_of(
-            job.snapshot, job.unit, job.problem, job.shown, (part.charged, wording.utc(part.last_us))
-        )
-        for part in job.parts
-    }
+    """Sum up the charge of each stretch up to its end."""
+    return {stretch.name: _charge(job, stretch) for stretch in job.stretches}
+
+
+def _charge(job: _Job, stretch: Stretch) -> Charge | None:
+    """Sum up one charge; what people left out of it does not count as steady."""
+    if stretch.charged is None:
+        return None
+    edges = (stretch.charged, wording.utc(stretch.last_us))
+    first, last = (edge.astimezone(ZoneInfo(job.unit.time_zone)).date() for edge in edges)
+    left_out = exclusions.on_word(job.lines, span.span_of(job.unit.time_zone, first, last))
+    return charge_of(job.snapshot, job.unit, job.problem, job.shown, span=edges, left_out=left_out)
 
 
 def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]) -> pd.DataFrame:
-    """Compare every part with what lies before it and with what was stated."""
+    """Compare every stretch with what lies before it and with what was stated."""
     earlier: dict[str, Level] = {}
     names = ("last month", "same month last year") if job.span.is_month else ("days before", "a year before")
     for name, other in zip(names, (span.before(job.span), span.year_before(job.span)), strict=True):
         there = _record(job, other, exclusions.on_word(job.lines, other))
         if there is not None:
-            whole = Part(other.name, other.first_us, other.last_us, None)
+            whole = Stretch(other.name, other.first_us, other.last_us, None)
             earlier[name] = level_of(job.unit, there, job.shown, whole)
-    here = {part.name: level_of(job.unit, record, job.shown, part) for part in job.parts}
+    here = {stretch.name: level_of(job.unit, record, job.shown, stretch) for stretch in job.stretches}
     sources = record.amounts.systematic.shape[2]
     targets = comparisons.targets_of(job.unit, job.shown, sources)
     against = {}
-    for part in job.parts:
-        charge = charges[part.name]
+    for stretch in job.stretches:
+        charge = charges[stretch.name]
         since = {} if charge is None else {"since the charge": charge.level}
-        against[part.name] = earlier | since | targets
+        against[stretch.name] = earlier | since | targets
     # What has no better side is compared by nobody, but for the load.
     told = [one for one in job.shown if one.higher_is_better is not None or one in job.rates]
     table = comparisons.table(job.shown, here, against)
@@ -199,7 +207,7 @@ def _identity(job: _Job, stamp: Stamp, until: datetime) -> pd.DataFrame:
     edges = [
         _iso(pd.Timestamp(edge, unit="us", tz="UTC"), zone) for edge in (job.span.first_us, job.span.last_us)
     ]
-    charged = [span.charge_name(part.charged, zone) for part in job.parts]
+    charged = [span.charge_name(stretch.charged, zone) for stretch in job.stretches]
     items = {
         "unit": job.unit.name,
         "unit file": job.unit.key,
@@ -229,8 +237,8 @@ def _readings(job: _Job) -> tuple[str, int]:
         if tag in found:
             series = found[tag]
             digest.update(f"{tag}\n{len(series.time)}\n".encode())
-            for part in (series.time, series.value, series.quality):
-                digest.update(np.ascontiguousarray(part).tobytes())
+            for column in (series.time, series.value, series.quality):
+                digest.update(np.ascontiguousarray(column).tobytes())
             count += len(series.time)
     return digest.hexdigest(), count
 
@@ -238,17 +246,17 @@ def _readings(job: _Job) -> tuple[str, int]:
 def _hours(
     job: _Job, record: Record, made: tonnes.Made, figures: pd.DataFrame, left_out: pd.DataFrame
 ) -> pd.DataFrame:
-    """List the hours of each part by condition, then what of the whole span was not seen or left out."""
+    """List the hours of each stretch by condition, then what of the whole span was not seen or left out."""
     columns = ["calendar [h]", *(f"{name} [h]" for name in tonnes.CONDITIONS)]
     frames = [
         pd.DataFrame(
             {
-                "part": part,
+                "stretch": stretch,
                 "item": [one.removesuffix(" [h]") for one in columns],
                 "hours": row[columns].to_numpy(),
             }
         )
-        for part, row in made.parts.iterrows()
+        for stretch, row in made.stretches.iterrows()
     ]
     beside = {"left out by people": float(left_out["hours"].sum())}
     beside |= {
@@ -256,31 +264,31 @@ def _hours(
         for name, hours in witness.unavailable_h(job.unit, record).items()
     }
     beside["balance solved"] = float(record.solved.sum()) * job.unit.cell.total_seconds() / 3600
-    frames.append(pd.DataFrame({"part": span.WHOLE, "item": list(beside), "hours": list(beside.values())}))
+    frames.append(pd.DataFrame({"stretch": span.WHOLE, "item": list(beside), "hours": list(beside.values())}))
     table = pd.concat(frames, ignore_index=True)
-    calendar = table[table["item"] == "calendar"].set_index("part")["hours"]
-    table["of calendar [%]"] = 100 * table["hours"] / table["part"].map(calendar)
+    calendar = table[table["item"] == "calendar"].set_index("stretch")["hours"]
+    table["of calendar [%]"] = 100 * table["hours"] / table["stretch"].map(calendar)
     return table
 
 
 def _tonnes(job: _Job, made: tonnes.Made) -> pd.DataFrame:
-    """List tonnes by part and flow, with what was not seen."""
-    running = made.parts["calendar [h]"] - made.parts["down [h]"]
+    """List tonnes by stretch and flow, with what was not seen."""
+    running = made.stretches["calendar [h]"] - made.stretches["down [h]"]
     pieces = []
-    for part in made.parts.index:
-        seen = made.seen_h.loc[part, list(made.flows)].to_numpy(float)
-        total = made.parts.loc[part, list(made.flows)].to_numpy(float)
+    for stretch in made.stretches.index:
+        seen = made.seen_h.loc[stretch, list(made.flows)].to_numpy(float)
+        total = made.stretches.loc[stretch, list(made.flows)].to_numpy(float)
         rate = total / np.where(seen > 0, seen, np.nan)
         pieces.append(
             pd.DataFrame(
                 {
-                    "part": part,
+                    "stretch": stretch,
                     "flow": [name.removesuffix(" [t]") for name in made.flows],
                     "tonnes": total,
-                    "±": made.half_width.loc[part, list(made.flows)].to_numpy(float),
+                    "±": made.half_width.loc[stretch, list(made.flows)].to_numpy(float),
                     "seen in [h]": seen,
-                    "not seen in [h]": running[part] - seen,
-                    "at the mean rate": rate * running[part],
+                    "not seen in [h]": running[stretch] - seen,
+                    "at the mean rate": rate * running[stretch],
                 }
             )
         )
@@ -288,10 +296,10 @@ def _tonnes(job: _Job, made: tonnes.Made) -> pd.DataFrame:
 
 
 def _catalyst(job: _Job, charges: Mapping[str, Charge | None]) -> pd.DataFrame:
-    """Tell age, time on stream and tonnes of each charge up to the end of its part."""
+    """Tell age, time on stream and tonnes of each charge up to the end of its stretch."""
     zone = job.unit.time_zone
-    parts = job.parts if len(job.parts) == 1 else job.parts[:-1]
-    known = [one for one in (charges[part.name] for part in parts) if one is not None]
+    stretches = job.stretches if len(job.stretches) == 1 else job.stretches[:-1]
+    known = [one for one in (charges[stretch.name] for stretch in stretches) if one is not None]
     return pd.DataFrame(
         {
             "charge": [span.charge_name(one.charged, zone) for one in known],

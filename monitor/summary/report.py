@@ -49,7 +49,7 @@ svg { width: 100%; height: auto; }
 .new { break-before: page; }
 td.t { white-space: nowrap; }
 td.long { overflow-wrap: anywhere; min-width: 60mm; }
-tr.part td { font-weight: 600; padding-top: 2mm; border-bottom-color: #7d8a92; }
+tr.stretch td { font-weight: 600; padding-top: 2mm; border-bottom-color: #7d8a92; }
 footer { margin-top: 6mm; border-top: 0.3mm solid #7d8a92; padding-top: 2mm; font-size: 7.5pt;
   color: #4f5d66; }
 @media print { body { padding: 0; max-width: none; } h2.wide { grid-template-columns: 7fr 5fr; }
@@ -132,7 +132,8 @@ def _sections(summary: Summary) -> Iterable[str]:
     yield "</div>"
     yield '<h2 class="new">Instruments and operating point</h2>'
     yield _table(summary, "instruments")
-    for name, heading in (("alerts", "Alerts"), ("exclusions", "Left out"), ("words", "Events and notes")):
+    yield f"<h2>Alerts</h2><p>{_counted(summary)}</p>{_table(summary, 'alerts')}"
+    for name, heading in (("exclusions", "Left out"), ("words", "Events and notes")):
         yield f"<h2>{heading}</h2>{_table(summary, name)}"
     yield '<h2 class="new">What this was made from</h2>'
     yield _table(summary, "identity")
@@ -175,6 +176,12 @@ def _begun(text: str) -> str:
     return text[:1].upper() + text[1:]
 
 
+def _counted(summary: Summary) -> str:
+    """The counts of alerts in one line."""
+    counts = rows(summary.tables["alert counts"])
+    return "; ".join(f"{_text(row['item'])} {_number(row['number'], 0)}" for row in counts)
+
+
 def _picture(caption: str, spec: Spec, name: str) -> str:
     return f"<figure><figcaption>{escape(caption)}</figcaption>{pictures.svg(spec, name)}</figure>"
 
@@ -192,16 +199,16 @@ def _figures(summary: Summary, wanted: Sequence[str] | None) -> str:
     """Figures as operated and steady side by side: value, coverage, spread, best and worst day."""
     table, places = summary.tables["figures"], decimals(summary, "figures")
     fields = ("value", "coverage", "spread", "best day", "worst day")
-    parts = len(set(table["part"])) > 1
+    stretches = len(set(table["stretch"])) > 1
     body = []
     for at, row in enumerate(rows(table)):
         if wanted is not None and row["figure"] not in wanted:
             continue
-        cells = f"<td>{_text(row['part'])}</td>" if parts else ""
+        cells = f"<td>{_text(row['stretch'])}</td>" if stretches else ""
         cells += f"<td>{_text(row['figure'])}</td><td>{_text(row['unit'])}</td>"
         cells += "".join(_of_mode(row, mode, places[mode][at]) for mode in MODES)
         body.append(f"<tr>{cells}</tr>")
-    first = ("part", "figure", "unit") if parts else ("figure", "unit")
+    first = ("stretch", "figure", "unit") if stretches else ("figure", "unit")
     return _framed(_grouped(first, MODES, fields), body)
 
 
@@ -226,11 +233,11 @@ def _comparisons(summary: Summary) -> str:
     fields = ("there", "difference", "± if nothing was calibrated", "word")
     body, group = [], ""
     for at, row in enumerate(rows(table)):
-        named = f"{row['part']}, against {row['against']}"
+        named = f"{row['stretch']}, against {row['against']}"
         if named != group:
             group = named
             whole = 2 + len(MODES) * len(fields)
-            body.append(f'<tr class="part"><td colspan="{whole}">{_text(named)}</td></tr>')
+            body.append(f'<tr class="stretch"><td colspan="{whole}">{_text(named)}</td></tr>')
         cells = f"<td>{_text(row['figure'])}</td><td>{_text(row['unit'])}</td>"
         cells += "".join(
             _apart(row, mode, {name: column[at] for name, column in places.items()}) for mode in MODES
@@ -269,8 +276,8 @@ def _table(summary: Summary, name: str) -> str:
     frame, places = summary.tables[name], decimals(summary, name)
     if frame.empty:
         return f'<p class="quiet">{NOTHING.get(name, "")}</p>'
-    alone = "part" in frame and len(set(frame["part"])) == 1
-    columns = SHOWN.get(name) or [column for column in names(frame) if column != "part" or not alone]
+    alone = "stretch" in frame and len(set(frame["stretch"])) == 1
+    columns = SHOWN.get(name) or [column for column in names(frame) if column != "stretch" or not alone]
     kinds = {column: "n" if column in places else "long" if column in LONG else "t" for column in columns}
     head = "".join(f'<th class="{kinds[column]}">{_text(column)}</th>' for column in columns)
     body = []

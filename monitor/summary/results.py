@@ -13,7 +13,7 @@ from ingest.cells import DOWN, RUNNING
 from ingest.unit import Unit
 from monitor.figures import Figure
 from monitor.summary.record import Record
-from monitor.summary.span import Part, Span
+from monitor.summary.span import Span, Stretch
 from monitor.windows import MODES, REASONS, span_figures
 
 SELECTIVITY = "selectivity on converted"
@@ -90,10 +90,10 @@ def by_day(unit: Unit, span: Span, record: Record, figures: Sequence[Figure]) ->
     return frame.set_axis(pd.Index(span.days, name="day"))
 
 
-def of_part(
-    unit: Unit, span: Span, record: Record, figures: Sequence[Figure], *, part: Part, days: pd.DataFrame
+def of_stretch(
+    unit: Unit, span: Span, record: Record, figures: Sequence[Figure], *, stretch: Stretch, days: pd.DataFrame
 ) -> pd.DataFrame:
-    """Judge every figure of one part of a span, with what its days say.
+    """Judge every figure of one stretch of a span, with what its days say.
 
     Parameters
     ----------
@@ -102,21 +102,21 @@ def of_part(
     span : Span
     record : Record
     figures : sequence of Figure
-    part : Part
+    stretch : Stretch
     days : DataFrame
-        As `by_day` gives it; only days that lie in the part as a whole count for spread, best and worst.
+        As `by_day` gives it; only days that lie in the stretch as a whole count for spread, best and worst.
 
     Returns
     -------
     DataFrame
-        Columns part, figure, unit, then those of `PER_MODE` for both modes. NaN where the figure is missing;
-        the remark says why, or why it does not stand for the span.
+        Columns stretch, figure, unit, then those of `PER_MODE` for both modes. NaN where the figure is
+        missing; the remark says why, or why it does not stand for the span.
     """
-    edges = np.array([part.first_us, part.last_us], dtype=np.int64)
+    edges = np.array([stretch.first_us, stretch.last_us], dtype=np.int64)
     row = span_figures(unit, record.amounts, figures, edges, unsolved=record.unsolved).iloc[0]
-    whole = (span.edges_us[:-1] >= part.first_us) & (span.edges_us[1:] <= part.last_us)
+    whole = (span.edges_us[:-1] >= stretch.first_us) & (span.edges_us[1:] <= stretch.last_us)
     columns: dict[str, list[object]] = {
-        "part": [part.name] * len(figures),
+        "stretch": [stretch.name] * len(figures),
         "figure": [one.name for one in figures],
         "unit": [one.unit for one in figures],
     }
@@ -125,7 +125,7 @@ def of_part(
             _of_mode(figure, row[figure.name, mode], days.loc[whole, (figure.name, mode)])
             for figure in figures
         ]
-        hours = _counted_h(unit, record, part, mode)
+        hours = _counted_h(unit, record, stretch, mode)
         for place, suffix in enumerate(PER_MODE[:-1]):
             columns[mode + suffix] = [one[place] for one in told]
         columns[f"{mode} remark"] = [remark(row[one.name, mode], hours) for one in figures]
@@ -156,12 +156,12 @@ def remark(told: pd.Series, hours: float) -> str:
     return f"not representative: {days:.1f} days" if days <= LEAST_DAYS else ""
 
 
-def _counted_h(unit: Unit, record: Record, part: Part, mode: str) -> float:
-    """Time of a mode in a part [h]; what the record does not hold counts as running."""
+def _counted_h(unit: Unit, record: Record, stretch: Stretch, mode: str) -> float:
+    """Time of a mode in a stretch [h]; what the record does not hold counts as running."""
     start, operating = record.cells.start, record.amounts.operating
-    inside = (start >= part.first_us) & (start < part.last_us)
+    inside = (start >= stretch.first_us) & (start < stretch.last_us)
     idle = _idle(operating[inside], mode).sum() * unit.cell.total_seconds() / 3600
-    return (part.last_us - part.first_us) / 3.6e9 - float(idle)
+    return (stretch.last_us - stretch.first_us) / 3.6e9 - float(idle)
 
 
 def _idle(operating: NDArray[np.int8], mode: str) -> NDArray[np.bool_]:

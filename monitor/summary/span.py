@@ -65,7 +65,7 @@ class Span:
 
 
 @dataclass(frozen=True, slots=True)
-class Part:
+class Stretch:
     """A stretch of a span with one catalyst charge, or the whole span; `charged` is None where unknown."""
 
     name: str
@@ -146,7 +146,7 @@ def year_before(span: Span) -> Span:
     return span_of(span.zone, first, _month_of(last)[1] if span.is_month else last)
 
 
-def parts_of(unit: Unit, span: Span) -> tuple[Part, ...]:
+def stretches_of(unit: Unit, span: Span) -> tuple[Stretch, ...]:
     """Cut a span where the catalyst was changed: what is before says nothing about what is after.
 
     Parameters
@@ -157,18 +157,18 @@ def parts_of(unit: Unit, span: Span) -> tuple[Part, ...]:
 
     Returns
     -------
-    tuple of Part
-        One part where nothing was changed; else one per charge, then the whole span.
+    tuple of Stretch
+        One stretch where nothing was changed; else one per charge, then the whole span.
     """
     changes = charges(unit)
     cuts = [at for at in changes if span.first_us < instant_us(at) < span.last_us]
     edges = [span.first_us, *(instant_us(at) for at in cuts), span.last_us]
     latest = [_latest(changes, edge) for edge in edges[:-1]]
-    whole = Part(WHOLE, span.first_us, span.last_us, latest[-1])
+    whole = Stretch(WHOLE, span.first_us, span.last_us, latest[-1])
     if not cuts:
         return (whole,)
     pieces = zip(edges[:-1], edges[1:], latest, strict=True)
-    return (*(Part(charge_name(at, span.zone), first, last, at) for first, last, at in pieces), whole)
+    return (*(Stretch(charge_name(at, span.zone), first, last, at) for first, last, at in pieces), whole)
 
 
 def charges(unit: Unit) -> list[datetime]:

@@ -17,7 +17,7 @@ from ingest.cells import OPERATING
 from ingest.unit import Unit
 from monitor.figures import Figure
 from monitor.summary.record import Record
-from monitor.summary.span import HOUR_US, Part, Span
+from monitor.summary.span import HOUR_US, Span, Stretch
 from monitor.windows import span_figures
 
 DECIMALS = 3  # of a tonne: kilograms
@@ -31,14 +31,14 @@ Floats = NDArray[np.float64]
 
 @dataclass(frozen=True, slots=True)
 class Made:
-    """What went in and out by days and parts; columns of `days` and `parts` are named alike.
+    """What went in and out by days and stretches; columns of `days` and `stretches` are named alike.
 
-    `days` has index day; `parts` index part. Both hold hours by condition and tonnes by flow; `half_width`
-    and `seen_h` have index part and columns flow.
+    `days` has index day; `stretches` index stretch. Both hold hours by condition and tonnes by flow;
+    `half_width` and `seen_h` have index stretch and columns flow.
     """
 
     days: pd.DataFrame
-    parts: pd.DataFrame
+    stretches: pd.DataFrame
     half_width: pd.DataFrame
     seen_h: pd.DataFrame
     flows: tuple[str, ...]
@@ -81,7 +81,9 @@ def rates_of(unit: Unit, figures: Sequence[Figure]) -> tuple[Figure, ...]:
     return (*fed, *made)
 
 
-def made_of(unit: Unit, span: Span, parts: Sequence[Part], record: Record, rates: Sequence[Figure]) -> Made:
+def made_of(
+    unit: Unit, span: Span, stretches: Sequence[Stretch], record: Record, rates: Sequence[Figure]
+) -> Made:
     """Count hours and tonnes.
 
     Parameters
@@ -89,7 +91,7 @@ def made_of(unit: Unit, span: Span, parts: Sequence[Part], record: Record, rates
     unit : Unit
         One reactor.
     span : Span
-    parts : sequence of Part
+    stretches : sequence of Stretch
         The last is the whole span.
     record : Record
         What the store holds of the span.
@@ -100,7 +102,7 @@ def made_of(unit: Unit, span: Span, parts: Sequence[Part], record: Record, rates
     -------
     Made
     """
-    cuts = {part.first_us for part in parts}
+    cuts = {stretch.first_us for stretch in stretches}
     edges = np.array(sorted({*span.edges_us.tolist(), *cuts}), dtype=np.int64)
     hours = _hours(unit, record, edges)
     found = span_figures(unit, record.amounts, rates, edges, unsolved=record.unsolved)
@@ -111,14 +113,17 @@ def made_of(unit: Unit, span: Span, parts: Sequence[Part], record: Record, rates
     pieces = pd.concat([hours, tonnes], axis=1)
     day = np.searchsorted(span.edges_us, edges[:-1], side="right") - 1
     days = pieces.groupby(day).sum().set_axis(pd.Index(span.days, name="day"))
-    inside = {part.name: (edges[:-1] >= part.first_us) & (edges[:-1] < part.last_us) for part in parts}
+    inside = {
+        stretch.name: (edges[:-1] >= stretch.first_us) & (edges[:-1] < stretch.last_us)
+        for stretch in stretches
+    }
     whole = pd.DataFrame({name: pieces[mask].sum() for name, mask in inside.items()}).T
-    judged = [_part(unit, record, rates, part) for part in parts]
+    judged = [_stretch(unit, record, rates, stretch) for stretch in stretches]
     return Made(
         days=_exact(days, decimals),
-        parts=_exact(whole.rename_axis("part"), decimals),
-        half_width=pd.DataFrame([one[0] for one in judged], index=[part.name for part in parts]),
-        seen_h=pd.DataFrame([one[1] for one in judged], index=[part.name for part in parts]),
+        stretches=_exact(whole.rename_axis("stretch"), decimals),
+        half_width=pd.DataFrame([one[0] for one in judged], index=[stretch.name for stretch in stretches]),
+        seen_h=pd.DataFrame([one[1] for one in judged], index=[stretch.name for stretch in stretches]),
         flows=tuple(_column(name) for name in names),
         decimals=decimals,
     )
@@ -141,11 +146,11 @@ def _hours(unit: Unit, record: Record, edges: NDArray[np.int64]) -> pd.DataFrame
     return frame
 
 
-def _part(
-    unit: Unit, record: Record, rates: Sequence[Figure], part: Part
+def _stretch(
+    unit: Unit, record: Record, rates: Sequence[Figure], stretch: Stretch
 ) -> tuple[dict[str, float], dict[str, float]]:
-    """Half-width of the tonnes of a part, and the hours they were seen in."""
-    edges = np.array([part.first_us, part.last_us], dtype=np.int64)
+    """Half-width of the tonnes of a stretch, and the hours they were seen in."""
+    edges = np.array([stretch.first_us, stretch.last_us], dtype=np.int64)
     row = span_figures(unit, record.amounts, rates, edges, unsolved=record.unsolved).iloc[0]
     half, seen = {}, {}
     for rate in rates:

@@ -19,6 +19,7 @@ from monitor.summary.span import Span
 from monitor.witnesses import adjustments, fit
 
 CLOSURE = " closure"
+OUTCOMES = ("confirmed", "false", "open")
 
 
 def balances(
@@ -145,6 +146,25 @@ def alerts(
         by=[line.who if line else "" for line in found],
         note=[line.note if line else "" for line in found],
     )
+
+
+def counts(alerts: pd.DataFrame) -> pd.DataFrame:
+    """Count the alerts of a span by what became of them.
+
+    Parameters
+    ----------
+    alerts : DataFrame
+        As `alerts` lists them.
+
+    Returns
+    -------
+    DataFrame
+        Columns item and number; confirmed, false and open add up to those that stood.
+    """
+    raised = int((alerts["raised here"] == "yes").sum())
+    told = {outcome: int((alerts["outcome"] == outcome).sum()) for outcome in OUTCOMES}
+    numbers = {"stood in this span": len(alerts), "raised in it": raised, **told}
+    return pd.DataFrame({"item": list(numbers), "number": [float(one) for one in numbers.values()]})
 
 
 def closing(alerts: Iterable[Alert], lines: Iterable[Line]) -> dict[tuple[str, str, pd.Timestamp], Line]:

@@ -18,15 +18,21 @@ from monitor.windows import MODES
 from monitor.wording import CAUTIONS
 
 # On the first sheet, one below the other; every other table has a sheet of its own.
-FRONT = ("identity", "hours", "tonnes", "catalyst")
+FRONT = ("identity", "hours", "tonnes", "catalyst", "alert counts")
 HEADLINE = ("conversion", "selectivity on converted", "yield on feed", "specific consumption fed")
 HEADLINE_COLUMNS = (
-    "part",
+    "stretch",
     "figure",
     "unit",
     *(f"{m}{f}" for m in MODES for f in ("", " ±", " coverage [%]", " remark")),
 )
-TITLES = {"identity": "What this is", "hours": "Hours", "tonnes": "Tonnes", "catalyst": "Catalyst"}
+TITLES = {
+    "identity": "What this is",
+    "hours": "Hours",
+    "tonnes": "Tonnes",
+    "catalyst": "Catalyst",
+    "alert counts": "Alerts",
+}
 INK, ACCENT, SECOND, QUIET = "#1c2a33", "#0072B2", "#D55E00", "#4f5d66"
 # Pages across and down of wide tables, whose first columns are then repeated; the rest is one page across.
 PAGES = {
