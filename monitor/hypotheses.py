@@ -240,18 +240,16 @@ def believed(evidence: Evidence, hypotheses: Sequence[Hypothesis], *, odds: Floa
 def _log_marginal(value: Floats, inverse: Floats, one: Hypothesis) -> float:
     """Give the log density of the evidence, against that of nothing, averaged over the spreads."""
     lean = inverse @ one.direction
-    told = one.direction.T @ lean
-    score = lean.T @ value
-    parts = []
-    for spread in SPREADS:
-        wide = np.eye(len(told)) + spread**2 * told
-        inner = spread**2 * np.linalg.solve(wide, score)
-        gain = (score @ inner - np.linalg.slogdet(wide)[1]) / 2
-        if one.sign:
-            sd = spread / np.sqrt(wide[0, 0])
-            gain += np.log(2.0) + float(log_ndtr(one.sign * inner[0] / sd))
-        parts.append(gain)
-    return float(logsumexp(parts) - np.log(len(parts)))
+    told, axes = np.linalg.eigh(one.direction.T @ lean)
+    score = (lean @ axes).T @ value
+    wide = 1.0 + np.square(SPREADS)[:, None] * told
+    inner = np.square(SPREADS)[:, None] * score / wide
+    gain = (inner @ score - np.log(wide).sum(axis=1)) / 2
+    if one.sign:
+        # the axis of the one direction may point either way
+        side = one.sign * axes[0, 0] * inner[:, 0] * np.sqrt(wide[:, 0]) / SPREADS
+        gain = gain + np.log(2.0) + log_ndtr(side)
+    return float(logsumexp(gain) - np.log(len(SPREADS)))
 
 
 def _size(value: Floats, inverse: Floats, one: Hypothesis) -> tuple[float, float]:

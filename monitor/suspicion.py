@@ -280,7 +280,7 @@ def put_right(unit: Unit, problem: Problem, cells: Cells, cause: str, size: floa
 
 
 def main_figures(unit: Unit, problem: Problem, cells: Cells) -> tuple[tuple[Figure, ...], tuple[float, ...]]:
-    """Give the key figures of some cells in one window, as operated, and their values; NaN where one is missing.
+    """Give the key figures of some cells in one window, as operated, with values; NaN where one is missing.
 
     Parameters
     ----------

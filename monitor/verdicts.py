@@ -1,7 +1,8 @@
 """The verdicts of a unit's episodes, kept with them: made once eight hours are there, and where data changed.
 
-A verdict is a pure function of the unit file, the healthy time, the window and two days before it. It is
-taken over from the last pass where none of these changed; so an old episode costs a comparison of names.
+A verdict is a pure function of the unit file, the healthy time, the window and two days before it, in cells
+of ten minutes or more. It is taken over from the last pass where none of these changed; so an old episode
+costs a comparison of names.
 """
 
 from __future__ import annotations
@@ -21,6 +22,8 @@ from ingest.cells import Cells, cells_from_frame
 from ingest.parts import month_edges, times_us
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
+from monitor.coarse import coarse, coarse_unit
+from monitor.days import rows
 from monitor.explain import LEAD, Reference, explain, picture_of
 from monitor.healthy import LENGTH, Baseline, baseline_of
 from monitor.verdict import COLUMN, as_text, read
@@ -67,6 +70,7 @@ def with_verdicts(
     """
     known = {_key(row): row.get(COLUMN) for row in before.episodes(unit.key).to_dict("records")}
     end_us, same = _end_us(view, unit), _same_in(before, view, unit)
+    unit = coarse_unit(unit)
     refer = lru_cache(maxsize=4)(lambda span: _reference(view, unit, problem, span))
     told = []
     for row in episodes.to_dict("records"):
@@ -140,15 +144,15 @@ def _cells(view: Snapshot, unit: Unit, span: Span) -> Cells | None:
     if not table.num_rows:
         return None
     cells = cells_from_frame(unit, table.to_pandas(ignore_metadata=True).set_index("start"))
-    holes = np.flatnonzero(np.diff(cells.start) > unit.cell // _US)
-    since = int(holes[-1]) + 1 if len(holes) else 0
-    return Cells(*(getattr(cells, name)[since:] for name in Cells.__slots__))
+    step = np.diff(cells.start)
+    holes = np.flatnonzero(step > step.min(initial=unit.cell // _US))
+    return coarse(unit, rows(cells, slice(int(holes[-1]) + 1 if len(holes) else 0, None)))
 
 
 def _reference(view: Snapshot, unit: Unit, problem: Problem, span: Span) -> Reference:
     """Make the healthy time ready; what is learnt of it is learnt when it is first asked for."""
     cells = _cells(view, unit, span)
-    if cells is None:
+    if cells is None or not len(cells.start):
         return Reference((), unit.healthy is not None, None, lambda there: None)
     found = cells
 
@@ -168,7 +172,7 @@ def _verdict(
     refer: Callable[[Span], Reference],
 ) -> str:
     cells = _cells(view, unit, _with_lead(window))
-    if cells is None or cells.start[-1] < window.span[0]:
+    if cells is None or not len(cells.start) or cells.start[-1] < window.span[0]:
         return ""
     first = max(window.span[0], int(cells.start[0]))
     found = explain(

@@ -19,11 +19,13 @@ from scipy.stats import multivariate_normal, norm
 
 from demo_data.exports import UNIT_FILE, make
 from ingest.balance import problem_of
+from ingest.cells import Cells
 from ingest.instruments import measured
 from ingest.ledger import Store
 from ingest.unit import Prices
 from ingest.unitfile import load
 from monitor import verdict
+from monitor.coarse import coarse, coarse_unit
 from monitor.coordinates import coordinates, regressors, shares_of
 from monitor.evidence import Evidence, bent
 from monitor.explain import LEAD
@@ -507,3 +509,30 @@ def test_a_verdict_changes_nothing_that_it_is_given(judges):
     judge.say(cells)
     for name, kept in zip(type(cells).__slots__, before, strict=True):
         np.testing.assert_array_equal(getattr(cells, name), kept)
+
+
+# --- minutes
+
+
+def test_cells_of_a_minute_are_joined_to_ten_by_their_share():
+    # by hand: means of the minutes that are there, by their share; a joined cell runs where all of it did
+    unit = replace(DEMO, cell=timedelta(minutes=1))
+    joined = coarse_unit(unit)
+    assert joined.cell == timedelta(minutes=10)
+    count = 35  # from 3 minutes past: 7 that fill no cell, then two whole ones and 8 more
+    value = np.arange(count, dtype=float)[:, None] * np.ones(2)
+    value[8:10, 0], value[17:23, 1] = np.nan, np.nan
+    share = np.ones(value.shape, np.float32)
+    share[7, 0] = 0.5
+    operating = np.zeros(count, np.int8)
+    operating[20] = 2
+    cells = Cells(
+        180_000_000 + 60_000_000 * np.arange(count), value, share, np.zeros(value.shape, np.int8), operating
+    )
+    found = coarse(joined, cells)
+    assert found.start.tolist() == [600_000_000, 1_200_000_000]
+    assert found.value[0, 0] == pytest.approx((0.5 * 7 + sum(range(10, 17))) / 7.5)
+    assert found.share[0, 0] == pytest.approx(0.75)
+    assert np.isnan(found.value[1, 1])
+    assert found.operating.tolist() == [0, 2]
+    assert coarse(DEMO, cells_of_ten := replace(cells, start=600_000_000 * np.arange(count))) is cells_of_ten
