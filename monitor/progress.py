@@ -7,7 +7,7 @@ import time
 from types import TracebackType
 from typing import Self
 
-from monitor.run import EXPORTS
+from ingest.intake import EXPORTS
 
 WIDTH = 24
 CLEAR = "\r\x1b[K"
