@@ -51,7 +51,7 @@ def step(store: Path, export: Path) -> None:
 
 
 def piece(year: Path, export: Path, first: int, last: int, *, factor: float = 1.0) -> Path:
-    """Write the days first <= day < last of the repeated year; with a factor without first and last hour."""
+    """Write the days first <= day < last of the repeated year, all values times a factor."""
     import pyarrow as pa
     import pyarrow.compute as pc
     import pyarrow.parquet as pq
@@ -65,8 +65,7 @@ def piece(year: Path, export: Path, first: int, last: int, *, factor: float = 1.
         values = [moved, *(pc.multiply(part[name], factor) for name in part.column_names[1:])]
         parts.append(pa.Table.from_arrays(values, part.column_names))
         first += count
-    made, hour = pa.concat_tables(parts), 60 if factor != 1 else 0
-    pq.write_table(made.slice(hour, len(made) - 2 * hour), export)
+    pq.write_table(pa.concat_tables(parts), export)
     os.utime(export, (0, 0))  # at rest since long ago
     return export
 
@@ -107,6 +106,7 @@ def lines(folder: Path, lengths: tuple[int, ...]) -> Iterator[list[str]]:
         day = alone(store, piece(year, folder / f"day-{kept}.parquet", kept, kept + 1))
         run_s = by_command(store, piece(year, folder / f"day-{kept + 1}.parquet", kept + 1, kept + 2))
         kept += 2
+        # Their first reading ends the last interval of the day before, which is a fourth day.
         other = piece(year, folder / f"other-{kept}.parquet", kept - 14, kept - 11, factor=1.001)
         three = alone(store, other)
         peak = max(day["peak"], three["peak"])
