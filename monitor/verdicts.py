@@ -1,8 +1,8 @@
 """The verdicts of a unit's episodes, kept with them: made once eight hours are there, and where data changed.
 
 A verdict is a pure function of the unit file, the healthy time, the window and two days before it, in cells
-of ten minutes or more. It is taken over from the last pass where none of these changed; so an old episode
-costs a comparison of names.
+of ten minutes or more; where eight hours do not tell, of one and three days later, since much grows. It is
+taken over from the last pass where none of these changed; so an old episode costs a comparison of names.
 """
 
 from __future__ import annotations
@@ -26,11 +26,12 @@ from monitor.coarse import coarse, coarse_unit
 from monitor.days import rows
 from monitor.explain import LEAD, Reference, explain, picture_of
 from monitor.healthy import LENGTH, Baseline, baseline_of
-from monitor.verdict import COLUMN, as_text, read
+from monitor.verdict import COLUMN, INSTRUMENT, REACTOR, as_text, read
 
 METHOD = "1"  # to be raised when the same cells give another verdict
 BEFORE = timedelta(days=30)  # healthy time where none is stated: so much before the episode
 APART = timedelta(days=1)  # left out between that and the onset
+AGAIN = (timedelta(hours=16), timedelta(hours=64))  # after the first window, if that tells nothing
 _US = timedelta(microseconds=1)
 
 Span = tuple[int, int]
@@ -38,9 +39,9 @@ Span = tuple[int, int]
 
 @dataclass(frozen=True, slots=True)
 class _Window:
-    """What a verdict rests on [us UTC]: the window, the healthy time, and whether more is still to come."""
+    """What a verdict rests on [us UTC]: ends of its windows, its healthy time, whether more is to come."""
 
-    span: Span
+    ends: tuple[int, ...]
     healthy: Span
     is_provisional: bool
 
@@ -94,18 +95,19 @@ def _end_us(view: Snapshot, unit: Unit) -> int:
 
 
 def _window(unit: Unit, row: Mapping[Any, Any], end_us: int) -> _Window:
-    """Give the eight hours after the onset; less of them where the record or the episode ends before."""
-    onset = row.get("onset")
-    since = row["first_crossed"] if onset is None or pd.isna(onset) else onset
-    wanted = _us(since) + LENGTH // _US
-    until = min(wanted, end_us, end_us if pd.isna(row["cleared"]) else _us(row["cleared"]))
-    until = max(until, _us(row["raised"]))
+    """Give eight hours after the onset, less where the record or the episode ends before, and later ones."""
+    onset, is_open = row.get("onset"), bool(pd.isna(row["cleared"]))
+    since = _us(row["first_crossed"] if onset is None or pd.isna(onset) else onset)
+    last = end_us if is_open else min(end_us, _us(row["cleared"]))
+    first = max(min(since + LENGTH // _US, last), _us(row["raised"]))
+    later = [first + wait // _US for wait in AGAIN]
     cell = unit.cell // _US
-    until = until // cell * cell
-    healthy = (_us(since) - (BEFORE + APART) // _US, _us(since) - APART // _US)
+    healthy = (since - (BEFORE + APART) // _US, since - APART // _US)
     if unit.healthy:
         healthy = (_us(unit.healthy.first), _us(unit.healthy.last))
-    return _Window((until - LENGTH // _US, until), healthy, bool(end_us < wanted and pd.isna(row["cleared"])))
+    ends = (first, *(one for one in later if one <= last))
+    is_early = is_open and end_us < since + LENGTH // _US
+    return _Window(tuple(one // cell * cell for one in ends), healthy, is_early)
 
 
 def _us(moment: Any) -> int:
@@ -135,7 +137,8 @@ def _same_in(before: Snapshot, view: Snapshot, unit: Unit) -> Callable[[Span], b
 
 
 def _with_lead(window: _Window) -> Span:
-    return window.span[0] - LEAD // _US, window.span[1]
+    """Give all the time that a verdict looks at."""
+    return window.ends[0] - (LENGTH + LEAD) // _US, window.ends[-1]
 
 
 def _cells(view: Snapshot, unit: Unit, span: Span) -> Cells | None:
@@ -171,17 +174,24 @@ def _verdict(
     window: _Window,
     refer: Callable[[Span], Reference],
 ) -> str:
+    """Make a verdict of the first window that tells a class, else of the last; empty without cells."""
     cells = _cells(view, unit, _with_lead(window))
-    if cells is None or not len(cells.start) or cells.start[-1] < window.span[0]:
-        return ""
-    first = max(window.span[0], int(cells.start[0]))
-    found = explain(
-        unit,
-        problem,
-        refer(window.healthy),
-        cells,
-        first,
-        is_provisional=window.is_provisional,
-        mark=_mark(unit, window),
-    )
-    return as_text(found)
+    text = ""
+    for end in window.ends:
+        first = end - LENGTH // _US
+        seen = None if cells is None else _between(cells, first - LEAD // _US, end)
+        if seen is None or not len(seen.start) or seen.start[-1] < first:
+            continue
+        begin = max(first, int(seen.start[0]))
+        reference, mark = refer(window.healthy), _mark(unit, window)
+        early = window.is_provisional
+        found = explain(unit, problem, reference, seen, begin, is_provisional=early, mark=mark)
+        text = as_text(found)
+        if found.word in (INSTRUMENT, REACTOR):
+            break
+    return text
+
+
+def _between(cells: Cells, first_us: int, last_us: int) -> Cells:
+    """Give the cells that start within a span."""
+    return rows(cells, slice(*np.searchsorted(cells.start, [first_us, last_us]).tolist()))
