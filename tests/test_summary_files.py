@@ -26,7 +26,7 @@ from monitor.cli import outlet
 from monitor.run import run_pass
 from monitor.summary.digits import decimals
 from monitor.summary.files import csv_text, write
-from monitor.summary.issue import issue, sealed
+from monitor.summary.issue import issue, kept, sealed
 from monitor.summary.making import Stamp
 from monitor.summary.report import report
 from monitor.summary.span import month_span
@@ -335,6 +335,10 @@ def test_late_data_make_a_second_revision_that_lists_exactly_what_changed(plant,
     assert issued(folder).summary.revision == 2
     write(second.summary, tmp_path, ("xlsx", "html"))
     assert (tmp_path / "made-2026-03-revision-2.xlsx").exists()
+    assert [one.digest for one in kept(folder / "store", "made", "2026-03")] == [
+        first.digest,
+        second.summary.digest,
+    ]
     page = (tmp_path / "made-2026-03-revision-2.html").read_text(encoding="utf-8")
     assert "What revision 2 changes" in page
 

@@ -64,6 +64,26 @@ def issue(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Issued:
     return Issued(final, is_new=True)
 
 
+def kept(folder: Path, unit: str, key: str | None = None) -> tuple[Summary, ...]:
+    """Give the summaries that were issued, as they were.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : str
+        Key of the unit.
+    key : str or None
+        Key of a span, such as 2026-04; None for all spans.
+
+    Returns
+    -------
+    tuple of Summary
+        By span, then by revision.
+    """
+    return tuple(from_body(one.body) for one in documents.revisions(folder, unit, KIND, key))
+
+
 def sealed(made: Summary, revision: int) -> Summary:
     """Put the hash of the results and the revision into what a summary says of itself.
 
