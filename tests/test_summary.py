@@ -457,3 +457,61 @@ def test_starting_is_no_steady_time(tmp_path):
     assert row(found, "hours", item="starting")["hours"] == 6
     assert set(found.tables["exclusions"]["code"]) == {"DN", "ST"}
     assert text_unit.operating != unit.operating
+
+
+# --- the healthy period
+
+HEALTHY = "\n[healthy]\nfrom = 2026-03-01T00:00:00Z\nto = {}T00:00:00Z\n"
+
+
+def since_march(folder: Path, april: float, more: str):
+    """March at 86 %, April at another selectivity; the load moves between 80 and 120 kmol/h."""
+    months = month_cells(2026, 3, "UTC").append(APRIL)
+    new = np.arange(len(months)) >= 31 * 144
+    load = 100 + 20 * np.sin(np.arange(len(months)) / 50)
+    return take_in(folder, months, load, np.where(new, april, 0.86), more=more)
+
+
+def test_what_was_lost_to_the_healthy_period_is_the_feed_times_what_the_yield_lacked(tmp_path):
+    unit = since_march(tmp_path, 0.84, HEALTHY.format("2026-04-01") + CHARGED)
+    found = month_of(tmp_path, unit, 2026, 4)
+    told = row(found, "expectation", figure="yield on feed")
+    assert told["was"] == pytest.approx(42.0, abs=1e-3)  # half of 84 %
+    assert told["expected"] == pytest.approx(43.0, abs=0.01)
+    assert abs(told["difference"] + 1.0) <= told["±"] + 1e-3
+    # 1 % of what was fed becomes no ethylene, 28.054 kg of it per 30.070 kg of ethane (CIAAW 2021 abridged)
+    fed = row(found, "tonnes", flow="ethane fed")["tonnes"]
+    assert told["lost [t]"] == pytest.approx(0.01 * fed * 28.054 / 30.070, rel=0.02)
+    assert told["outside [%]"] == 0
+    assert np.isnan(row(found, "expectation", figure="conversion")["lost [t]"])
+
+
+def test_a_load_that_was_never_seen_while_healthy_is_told(tmp_path):
+    months = month_cells(2026, 3, "UTC").append(APRIL)
+    new = np.arange(len(months)) >= 31 * 144
+    load = np.where(new, 140.0, 100 + 20 * np.sin(np.arange(len(months)) / 50))
+    more = HEALTHY.format("2026-04-01") + CHARGED
+    unit = take_in(tmp_path, months, load, np.full(len(months), 0.86), more=more)
+    assert row(month_of(tmp_path, unit, 2026, 4), "expectation", figure="conversion")["outside [%]"] == 100
+
+
+def test_a_change_of_catalyst_ends_what_the_healthy_period_lets_one_expect(tmp_path):
+    unit = since_march(tmp_path, 0.84, HEALTHY.format("2026-04-01") + CHANGE)
+    table = month_of(tmp_path, unit, 2026, 4).tables["expectation"].set_index(["stretch", "figure"])
+    before_it, after = (
+        table.loc[(one, "yield on feed")] for one in ("charge of 10 Jan 2026", "charge of 16 Apr 2026")
+    )
+    assert before_it["expected"] == pytest.approx(43.0, abs=0.01)
+    assert np.isnan(after["expected"])
+    assert after["remark"] == "the catalyst was changed after the healthy period"
+
+
+def test_a_healthy_period_that_is_too_short_is_told_in_words(tmp_path):
+    unit = since_march(tmp_path, 0.84, HEALTHY.format("2026-03-05") + CHARGED)
+    told = row(month_of(tmp_path, unit, 2026, 4), "expectation", figure="yield on feed")
+    assert "days of steady running" in told["remark"]
+    assert np.isnan(told["expected"])
+
+
+def test_without_a_healthy_period_nothing_is_expected(tmp_path):
+    assert month_of(tmp_path, made(tmp_path), 2026, 4).tables["expectation"].empty

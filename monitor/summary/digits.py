@@ -75,6 +75,13 @@ def _of_tonnes(summary: Summary, frame: pd.DataFrame, column: str) -> list[int]:
     return [PLAIN if column.endswith("[h]") else summary.decimals] * len(frame)
 
 
+def _of_expectation(summary: Summary, frame: pd.DataFrame, column: str) -> list[int]:
+    """Figures by the half-width of their difference; tonnes lost by what that makes of them."""
+    if column in ("was", "expected", "difference", "±"):
+        return [_places(one) for one in frame["±"]]
+    return [1] * len(frame)
+
+
 def _of_readings(summary: Summary, frame: pd.DataFrame, column: str) -> list[int]:
     """Five digits of a mean reading."""
     if column in ("mean", "5 % below", "5 % above"):
@@ -104,6 +111,7 @@ RULES: Mapping[str, Callable[[Summary, pd.DataFrame, str], list[int]]] = {
     "comparisons": _by_half_width,
     "figures by day": _by_column,
     "tonnes": _of_tonnes,
+    "expectation": _of_expectation,
     "instruments": _of_readings,
     "exclusions": _whole,
     "words": _whole,

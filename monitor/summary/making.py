@@ -19,13 +19,14 @@ from ingest.cells import look_back, reach
 from ingest.errors import StoreError
 from ingest.journal import Line
 from ingest.ledger import Store
+from ingest.parts import instant_us
 from ingest.readings import read_months
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor import desk, store, wording
 from monitor.amounts import amount_names
 from monitor.figures import Figure, figures_of
-from monitor.summary import comparisons, exclusions, results, span, terms, tonnes, witness
+from monitor.summary import comparisons, exclusions, results, shortfall, span, terms, tonnes, witness
 from monitor.summary.charge import Charge, charge_of
 from monitor.summary.comparisons import level_of
 from monitor.summary.differences import Level
@@ -114,6 +115,7 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
         "tonnes": _tonnes(job, made),
         "figures": figures,
         "comparisons": _comparisons(job, record, charge),
+        "expectation": _expectation(job, record),
         "catalyst": _catalyst(job, charge),
         "days": _days(job, made, days),
         "figures by day": _by_day(job, days),
@@ -199,6 +201,28 @@ def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]
     told = [one for one in job.shown if one.higher_is_better is not None or one in job.rates]
     table = comparisons.table(job.shown, here, against)
     return table[table["figure"].isin([one.name for one in told])]
+
+
+def _expectation(job: _Job, record: Record) -> pd.DataFrame:
+    """Hold every stretch against the healthy period that the unit file names; no rows where it names none."""
+    healthy = job.unit.healthy
+    figures = [one for one in job.figures if one.name in shortfall.FIGURES]
+    found = [pd.DataFrame(columns=list(shortfall.COLUMNS))]
+    known = None
+    if healthy is not None:
+        known = read(job.snapshot, job.unit, job.problem, (healthy.first, healthy.last), _none(job))
+    if healthy is not None and known is not None:
+        edges = (instant_us(healthy.first), instant_us(healthy.last))
+        learnt = shortfall.hours_of(job.unit, known, figures, *edges)
+        for stretch in job.stretches:
+            here = shortfall.hours_of(job.unit, record, figures, stretch.first_us, stretch.last_us)
+            found.append(shortfall.shortfall(job.unit, figures, learnt, here, stretch))
+    return pd.concat(found[1:] or found, ignore_index=True)
+
+
+def _none(job: _Job) -> pd.DataFrame:
+    """Nothing left out: what people say of other times does not move the healthy period."""
+    return exclusions.on_word((), job.span)
 
 
 def _identity(job: _Job, stamp: Stamp, until: datetime) -> pd.DataFrame:

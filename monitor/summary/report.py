@@ -79,6 +79,7 @@ NOTHING = {
     "exclusions": "Nothing was left out: the unit was running all the time that is on record.",
     "words": "Nobody wrote an event or a note.",
     "comparisons": "There is nothing on record to compare with.",
+    "expectation": "The unit file names no healthy period that is on record.",
     "changes": "",
 }  # fmt: skip
 
@@ -121,6 +122,7 @@ def _sections(summary: Summary) -> Iterable[str]:
     yield _figures(summary, None)
     yield '<h2 class="new">Compared with</h2>'
     yield _comparisons(summary)
+    yield f"<h2>Against the healthy period</h2>{_table(summary, 'expectation')}"
     yield '<h2 class="new">Days</h2>'
     yield _table(summary, "days")
     yield '<h2 class="new">Figures by day</h2>'

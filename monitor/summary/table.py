@@ -20,6 +20,7 @@ KEYS: Mapping[str, tuple[str, ...]] = {
     "tonnes": ("stretch", "flow"),
     "figures": ("stretch", "figure"),
     "comparisons": ("stretch", "against", "figure"),
+    "expectation": ("stretch", "figure"),
     "catalyst": ("charge",),
     "days": ("day",),
     "figures by day": ("day",),

@@ -58,6 +58,11 @@ def _terms(decimals: int) -> dict[str, str]:
         "Errors that come and go count in both.",
         "since the charge": "From the day of the catalyst charge, as far as the store goes back, to the end "
         "of the span; half-widths from days spread evenly over it.",
+        "expected": "What the figure should have been at the load, operating point and catalyst age of every "
+        "steady hour, learnt from the healthy period of the unit file, with the calibrations of that time.",
+        "outside": "Share of these hours whose operating point was never seen while healthy: there the "
+        "expectation is a continuation.",
+        "lost": "Wanted product that was not made in these hours because the yield was not as expected.",
         "alert": "Raised and cleared as the limits of the unit file say; confirmed or false by the cause "
         "with which a person closed it, open where nobody did.",
         "5 % below, 5 % above": "Percentiles of the cells while the unit was not down.",
