@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import timedelta
 
@@ -58,7 +58,6 @@ Flags = NDArray[np.bool_]
 
 SAY = 0.1  # chance that nothing moved, up to which anything is said
 STATE = 0.9  # chance of a kind from which on it is stated
-LEAD = timedelta(hours=48)  # before the window, in which the onset is looked for
 MOST = 5  # rows of each list of a verdict
 LEFT_OUT = 3  # suspects without which the figures are worked out
 
@@ -132,16 +131,36 @@ def picture_of(unit: Unit, problem: Problem, cells: Cells) -> Picture:
     every = figures_of(unit, amounts.names)
     last = int(cells.start[-1]) + unit.cell // _US
     value = window_at(unit, amounts, every, int(cells.start[0]), last)["value"]
+    sums = dict(zip(amounts.names, np.nansum(amounts.kmol, axis=0).tolist(), strict=True))
     fed = amounts.kmol[:, amounts.names.index(f"fed {unit.key_reactant}")]
     mean = _means(states.adjustment)
     return Picture(
-        figures=tuple(
-            (one.name, one.unit, float(value[one.name, "as operated"])) for one in key_figures(unit, every)
+        figures=(
+            *(
+                (one.name, one.unit, float(value[one.name, "as operated"]))
+                for one in key_figures(unit, every)
+            ),
+            *_routes(unit, sums),
         ),
         adjustment=dict(zip(problem.names, mean.tolist(), strict=True)),
         point=_point(unit, cells),
         fed_kmol_h=float(_means(fed[:, None])[0] / (unit.cell / timedelta(hours=1))),
     )
+
+
+def _routes(unit: Unit, sums: Mapping[str, float]) -> list[tuple[str, str, float]]:
+    """Give the selectivity by raw readings along two routes; a sick reading moves those that it stands in."""
+    element = unit.key_element
+    wanted = sums.get(f"raw made {element} in {unit.wanted}")
+    routes = {
+        "consumed": sums.get(f"raw consumed {element}"),
+        "all products": sums.get(f"raw made {element}"),
+    }
+    return [
+        (f"raw selectivity over {name}", "%", 100 * wanted / below if below else np.nan)
+        for name, below in routes.items()
+        if wanted is not None and below is not None
+    ]
 
 
 def _means(value: Floats) -> Floats:

@@ -7,8 +7,7 @@ from collections.abc import Iterator
 
 from ingest.unit import Unit
 from monitor import wording
-from monitor.explain import LEAD
-from monitor.verdict import CANNOT, INSTRUMENT, NOTHING, REACTOR, Loss, Shift, Suspect, Verdict
+from monitor.verdict import CANNOT, INSTRUMENT, LEAD, NOTHING, REACTOR, Loss, Shift, Suspect, Verdict
 
 # Word and shape, so that neither colour nor shape has to say it alone.
 SHAPES = {REACTOR: "\u25b2", INSTRUMENT: "\u25c6", CANNOT: "?", NOTHING: "\u25cb"}

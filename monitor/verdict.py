@@ -9,12 +9,14 @@ import json
 import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, fields
+from datetime import timedelta
 from types import GenericAlias
 from typing import Any, get_args, get_type_hints
 
 REACTOR, INSTRUMENT, CANNOT, NOTHING = WORDS = ("reactor", "instrument", "cannot tell", "nothing moved")
 COLUMN = "verdict"  # of the frame of episodes
 DIGITS = 6  # kept of every number
+LEAD = timedelta(hours=48)  # before the window, in which the onset is looked for
 
 
 @dataclass(frozen=True, slots=True)

@@ -24,9 +24,9 @@ from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.coarse import coarse, coarse_unit
 from monitor.days import rows
-from monitor.explain import LEAD, Reference, explain, picture_of
+from monitor.explain import Reference, explain, picture_of
 from monitor.healthy import LENGTH, Baseline, baseline_of
-from monitor.verdict import COLUMN, INSTRUMENT, REACTOR, as_text, read
+from monitor.verdict import COLUMN, INSTRUMENT, LEAD, REACTOR, as_text, read
 
 METHOD = "1"  # to be raised when the same cells give another verdict
 BEFORE = timedelta(days=30)  # healthy time where none is stated: so much before the episode

@@ -29,14 +29,13 @@ from monitor import verdict
 from monitor.coarse import coarse, coarse_unit
 from monitor.coordinates import coordinates, regressors, shares_of
 from monitor.evidence import Evidence, bent
-from monitor.explain import LEAD
 from monitor.hypotheses import INSTRUMENT, NONE, REACTOR, SPREADS, Hypothesis, believed, suspects
 from monitor.losses import loss_of
 from monitor.ridge import fit
 from monitor.run import run_pass
 from monitor.settling import settling
 from monitor.tellverdict import SHAPES, headline, lines
-from monitor.verdict import COLUMN, WORDS, as_text, read
+from monitor.verdict import COLUMN, LEAD, WORDS, as_text, read
 from monitor.verdicts import with_verdicts
 from tests.residuals_made import healthy
 from tests.test_half_widths import DEMO
