@@ -26,7 +26,6 @@ from ingest.records import Export, Seen
 from ingest.shown import shown
 from ingest.unit import ExportRules, Unit
 
-EXPORTS = "exports"  # the work that is counted in bytes; that on a unit is counted in steps
 SETTLE = timedelta(seconds=2)  # a file changed more recently may still be growing
 SUFFIXES = (
     *(kind + packed for kind in (".csv", ".txt", ".tsv") for packed in ("", ".gz", ".zst")),

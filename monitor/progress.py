@@ -7,8 +7,7 @@ import time
 from types import TracebackType
 from typing import Self
 
-from ingest.intake import EXPORTS
-
+EXPORTS = "exports"  # the work that is counted in bytes; that on a unit is counted in steps
 WIDTH = 24
 CLEAR = "\r\x1b[K"
 OFTEN_S = 0.1  # no eye follows more
