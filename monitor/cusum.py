@@ -11,6 +11,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cache, lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,6 +46,7 @@ class Found:
     cleared: Places
 
 
+@lru_cache(maxsize=64)
 def cusums(noise: Noise, *, shift_pct: float, wanted: float, charts: int) -> tuple[Chart, ...]:
     """Make the slow and the fast chart for a shift to find.
 
@@ -105,6 +107,31 @@ def cusum_episodes(deviation: Array, error: Array, charts: Sequence[Chart]) -> F
     return _found(row, len(deviation), onset, raised, cleared)
 
 
+def settled(deviation: Array, error: Array, charts: Sequence[Chart]) -> NDArray[np.bool_]:
+    """Tell the blocks at which every sum is at zero, whatever it was at first, short of an alarm.
+
+    Parameters
+    ----------
+    deviation, error : ndarray, shape (n,)
+    charts : sequence of Chart
+        All as in `cusum_episodes`.
+
+    Returns
+    -------
+    ndarray of bool, shape (n,)
+        False in blocks without a deviation.
+    """
+    row = np.flatnonzero(np.isfinite(deviation) & np.isfinite(error))
+    calm = np.zeros(len(deviation), dtype=bool)
+    calm[row] = True
+    for chart in charts if len(row) else ():
+        reference, _ = _limits(chart, error[row])
+        steps = deviation[row] - reference
+        steps[0] += max(chart.threshold)
+        calm[row] &= _summed(steps) <= 0.0
+    return calm
+
+
 def statistic(deviation: Array, error: Array, chart: Chart) -> tuple[Array, Array]:
     """Give the sum of one chart, never set back by an alarm, and its threshold: what a person looks at.
 
@@ -151,7 +178,7 @@ def ewma_episodes(deviation: Array, error: Array, noise: Noise, *, shift_pct: fl
     """
     row = np.flatnonzero(np.isfinite(deviation) & np.isfinite(error))
     shift = min(shift_pct / noise.long_run_sd, 4.0) if noise.long_run_sd else 4.0
-    limits = {weight: runlengths.ewma_limit(weight, wanted / 2) for weight in WEIGHTS}  # one of two sides
+    limits = _averages(wanted / 2)  # one of two sides
     weight = min(limits, key=lambda one: runlengths.ewma(one, limits[one], shift))
     average = np.asarray(lfilter([weight], [1.0, weight - 1.0], deviation[row]))
     edge = limits[weight] * noise.long_run_sd * math.sqrt(weight / (2 - weight)) + error[row] / ALLOWED
@@ -166,6 +193,12 @@ def ewma_episodes(deviation: Array, error: Array, noise: Noise, *, shift_pct: fl
         begin = at + int(back[0]) if back.size else len(average)
         cleared.append(begin)
     return _found(row, len(deviation), onset, raised, cleared)
+
+
+@cache
+def _averages(wanted: float) -> dict[float, float]:
+    """Give the limit of each weight; the same for every figure of a unit."""
+    return {weight: runlengths.ewma_limit(weight, wanted) for weight in WEIGHTS}
 
 
 def _chart(noise: Noise, reference: float, wanted: float) -> Chart:

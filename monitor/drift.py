@@ -49,7 +49,7 @@ HOUR_US = 3_600_000_000
 
 
 @dataclass(frozen=True, slots=True)
-class _Raised:
+class Raised:
     """Episodes of one side as places in the rows; `cleared` is the number of rows while it is open."""
 
     first: Places
@@ -157,8 +157,9 @@ def limit_episodes(
     parts = []
     for side, limit, way in (("low", watch.low, -1.0), ("high", watch.high, 1.0)):
         if limit is not None:
-            found = _raised(way * value, way * limit, half_width, end_us, watch=watch)
-            parts.append(_table(watch, side, limit, found, (end_us, value, idle)))
+            counted = _counted(way * value, end_us, watch)
+            found = _raised(counted, way * limit, half_width, end_us, watch=watch)
+            parts.append(episodes_frame(watch, side, limit, found, (end_us, way * counted, idle)))
     return whole_episodes(parts)
 
 
@@ -180,25 +181,36 @@ def _watched(watch: Watch, frames: Mapping[timedelta, pd.DataFrame]) -> pd.DataF
     return pd.DataFrame({field: frame[watch.figure, mode, field] for field in ("value", "half_width")})
 
 
-def _raised(value: Array, limit: float, half_width: Array, end_us: Times, *, watch: Watch) -> _Raised:
+def _counted(value: Array, end_us: Times, watch: Watch) -> Array:
+    """The value that so many of the last windows reach or pass, windows that do not overlap."""
+    if watch.among == 1 or not len(value):
+        return value
+    back = np.arange(watch.among)[:, None] * (watch.window // MICROSECOND)
+    place = np.searchsorted(end_us, end_us - back)
+    there = np.isin(end_us - back, end_us) & np.isfinite(value[place])
+    ordered = np.sort(np.where(there, value[place], -np.inf), axis=0)
+    return np.where(np.isfinite(value), ordered[watch.among - watch.count], np.nan)
+
+
+def _raised(value: Array, limit: float, half_width: Array, end_us: Times, *, watch: Watch) -> Raised:
     """Find the episodes above a high limit; a low one is the same with the signs of both turned."""
     row = np.flatnonzero(np.isfinite(value))
     seen = value[row]
     beyond, inside = seen > limit, seen <= limit - watch.deadband
     if not beyond.any():
         nothing = np.zeros(0, dtype=np.intp)
-        return _Raised(nothing, nothing, nothing, nothing, np.zeros(0))
+        return Raised(nothing, nothing, nothing, nothing, np.zeros(0))
     clock, begun = _seen_clock(end_us, row), _run_starts(beyond)
     on = beyond & (clock - clock[begun] >= watch.on_delay // MICROSECOND)
     off = inside & (clock - clock[_run_starts(inside)] >= watch.off_delay // MICROSECOND)
-    raised, cleared = _latched(on, off)
+    raised, cleared = latched(on, off)
     first = begun[raised]
     stop = np.append(row, len(value))[cleared]
     worst = np.array(
         [row[a + seen[a:z].argmax()] for a, z in zip(first, cleared, strict=True)], dtype=np.intp
     )
     sure = np.concatenate([[0], np.cumsum(seen - half_width[row] > limit)])
-    return _Raised(
+    return Raised(
         first=row[first],
         raised=row[raised],
         cleared=stop,
@@ -222,8 +234,19 @@ def _run_starts(flags: Mask) -> Places:
     return np.maximum.accumulate(begun)
 
 
-def _latched(on: Mask, off: Mask) -> tuple[Places, Places]:
-    """Rows where a latch goes on, and where it next goes off (the number of rows if it does not)."""
+def latched(on: Mask, off: Mask) -> tuple[Places, Places]:
+    """Give the rows where a latch goes on, and where it next goes off.
+
+    Parameters
+    ----------
+    on, off : ndarray of bool, shape (n,)
+        What turns it on and what turns it off; `on` wins.
+
+    Returns
+    -------
+    tuple of ndarray
+        As many rows off as on; the number of rows where it does not go off.
+    """
     event = np.where(on | off, np.arange(len(on)), -1)
     last = np.maximum.accumulate(event)
     state = np.concatenate([[False], (last >= 0) & on[last]])
@@ -232,10 +255,29 @@ def _latched(on: Mask, off: Mask) -> tuple[Places, Places]:
     return raised, np.append(cleared, len(on))[: len(raised)]
 
 
-def _table(
-    watch: Watch, side: str, limit: float, found: _Raised, rows: tuple[Times, Array, Mask]
+def episodes_frame(
+    watch: Watch, side: str, limit: float | Array, found: Raised, rows: tuple[Times, Array, Mask]
 ) -> pd.DataFrame:
-    """Tell episodes by times and values."""
+    """Tell episodes of one side by times and values.
+
+    Parameters
+    ----------
+    watch : Watch
+        Whose they are.
+    side : str
+        'low' or 'high'.
+    limit : float or ndarray
+        What the figure was beyond, for all of them or one for each [the figure's unit].
+    found : Raised
+        Places in the rows.
+    rows : tuple of ndarray
+        Window ends [us UTC], values, and whether the unit was not running then.
+
+    Returns
+    -------
+    DataFrame
+        Columns `EPISODE_COLUMNS`.
+    """
     end_us, value, idle = rows
     count = len(found.raised)
     free = np.append(np.where(idle, len(idle), np.arange(len(idle))), len(idle))

@@ -234,6 +234,28 @@ def expected(one: Expectation, end_us: Times, point: Array) -> Expected:
     return Expected(np.asarray(terms @ one.weight), error, outside, beyond)
 
 
+def at_usual_point(one: Expectation, point: Array, value: Array) -> Array:
+    """Give a figure as it would be at the mean operating point of the healthy period, ageing left in.
+
+    Parameters
+    ----------
+    one : Expectation
+        Of the figure.
+    point : ndarray, shape (n, v)
+        As `points` gives it.
+    value : ndarray, shape (n,)
+        As `logarithm_pct` gives it [%].
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        [%]; NaN where either is.
+    """
+    none = np.zeros(len(point))
+    usual = _terms(np.zeros((1, point.shape[1])), none[:1]) @ one.weight
+    return np.asarray(value - _terms((point - one.centre) / one.spread, none) @ one.weight + usual)
+
+
 def document(one: Expectation) -> dict[str, Any]:
     """Give an expectation as what JSON knows, to be kept as a revision.
 

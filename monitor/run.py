@@ -22,13 +22,13 @@ from ingest.unit import Unit
 from monitor.catchup import Worked, catch_up
 from monitor.days import Plan, plan_of
 from monitor.desk import known, put
+from monitor.progress import EXPORTS
 from monitor.register import registered
 from monitor.verdict import COLUMN
 from monitor.verdicts import with_verdicts
 from monitor.watched import bring_up
 
 Progress = Callable[[str, int, int], None]
-EXPORTS = "exports"  # the work that is counted in bytes; that on a unit is counted in steps
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,6 +58,7 @@ class UnitResult:
     cells: int
     solved: int
     episodes: tuple[Episode, ...]
+    notes: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -116,13 +117,14 @@ def run_pass(
             _register(pass_, store, plan.unit)
         clock.append(time.process_time())
     steps = dict(zip(("exports", "months", "episodes"), np.diff(clock).round(3).tolist(), strict=True))
-    return PassResult(pass_.number, taken.outcomes, told, taken.notes, steps)
+    notes = (*taken.notes, *(note for one in told for note in one.notes))
+    return PassResult(pass_.number, taken.outcomes, told, notes, steps)
 
 
 def _tell(pass_: Pass, before: Snapshot, plan: Plan, worked: Worked) -> UnitResult:
     """Bring a unit's episodes and their verdicts up to date and tell what became of it."""
     unit = plan.unit
-    bring_up(pass_, unit, worked.since_us)
+    notes = bring_up(pass_, unit, plan.figures, worked.since_us)
     episodes = pass_.view().episodes(unit.key)
     if len(episodes):
         bare = episodes.drop(columns=COLUMN, errors="ignore")
@@ -136,6 +138,7 @@ def _tell(pass_: Pass, before: Snapshot, plan: Plan, worked: Worked) -> UnitResu
         cells=worked.cells,
         solved=worked.solved,
         episodes=tuple(_episode(one) for one in episodes.itertuples()),
+        notes=notes,
     )
 
 

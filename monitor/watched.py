@@ -7,7 +7,7 @@ no limit and in no episode, nothing is pending: what comes after it can be found
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import timedelta
 from functools import cache, partial
@@ -18,17 +18,19 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from ingest.columns import plain, single
-from ingest.parts import instant_us, month_edges, times_us
+from ingest.parts import month_edges, times_us
 from ingest.passes import Pass
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit, Watch
 from monitor.days import figure_step
 from monitor.drift import MICROSECOND, limit_episodes, whole_episodes
+from monitor.drifting import drifted, keep, spans
+from monitor.figures import Figure
 from monitor.layout import BAR, figure_stage
 from monitor.windows import MODES
 
 MARK_STAGE, MARK_MONTH = "watches", "1970-01"  # one row that tells what the stored episodes were found with
-BEGINNING, NEVER = -(2**62), 2**62  # before and after any row [us UTC]
+BEGINNING = -(2**62)  # before any row [us UTC]
 FIELDS = ("value", "half_width")
 Array = NDArray[np.float64]
 Times = NDArray[np.int64]
@@ -44,7 +46,7 @@ class _Rows:
     operating: Codes  # (r,) of the cell that ends with each row
 
 
-def bring_up(pass_: Pass, unit: Unit, since_us: int | None) -> None:
+def bring_up(pass_: Pass, unit: Unit, figures: Sequence[Figure], since_us: int | None) -> tuple[str, ...]:
     """Bring the stored episodes of a unit up to date.
 
     Parameters
@@ -53,22 +55,40 @@ def bring_up(pass_: Pass, unit: Unit, since_us: int | None) -> None:
         Open, with all cells and figures written.
     unit : Unit
         Gives the watches.
+    figures : sequence of Figure
+        Those of the unit.
     since_us : int or None
         From when on cells have changed [us UTC]; None if none did.
+
+    Returns
+    -------
+    tuple of str
+        What has to be said about the expectations that drift watches hold figures against.
     """
     view, mark = pass_.view(), _mark(unit)
     if not view.months(unit.key, "cells"):
-        return
+        return ()
     if _mark_of(view, unit.key) != mark:
         start = pa.array([0], pa.timestamp("us", "UTC"))
         pass_.write(unit.key, MARK_STAGE, MARK_MONTH, pa.table({"start": start, "watches": [mark]}))
         since_us = BEGINNING
-    if since_us is not None:
-        pass_.replace_episodes(unit.key, episodes_since(view, unit, view.episodes(unit.key), since_us))
+    if since_us is None:
+        return ()
+    stored, named = view.episodes(unit.key), {figure.name: figure for figure in figures}
+    notes: list[str] = []
+    found = [episodes_since(view, unit, stored, since_us)]
+    for watch in (one for one in unit.watches if one.test != "limits"):
+        own = _own(stored, watch)
+        told = drifted(view, unit, watch, figures=named, stored=own, since_us=since_us)
+        keep(pass_, unit, watch, told.expectation)
+        found.append(told.episodes)
+        notes += told.notes
+    pass_.replace_episodes(unit.key, whole_episodes(found))
+    return tuple(notes)
 
 
 def episodes_since(view: Snapshot, unit: Unit, stored: pd.DataFrame, since_us: int) -> pd.DataFrame:
-    """Find the episodes of a unit, given those from before some of its figures changed.
+    """Find the episodes of a unit's limits, given those from before some of its figures changed.
 
     Parameters
     ----------
@@ -88,21 +108,26 @@ def episodes_since(view: Snapshot, unit: Unit, stored: pd.DataFrame, since_us: i
     """
     read = cache(partial(_month, view, unit))
     found = []
-    for watch in unit.watches:
-        own = stored[[name == watch.name for name in stored.get("watch", ())]]
+    for watch in (one for one in unit.watches if one.test == "limits"):
+        own = _own(stored, watch)
         months = view.months(unit.key, figure_stage(watch.window))
         calm_us = _calm_before(unit, watch, own, since_us, [partial(read, watch.window, m) for m in months])
-        kept = own[[cleared <= calm_us for _, cleared in _spans(own)]]
+        kept = own[[cleared <= calm_us for _, cleared in spans(own)]]
         after = [read(watch.window, month) for month in months if month_edges(month)[1] > calm_us]
         found += [kept, limit_episodes(watch, *_from(watch, after, calm_us))]
     return whole_episodes(found)
+
+
+def _own(stored: pd.DataFrame, watch: Watch) -> pd.DataFrame:
+    """Give the episodes of one watch."""
+    return stored[[name == watch.name for name in stored.get("watch", ())]]
 
 
 def _calm_before(
     unit: Unit, watch: Watch, own: pd.DataFrame, since_us: int, months: Sequence[Callable[[], _Rows]]
 ) -> int:
     """Give the last calm row before an instant [us UTC], looking back month by month."""
-    for read in reversed(months) if since_us > BEGINNING else ():
+    for read in reversed(months) if since_us > BEGINNING and watch.among == 1 else ():
         rows = read()
         value, _ = rows.figures[watch.figure, watch.steady]
         # With the row after it, which tells the step of what follows.
@@ -111,17 +136,11 @@ def _calm_before(
         calm &= (value >= (-np.inf if watch.low is None else watch.low)) & (
             value <= (np.inf if watch.high is None else watch.high)
         )
-        for first, cleared in _spans(own):
+        for first, cleared in spans(own):
             calm &= (rows.end_us < first) | (rows.end_us >= cleared)
         if calm.any():
             return int(rows.end_us[np.flatnonzero(calm)[-1]])
     return BEGINNING
-
-
-def _spans(episodes: pd.DataFrame) -> Iterator[tuple[int, int]]:
-    """Give from the first crossing to the end of each episode [us UTC]."""
-    for first, cleared in zip(episodes.get("first_crossed", ()), episodes.get("cleared", ()), strict=True):
-        yield instant_us(first), NEVER if pd.isna(cleared) else instant_us(cleared)
 
 
 def _from(watch: Watch, months: Sequence[_Rows], first_us: int) -> tuple[Times, Array, Array, Codes]:
@@ -161,7 +180,9 @@ def _numbers(table: pa.Table, name: str) -> Array:
 
 def _mark(unit: Unit) -> str:
     """Tell in one word what the episodes of a unit are found with."""
-    return hashlib.sha256(f"{unit.watches!r}".encode()).hexdigest()[:16]
+    tests = any(watch.test != "limits" for watch in unit.watches)
+    drift = (unit.healthy, unit.events) if tests else ()
+    return hashlib.sha256(f"{unit.watches!r}{drift!r}".encode()).hexdigest()[:16]
 
 
 def _mark_of(view: Snapshot, unit: str) -> str:

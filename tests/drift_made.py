@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import dataclasses
 from dataclasses import dataclass
-from datetime import timedelta
+from datetime import UTC, datetime, timedelta
 from functools import cache
 
 import numpy as np
@@ -21,8 +21,10 @@ from ingest.balance import problem_of
 from ingest.cells import RUNNING, Cells
 from ingest.instruments import measured
 from ingest.reconcile import reconcile
-from ingest.unit import Unit
+from ingest.unit import Healthy, Unit, Watch
 from ingest.unitfile import load
+from monitor.departure import Blocks
+from monitor.expectation import logarithm_pct, points
 from tests.source import ROOT
 from tests.units_made import MIDNIGHT
 
@@ -192,3 +194,47 @@ def _balanced(unit: Unit, value: Floats) -> Floats:
         states, _ = reconcile(problem, cells, measured(unit, cells.value, cells.share))
         parts.append(states.flow_kmol_h)
     return np.concatenate(parts)
+
+
+def operated(hours: int) -> Unit:
+    """The hourly unit with a healthy period of so many hours from the first block on."""
+    begun = datetime.fromtimestamp(MIDNIGHT / 1e6, UTC)
+    healthy = Healthy(begun, begun + timedelta(hours=hours), POINT[1:])
+    return dataclasses.replace(hourly_unit(), healthy=healthy)
+
+
+def blocks_of(unit: Unit, made: Plants, place: int, figure: str = "yield on feed") -> Blocks:
+    """What a drift watch sees of one plant: every hour of it ran."""
+    count = made.point.shape[1]
+    return Blocks(
+        end_us=MIDNIGHT + (np.arange(count) + 1) * HOUR_US,
+        value=made.told[figure][place],
+        half_width=np.full(count, 0.5),
+        point=points(unit, {name: made.point[place, :, at] for at, name in enumerate(POINT)}),
+        load_pct=logarithm_pct(made.point[place, :, 0]),
+        idle=np.zeros(count, dtype=bool),
+        running=np.ones(count, dtype=bool),
+    )
+
+
+def since(blocks: Blocks, first: int) -> Blocks:
+    """The blocks from one on."""
+    return Blocks(*(getattr(blocks, one.name)[first:] for one in dataclasses.fields(Blocks)))
+
+
+def drift_watch(test: str = "cusum", **changes: object) -> Watch:
+    """A watch on the yield of every hour."""
+    plain = Watch(
+        name="yield drift",
+        figure="yield on feed",
+        window=timedelta(hours=1),
+        low=None,
+        high=None,
+        priority="medium",
+        deadband=0.0,
+        on_delay=timedelta(0),
+        off_delay=timedelta(0),
+        steady=True,
+        test=test,
+    )
+    return dataclasses.replace(plain, **changes)  # type: ignore[arg-type]

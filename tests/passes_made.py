@@ -69,7 +69,7 @@ def arrive(folder: Path, unit: Unit, readings: dict[str, Series]) -> Worked:
         edges = [(int(s.time[0]), int(s.time[-1]) + 1) for s in readings.values()]
         span = min(first for first, _ in edges), max(last for _, last in edges)
         worked = catch_up(pass_, before, plan_of(unit), [span], told_nobody)
-        bring_up(pass_, unit, worked.since_us)
+        bring_up(pass_, unit, plan_of(unit).figures, worked.since_us)
         return worked
 
 

@@ -70,7 +70,7 @@ def test_the_selectivity_fall_is_flagged_within_two_days_of_its_start(plant):
     (fall,) = (one for one in truth["events"] if one["kind"] == "selectivity loss")
     begun = pd.Timestamp(fall["start"])
     for figure in ("yield on feed", "selectivity on converted"):
-        (episode,) = (row for _, row in found.iterrows() if row["figure"] == figure)
+        (episode,) = (row for _, row in found.iterrows() if row["watch"] == f"{figure} 8 h")
         assert begun < episode["raised"] < begun + pd.Timedelta(days=2)
         assert pd.isna(episode["cleared"])
 

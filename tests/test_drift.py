@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from dataclasses import replace
 from datetime import timedelta
 
 import numpy as np
@@ -158,6 +159,36 @@ def test_running_or_not_known_suppresses_nothing(condition):
     assert found["suppressed"].tolist() == [False]
     assert (found["announced"] == found["raised"]).all()
     assert found["suppressed_h"].tolist() == [0.0]
+
+
+def _counted(count: int, among: int) -> Watch:
+    return replace(_watch(on=0, off=0, deadband=0.0), window=timedelta(minutes=20), count=count, among=among)
+
+
+def test_so_many_of_the_last_windows_that_do_not_overlap_have_to_lie_beyond_the_limit():
+    # Windows of 20 min and rows of 10: the windows before one end 20 and 40 min earlier. By hand: below 76 at
+    # minutes 20, 40 and 50; the first row with two of three such windows below is minute 40, and at minute 60
+    # those of minutes 40 and 20 still are; at minute 80 only that of minute 40 is.
+    value = [77, 77, 75, 77, 75, 75, 77, 77, 77, 77]
+    found = _episodes(_counted(2, 3), value)
+    assert _minutes(found["raised"]) == [40, 60]
+    assert _minutes(found["cleared"]) == [50, 70]
+    assert found["worst"].tolist() == [75.0, 75.0]
+
+
+def test_one_of_one_is_a_plain_limit_and_all_of_three_a_longer_wait():
+    value = [77, 75, 75, 77, 75, 75, 75, 75, 75, 75]
+    assert _minutes(_episodes(_counted(1, 1), value)["raised"]) == [10, 40]
+    # by hand: those of minutes 20, 40 and 60 all lie below, of 30, 50 and 70 not all, of 40, 60 and 80 all
+    found = _episodes(_counted(3, 3), value)
+    assert _minutes(found["raised"]) == [60, 80]
+    assert _minutes(found["cleared"])[0] == 70
+
+
+def test_a_window_that_is_missing_is_not_beyond_and_too_few_known_ones_tell_nothing():
+    value = [75, GONE, GONE, GONE, 75, 75]
+    assert _episodes(_counted(2, 2), value).empty
+    assert _minutes(_episodes(_counted(2, 3), [*value, 75])["raised"]) == [40]
 
 
 def test_an_episode_carries_what_the_watch_says():

@@ -80,7 +80,7 @@ def test_now_says_how_old_the_data_are_and_that_the_unit_runs(monkeypatch, store
 
 def test_now_says_when_no_limit_is_crossed(monkeypatch, stores):
     said = text(shown(monkeypatch, stores["calm"]))
-    assert "No limit of 3 watches is crossed; the last one ended 13 Apr" in said
+    assert "No limit of 4 watches is crossed; the last one ended 13 Apr" in said
 
 
 def test_every_key_figure_opens_to_definition_windows_coverage_and_watch(monkeypatch, stores):

@@ -247,5 +247,5 @@ def test_a_pass_shows_at_the_next_refresh_without_a_reload(browser: Browser, tmp
         page.goto(f"http://127.0.0.1:{port}/")
         page.get_by_text("Nothing has been taken in yet").wait_for(timeout=30_000)
         page_made.fill(tmp_path / "store", page_made.unit(), days=3, end=END, off=[], drop=0)
-        page.get_by_text("No limit of 3 watches is crossed").wait_for(timeout=60_000)
+        page.get_by_text("No limit of 4 watches is crossed").wait_for(timeout=60_000)
         page.close()
