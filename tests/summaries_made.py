@@ -11,7 +11,8 @@ import pandas as pd
 from ingest.unit import Unit
 from ingest.unitfile import load
 from monitor.run import run_pass
-from monitor.summary.making import Stamp, summarise
+from monitor.summary.identity import Stamp
+from monitor.summary.making import summarise
 from monitor.summary.span import Span, month_span
 from monitor.summary.table import Summary
 from tests.test_gotchas import LOAD, ethane_plant, half_converted, wide

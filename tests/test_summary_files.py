@@ -26,8 +26,8 @@ from monitor.cli import outlet
 from monitor.run import run_pass
 from monitor.summary.digits import decimals
 from monitor.summary.files import csv_text, write
+from monitor.summary.identity import Stamp
 from monitor.summary.issue import issue, kept, sealed
-from monitor.summary.making import Stamp
 from monitor.summary.report import report
 from monitor.summary.span import month_span
 from monitor.summary.table import KEYS, Summary, body_of, changes, from_body, settled, told

@@ -15,8 +15,9 @@ from ingest.errors import OutletError
 from ingest.parts import sha256_of
 from ingest.unitfile import load
 from monitor.summary.files import write
+from monitor.summary.identity import Stamp
 from monitor.summary.issue import issue, sealed
-from monitor.summary.making import Stamp, summarise
+from monitor.summary.making import summarise
 from monitor.summary.span import Span, month_span, span_of
 
 Progress = Callable[[str, int, int], None]

@@ -9,7 +9,8 @@ import pandas as pd
 
 from ingest import documents, journal
 from ingest.unit import Unit
-from monitor.summary.making import Stamp, summarise
+from monitor.summary.identity import Stamp
+from monitor.summary.making import summarise
 from monitor.summary.span import Span
 from monitor.summary.table import CHANGES, IDENTITY, Summary, body_of, changes, from_body, with_tables
 

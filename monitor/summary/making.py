@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Mapping
 from dataclasses import dataclass
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, datetime
 from pathlib import Path
 from zoneinfo import ZoneInfo
 
@@ -13,14 +12,11 @@ import numpy as np
 import pandas as pd
 
 from ingest import journal
-from ingest.archive import SITE, STAGE
 from ingest.balance import Problem, problem_of
-from ingest.cells import look_back, reach
 from ingest.errors import StoreError
 from ingest.journal import Line
 from ingest.ledger import Store
 from ingest.parts import instant_us
-from ingest.readings import read_months
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor import desk, store, wording
@@ -30,22 +26,13 @@ from monitor.summary import comparisons, exclusions, results, shortfall, span, t
 from monitor.summary.charge import Charge, charge_of
 from monitor.summary.comparisons import level_of
 from monitor.summary.differences import Level
+from monitor.summary.identity import Stamp, identity, plant_iso
 from monitor.summary.record import Record, read
 from monitor.summary.span import Span, Stretch
 from monitor.summary.table import Summary, settled
 from monitor.windows import MODES
 
 NOTES = ("note", "shift note")
-_US = timedelta(microseconds=1)
-
-
-@dataclass(frozen=True, slots=True)
-class Stamp:
-    """Who prepares a summary and with what: name, hash of the unit file, version of the program."""
-
-    prepared_by: str
-    unit_file: str
-    program: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -110,7 +97,7 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
     closed = witness.closing(desk.known(folder, unit.key), job.lines)
     alerts = witness.alerts(episodes, closed, asked, pd.Timestamp(until))
     tables = {
-        "identity": _identity(job, stamp, until),
+        "identity": identity(unit, asked, job.stretches, job.snapshot, stamp=stamp, until=until),
         "hours": _hours(job, record, made, figures, left_out),
         "tonnes": _tonnes(job, made),
         "figures": figures,
@@ -225,48 +212,6 @@ def _none(job: _Job) -> pd.DataFrame:
     return exclusions.on_word((), job.span)
 
 
-def _identity(job: _Job, stamp: Stamp, until: datetime) -> pd.DataFrame:
-    zone = job.unit.time_zone
-    digest, count = _readings(job)
-    edges = [
-        _iso(pd.Timestamp(edge, unit="us", tz="UTC"), zone) for edge in (job.span.first_us, job.span.last_us)
-    ]
-    charged = [span.charge_name(stretch.charged, zone) for stretch in job.stretches]
-    items = {
-        "unit": job.unit.name,
-        "unit file": job.unit.key,
-        "span": job.span.name,
-        "from": edges[0],
-        "to": edges[1],
-        "time zone": zone,
-        "catalyst": ", ".join(dict.fromkeys(charged)),
-        "record until": _iso(pd.Timestamp(until), zone),
-        "prepared by": stamp.prepared_by,
-        "program": f"outlet {stamp.program}",
-        "unit file sha256": stamp.unit_file,
-        "readings": f"{count}",
-        "readings sha256": digest,
-    }
-    return pd.DataFrame({"item": list(items), "text": list(items.values())})
-
-
-def _readings(job: _Job) -> tuple[str, int]:
-    """Hash the readings that the cells of the span were made of; how many there are."""
-    first = job.span.first_us - look_back(job.unit) // _US
-    last = job.span.last_us + reach(job.unit) // _US
-    tags = sorted(one.tag for one in job.unit.instruments if one.tag is not None)
-    found = read_months(job.snapshot.paths(SITE, STAGE, first=first, last=last), tags, first, last)
-    digest, count = hashlib.sha256(), 0
-    for tag in tags:
-        if tag in found:
-            series = found[tag]
-            digest.update(f"{tag}\n{len(series.time)}\n".encode())
-            for column in (series.time, series.value, series.quality):
-                digest.update(np.ascontiguousarray(column).tobytes())
-            count += len(series.time)
-    return digest.hexdigest(), count
-
-
 def _hours(
     job: _Job, record: Record, made: tonnes.Made, figures: pd.DataFrame, left_out: pd.DataFrame
 ) -> pd.DataFrame:
@@ -378,17 +323,9 @@ def _words(job: _Job) -> pd.DataFrame:
 def _in_plant_time(frame: pd.DataFrame, zone: str) -> pd.DataFrame:
     """Write instants in plant time with their offset, which sorts and has one meaning everywhere."""
     columns = {
-        str(name): [_iso(one, zone) for one in column]
+        str(name): [plant_iso(one, zone) for one in column]
         if isinstance(column.dtype, pd.DatetimeTZDtype)
         else column.to_numpy()
         for name, column in frame.items()
     }
     return pd.DataFrame(columns)
-
-
-def _iso(moment: pd.Timestamp | None, zone: str) -> str:
-    """Write an instant in plant time; nothing for one that did not come yet."""
-    if moment is None or pd.isna(moment):
-        return ""
-    text = f"{moment.tz_convert(zone):%Y-%m-%d %H:%M %z}"
-    return f"{text[:-2]}:{text[-2:]}"
