@@ -15,16 +15,16 @@ from typing import Any, Literal
 
 from ingest import database
 from ingest.account import Account
-from ingest.archive import SITE, Archive, Merged, Span, spans_of
-from ingest.errors import ExportError, StoreError
+from ingest.archive import Archive, Merged, Span, spans_of
+from ingest.asked import Asked, asked_by, tags_of
+from ingest.errors import ExportError
 from ingest.exports import open_export
 from ingest.files import Told, opened
 from ingest.found import found
-from ingest.measures import Stated, stated_units
 from ingest.passes import Pass
 from ingest.records import Export, Seen
 from ingest.shown import shown
-from ingest.unit import ExportRules, Unit
+from ingest.unit import Unit
 
 SETTLE = timedelta(seconds=2)  # a file changed more recently may still be growing
 SUFFIXES = (
@@ -61,27 +61,6 @@ class IntakeResult:
     outcomes: tuple[Outcome, ...]
     touched: Mapping[str, tuple[Span, ...]]
     notes: tuple[str, ...]
-
-
-@dataclass(frozen=True, slots=True)
-class _Asked:
-    """What all units of a site together ask of an export; the rules name the time zone."""
-
-    tags: frozenset[str]
-    rules: ExportRules
-    units: Mapping[str, tuple[Stated, ...]]
-
-    def entry(self, tags: Iterable[str]) -> dict[str, Any]:
-        """What the ledger keeps of it: with another one an export that was set aside is tried again."""
-        rules = {**asdict(self.rules), "missing_words": list(self.rules.missing_words)}
-        rules["state_words"] = [list(pair) for pair in self.rules.state_words]
-        units = {tag: [one.unit for one in self.units.get(tag, ())] for tag in sorted(tags)}
-        return {"tags": sorted(tags), "rules": rules, "units": units, "program": database.program_version()}
-
-    def converted_otherwise(self, export: Export) -> bool:
-        """Tell whether an export was converted to a unit that is not stated any more."""
-        converted = export.account.get("converted", ())
-        return any(unit != one.unit for tag, _, unit in converted for one in self.units.get(tag, ()))
 
 
 @dataclass(frozen=True, slots=True)
@@ -163,7 +142,7 @@ def take_in(
     -------
     IntakeResult
     """
-    asked = _asked(units)
+    asked = asked_by(units)
     meant = found(paths, SUFFIXES)
     files, outcomes = _plan(pass_, asked, meant.files, settle)
     outcomes += [_set_aside_unread(path, fault) for path, fault in meant.refused]
@@ -180,44 +159,12 @@ def take_in(
     archive.finish()
     outcomes += [_enter(pass_, asked, file, read, archive.merged) for file, read in taken]
     _amend(pass_, archive.merged, {file.number for file, _ in taken})
-    touched = {unit.key: spans_of(archive.merged.touched, _tags(unit)) for unit in units}
+    touched = {unit.key: spans_of(archive.merged.touched, tags_of(unit)) for unit in units}
     return IntakeResult(tuple(sorted(outcomes, key=_by_name)), touched, _notes(pass_, asked))
 
 
-def _asked(units: Sequence[Unit]) -> _Asked:
-    """What the units ask together; an export can be read in one way only."""
-    said = {
-        unit.key: replace(unit.exports, time_zone=unit.exports.time_zone or unit.time_zone) for unit in units
-    }
-    first, *others = said
-    for other in others:
-        one, two = asdict(said[first]), asdict(said[other])
-        for key in (key for key in one if one[key] != two[key]):
-            raise StoreError(
-                f"units {first} and {other}: exports.{key} is {_said(one[key])} in {first}"
-                f" but {_said(two[key])} in {other}",
-                remedy="One store reads an export one way: make them agree, or use two stores.",
-            )
-    if SITE in said:
-        raise StoreError(
-            f"unit {SITE}: the store keeps its archive by that name", remedy="Rename the unit file."
-        )
-    return _Asked(frozenset().union(*(_tags(unit) for unit in units)), said[first], stated_units(units))
-
-
-def _said(value: str | tuple[str, ...] | None) -> str:
-    """What a unit file says under a key, in words."""
-    if not value:
-        return "not stated"
-    return repr(value) if isinstance(value, str) else ", ".join(map(repr, value))
-
-
-def _tags(unit: Unit) -> frozenset[str]:
-    return frozenset(instrument.tag for instrument in unit.instruments if instrument.tag is not None)
-
-
 def _plan(
-    pass_: Pass, asked: _Asked, paths: Iterable[Path], settle: timedelta
+    pass_: Pass, asked: Asked, paths: Iterable[Path], settle: timedelta
 ) -> tuple[list[_File], list[Outcome]]:
     """Which files to read, by number in the ledger, and what is already known of the others."""
     known = {export.sha256: export for export in pass_.exports()}
@@ -277,7 +224,7 @@ def _outcome(path: Path, status: Status, words: str, account: Account | None = N
     return Outcome(shown(path.name), status, words, account)
 
 
-def _choose(asked: _Asked, path: Path, seen: Seen, number: int, entry: Export | None) -> _File | Outcome:
+def _choose(asked: Asked, path: Path, seen: Seen, number: int, entry: Export | None) -> _File | Outcome:
     """Read a file, or say why not."""
     if entry is None:
         return _File(path, seen, number, asked.tags, asked.tags, None)
@@ -296,7 +243,7 @@ def _unasked_then(entry: Export) -> frozenset[str]:
     return frozenset(tag for tag, _ in entry.account.get("unasked_tags", ()))
 
 
-def _read(pass_: Pass, archive: Archive, asked: _Asked, file: _File, told: Told) -> _Taken | Outcome:
+def _read(pass_: Pass, archive: Archive, asked: Asked, file: _File, told: Told) -> _Taken | Outcome:
     """Read one export into the archive, or leave no trace of it there."""
     try:
         batches = open_export(
@@ -332,14 +279,14 @@ def _left(file: _File) -> Outcome | None:
     return None if same else _outcome(file.path, "left for the next pass", words)
 
 
-def _set_aside(pass_: Pass, asked: _Asked, file: _File, error: str) -> Outcome:
+def _set_aside(pass_: Pass, asked: Asked, file: _File, error: str) -> Outcome:
     """Enter a file that cannot be read; one that could be read once keeps its entry."""
     if file.before is None:
         pass_.record_export(_entry(pass_, file, asked, status="set aside", error=error, account={}))
     return _outcome(file.path, "set aside", error)
 
 
-def _enter(pass_: Pass, asked: _Asked, file: _File, read: _Taken, merged: Merged) -> Outcome:
+def _enter(pass_: Pass, asked: Asked, file: _File, read: _Taken, merged: Merged) -> Outcome:
     """Enter a file that was taken in, with what became of its readings in the archive."""
     earlier = file.before.account if file.before is not None else {}
     settled = read.account.settled(
@@ -354,7 +301,7 @@ def _enter(pass_: Pass, asked: _Asked, file: _File, read: _Taken, merged: Merged
 
 
 def _entry(
-    pass_: Pass, file: _File, asked: _Asked, *, status: str, error: str, account: Mapping[str, Any]
+    pass_: Pass, file: _File, asked: Asked, *, status: str, error: str, account: Mapping[str, Any]
 ) -> Export:
     """The ledger's entry of a file."""
     return Export(
@@ -393,7 +340,7 @@ def _superseded_by(account: Mapping[str, Any], merged: Merged, number: int) -> l
     return [list(pair) for pair in sorted(counts.items())]
 
 
-def _notes(pass_: Pass, asked: _Asked) -> tuple[str, ...]:
+def _notes(pass_: Pass, asked: Asked) -> tuple[str, ...]:
     """What the archive lacks or holds otherwise than the units ask now."""
     taken = [export for export in pass_.exports() if export.status == "taken"]
     lacking = [export.name for export in taken if _unasked_then(export) & asked.tags]

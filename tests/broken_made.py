@@ -234,10 +234,8 @@ def _parquets() -> dict[str, Broken]:
             ("before its footer's length", -8),
         )
     }
-    odd = pa.array([FIRST] * 50, pa.timestamp("us", "UTC")).to_pylist()
     zeroed = PARQUET[:4] + bytes(300) + PARQUET[304:]
     far = PARQUET[:-8] + (2**31 - 1).to_bytes(4, "little") + b"PAR1"
-    few = pa.array([1.0] * 50)
     return cases | {
         "Parquet zeroed inside": aside("x.parquet", zeroed, f"the Parquet file {DAMAGED}"),
         "Parquet of marks alone": aside("x.parquet", b"PAR1PAR1", f"the Parquet file {DAMAGED}"),
@@ -248,6 +246,17 @@ def _parquets() -> dict[str, Broken]:
         "empty file called Parquet": aside("x.parquet", b"", "is empty"),
         "Parquet without rows": aside("x.parquet", as_parquet(table().slice(0, 0)), "holds no rows"),
         "Parquet without columns": aside("x.parquet", as_parquet(pa.table({})), "holds no rows"),
+        "Parquet that is a terabyte of one text": special("x.parquet", huge_text_parquet, "text"),
+        "Parquet of one cell of 128 MiB": special("x.parquet", one_huge_cell_parquet, "text"),
+        "Parquet with a pickle for a type": Broken("x.parquet", pickled_type_parquet, "taken", "", 50),
+    }
+
+
+def _odd_columns() -> dict[str, Broken]:
+    """Parquet files whose columns hold what is no reading."""
+    odd = pa.array([FIRST] * 50, pa.timestamp("us", "UTC")).to_pylist()
+    few = pa.array([1.0] * 50)
+    return {
         "Parquet with a struct for values": aside(
             "x.parquet",
             as_parquet(table(**{"FI-1.PV": pa.array([{"a": 1.0}] * 50)})),
@@ -292,6 +301,12 @@ def _parquets() -> dict[str, Broken]:
             as_parquet(pa.table([*table().columns, few], ["time", "A", "B", "A"])),
             "more than one column",
         ),
+    }
+
+
+def _odd_values() -> dict[str, Broken]:
+    """Parquet files with times, numbers, columns or layers beyond all measure."""
+    return {
         "Parquet with times at the ends of all time": taken(
             "x.parquet",
             as_parquet(table(time=pa.array([-(2**63) + 1, 2**63 - 1] * 25).cast(pa.timestamp("ns", "UTC")))),
@@ -318,9 +333,6 @@ def _parquets() -> dict[str, Broken]:
             "6001 columns, more than 5000",
         ),
         "Parquet of a column in sixty layers": aside("x.parquet", as_parquet(deep(60)), "x"),
-        "Parquet that is a terabyte of one text": special("x.parquet", huge_text_parquet, "text"),
-        "Parquet of one cell of 128 MiB": special("x.parquet", one_huge_cell_parquet, "text"),
-        "Parquet with a pickle for a type": Broken("x.parquet", pickled_type_parquet, "taken", "", 50),
     }
 
 
@@ -368,6 +380,12 @@ def _texts() -> dict[str, Broken]:
         "ragged rows": taken(
             "x.csv", SMALL + f"{moment(60)}\n{moment(61)},1\n{moment(62)},1,2,3\n,\n", 100, 8
         ),
+    }
+
+
+def _long_lines() -> dict[str, Broken]:
+    """Text with lines, fields and headers beyond all measure."""
+    return {
         "a line of 3 million characters": aside(
             "x.csv", SMALL + "1" * 3_000_000 + "\n", "a line longer than 1024 KiB"
         ),
@@ -404,6 +422,14 @@ def _texts() -> dict[str, Broken]:
         "20,000 columns without names": aside(
             "x.csv", "," * 20_000 + "\n" + moment(0) + ",1" * 20_000, "20001 columns, more than"
         ),
+    }
+
+
+def _odd_rows() -> dict[str, Broken]:
+    """Text with times, numbers, characters and quotes that are none."""
+    middle = LARGE.encode()
+    at = middle.index(b"\n", len(middle) * 3 // 4) + 1  # in the second block
+    return {
         "infinity and numbers beyond all floats": taken(
             "x.csv",
             SMALL + f"{moment(60)},inf,-Infinity\n{moment(61)},1e400,-1e400\n{moment(62)},1e308,-1e308\n",
@@ -553,7 +579,18 @@ def _names() -> dict[str, Broken]:
     }
 
 
-BROKEN: dict[str, Broken] = {**_compressed(), **_parquets(), **_texts(), **_tags(), **_places(), **_names()}
+BROKEN: dict[str, Broken] = {
+    **_compressed(),
+    **_parquets(),
+    **_odd_columns(),
+    **_odd_values(),
+    **_texts(),
+    **_long_lines(),
+    **_odd_rows(),
+    **_tags(),
+    **_places(),
+    **_names(),
+}
 
 
 def unit_made() -> Unit:

@@ -23,6 +23,7 @@ ORDER = (
     "ingest.analyzerrules",
     "ingest.noderules",
     "ingest.watchrules",
+    "ingest.notifyrules",
     "ingest.unitrules",
     "ingest.unitfile",
     "ingest.columns",
