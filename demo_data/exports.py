@@ -24,6 +24,7 @@ from numpy.typing import NDArray
 
 from demo_data import meters, plant, scenario, truth
 from demo_data.meters import CALIBRATION, DECIMALS, GOOD, NO_NUMBER, NOT_STORED, Results
+from demo_data.scenario import Scenario
 from ingest.unit import Unit
 from ingest.unitfile import load
 
@@ -45,7 +46,14 @@ class Paths:
     truth_parquet: Path
 
 
-def make(folder: Path, *, days: int = 60, seed: int | None = None, unit_file: Path = UNIT_FILE) -> Paths:
+def make(
+    folder: Path,
+    *,
+    days: int = 60,
+    seed: int | None = None,
+    unit_file: Path = UNIT_FILE,
+    put_in: Scenario | None = None,
+) -> Paths:
     """Make the demo data; the same arguments give the same bytes.
 
     Parameters
@@ -58,13 +66,15 @@ def make(folder: Path, *, days: int = 60, seed: int | None = None, unit_file: Pa
         The scenario's own when left out.
     unit_file : Path
         Instruments and their uncertainties.
+    put_in : Scenario, optional
+        What happens, and when; that of scenario.toml when left out.
 
     Returns
     -------
     Paths
         Whole files: each was written beside its place and then moved there.
     """
-    put_in = scenario.load()
+    put_in = put_in or scenario.load()
     seed = put_in.seed if seed is None else seed
     unit = load(unit_file)
     true = plant.simulate(days, seed, put_in.events, start=put_in.start)

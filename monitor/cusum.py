@@ -168,7 +168,7 @@ def ewma_episodes(deviation: Array, error: Array, noise: Noise, *, shift_pct: fl
         Of the healthy period; its long run is taken for that of independent values, which is on the safe
         side [%].
     shift_pct : float
-        Shift that the weight is chosen for [%].
+        Shift that the weight is chosen for; an average below half of it does not alarm [%].
     wanted : float
         Blocks between false alarms.
 
@@ -181,7 +181,8 @@ def ewma_episodes(deviation: Array, error: Array, noise: Noise, *, shift_pct: fl
     limits = _averages(wanted / 2)  # one of two sides
     weight = min(limits, key=lambda one: runlengths.ewma(one, limits[one], shift))
     average = np.asarray(lfilter([weight], [1.0, weight - 1.0], deviation[row]))
-    edge = limits[weight] * noise.long_run_sd * math.sqrt(weight / (2 - weight)) + error[row] / ALLOWED
+    settled_sd = noise.long_run_sd * math.sqrt(weight / (2 - weight))
+    edge = np.maximum(limits[weight] * settled_sd + error[row] / ALLOWED, shift_pct / 2)
     onset, raised, cleared = [], [], []
     begin = 0
     while (over := np.flatnonzero(average[begin:] > edge[begin:])).size:

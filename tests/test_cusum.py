@@ -150,6 +150,14 @@ def test_an_average_of_independent_values_is_falsely_alarmed_about_as_often_as_w
     assert 0.5 * 200 < len(one.raised) < 1.28 * 200
 
 
+def test_an_average_below_half_of_the_shift_to_find_does_not_alarm_however_quiet_the_figure_is():
+    quiet = Noise(0.001, 0.0)
+    for size, alarms in ((0.24, 0), (0.26, 1)):
+        value = np.full(300, size)
+        one = ewma_episodes(value, np.zeros(300), quiet, shift_pct=0.5, wanted=1440)
+        assert len(one.raised) == alarms
+
+
 def test_false_alarms_of_the_two_sums_together_come_about_as_often_as_wanted():
     # The same law for autocorrelated values: 400 blocks wanted of both charts together, in 100,000 blocks.
     rng = np.random.default_rng(13)
