@@ -15,7 +15,7 @@ from ingest.keys import rows
 
 ONCE: tuple[str, ...] = ("unit", "chemistry", "operating", "catalyst", "healthy", "hold_up")
 ONCE += ("budget", "guarantee", "prices", "exports")
-MANY = ("node", "stream", "instrument", "analyzer", "shared", "event", "watch")
+MANY = ("node", "stream", "instrument", "analyzer", "shared", "event", "watch", "notify")
 # Sums are called so; a species of that name could not be told from them.
 RESERVED = ("all unwanted", "unseen")
 # What is said of an analyzer as a whole, not of each of its channels.

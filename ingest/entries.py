@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
-from datetime import datetime, timedelta
+from datetime import datetime, time, timedelta
 from difflib import get_close_matches
 from typing import Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError, available_timezones
@@ -14,6 +15,7 @@ from ingest import quantities
 from ingest.errors import OutletError, Problem
 from ingest.keys import NESTED, Key, rows
 
+_CLOCK = re.compile(r"(?:[01]\d|2[0-3]):[0-5]\d")
 
 @dataclass(slots=True)
 class Entry:
@@ -245,6 +247,18 @@ def _moment(value: object, row: Key) -> datetime:
     return value
 
 
+def _time_of_day(value: object, row: Key) -> time:
+    if not isinstance(value, str) or _CLOCK.fullmatch(value) is None:
+        raise _misfit(value, row, "a time of day in quotes")
+    return time.fromisoformat(value)
+
+
+def _clocks(value: object, row: Key) -> tuple[time, ...]:
+    if not isinstance(value, list) or not value:
+        raise _misfit(value, row, "a list of times of day")
+    return tuple(sorted(_time_of_day(text, row) for text in _texts(value, row)))
+
+
 def _zone(value: object, row: Key) -> str:
     name = _text(value, row)
     try:
@@ -294,6 +308,8 @@ FORMS: dict[str, Callable[[object, Key], Any]] = {
     "duration": _duration,
     "durations": _durations,
     "moment": _moment,
+    "clocks": _clocks,
+    "time of day": _time_of_day,
     "zone": _zone,
     "yes or no": _yes_no,
     "formulas": _named,

@@ -7,7 +7,8 @@ uncertainties are fractions (not percent), floors and ranges stay in the instrum
 from __future__ import annotations
 
 from dataclasses import dataclass
-from datetime import datetime, timedelta
+from datetime import datetime, time, timedelta
+from pathlib import Path
 
 FLOW_KINDS = ("molar flow", "mass flow", "volume flow", "actual volume flow", "differential pressure flow")
 FRACTION_KINDS = ("mole fraction", "mass fraction")
@@ -22,6 +23,8 @@ ROLES = ("fresh feed", "recycle")
 EVENT_KINDS = ("catalyst change", "calibration", "planned", "note")
 TESTS = ("limits", "cusum", "ewma", "slope")
 SIDES = ("low", "high", "both")
+NOTIFY_KINDS = ("email", "webhook")
+TLS = ("starttls", "implicit", "none")
 # Why a reactor has no instantaneous selectivity, and what to do about it.
 NO_RATES = {
     "well-mixed": ("needs what the reactor holds", "write a section [hold_up]"),
@@ -244,6 +247,32 @@ class ExportRules:
 
 
 @dataclass(frozen=True, slots=True)
+class Target:
+    """Where notices of a unit go: one address by e-mail, or one webhook; no secret stands in it.
+
+    `secret_env` and `secret_file` name where the secret is. A text or path that is not needed is empty.
+    """
+
+    name: str
+    kind: str  # one of NOTIFY_KINDS
+    priorities: tuple[str, ...]
+    quiet: tuple[time, time] | None  # from, to, by the plant's clock
+    quiet_exempt: tuple[str, ...]  # priorities that go out in quiet hours too
+    per_hour: int
+    page: str
+    secret_env: str
+    secret_file: Path | None
+    ca_file: Path | None
+    url: str = ""
+    address: str = ""
+    sender: str = ""
+    server: str = ""
+    port: int = 0
+    tls: str = "starttls"  # one of TLS
+    user: str = ""
+
+
+@dataclass(frozen=True, slots=True)
 class Unit:
     """One reactor. `key` is the unit file's stem and names the unit in the store and in links."""
 
@@ -274,3 +303,5 @@ class Unit:
     prices: Prices | None = None
     budget: tuple[tuple[str, float], ...] = ()  # figure, and the value that it is held against
     guarantee: tuple[tuple[str, float], ...] = ()
+    targets: tuple[Target, ...] = ()  # whom notices go to
+    shift_starts: tuple[time, ...] = (time(6), time(14), time(22))  # plant time, ascending

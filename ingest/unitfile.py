@@ -10,7 +10,7 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
-from ingest import analyzerrules, chemistry, draft, instrumentrules, quantities, unitrules, watchrules
+from ingest import analyzerrules, chemistry, draft, instrumentrules, notifyrules, quantities, unitrules, watchrules
 from ingest import keys as table
 from ingest.draft import Draft
 from ingest.entries import Entry
@@ -67,7 +67,7 @@ def load(path: Path | str) -> Unit:
         problems += rule(read)
     if problems:
         raise UnitFileError(str(path), list(dict.fromkeys(problems)))
-    return _build(read, file.stem)
+    return _build(read, file)
 
 
 def keys() -> tuple[Key, ...]:
@@ -110,11 +110,11 @@ def parse(file: Path) -> dict[str, Any]:
     raise UnitFileError(str(file), [fault])
 
 
-def _build(read: Draft, key: str) -> Unit:
+def _build(read: Draft, file: Path) -> Unit:
     """Make the Unit from a draft without faults."""
     unit, chemical, exports = read.once["unit"], read.chemistry, read.once["exports"]
     return Unit(
-        key=key,
+        key=file.stem,
         name=unit.get("name"),
         time_zone=unit.get("time_zone"),
         cell=unit.get("cell"),
@@ -143,6 +143,7 @@ def _build(read: Draft, key: str) -> Unit:
         watches=tuple(_watch(entry) for entry in read.many["watch"]),
         windows=tuple(sorted(unit.get("windows"))),
         least_coverage=unit.get("least_coverage"),
+        shift_starts=unit.get("shift_starts"),
         exports=ExportRules(
             time_zone=exports.get("time_zone"),
             missing_words=exports.get("missing_words") or (),
@@ -159,6 +160,7 @@ def _build(read: Draft, key: str) -> Unit:
         guarantee=tuple((read.once["guarantee"].get("figure") or {}).items()),
         events=tuple(sorted((_event(entry) for entry in read.many["event"]), key=lambda event: event.at)),
         nodes=tuple(Node(e.get("name"), e.get("reacts")) for e in read.many["node"]),
+        targets=tuple(notifyrules.target(entry, file.parent) for entry in read.many["notify"]),
     )
 
 

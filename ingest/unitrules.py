@@ -9,7 +9,7 @@ from collections import Counter
 from collections.abc import Callable, Iterator
 from datetime import timedelta
 
-from ingest import analyzerrules, chemistry, instrumentrules, noderules, quantities, watchrules
+from ingest import analyzerrules, chemistry, instrumentrules, noderules, notifyrules, quantities, watchrules
 from ingest.draft import Draft, direction_of, twice, undeclared
 from ingest.entries import Entry, nearest
 from ingest.errors import Problem
@@ -268,5 +268,6 @@ RULES: tuple[Callable[[Draft], Iterator[Problem]], ...] = (
     _healthy_can_be_fitted,
     _events_name_instruments,
     watchrules.hold,
+    notifyrules.hold,
     _targets_name_figures,
 )

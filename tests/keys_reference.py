@@ -37,6 +37,7 @@ HEADINGS = {
     "budget": "[budget]",
     "guarantee": "[guarantee]",
     "prices": "[prices]",
+    "notify": "[[notify]]",
     "exports": "[exports]",
 }
 START = """# The unit file
@@ -86,6 +87,9 @@ ABOUT = {
     " (a second sum looks for larger shifts), `ewma` averages with fading weights, `slope` looks at the trend of daily"
     " means over 30 d. When each of them alarms follows from `false_alarm_interval` and from how the figure wandered while"
     " healthy; there is no threshold to tune.",
+    "notify": "Where notices of alerts go: one when an alert is raised, clears, is withdrawn or gets another verdict. The"
+    " last place in an hour is kept for alerts that quiet hours do not hold. A secret never stands in this file: it is in a"
+    " variable of the environment, or in a file that only its owner can read.",
     "exports": "What the exports themselves do not tell.",
 }
 
@@ -136,6 +140,7 @@ def _value(row: Key) -> str:
         "uncertainty": "table, see uncertainty",
         "texts": "list of texts",
         "durations": "list of time spans",
+        "clocks": "list of times of day",
     }
     form |= {
         "duration": "time span",
