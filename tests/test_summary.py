@@ -242,7 +242,7 @@ def test_a_catalyst_change_in_mid_month_gives_two_rows_and_the_whole(tmp_path):
     assert tonnes[0] + tonnes[1] == tonnes[2]
     since = found.tables["comparisons"].set_index(["stretch", "against", "figure"])
     # each stretch is compared with its own charge alone
-    assert since.loc[(stretches[1], "since the charge", SELECTIVITY), "steady there"] == pytest.approx(
+    assert since.loc[(stretches[1], "the charge so far", SELECTIVITY), "steady there"] == pytest.approx(
         90.0, abs=1e-3
     )
     assert found.tables["catalyst"]["charge"].tolist() == stretches[:2]

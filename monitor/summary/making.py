@@ -182,7 +182,7 @@ def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]
     against = {}
     for stretch in job.stretches:
         charge = charges[stretch.name]
-        since = {} if charge is None else {"since the charge": charge.level}
+        since = {} if charge is None else {"the charge so far": charge.level}
         against[stretch.name] = earlier | since | targets
     # What has no better side is compared by nobody, but for the load.
     told = [one for one in job.shown if one.higher_is_better is not None or one in job.rates]

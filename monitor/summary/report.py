@@ -235,7 +235,7 @@ def _comparisons(summary: Summary) -> str:
     fields = ("there", "difference", "± if nothing was calibrated", "word")
     body, group = [], ""
     for at, row in enumerate(rows(table)):
-        named = f"{row['stretch']}, against {row['against']}"
+        named = f"{row['stretch']}, compared with {row['against']}"
         if named != group:
             group = named
             whole = 2 + len(MODES) * len(fields)

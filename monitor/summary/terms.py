@@ -56,7 +56,7 @@ def _terms(decimals: int) -> dict[str, str]:
         "difference": "This span minus the other. Its first half-width takes all calibrations as set anew "
         "between the two, the second takes them as left alone, so that their errors cancel. "
         "Errors that come and go count in both.",
-        "since the charge": "From the day of the catalyst charge, as far as the store goes back, to the end "
+        "the charge so far": "From the day of the catalyst charge, as far as the store goes back, to the end "
         "of the span; half-widths from days spread evenly over it.",
         "expected": "What the figure should have been at the load, operating point and catalyst age of every "
         "steady hour, learnt from the healthy period of the unit file, with the calibrations of that time.",

@@ -75,7 +75,10 @@ def costs(folder: Path) -> list[list[str]]:
         units = [word for file in chosen for word in ("--unit", str(file))]
         words = ["month", "2026-04", *units, "--store", str(folder / "store"), "--out", str(folder / "out")]
         wall, processor = timed([*words, "--by", "bench", "--draft"])
-        rows.append([f"{len(chosen)}", f"{wall:.1f}", f"{processor:.1f}", f"{processor / len(chosen):.2f}"])
+        busy = f"{os.getloadavg()[0]:.1f}"
+        rows.append(
+            [f"{len(chosen)}", f"{processor:.1f}", f"{processor / len(chosen):.2f}", f"{wall:.1f}", busy]
+        )
     return rows
 
 
@@ -84,7 +87,7 @@ def main() -> None:
     seeds = int(next((word for word in sys.argv[1:] if word.isdigit()), "100"))
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     with tempfile.TemporaryDirectory() as name:
-        head = ["units", "wall [s]", "processor [s]", "processor per unit [s]"]
+        head = ["units", "processor [s]", "processor per unit [s]", "wall [s]", "load of the machine"]
         show("bench summary", table(head, costs(Path(name))))
         found = held(Path(name), range(seeds))
     share = 100 * np.mean([one for each in found.values() for one in each])
