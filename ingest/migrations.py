@@ -69,7 +69,23 @@ SECOND = (
   BEGIN SELECT RAISE(ABORT, 'a revision of a document stays as it is'); END""",
 )
 
-STEPS = (FIRST, SECOND)  # each from its place in this list to the next version
+# Notices of an hour that had too many go out with one digest, whose id they then bear.
+THIRD = (
+    "ALTER TABLE outbox RENAME TO outbox_before",
+    """CREATE TABLE outbox (
+  id TEXT PRIMARY KEY, made TEXT NOT NULL, kind TEXT NOT NULL, target TEXT NOT NULL,
+  body TEXT NOT NULL CHECK (json_valid(body)),
+  state TEXT NOT NULL DEFAULT 'waiting' CHECK (state IN ('waiting', 'sent', 'given up', 'joined')),
+  tries INTEGER NOT NULL DEFAULT 0, next_try TEXT NOT NULL, last_error TEXT NOT NULL DEFAULT '',
+  sent_at TEXT, joined_in TEXT NOT NULL DEFAULT ''
+) STRICT""",
+    """INSERT INTO outbox SELECT id, made, kind, target, body, state, tries, coalesce(next_try, made),
+  last_error, sent_at, '' FROM outbox_before""",
+    "DROP TABLE outbox_before",
+    "CREATE INDEX outbox_by_target ON outbox (target, state, next_try)",
+)
+
+STEPS = (FIRST, SECOND, THIRD)  # each from its place in this list to the next version
 VERSION = len(STEPS)
 
 

@@ -359,7 +359,7 @@ def test_a_ledger_of_the_first_version_is_brought_up_with_all_it_holds(tmp_path)
     assert store.content_hash() == expected.content_hash()
     after = tables(store.folder)
     assert {name: after[name] for name in KEPT} == {name: before[name] for name in KEPT}
-    assert dict(after["meta"])["schema_version"] == "2"
+    assert dict(after["meta"])["schema_version"] == str(migrations.VERSION)
     assert after["schema"] == tables(expected.folder)["schema"]
     about = ("A. Example", "noted", "north", "yield low", "a word", {"raised": "2026-02-01"})
     assert journal.lines(store.folder) == (
@@ -401,7 +401,7 @@ def test_a_ledger_is_still_the_old_one_when_bringing_it_up_is_killed(tmp_path, s
     assert done.returncode == -signal.SIGKILL
     assert tables(tmp_path) == before
     assert store.verify() == []
-    assert dict(tables(tmp_path)["meta"])["schema_version"] == "2"
+    assert dict(tables(tmp_path)["meta"])["schema_version"] == str(migrations.VERSION)
 
 
 def test_several_processes_that_find_an_old_ledger_bring_it_up_once(tmp_path):
@@ -429,11 +429,11 @@ def test_several_processes_that_find_an_old_ledger_bring_it_up_once(tmp_path):
 def test_a_store_of_a_later_version_is_refused_with_words_and_left_alone(tmp_path):
     store = undisturbed(tmp_path)
     with plain(tmp_path) as ledger, ledger:
-        ledger.execute("UPDATE meta SET value = '3' WHERE key = 'schema_version'")
+        ledger.execute("UPDATE meta SET value = '99' WHERE key = 'schema_version'")
         ledger.execute("UPDATE meta SET value = '7.1' WHERE key = 'program_version'")
     before = tables(tmp_path)
     said = (
-        r"schema version 3, made by program 7\.1; this program knows schema versions up to 2\n  Use a newer"
+        r"schema version 99, made by program 7\.1; this program knows schema versions up to 3\n  Use a newer"
     )
     with pytest.raises(StoreError, match=said):
         store.snapshot()
@@ -446,12 +446,14 @@ def test_a_store_of_a_later_version_is_refused_with_words_and_left_alone(tmp_pat
 
 def test_notices_wait_in_an_outbox_of_known_states(tmp_path):
     undisturbed(tmp_path)
-    row = ("2026-02-03-1", "2026-02-03T00:00:00+00:00", "raise", "mail", json.dumps({"watch": "yield low"}))
+    made = "2026-02-03T00:00:00+00:00"
+    row = ("2026-02-03-1", made, "raise", "mail", json.dumps({"watch": "yield low"}), made)
     with plain(tmp_path) as ledger, ledger:
-        ledger.execute("INSERT INTO outbox (id, made, kind, target, body) VALUES (?, ?, ?, ?, ?)", row)
+        insert = "INSERT INTO outbox (id, made, kind, target, body, next_try) VALUES (?, ?, ?, ?, ?, ?)"
+        ledger.execute(insert, row)
         kept = ledger.execute("SELECT state, tries, next_try, last_error, sent_at FROM outbox").fetchall()
-        assert kept == [("waiting", 0, None, "", None)]
+        assert kept == [("waiting", 0, made, "", None)]
         with pytest.raises(sqlite3.IntegrityError, match="CHECK constraint failed"):
             ledger.execute("UPDATE outbox SET state = 'perhaps'")
         with pytest.raises(sqlite3.IntegrityError, match="UNIQUE constraint failed"):
-            ledger.execute("INSERT INTO outbox (id, made, kind, target, body) VALUES (?, ?, ?, ?, ?)", row)
+            ledger.execute(insert, row)

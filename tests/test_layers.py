@@ -74,6 +74,7 @@ ORDER = (
     "ingest.database",
     "ingest.journal",
     "ingest.documents",
+    "ingest.outbox",
     "ingest.passes",
     "ingest.ledger",
     "ingest.archive",
