@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from functools import partial
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
@@ -16,7 +17,7 @@ from numpy.typing import NDArray
 
 from ingest.cells import RUNNING
 from ingest.columns import plain, single
-from ingest.documents import put
+from ingest.documents import latest, put
 from ingest.errors import OutletError
 from ingest.parts import instant_us, month_edges, times_us
 from ingest.passes import Pass
@@ -29,8 +30,10 @@ from monitor.expectation import (
     DAY_US,
     GOOD_DAYS,
     Expectation,
+    band,
     document,
     expected,
+    from_document,
     logarithm_pct,
     points,
     variables,
@@ -144,6 +147,52 @@ def drifted(
     later = blocks_of(view, unit, watch, calm_us - one.block_us, min([end_us, *changed]))
     found = departures(watch, later, one, sides=sides, charts=charts)
     return Drifted(whole_episodes([kept, found]), one, tuple(_notes(unit, watch, one, later)))
+
+
+def in_force(folder: Path, unit: str, watch: str) -> Expectation | None:
+    """Give the expectation that a drift watch was last held against.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit, watch : str
+        Key of the unit and name of the watch.
+
+    Returns
+    -------
+    Expectation or None
+        None while none was learnt.
+    """
+    kept = latest(folder, unit, KIND, watch)
+    return None if kept is None else from_document(kept.body)
+
+
+def shown(
+    view: Snapshot, unit: Unit, watch: Watch, one: Expectation, span_us: tuple[int, int]
+) -> pd.DataFrame:
+    """Give what a figure was, and what was to be expected of it, block by block.
+
+    Parameters
+    ----------
+    view : Snapshot
+        With figures and cells of one pass.
+    unit : Unit
+        Names the operating point.
+    watch : Watch
+        Names figure, window and mode.
+    one : Expectation
+        Of the figure.
+    span_us : tuple of int
+        Blocks that end after the first and up to the second [us UTC].
+
+    Returns
+    -------
+    DataFrame
+        As `expectation.band` gives it, with the figure as `value`.
+    """
+    blocks = blocks_of(view, unit, watch, *span_us)
+    return band(one, blocks.end_us, blocks.point).assign(value=blocks.value)
 
 
 def spans(episodes: pd.DataFrame) -> Iterator[tuple[int, int]]:

@@ -15,6 +15,7 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 
 from ingest.errors import OutletError
@@ -34,6 +35,7 @@ MARGIN = 0.5  # standard deviations past the least and most that was seen that a
 # variable as it moved while healthy, with the square or product of two such, with 30 days of catalyst age.
 BY_VARIABLE, BY_PRODUCT, BY_AGE, BY_LEVEL = 1.0, 0.3, 0.5, 100.0
 AGE_D = 30.0
+NOT_KNOWN = "the operating point is not known"
 TWO_SIDED_95 = 1.959963984540054
 
 
@@ -232,6 +234,38 @@ def expected(one: Expectation, end_us: Times, point: Array) -> Expected:
     error = np.sqrt(np.einsum("np,pq,nq->n", terms, one.covariance, terms, optimize=True))
     outside, beyond = _outside(one, point)
     return Expected(np.asarray(terms @ one.weight), error, outside, beyond)
+
+
+def band(one: Expectation, end_us: Times, point: Array) -> pd.DataFrame:
+    """Give what a person is shown: what was to be expected of each block, or why nothing can be said.
+
+    Parameters
+    ----------
+    one : Expectation
+        Of the figure.
+    end_us : ndarray of int64, shape (n,)
+        Ends of blocks [us UTC].
+    point : ndarray, shape (n, v)
+        As `points` gives it.
+
+    Returns
+    -------
+    DataFrame
+        Index `end` (UTC); expected, low and high in the figure's unit, the 95 % prediction interval of a
+        block; NaN where `reason` says which variable lies outside of what was seen, or that the point is not
+        known. `beyond` says by how much, measured as in `points`.
+    """
+    told = expected(one, end_us, point)
+    refused = (told.outside >= 0) | ~np.isfinite(told.value)
+    half = TWO_SIDED_95 * np.hypot(told.error, one.noise.sd)
+    bounds = {"expected": told.value, "low": told.value - half, "high": told.value + half}
+    shown = {name: np.exp(np.where(refused, np.nan, value) / 100.0) for name, value in bounds.items()}
+    words = np.array(
+        ["", *(f"{name} lies outside of what was seen while healthy" for name in one.names), NOT_KNOWN]
+    )
+    place = np.where(np.isfinite(told.value), told.outside + 1, len(words) - 1)
+    index = pd.DatetimeIndex(end_us.astype("datetime64[us]"), name="end").tz_localize("UTC")
+    return pd.DataFrame({**shown, "reason": words[place], "beyond": told.beyond}, index=index)
 
 
 def at_usual_point(one: Expectation, point: Array, value: Array) -> Array:

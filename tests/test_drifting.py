@@ -17,7 +17,7 @@ from ingest.ledger import Store
 from ingest.unit import Event, Healthy
 from ingest.unitfile import load
 from monitor.days import plan_of
-from monitor.drifting import KIND, blocks_of, drifted
+from monitor.drifting import KIND, blocks_of, drifted, in_force, shown
 from monitor.expectation import DAY_US, from_document, variables
 from monitor.run import run_pass
 from monitor.store import episodes
@@ -87,6 +87,25 @@ def test_the_expectation_is_kept_as_a_document_of_the_store(plant):
     assert (kept.key, one.figure, one.names) == (YIELD.name, "yield on feed", variables(UNIT))
     assert 10 < one.days < 25
     assert one.weight.tolist() == again(store).expectation.weight.tolist()
+
+
+def test_a_person_is_shown_the_figure_as_expected_before_the_fall_and_below_its_band_after(plant):
+    # the plant has hardly any noise of its own: before the fall each hour is within 0.3 % of what was expected
+    store, truth, _ = plant
+    one = in_force(store, UNIT.key, YIELD.name)
+    assert one is not None
+    assert in_force(store, UNIT.key, "no such watch") is None
+    [fall] = (pd.Timestamp(each["start"]) for each in truth["events"] if each["kind"] == "selectivity loss")
+    day = pd.Timedelta(days=1)
+    view = Store(store).snapshot()
+    told = {}
+    for name, first, last in (("before", fall - 3 * day, fall), ("after", fall + 3 * day, fall + 8 * day)):
+        span = (first.value // 1000, last.value // 1000)
+        told[name] = shown(view, UNIT, YIELD, one, span).dropna(subset=["expected", "value"])
+        assert len(told[name]) > 24
+    before, after = told["before"], told["after"]
+    assert (before["value"] / before["expected"] - 1).abs().max() < 0.003
+    assert (after["value"] < after["low"]).mean() > 0.95
 
 
 def test_a_pass_says_that_the_healthy_period_is_short(plant):

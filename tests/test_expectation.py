@@ -111,6 +111,34 @@ def test_where_the_unit_never_ran_while_healthy_it_is_told_what_lies_how_far_out
     assert np.isnan(expected(one, ends(3), point).value[0])
 
 
+def test_where_nothing_can_be_said_a_reason_stands_in_its_place(made: Plants):
+    one, point = fitted(made), point_of(made, 0)[:3].copy()
+    point[1, 1] = one.high[1] + 7.0
+    point[2, 0] = np.nan
+    told = expectation.band(one, ends(3), point)
+    assert told["expected"].isna().tolist() == [False, True, True]
+    assert told["reason"].tolist() == [
+        "",
+        "TI-205 lies outside of what was seen while healthy",
+        "the operating point is not known",
+    ]
+    assert told["beyond"].tolist()[1] == pytest.approx(7.0)
+    assert 80 < told["low"].iloc[0] < told["expected"].iloc[0] < told["high"].iloc[0] < 85
+
+
+def test_the_band_holds_as_many_hours_to_come_as_it_says(made: Plants):
+    # A law: 95 % of blocks; the noise is slow and the operating point moves, so that 240 hours of eight
+    # plants count as some hundreds of independent ones.
+    held = []
+    for place in range(8):
+        later = slice(HOURS, None)
+        told = expectation.band(fitted(made, place), ends(HOURS + 240)[later], point_of(made, place)[later])
+        value = made.told[YIELD][place, later]
+        seen = told["expected"].notna().to_numpy()
+        held.append(((value >= told["low"]) & (value <= told["high"]))[seen].mean())
+    assert 0.9 < np.mean(held) < 0.99
+
+
 def test_the_expectation_is_less_sure_the_longer_ago_the_healthy_period_is(made: Plants):
     one = fitted(made)
     point = np.repeat(point_of(made, 0)[:1], 3, axis=0)
