@@ -90,7 +90,7 @@ def test_the_expectation_is_kept_as_a_document_of_the_store(plant):
 
 
 def test_a_person_is_shown_the_figure_as_expected_before_the_fall_and_below_its_band_after(plant):
-    # the plant has hardly any noise of its own: before the fall each hour is within 0.3 % of what was expected
+    # the plant has hardly any noise of its own: before the fall each hour is within 0.3 % of its expectation
     store, truth, _ = plant
     one = in_force(store, UNIT.key, YIELD.name)
     assert one is not None
