@@ -9,12 +9,13 @@ from typing import Any
 
 import pandas as pd
 
-from monitor.axes import LIGHT, Spec, frame_spec
+from monitor.axes import LIGHT, Ink, Spec, frame_spec
 from monitor.charts import DASHED
 from monitor.summary.table import Summary, names
 from monitor.windows import MODES
 
 WIDTH, HEIGHT = 450, 108
+FIRST = ("yield on feed", "selectivity on converted", "conversion")
 FONT = "Arial, Helvetica, sans-serif"
 SECOND = "#D55E00"  # of the Okabe-Ito set (2008), as the first series colour is
 HOURS = {
@@ -23,7 +24,47 @@ HOURS = {
 }  # fmt: skip
 
 
-def figure_by_day(summary: Summary, figure: str, limits: dict[str, float]) -> Spec:
+def front(summary: Summary, *, ink: Ink = LIGHT) -> dict[str, Spec]:
+    """Draw what is read first by day: the main figures, and the tonnes of the wanted product.
+
+    Parameters
+    ----------
+    summary : Summary
+    ink : Ink
+        Colours of the theme.
+
+    Returns
+    -------
+    dict of str to dict
+        Specifications by their captions.
+    """
+    there = set(summary.tables["figures"]["figure"])
+    specs = {
+        f"{begun(name)} by day [%], steady with 95 % interval; open: as operated": figure_by_day(
+            summary, name, targets(summary, name), ink=ink
+        )
+        for name in FIRST
+        if name in there
+    }
+    made = [name for name in names(summary.tables["days"]) if name.endswith(" made [t]")][:1]
+    return specs | {f"{begun(name)} by day": tonnes_by_day(summary, name, ink=ink) for name in made}
+
+
+def begun(text: str) -> str:
+    """Write a text with a capital at its beginning.
+
+    Parameters
+    ----------
+    text : str
+
+    Returns
+    -------
+    str
+    """
+    return text[:1].upper() + text[1:]
+
+
+def figure_by_day(summary: Summary, figure: str, limits: dict[str, float], *, ink: Ink = LIGHT) -> Spec:
     """Draw one figure by day, steady with its half-width and as operated as open circles.
 
     Parameters
@@ -33,6 +74,8 @@ def figure_by_day(summary: Summary, figure: str, limits: dict[str, float]) -> Sp
         One of its figures.
     limits : dict of str to float
         What it is held against, drawn as dashed rules with their words.
+    ink : Ink
+        Colours of the theme.
 
     Returns
     -------
@@ -52,26 +95,50 @@ def figure_by_day(summary: Summary, figure: str, limits: dict[str, float]) -> Sp
         }
     )
     y = {"type": "quantitative", "scale": {"zero": False}, "title": None, "axis": {"tickCount": 4}}
-    dot = {"filled": True, "size": 26, "color": LIGHT.series}
-    bar = {"type": "rule", "color": LIGHT.series, "strokeWidth": 1.2}
-    ring = {"type": "point", "color": LIGHT.quiet, "size": 34, "strokeWidth": 1}
-    line = {"type": "line", "color": LIGHT.series, "strokeWidth": 1.6, "point": dot}
+    dot = {"filled": True, "size": 26, "color": ink.series}
+    bar = {"type": "rule", "color": ink.series, "strokeWidth": 1.2}
+    ring = {"type": "point", "color": ink.quiet, "size": 34, "strokeWidth": 1}
+    line = {"type": "line", "color": ink.series, "strokeWidth": 1.6, "point": dot}
     layers = [
         {"mark": bar, "encoding": {"y": {"field": "low", **y}, "y2": {"field": "high"}}},
         {"mark": ring, "encoding": {"y": {"field": "operated", **y}}},
         {"mark": line, "encoding": {"y": {"field": "steady", **y}}},
     ]
     for word, value in limits.items():
-        layers += _rule(word, value)
-    return _sized({"layer": layers, "encoding": {"x": _day(summary)}}, data)
+        layers += _rule(word, value, ink)
+    return _sized({"layer": layers, "encoding": {"x": _day(summary)}}, data, ink)
 
 
-def hours_by_day(summary: Summary) -> Spec:
+def targets(summary: Summary, figure: str) -> dict[str, float]:
+    """Give budget and guarantee of a figure, by the words that are written at their rules.
+
+    Parameters
+    ----------
+    summary : Summary
+    figure : str
+        One of its figures.
+
+    Returns
+    -------
+    dict of str to float
+        In the figure's unit.
+    """
+    table = summary.tables["comparisons"]
+    stated = table[(table["figure"] == figure) & table["against"].isin(["budget", "guarantee"])]
+    return {
+        f"{against} {value:g}": value
+        for against, value in zip(stated["against"], stated["steady there"], strict=True)
+    }
+
+
+def hours_by_day(summary: Summary, *, ink: Ink = LIGHT) -> Spec:
     """Draw how the hours of each day were spent.
 
     Parameters
     ----------
     summary : Summary
+    ink : Ink
+        Colours of the theme.
 
     Returns
     -------
@@ -92,16 +159,17 @@ def hours_by_day(summary: Summary) -> Spec:
                 "y": {"field": "hours", "type": "quantitative", "title": "h", "axis": {"tickCount": 4}},
                 "color": {
                     "field": "what", "type": "nominal", "scale": scale,
-                    "legend": {"orient": "bottom", "title": None, "labelColor": LIGHT.quiet},
+                    "legend": {"orient": "bottom", "title": None, "labelColor": ink.quiet},
                 },
                 "order": {"field": "place"},
             },
         },
         data.assign(place=data["what"].map(words.index)),
+        ink,
     )  # fmt: skip
 
 
-def tonnes_by_day(summary: Summary, column: str) -> Spec:
+def tonnes_by_day(summary: Summary, column: str, *, ink: Ink = LIGHT) -> Spec:
     """Draw the tonnes of one flow by day.
 
     Parameters
@@ -109,6 +177,8 @@ def tonnes_by_day(summary: Summary, column: str) -> Spec:
     summary : Summary
     column : str
         Of its table of days.
+    ink : Ink
+        Colours of the theme.
 
     Returns
     -------
@@ -117,16 +187,18 @@ def tonnes_by_day(summary: Summary, column: str) -> Spec:
     """
     data = summary.tables["days"][["day", column]].set_axis(["day", "tonnes"], axis=1)
     y = {"field": "tonnes", "type": "quantitative", "title": "t", "axis": {"tickCount": 4}}
-    bar = {"type": "bar", "color": LIGHT.series, "width": {"band": 0.7}}
-    return _sized({"mark": bar, "encoding": {"x": _day(summary), "y": y}}, data)
+    bar = {"type": "bar", "color": ink.series, "width": {"band": 0.7}}
+    return _sized({"mark": bar, "encoding": {"x": _day(summary), "y": y}}, data, ink)
 
 
-def closures_by_day(summary: Summary) -> Spec:
+def closures_by_day(summary: Summary, *, ink: Ink = LIGHT) -> Spec:
     """Draw every closure by day with its half-width, about the line at 100 %.
 
     Parameters
     ----------
     summary : Summary
+    ink : Ink
+        Colours of the theme.
 
     Returns
     -------
@@ -150,8 +222,8 @@ def closures_by_day(summary: Summary) -> Spec:
     data = pd.concat(pieces) if pieces else pd.DataFrame({"day": [], "value": [], "width": [], "what": []})
     data = data.assign(low=data["value"] - data["width"], high=data["value"] + data["width"])
     y = {"type": "quantitative", "scale": {"zero": False}, "title": None, "axis": {"tickCount": 4}}
-    inks = [LIGHT.series, SECOND, "#009E73", "#CC79A7"]
-    legend = {"orient": "bottom", "title": None, "labelColor": LIGHT.quiet}
+    inks = [ink.series, SECOND, "#009E73", "#CC79A7"]
+    legend = {"orient": "bottom", "title": None, "labelColor": ink.quiet}
     colour = {
         "field": "what",
         "type": "nominal",
@@ -168,12 +240,12 @@ def closures_by_day(summary: Summary) -> Spec:
             "mark": {"type": "point", "filled": True, "size": 30},
             "encoding": {"y": {"field": "value", **y}, "color": colour, "shape": shape},
         },
-        *_rule("", 100.0),
+        *_rule("", 100.0, ink),
     ]
     apart = {"field": "what", "scale": {"domain": told, "paddingOuter": 0.5}}
     for layer in layers[:2]:
         layer["encoding"] |= {"x": _day(summary), "xOffset": apart}
-    return _sized({"layer": layers}, data)
+    return _sized({"layer": layers}, data, ink)
 
 
 def svg(spec: Spec, name: str) -> str:
@@ -214,9 +286,9 @@ def _day(summary: Summary) -> dict[str, Any]:
     return {"field": "day", "type": "ordinal", "scale": {"domain": days}, "axis": axis}
 
 
-def _rule(word: str, value: float) -> list[dict[str, Any]]:
+def _rule(word: str, value: float, ink: Ink) -> list[dict[str, Any]]:
     """A dashed rule with its word at the left."""
-    rule = {"type": "rule", "color": LIGHT.alarm if word else LIGHT.quiet, **DASHED}
+    rule = {"type": "rule", "color": ink.alarm if word else ink.quiet, **DASHED}
     text = {
         "type": "text",
         "text": word,
@@ -225,7 +297,7 @@ def _rule(word: str, value: float) -> list[dict[str, Any]]:
         "dy": -2,
         "dx": 3,
         "fontSize": 10,
-        "color": LIGHT.alarm_text,
+        "color": ink.alarm_text,
     }
     here = {"y": {"datum": value}}
     whole = {"data": {"values": [{}]}, "mark": rule, "encoding": {**here, "x": None, "xOffset": None}}
@@ -233,9 +305,9 @@ def _rule(word: str, value: float) -> list[dict[str, Any]]:
     return [whole, words]
 
 
-def _sized(spec: Spec, data: pd.DataFrame) -> Spec:
+def _sized(spec: Spec, data: pd.DataFrame, ink: Ink) -> Spec:
     """Give a specification its size, fonts and data; missing numbers are null."""
-    plain = frame_spec(LIGHT)
+    plain = frame_spec(ink)
     axis = {**plain["config"]["axis"], "labelFontSize": 10, "titleFontSize": 10}
     plain["config"] = {**plain["config"], "axis": axis, "font": FONT}
     plain |= {"width": WIDTH, "height": HEIGHT, "autosize": {"type": "pad"}}
