@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from ingest import documents, journal
+from ingest.documents import Document
 from ingest.errors import StoreError
 from ingest.journal import Line
 from monitor.alerts import (
@@ -53,7 +54,7 @@ def known(folder: Path, unit: str) -> tuple[Alert, ...]:
     return tuple(sorted((from_body(one.body) for one in latest.values()), key=lambda alert: alert.number))
 
 
-def put(ledger: sqlite3.Connection, alerts: Iterable[Alert]) -> None:
+def put(ledger: sqlite3.Connection, alerts: Iterable[Alert]) -> tuple[Document, ...]:
     """Keep new and changed alerts as a step of the commit of a pass.
 
     Parameters
@@ -62,9 +63,15 @@ def put(ledger: sqlite3.Connection, alerts: Iterable[Alert]) -> None:
         In the transaction of the commit.
     alerts : iterable of Alert
         From `register.registered`.
+
+    Returns
+    -------
+    tuple of Document
+        The latest revision of each.
     """
-    for alert in alerts:
-        documents.put(ledger, unit=alert.unit, kind=KIND, key=alert.id, body=alert.body())
+    return tuple(
+        documents.put(ledger, unit=alert.unit, kind=KIND, key=alert.id, body=alert.body()) for alert in alerts
+    )
 
 
 def read(folder: Path, unit: str, now: datetime) -> tuple[tuple[Alert, State], ...]:

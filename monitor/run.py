@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from ingest import journal
 from ingest.intake import SETTLE, Outcome, take_in
 from ingest.ledger import Store
 from ingest.parts import month_edges, times_us
@@ -21,7 +22,8 @@ from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.catchup import Worked, catch_up
 from monitor.days import Plan, plan_of
-from monitor.desk import known, put
+from monitor.desk import known
+from monitor.noticing import changes_of, keep
 from monitor.progress import EXPORTS
 from monitor.register import registered
 from monitor.verdict import COLUMN
@@ -114,7 +116,7 @@ def run_pass(
         clock.append(time.process_time())
         told = tuple(_tell(pass_, before, plan, one) for plan, one in zip(plans, worked, strict=True))
         for plan in plans:
-            _register(pass_, store, plan.unit)
+            _register(pass_, store, plan)
         clock.append(time.process_time())
     steps = dict(zip(("exports", "months", "episodes"), np.diff(clock).round(3).tolist(), strict=True))
     notes = (*taken.notes, *(note for one in told for note in one.notes))
@@ -142,17 +144,19 @@ def _tell(pass_: Pass, before: Snapshot, plan: Plan, worked: Worked) -> UnitResu
     )
 
 
-def _register(pass_: Pass, store: Path, unit: Unit) -> None:
-    """Bring a unit's alerts up to date with its episodes, within the commit of the pass."""
-    view = pass_.view()
+def _register(pass_: Pass, store: Path, plan: Plan) -> None:
+    """Bring a unit's alerts up to date with its episodes, and put notices of that into the commit."""
+    view, unit, now = pass_.view(), plan.unit, datetime.now(UTC)
     months = view.months(unit.key, "cells")
     if not months:
         return
     starts = times_us(view.read(unit.key, "cells", first=month_edges(months[-1])[0], columns=["start"]))
     newest = datetime.fromtimestamp(0, UTC) + timedelta(microseconds=int(starts[-1])) + unit.cell
     names = [watch.name for watch in unit.watches]
-    changed = registered(unit.key, known(store, unit.key), view.episodes(unit.key), names, newest)
-    pass_.at_commit(partial(put, alerts=changed))
+    before, lines = known(store, unit.key), journal.lines(store, unit=unit.key)
+    changed = registered(unit.key, before, view.episodes(unit.key), names, newest)
+    told = changes_of(view, unit, before, changed, figures=plan.figures, lines=lines, newest=newest, now=now)
+    pass_.at_commit(partial(keep, alerts=changed, changes=told, unit=unit, now=now))
 
 
 def _episode(row: Any) -> Episode:
