@@ -19,7 +19,7 @@ from monitor.board import key_figures
 from monitor.coordinates import AGE, operating_point, regressors
 from monitor.evidence import Evidence, evidence_of
 from monitor.figures import figures_of
-from monitor.fit import counted
+from monitor.fit import counted, left_over
 from monitor.healthy import BLOCK, Baseline
 from monitor.hypotheses import (
     INSTRUMENT as OWN,
@@ -62,6 +62,7 @@ MOST = 5  # rows of each list of a verdict
 LEFT_OUT = 3  # suspects without which the figures are worked out
 
 NO_HEALTHY = "there is no healthy time to hold it against"
+NO_CHECK = "no reading can be checked by the others, so that nothing speaks for or against an instrument"
 TOO_LITTLE = "too little of the window can be told"
 WEAK = "what is seen is still too weak to say more"
 MIXED = "several causes at once, or one that is not in the list"
@@ -212,6 +213,8 @@ def explain(
     blank = _blank(unit, reference, window, is_provisional, mark)
     there = np.isfinite(counted(unit, window).reading).any(axis=1)
     baseline = reference.learn(there.tobytes())
+    if not left_over(unit, problem, window).freedom.any():
+        return replace(blank, reason=TOO_LITTLE if not there.any() else NO_CHECK)
     if baseline is None or reference.picture is None:
         return replace(blank, reason=NO_HEALTHY)
     evidence = evidence_of(unit, problem, baseline, window)

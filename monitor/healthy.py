@@ -209,7 +209,7 @@ def mean_of(value: Floats, size: int) -> Floats:
         Rows of a block.
     """
     whole = len(value) // size * size
-    parts = value[:whole].reshape(-1, size, value.shape[1])
+    parts = value[:whole].reshape(whole // size, size, value.shape[1])
     count = np.isfinite(parts).sum(axis=1)
     return np.where(2 * count >= size, np.nansum(parts, axis=1) / np.maximum(count, 1), np.nan)
 

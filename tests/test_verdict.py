@@ -21,6 +21,7 @@ from scipy.stats import multivariate_normal, norm
 from demo_data.exports import UNIT_FILE, make
 from ingest.balance import problem_of
 from ingest.cells import Cells
+from ingest.episodes import to_rows
 from ingest.instruments import measured
 from ingest.ledger import Store
 from ingest.unit import Prices
@@ -29,6 +30,8 @@ from monitor import verdict
 from monitor.coarse import coarse, coarse_unit
 from monitor.coordinates import coordinates, regressors, shares_of
 from monitor.evidence import Evidence, bent
+from monitor.explain import Reference, explain, picture_of
+from monitor.healthy import baseline_of
 from monitor.hypotheses import INSTRUMENT, NONE, REACTOR, SPREADS, Hypothesis, believed, suspects
 from monitor.losses import loss_of
 from monitor.ridge import fit
@@ -37,8 +40,10 @@ from monitor.settling import settling
 from monitor.tellverdict import SHAPES, headline, lines
 from monitor.verdict import COLUMN, LEAD, WORDS, as_text, read
 from monitor.verdicts import with_verdicts
+from tests.loops_made import oxide_readings, oxide_text
 from tests.residuals_made import healthy
 from tests.test_half_widths import DEMO
+from tests.unitfiles_made import loaded
 from tests.verdicts_judged import PARALLEL, Judge, tried
 from tests.verdicts_made import Fault, demo, propene, rows_of, with_faults
 
@@ -377,8 +382,6 @@ def verdicts(view, unit, episodes) -> list:
 
 
 def _rows(frame):
-    from ingest.episodes import to_rows
-
     return to_rows(frame)
 
 
@@ -436,8 +439,6 @@ def test_the_onset_of_a_step_is_found_within_two_hours():
 
 
 def _explained(judge: Judge, cells, window: slice) -> verdict.Verdict:
-    from monitor.explain import Reference, explain, picture_of
-
     made = judge.made
     picture = picture_of(made.unit, made.problem, rows_of(made.cells, slice(0, 144)))
     reference = Reference((0, 1), True, picture, lambda there: judge.baseline)
@@ -510,6 +511,75 @@ def test_a_small_channel_cannot_be_told_from_its_product(judges):
         said = judge.say(with_faults(judge.made, judge.windows[3], [Fault(f"AI-220 {name}", size)]))
         assert said.word == "cannot tell"
         assert {name, f"AI-220 {name}"} <= set(said.names)
+
+
+def loop_cells(days: int = 3) -> tuple:
+    """The ethylene oxide loop, each flow of a species read by itself, with one error per cell."""
+    readings = oxide_readings()
+    exact = np.array([one.value for one in readings])
+    rng = np.random.default_rng(7)
+    value = exact * (1 + 0.005 * rng.standard_normal((days * 144, len(exact))))
+    shape = value.shape
+    start = 600_000_000 * np.arange(len(value))
+    cells = Cells(
+        start, value, np.ones(shape, np.float32), np.zeros(shape, np.int8), np.zeros(len(value), np.int8)
+    )
+    return oxide_text(readings), cells
+
+
+def said_of(unit, cells: Cells, window: Cells) -> verdict.Verdict:
+    """The verdict on a window against the cells before it."""
+    problem = problem_of(unit)
+    picture = picture_of(unit, problem, cells)
+    reference = Reference((0, 1), True, picture, lambda there: _learnt(unit, problem, cells, there))
+    first = int(window.start[0])
+    return explain(unit, problem, reference, window, first, is_provisional=False, mark="")
+
+
+def _learnt(unit, problem, cells, there: bytes):
+    return baseline_of(unit, problem, cells, np.frombuffer(there, dtype=bool))
+
+
+def test_a_loop_without_shares_of_its_outlet_is_judged_by_its_balance_alone(tmp_path):
+    # by hand: effluent less product is the recycle, so that only fresh ethylene and oxygen check the product
+    text, cells = loop_cells()
+    unit = loaded(tmp_path, text)
+    before, window = rows_of(cells, slice(0, 384)), rows_of(cells, slice(384, None))
+    found = said_of(unit, before, window)
+    assert (found.word, found.loss, found.suspects) == ("nothing moved", None, ())
+    value = window.value.copy()
+    value[:, 1] *= 1.1
+    found = said_of(unit, before, replace(window, value=value))
+    assert found.word == "instrument"
+    assert "I1" in {one.name for one in found.suspects}
+    assert math.isnan(found.reaction_p)
+
+
+def test_where_no_reading_checks_another_it_says_so():
+    # flow meters and certificates alone: as many readings as things to find out
+    meters = tuple(one for one in DEMO.instruments if not one.analyzer and one.name != "FI-210")
+    unit = replace(DEMO, instruments=meters, shared=(), analyzers=())
+    judge = Judge(demo(46))
+    columns = [[one.name for one in judge.made.unit.instruments].index(one.name) for one in meters]
+    cells = judge.made.cells
+    bare = replace(cells, value=cells.value[:, columns], share=cells.share[:, columns])
+    bare = replace(bare, condition=cells.condition[:, columns])
+    found = said_of(unit, rows_of(bare, slice(0, 960)), rows_of(bare, slice(960, 1008)))
+    assert found.word == "cannot tell"
+    assert found.reason.startswith("no reading can be checked by the others")
+
+
+def test_a_channel_that_is_missing_is_left_out_of_the_healthy_time_too(judges):
+    # law: without that reading the rest is held against itself, so that nothing has moved
+    made = judges[0].made
+    place = [one.name for one in made.unit.instruments].index("AI-220 acetone")
+    window = rows_of(made.cells, judges[0].windows[1])
+    value = window.value.copy()
+    value[:, place] = np.nan
+    found = said_of(made.unit, made.healthy, replace(window, value=value))
+    assert found.word == "nothing moved"
+    assert found.loss is None
+    assert found.balance_p > 0.01
 
 
 def test_a_verdict_changes_nothing_that_it_is_given(judges):
