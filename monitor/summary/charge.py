@@ -7,7 +7,7 @@ from whole days spread evenly over it, since over so long a time only calibratio
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from datetime import datetime, timedelta
 
 import numpy as np
@@ -16,17 +16,17 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from ingest.balance import Problem
-from ingest.cells import DOWN, RUNNING, cells_from_frame
-from ingest.parts import instant_us
+from ingest.cells import DOWN, RUNNING, Cells, cells_from_frame
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.amounts import amounts_of, reconciled_rows
+from monitor.coarse import coarse, coarse_unit
 from monitor.figures import Figure, evaluate, weighted
 from monitor.summary.differences import Level, responses
-from monitor.summary.record import EXCLUDED, inside
+from monitor.summary.record import EXCLUDED, filled, inside
 from monitor.windows import MODES, TWO_SIDED_95
 
-SAMPLED_CELLS = 2880  # 20 days of 10-minute cells
+SAMPLED_DAYS = 20
 DAY = timedelta(days=1)
 
 Floats = NDArray[np.float64]
@@ -149,12 +149,20 @@ def _sampled(
     """Responses of the figures over days spread evenly over a charge, (f, 2, s)."""
     day_us = DAY // timedelta(microseconds=1)
     days = np.unique(start // day_us)
-    most = max(1, SAMPLED_CELLS * unit.cell // DAY)
-    chosen = days[np.linspace(0, len(days) - 1, min(most, len(days))).round().astype(int)]
-    pieces = [
-        snapshot.read(unit.key, "cells", first=int(day * day_us), last=int((day + 1) * day_us))
-        for day in np.unique(chosen)
-    ]
-    frame = pa.concat_tables(pieces).to_pandas(ignore_metadata=True).set_index("start")
-    amounts = amounts_of(unit, problem, cells_from_frame(unit, frame))[1]
-    return responses(unit, amounts, figures, instant_us(frame.index[0]), instant_us(frame.index[-1]) + 1)
+    chosen = days[np.linspace(0, len(days) - 1, min(SAMPLED_DAYS, len(days))).round().astype(int)]
+    rough, edges = (
+        coarse_unit(unit),
+        [(int(day * day_us), int((day + 1) * day_us)) for day in np.unique(chosen)],
+    )
+    pieces = [coarse(rough, _cells(snapshot, unit, one)) for one in edges]
+    names = [field.name for field in fields(Cells)]
+    cells = Cells(*(np.concatenate([getattr(one, name) for one in pieces]) for name in names))
+    amounts = amounts_of(rough, problem, cells)[1]
+    return responses(rough, amounts, figures, int(cells.start[0]), int(cells.start[-1]) + 1)
+
+
+def _cells(snapshot: Snapshot, unit: Unit, edges: tuple[int, int]) -> Cells:
+    """Read the cells between two instants [us UTC] without holes."""
+    table = snapshot.read(unit.key, "cells", first=edges[0], last=edges[1])
+    frame = table.to_pandas(ignore_metadata=True).set_index("start")
+    return filled(cells_from_frame(unit, frame), unit.cell // timedelta(microseconds=1))

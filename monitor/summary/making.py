@@ -21,6 +21,7 @@ from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor import desk, store, wording
 from monitor.amounts import amount_names
+from monitor.coarse import coarse_unit
 from monitor.figures import Figure, figures_of
 from monitor.summary import comparisons, exclusions, results, shortfall, span, terms, tonnes, witness
 from monitor.summary.charge import Charge, charge_of
@@ -75,6 +76,7 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
         Budget or guarantee names a figure that the readings do not give.
     """
     job = _job(folder, unit, asked)
+    earlier = _earlier(job)
     left_out = exclusions.on_word(job.lines, asked)
     record = _record(job, asked, left_out)
     if record is None:
@@ -101,7 +103,7 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
         "hours": _hours(job, record, made, figures, left_out),
         "tonnes": _tonnes(job, made),
         "figures": figures,
-        "comparisons": _comparisons(job, record, charge),
+        "comparisons": _comparisons(job, record, earlier, charge),
         "expectation": _expectation(job, record),
         "catalyst": _catalyst(job, charge),
         "days": _days(job, made, days),
@@ -123,6 +125,35 @@ def summarise(folder: Path, unit: Unit, asked: Span, stamp: Stamp) -> Summary:
         revision=0,
         tables={name: settled(_in_plant_time(frame, unit.time_zone)) for name, frame in tables.items()},
     )
+
+
+def compared(folder: Path, unit: Unit, asked: Span, other: Span) -> pd.DataFrame:
+    """Compare a span with any other one, as its summary compares it with last month.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    asked, other : Span
+
+    Returns
+    -------
+    DataFrame
+        As the table `comparisons` of a summary; no rows where the store holds nothing of one of them.
+    """
+    job = _job(folder, unit, asked)
+    levels = {}
+    for one in (asked, other):
+        record = _record(job, one, exclusions.on_word(job.lines, one))
+        if record is not None:
+            whole = Stretch(one.name, one.first_us, one.last_us, None)
+            levels[one.name] = level_of(unit, record, job.shown, whole)
+    here = {span.WHOLE: levels[asked.name]} if len(levels) == len({asked.name, other.name}) else {}
+    there = {other.name: levels[other.name]} if here else {}
+    table = comparisons.table(job.shown, here, {span.WHOLE: there})
+    return settled(table[table["figure"].isin(_compared(job))])
 
 
 def _job(folder: Path, unit: Unit, asked: Span) -> _Job:
@@ -167,8 +198,8 @@ def _charge(job: _Job, stretch: Stretch) -> Charge | None:
     return charge_of(job.snapshot, job.unit, job.problem, job.shown, span=edges, left_out=left_out)
 
 
-def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]) -> pd.DataFrame:
-    """Compare every stretch with what lies before it and with what was stated."""
+def _earlier(job: _Job) -> dict[str, Level]:
+    """Give the figures of the spans before; each record is let go before the next is read."""
     earlier: dict[str, Level] = {}
     names = ("last month", "same month last year") if job.span.is_month else ("days before", "a year before")
     for name, other in zip(names, (span.before(job.span), span.year_before(job.span)), strict=True):
@@ -176,6 +207,13 @@ def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]
         if there is not None:
             whole = Stretch(other.name, other.first_us, other.last_us, None)
             earlier[name] = level_of(job.unit, there, job.shown, whole)
+    return earlier
+
+
+def _comparisons(
+    job: _Job, record: Record, earlier: Mapping[str, Level], charges: Mapping[str, Charge | None]
+) -> pd.DataFrame:
+    """Compare every stretch with what lies before it and with what was stated."""
     here = {stretch.name: level_of(job.unit, record, job.shown, stretch) for stretch in job.stretches}
     sources = record.amounts.systematic.shape[2]
     targets = comparisons.targets_of(job.unit, job.shown, sources)
@@ -183,11 +221,14 @@ def _comparisons(job: _Job, record: Record, charges: Mapping[str, Charge | None]
     for stretch in job.stretches:
         charge = charges[stretch.name]
         since = {} if charge is None else {"the charge so far": charge.level}
-        against[stretch.name] = earlier | since | targets
-    # What has no better side is compared by nobody, but for the load.
-    told = [one for one in job.shown if one.higher_is_better is not None or one in job.rates]
+        against[stretch.name] = {**earlier, **since, **targets}
     table = comparisons.table(job.shown, here, against)
-    return table[table["figure"].isin([one.name for one in told])]
+    return table[table["figure"].isin(_compared(job))]
+
+
+def _compared(job: _Job) -> list[str]:
+    """Name what is compared: what has no better side is compared by nobody, but for the load."""
+    return [one.name for one in job.shown if one.higher_is_better is not None or one in job.rates]
 
 
 def _expectation(job: _Job, record: Record) -> pd.DataFrame:
@@ -197,10 +238,11 @@ def _expectation(job: _Job, record: Record) -> pd.DataFrame:
     found = [pd.DataFrame(columns=list(shortfall.COLUMNS))]
     known = None
     if healthy is not None:
-        known = read(job.snapshot, job.unit, job.problem, (healthy.first, healthy.last), _none(job))
+        span_of_it = (healthy.first, healthy.last)
+        known = read(job.snapshot, job.unit, job.problem, span_of_it, _none(job), coarsely=True)
     if healthy is not None and known is not None:
         edges = (instant_us(healthy.first), instant_us(healthy.last))
-        learnt = shortfall.hours_of(job.unit, known, figures, *edges)
+        learnt = shortfall.hours_of(coarse_unit(job.unit), known, figures, *edges)
         for stretch in job.stretches:
             here = shortfall.hours_of(job.unit, record, figures, stretch.first_us, stretch.last_us)
             found.append(shortfall.shortfall(job.unit, figures, learnt, here, stretch))

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, fields
 from datetime import datetime
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -17,6 +18,7 @@ from ingest.reconcile import NOT_CONVERGED, SOLVED, States
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor.amounts import Amounts, amounts_of, with_formed
+from monitor.coarse import coarse, coarse_unit
 
 PIECE = 8192  # cells reconciled in one go; keeps the errors of one piece within some tens of MB
 EXCLUDED = -1  # operating condition of cells that people left out: neither down nor running
@@ -45,7 +47,13 @@ class Record:
 
 
 def read(
-    snapshot: Snapshot, unit: Unit, problem: Problem, edges: tuple[datetime, datetime], excluded: pd.DataFrame
+    snapshot: Snapshot,
+    unit: Unit,
+    problem: Problem,
+    edges: tuple[datetime, datetime],
+    excluded: pd.DataFrame,
+    *,
+    coarsely: bool = False,
 ) -> Record | None:
     """Read the cells of a span and work out their amounts.
 
@@ -61,6 +69,8 @@ def read(
         From the first cell start to before the second, zone-aware.
     excluded : DataFrame
         Columns start and end: spans that people left out of the steady figures.
+    coarsely : bool
+        Join cells to those of `coarse.coarse_unit`, for what is looked at by the hour.
 
     Returns
     -------
@@ -73,6 +83,9 @@ def read(
         return None
     frame = table.to_pandas(ignore_metadata=True).set_index("start")
     cells = filled(cells_from_frame(unit, frame), int(unit.cell.total_seconds() * 1e6))
+    if coarsely:
+        unit = coarse_unit(unit)
+        cells = coarse(unit, cells)
     states, amounts = _worked(unit, problem, cells)
     out = inside(cells.start, excluded) & (cells.operating == RUNNING)
     operating = np.where(out, EXCLUDED, amounts.operating).astype(np.int8)
@@ -132,16 +145,26 @@ def inside(start_us: NDArray[np.int64], spans: pd.DataFrame) -> NDArray[np.bool_
 
 
 def _worked(unit: Unit, problem: Problem, cells: Cells) -> tuple[States, Amounts]:
-    """Bring the cells to balance, some at a time."""
-    pieces = [
-        amounts_of(unit, problem, _rows(cells, slice(at, at + PIECE)))
-        for at in range(0, len(cells.start), PIECE)
-    ]
-    states = States(
-        *(np.concatenate([getattr(one, field.name) for one, _ in pieces]) for field in fields(States))
-    )
-    joined = {name: np.concatenate([getattr(one, name) for _, one in pieces]) for name in PER_CELL}
-    return states, with_formed(unit, _with(pieces[0][1], **joined))
+    """Bring the cells to balance, some at a time, into room that is there once."""
+    count = len(cells.start)
+    slices = [slice(at, min(at + PIECE, count)) for at in range(0, count, PIECE)]
+    states, amounts = amounts_of(unit, problem, _rows(cells, slices[0]))
+    rooms = {field.name: _room(getattr(states, field.name), count) for field in fields(States)}
+    joined = {name: _room(getattr(amounts, name), count) for name in PER_CELL}
+    for rows in slices[1:]:
+        found, more = amounts_of(unit, problem, _rows(cells, rows))
+        for name, room in rooms.items():
+            room[rows] = getattr(found, name)
+        for name, room in joined.items():
+            room[rows] = getattr(more, name)
+    return States(**rooms), with_formed(unit, _with(amounts, **joined))
+
+
+def _room(first: NDArray[Any], count: int) -> NDArray[Any]:
+    """Room for so many cells, the first of them filled."""
+    room = np.empty((count, *first.shape[1:]), first.dtype)
+    room[: len(first)] = first
+    return room
 
 
 def _rows(cells: Cells, which: slice) -> Cells:
