@@ -12,8 +12,9 @@ import click
 
 from ingest.errors import OutletError
 from monitor.commands.alerting import alerts
-from monitor.commands.asking import check, describe, lag, suspects
+from monitor.commands.asking import ageing, check, describe, lag, suspects
 from monitor.commands.keeping import exports, verify
+from monitor.commands.notifying import notify
 from monitor.commands.reporting import exclude, month
 from monitor.commands.running import demo, follow, page, run
 from monitor.commands.shared import FINE, STOPPED, STOPPED_WORDS, YOURS
@@ -65,5 +66,20 @@ def outlet() -> None:
     """
 
 
-for one in (demo, check, describe, run, follow, page, alerts, lag, suspects, exports, verify, month, exclude):
+for one in (
+    demo,
+    check,
+    describe,
+    run,
+    follow,
+    page,
+    alerts,
+    lag,
+    suspects,
+    ageing,
+    exports,
+    verify,
+    month,
+    exclude,
+):
     outlet.add_command(one)

@@ -1,4 +1,4 @@
-"""Commands that answer questions about unit files, exports, instruments: check, describe, lag, suspects."""
+"""Commands that answer questions: check, describe, lag, suspects, ageing."""
 
 from __future__ import annotations
 
@@ -104,6 +104,20 @@ def suspects(unit_file: Path, store: Path, as_json: bool, **days: datetime | Non
     found = report(unit, cells(store, unit, span), None if healthy is None else cells(store, unit, healthy))
     say(as_table(found), suspected(found), as_json=as_json)
     return YOURS if found.findings else FINE
+
+
+@click.command()
+@unit_option
+@store_option
+@json_option
+def ageing(unit_file: Path, store: Path, as_json: bool) -> None:
+    """Tell how fast the figures of drift watches age, and by which dates their limits are reached."""
+    from ingest.unitfile import load
+    from monitor.aged import aged, as_table
+    from monitor.tellageing import told
+
+    found = aged(store, load(unit_file))
+    say(as_table(found), told(found), as_json=as_json)
 
 
 def _spans(
