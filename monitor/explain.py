@@ -266,7 +266,8 @@ def _along(evidence: Evidence, direction: Floats) -> Floats:
 def _odds(case: _Case, belief: Belief, hypotheses: Sequence[Hypothesis], name: str) -> Floats:
     start = case.cells.start
     length = (int(start[-1]) - int(start[0])) / (BLOCK // _US) + 1
-    share = min(1.0, 3 * len(calibrated_at(case.unit, case.cells)[name]) / length)
+    hours = {at // (BLOCK // _US) for at in calibrated_at(case.unit, case.cells)[name]}
+    share = min(1.0, 3 * len(hours) / length)
     return odds(case.unit, belief, hypotheses, name, share)
 
 

@@ -175,6 +175,19 @@ def _plain(value: Any) -> Any:
     return value
 
 
+def is_marked(text: str, mark: str) -> bool:
+    """Tell whether a line of text is a verdict of some mark, without reading all of it.
+
+    Parameters
+    ----------
+    text : str
+        As `as_text` gives it.
+    mark : str
+        Of a verdict.
+    """
+    return text.endswith(f'"mark": {json.dumps(mark)}}}')
+
+
 def read(row: Mapping[str, Any]) -> Verdict | None:
     """Read the verdict of an episode.
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import timedelta
 from functools import lru_cache
 from typing import Any
@@ -26,7 +26,7 @@ from monitor.coarse import coarse, coarse_unit
 from monitor.days import rows
 from monitor.explain import Reference, explain, picture_of
 from monitor.healthy import LENGTH, Baseline, baseline_of
-from monitor.verdict import COLUMN, INSTRUMENT, LEAD, REACTOR, as_text, read
+from monitor.verdict import COLUMN, INSTRUMENT, LEAD, REACTOR, as_text, is_marked
 
 METHOD = "1"  # to be raised when the same cells give another verdict
 BEFORE = timedelta(days=30)  # healthy time where none is stated: so much before the episode
@@ -44,6 +44,7 @@ class _Window:
     ends: tuple[int, ...]
     healthy: Span
     is_provisional: bool
+    mark: str = ""  # of all this, the unit file and the method
 
 
 def with_verdicts(
@@ -72,14 +73,15 @@ def with_verdicts(
     known = {_key(row): row.get(COLUMN) for row in before.episodes(unit.key).to_dict("records")}
     end_us, same = _end_us(view, unit), _same_in(before, view, unit)
     unit = coarse_unit(unit)
+    made_with = f"{METHOD} {unit!r}"
     refer = lru_cache(maxsize=4)(lambda span: _reference(view, unit, problem, span))
     told = []
     for row in episodes.to_dict("records"):
         window, text = _window(unit, row, end_us), known.get(_key(row))
-        old = read({COLUMN: text})
-        is_kept = old is not None and old.mark == _mark(unit, window)
+        mark = hashlib.sha256(f"{made_with} {window!r}".encode()).hexdigest()[:16]
+        is_kept = isinstance(text, str) and is_marked(text, mark)
         is_kept = is_kept and same(_with_lead(window)) and same(window.healthy)
-        told.append(text if is_kept else _verdict(view, unit, problem, window, refer))
+        told.append(text if is_kept else _verdict(view, unit, problem, replace(window, mark=mark), refer))
     return episodes.assign(**{COLUMN: pd.Series(told, index=episodes.index, dtype="str")})
 
 
@@ -112,11 +114,6 @@ def _window(unit: Unit, row: Mapping[Any, Any], end_us: int) -> _Window:
 
 def _us(moment: Any) -> int:
     return round(float(moment.timestamp()) * 1e6)
-
-
-def _mark(unit: Unit, window: _Window) -> str:
-    """Tell in one word what a verdict is made with, but for the data."""
-    return hashlib.sha256(f"{METHOD} {unit!r} {window!r}".encode()).hexdigest()[:16]
 
 
 def _same_in(before: Snapshot, view: Snapshot, unit: Unit) -> Callable[[Span], bool]:
@@ -183,7 +180,7 @@ def _verdict(
         if seen is None or not len(seen.start) or seen.start[-1] < first:
             continue
         begin = max(first, int(seen.start[0]))
-        reference, mark = refer(window.healthy), _mark(unit, window)
+        reference, mark = refer(window.healthy), window.mark
         early = window.is_provisional
         found = explain(unit, problem, reference, seen, begin, is_provisional=early, mark=mark)
         text = as_text(found)

@@ -21,6 +21,7 @@ from scipy.stats import multivariate_normal, norm
 from demo_data.exports import UNIT_FILE, make
 from ingest.balance import problem_of
 from ingest.cells import Cells
+from ingest.conditions import CALIBRATING, GOOD
 from ingest.episodes import to_rows
 from ingest.instruments import measured
 from ingest.ledger import Store
@@ -436,6 +437,29 @@ def test_the_onset_of_a_step_is_found_within_two_hours():
         found = _explained(judge, cells, window)
         assert found.suspects[0].name == name
         assert abs(found.onset_us - int(made.cells.start[begins])) <= 2 * 3_600_000_000
+
+
+def test_a_fault_that_begins_with_a_calibration_speaks_for_an_instrument():
+    # by hand: of 57 hours three lie near the calibration; chance 0.3 over 3 / 57 raises the odds 5.7 times
+    judge = Judge(demo(47))
+    made, window = judge.made, judge.windows[0]
+    lead = slice(window.start - LEAD // made.unit.cell, window.start)
+    fault = Fault("AI-220 acetone", 3 * judge.visible["AI-220 acetone"])
+    parts = rows_of(made.cells, lead), with_faults(made, window, [fault])
+    cells = Cells(*(np.concatenate([getattr(one, f) for one in parts]) for f in Cells.__slots__))
+    gas = replace(cells, condition=np.where(cells.condition == CALIBRATING, GOOD, cells.condition))
+    condition = gas.condition.copy()
+    channels = [place for place, one in enumerate(made.unit.instruments) if one.analyzer]
+    condition[np.ix_(range(len(cells.start) - 50, len(cells.start) - 48), channels)] = CALIBRATING
+    plain, after = (_explained(judge, one, window) for one in (gas, replace(gas, condition=condition)))
+    assert (plain.calibrated, after.calibrated) == ("", "AI-220")
+    odds = [one.suspects[0].chance / one.suspects[1].chance for one in (plain, after)]
+    names = [{one.name for one in found.suspects[:2]} for found in (plain, after)]
+    assert names == [{"acetone", "AI-220 acetone"}] * 2
+    assert after.suspects[0].name == "AI-220 acetone"
+    raised = odds[1] * (odds[0] if plain.suspects[0].name == "acetone" else 1 / odds[0])
+    assert raised == pytest.approx(0.3 / (3 / 57), rel=0.05)
+    assert any("was calibrated just then" in line for line in lines(after, made.unit))
 
 
 def _explained(judge: Judge, cells, window: slice) -> verdict.Verdict:
