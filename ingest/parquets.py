@@ -86,6 +86,12 @@ def _opened(path: Path) -> Iterator[Any]:
         ) from error
 
 
+def _look_at_zones(schema: Any) -> None:
+    """Read the zone of each time column while damage is still told as such: its name may be no text."""
+    for kind in filter(pa.types.is_timestamp, schema.types):
+        str(kind.tz)
+
+
 def _is_utf8(column: Any) -> bool:
     return bool(column.physical_type == "BYTE_ARRAY" and column.converted_type == "UTF8")
 
@@ -116,6 +122,7 @@ def open_parquet(
     with _opened(path) as raw:
         header = tuple(raw.schema_arrow.names)
         _refuse_size(path.name, raw.metadata, len(header))
+        _look_at_zones(raw.schema_arrow)
     file = ParquetExport(path, header)
     layout = decide_layout(Place(path.name, 0), header, wanted or (), file.look)
     values = value_columns(header, layout, wanted)

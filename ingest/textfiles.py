@@ -347,7 +347,7 @@ def _types(dialect: Dialect, columns: Sequence[int], *, quick: bool) -> dict[int
     if quick and clock.form == "year first" and plain_clock:
         time = pa.timestamp("ns" if clock.fraction > 6 else "us", "UTC" if clock.offset else None)
     elif quick and clock.form in EPOCHS:
-        time = pa.float64()
+        time = pa.int64()  # as a float, 1.79e9 would be a time
     types = {layout.time: time, **dict.fromkeys(columns, pa.float64() if quick else pa.string())}
     types |= {layout.clock: pa.string()} if layout.clock is not None else {}
     return types | {i: _WORDS for i in (layout.tag, layout.quality, layout.unit) if i is not None}
@@ -370,9 +370,9 @@ def _clean(block: Block, dialect: Dialect, columns: Sequence[int]) -> bool:
     if time.null_count:
         return False
     if not pa.types.is_string(time.type) and len(time):
-        whole = pa.types.is_timestamp(time.type)
-        raw = plain(time, np.int64 if whole else np.float64)
-        unit = 1 / EPOCHS.get(dialect.clock.form, 1.0) if not whole or time.type.unit == "us" else 1000
+        raw = plain(time, np.int64)
+        fine = pa.types.is_timestamp(time.type) and time.type.unit == "ns"
+        unit = 1000 if fine else 1 / EPOCHS.get(dialect.clock.form, 1.0)
         if not (EARLIEST_US * unit <= raw.min() and raw.max() < LATEST_US * unit):
             return False
     return all(_finite(block.columns[i]) for i in columns)

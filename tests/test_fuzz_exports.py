@@ -6,8 +6,10 @@ the tests; OUTLET_FUZZ=20000 makes it so many of each.
 
 from __future__ import annotations
 
+import base64
 import io
 import os
+import re
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from datetime import UTC, datetime, timedelta
@@ -336,3 +338,27 @@ def test_half_of_the_texts_made_up_here_are_read_and_some_readings_are_rejected(
     assert len(read) > len(seen) / 3
     assert any(one.account.rejected for one in read)
     assert any(one.account.accepted for one in read)
+
+
+# Found by the twenty thousand.
+
+
+def test_a_time_zone_that_is_no_text_is_damage(tmp_path: Path):
+    kept = re.search(rb"/////[A-Za-z0-9+/=]+", SOUND[0])
+    assert kept is not None
+    told = base64.b64decode(kept[0])
+    assert b"UTC" in told
+    broken = SOUND[0].replace(kept[0], base64.b64encode(told.replace(b"UTC", b"\xfd\xfeC")))
+    (tmp_path / "x.parquet").write_bytes(broken)
+    with pytest.raises(ExportError, match="the Parquet file is damaged or cut short"):
+        opened(tmp_path / "x.parquet", zone=ZONE, wanted=WANTED)
+
+
+def test_seconds_in_exponents_are_no_times_whatever_stands_beside_them(tmp_path: Path):
+    # 1.79e9 has lost the last seven digits of the seconds that it once was.
+    for other in ("1792879260", "1792879260.5"):
+        path = tmp_path / "x.csv"
+        path.write_text(f"time,A\n1792879200,1\n{other},2\n1.79e9,3\n", encoding="utf-8")
+        batches = opened(path, zone=ZONE, wanted=WANTED)
+        assert sum(len(series.time) for readings in batches for series in readings.values()) == 2
+        assert [(one.row, one.text) for one in batches.account().evidence] == [(4, "1.79e9")]
