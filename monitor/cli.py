@@ -74,6 +74,7 @@ for one in (
     follow,
     page,
     alerts,
+    notify,
     lag,
     suspects,
     ageing,

@@ -11,18 +11,21 @@ import signal
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
-from datetime import timedelta
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from types import FrameType, TracebackType
 from typing import Any, Self
 
-from ingest.errors import OutletError
+from ingest.database import LEDGER
+from ingest.errors import OutletError, StoreError
 from ingest.intake import SUFFIXES
 from ingest.shown import shown
 from ingest.unit import Unit
 from ingest.unitfile import load
+from monitor.posting import post
 from monitor.progress import Bar
 from monitor.run import PassResult, run_pass
+from monitor.tellnotices import troubles
 
 LONGEST_S = 300.0  # between two tries of what does not succeed
 LEFT = "left for the next pass"
@@ -212,7 +215,7 @@ class Follower:
         self._pause_s = self._not_before_s = 0.0
 
     def look(self, now_s: float) -> None:
-        """Look once, and run a pass if there is something new.
+        """Look once, run a pass if there is something new, and send the notices that are due.
 
         Parameters
         ----------
@@ -221,11 +224,12 @@ class Follower:
         """
         self._look_at_units(now_s)
         there = [place for folder, place in self._folders.items() if self._is_there(folder, place, now_s)]
-        if now_s < self._not_before_s:
-            return
-        new = [path for place in there for path in place.new(now_s)]
-        if new or self._is_due:
-            self._run(new, now_s)
+        if now_s >= self._not_before_s:
+            new = [path for place in there for path in place.new(now_s)]
+            if new or self._is_due:
+                self._run(new, now_s)
+        if (self._store / LEDGER).exists():
+            self._notify()
 
     def _look_at_units(self, now_s: float) -> None:
         """Read unit files that have changed, once they are at rest."""
@@ -304,6 +308,21 @@ class Follower:
                 self._once(one.name, f"{one.name}: {one.words}\n  It is tried again later.")
             else:
                 self._told.pop(one.name, None)
+
+    def _notify(self) -> None:
+        """Send notices that are due; a target that takes none is told once, and again when it takes them."""
+        try:
+            results = post(self._units.values(), self._store, datetime.now(UTC))
+        except StoreError as fault:
+            self._once("notices", str(fault))
+            return
+        self._told.pop("notices", None)
+        for one in results:
+            what = f"notices to {one.unit}/{one.target}"
+            for words in troubles([one]):
+                self._once(what, words)
+            if not one.trouble and self._told.pop(what, ""):
+                self._warn(f"{what}: arrive again")
 
     def _once(self, what: str, words: str) -> None:
         """Tell a fault when it begins or becomes another one."""

@@ -135,6 +135,7 @@ ORDER = (
     "monitor.desk",
     "monitor.alerthealth",
     "monitor.tellalerts",
+    "monitor.tellnotices",
     "monitor.dossier",
     "monitor.shiftnote",
     "monitor.progress",
@@ -203,6 +204,7 @@ ORDER = (
     "monitor.commands.keeping",
     "monitor.commands.reporting",
     "monitor.commands.alerting",
+    "monitor.commands.notifying",
     "monitor.cli",
     "monitor.__main__",
 )

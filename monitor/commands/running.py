@@ -30,6 +30,7 @@ from monitor.commands.shared import (
 from monitor.page.launch import command
 
 if TYPE_CHECKING:
+    from ingest.unit import Unit
     from monitor.run import PassResult
 
 DEMO_DAYS = 60
@@ -154,7 +155,17 @@ def _take_in(
     say(asdict(result), passed(result), as_json=as_json)
     for one in result.set_aside:
         click.echo(one.words, err=True)
+    _notify(units, store)
     return YOURS if result.set_aside else FINE
+
+
+def _notify(units: Sequence[Unit], store: Path) -> None:
+    """Send the notices that are due; what does not arrive is told, and no fault of the pass."""
+    from monitor.posting import post
+    from monitor.tellnotices import troubles
+
+    for words in troubles(post(units, store, datetime.now(UTC))):
+        click.echo(words, err=True)
 
 
 def _must_be_free(port: int) -> None:
