@@ -255,7 +255,20 @@ def _span_words(start: pd.Timestamp, end: pd.Timestamp, zone: str) -> str:
     return f"{ends} ({wording.duration(end - start)})"
 
 
-def told(episodes: pd.DataFrame, figures: Mapping[str, Figure]) -> list[Told]:
+def drift_watches(unit: Unit) -> frozenset[str]:
+    """Name the watches that hold a figure against its expectation.
+
+    Parameters
+    ----------
+    unit : Unit
+        Its watches.
+    """
+    return frozenset(watch.name for watch in unit.watches if watch.test != "limits")
+
+
+def told(
+    episodes: pd.DataFrame, figures: Mapping[str, Figure], drifts: frozenset[str] = frozenset()
+) -> list[Told]:
     """Make what the sentences need out of the episodes of a unit.
 
     Parameters
@@ -264,16 +277,21 @@ def told(episodes: pd.DataFrame, figures: Mapping[str, Figure]) -> list[Told]:
         One row per episode: figure, side, limit, raised, cleared, worst, worst_at.
     figures : mapping of str to Figure
         Name -> figure.
+    drifts : frozenset of str
+        Watches whose limit is what was expected.
 
     Returns
     -------
     list of Told
         In the order of the rows.
     """
-    return [_told(row, figures.get(str(row["figure"]))) for row in episodes.to_dict("records")]
+    return [
+        _told(row, figures.get(str(row["figure"])), drift=row.get("watch") in drifts)
+        for row in episodes.to_dict("records")
+    ]
 
 
-def _told(row: Mapping[Hashable, Any], figure: Figure | None) -> Told:
+def _told(row: Mapping[Hashable, Any], figure: Figure | None, *, drift: bool) -> Told:
     """One row; an episode of a figure that the unit no longer has keeps its bare name."""
     return Told(
         figure=figure.label if figure else str(row["figure"]),
@@ -284,6 +302,7 @@ def _told(row: Mapping[Hashable, Any], figure: Figure | None) -> Told:
         cleared=None if pd.isna(row["cleared"]) else row["cleared"].to_pydatetime(),
         worst=float(row["worst"]),
         worst_at=None if pd.isna(row["worst_at"]) else row["worst_at"].to_pydatetime(),
+        drift=drift,
     )
 
 
@@ -308,7 +327,12 @@ def worst_first(episodes: pd.DataFrame) -> pd.DataFrame:
 
 
 def marked(
-    episodes: pd.DataFrame, figures: Mapping[str, Figure], *, now: datetime, zone: str
+    episodes: pd.DataFrame,
+    figures: Mapping[str, Figure],
+    *,
+    now: datetime,
+    zone: str,
+    drifts: frozenset[str] = frozenset(),
 ) -> pd.DataFrame:
     """Turn episodes into spans for a chart: an open one reaches to the end of what is known.
 
@@ -322,14 +346,16 @@ def marked(
         End of what is known, zone-aware.
     zone : str
         IANA name of the plant's zone.
+    drifts : frozenset of str
+        Watches whose limit is what was expected.
 
     Returns
     -------
     DataFrame
         Columns start, end, word, text.
     """
-    tales = told(episodes, figures)
-    words = [f"{'below' if t.side == 'low' else 'above'} {wording.plain(t.limit)}" for t in tales]
+    tales = told(episodes, figures, drifts)
+    words = [t.beyond.removesuffix(f" {t.unit}") for t in tales]
     text = [wording.episode(t, value=math.nan, half_width=math.nan, now=now, zone=zone) for t in tales]
     start = pd.to_datetime(episodes["raised"], utc=True)
     end = pd.to_datetime(episodes["cleared"], utc=True).fillna(pd.Timestamp(now))

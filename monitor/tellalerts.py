@@ -137,10 +137,28 @@ def told(alert: Alert, state: State, history: Sequence[tuple[datetime, Alert]], 
         yield f"  withdrawn: {alert.withdrawn}"
     if alert.past:
         yield "  was over when it was first seen, in data that came late"
-    for (_, before), (when, after) in pairwise(history):
-        changes = ", ".join(_changes(before, after, zone))
+    for when, changes in revised(history, zone):
         yield f"  {wording.local_time(when, zone)}  revised: {changes}"
     yield from (f"  {_line(line, zone)}" for line in state.lines)
+
+
+def revised(history: Sequence[tuple[datetime, Alert]], zone: str) -> Iterator[tuple[datetime, str]]:
+    """Tell what each pass changed in an alert.
+
+    Parameters
+    ----------
+    history : sequence of (datetime, Alert)
+        From `desk.history`.
+    zone : str
+        The plant's time zone.
+
+    Yields
+    ------
+    tuple of (datetime, str)
+        When, and what from what to what.
+    """
+    for (_, before), (when, after) in pairwise(history):
+        yield when, ", ".join(_changes(before, after, zone))
 
 
 def _changes(before: Alert, after: Alert, zone: str) -> Iterator[str]:
@@ -162,9 +180,25 @@ def _shown(value: Any, zone: str) -> str:
 def _line(line: Line, zone: str) -> str:
     """One line of the journal."""
     when = wording.local_time(datetime.fromisoformat(line.written), zone)
-    extra = f" as {line.detail['cause']}" if line.act == CLOSE else ""
     note = f": {line.note}" if line.note else ""
-    return f"{when}  {ACTS.get(line.act, line.act)}{extra} by {line.who}{note}"
+    return f"{when}  {act_words(line)}{note}"
+
+
+def act_words(line: Line) -> str:
+    """Say what a line of the journal is about, and whose it is.
+
+    Parameters
+    ----------
+    line : Line
+        About an alert.
+
+    Returns
+    -------
+    str
+        `closed as instrument by A. Moor`.
+    """
+    extra = f" as {line.detail['cause']}" if line.act == CLOSE else ""
+    return f"{ACTS.get(line.act, line.act)}{extra} by {line.who}"
 
 
 def wrote(line: Line) -> Iterator[str]:

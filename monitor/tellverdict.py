@@ -54,11 +54,11 @@ def lines(verdict: Verdict, unit: Unit) -> Iterator[str]:
     yield headline(verdict)
     yield from (f"  {line}" for line in _times(verdict, unit))
     if verdict.chances:
-        told = ", ".join(f"{name} {_percent(chance)}" for name, chance in verdict.chances)
+        told = ", ".join(f"{name} {percent(chance)}" for name, chance in verdict.chances)
         yield f"  chances: {told}"
-        yield f"  balance residuals like these while all is well: {_chance(verdict.balance_p)}"
-        yield f"  outlet shares like these while all is well: {_chance(verdict.reaction_p)}"
-        yield f"  what the likeliest cause leaves unexplained: {_chance(verdict.misfit_p)}"
+        yield f"  balance residuals like these while all is well: {chance_words(verdict.balance_p)}"
+        yield f"  outlet shares like these while all is well: {chance_words(verdict.reaction_p)}"
+        yield f"  what the likeliest cause leaves unexplained: {chance_words(verdict.misfit_p)}"
     for number, one in enumerate(verdict.suspects, start=1):
         yield f"  ({number}) {_suspect(one)}"
     yield from _figures(verdict)
@@ -68,7 +68,7 @@ def lines(verdict: Verdict, unit: Unit) -> Iterator[str]:
     if verdict.outside:
         yield f"  outside its healthy range: {', '.join(verdict.outside)}"
     for held in verdict.conditions:
-        yield f"  {held.instrument}: {held.words} for {_percent(held.share)} of the window"
+        yield f"  {held.instrument}: {held.words} for {percent(held.share)} of the window"
     yield from (f"  would settle it: {one}" for one in verdict.settle)
 
 
@@ -92,8 +92,14 @@ def _local(time_us: int, unit: Unit) -> str:
     return wording.local_time(wording.utc(time_us), unit.time_zone)
 
 
-def _percent(share: float) -> str:
-    """Write a chance or share; nothing is told as sure."""
+def percent(share: float) -> str:
+    """Write a chance or share; nothing is told as sure.
+
+    Parameters
+    ----------
+    share : float
+        0 to 1.
+    """
     if share < 0.001:
         return "under 0.1 %"
     if share > 0.999:
@@ -101,20 +107,39 @@ def _percent(share: float) -> str:
     return f"{wording.number(100 * share, 1)} %"
 
 
-def _chance(chance: float) -> str:
+def chance_words(chance: float) -> str:
+    """Write the chance of such a result while all is well.
+
+    Parameters
+    ----------
+    chance : float
+        0 to 1; NaN where there was nothing to test.
+    """
     if math.isnan(chance):
         return "not tested"
     return (
-        f"under 1 in {1 / LEAST_P:,.0f}".replace(",", "\u202f") if chance < LEAST_P else f"{_percent(chance)}"
+        f"under 1 in {1 / LEAST_P:,.0f}".replace(",", "\u202f") if chance < LEAST_P else f"{percent(chance)}"
     )
 
 
+def size_words(one: Suspect) -> str:
+    """Tell which way a suspect moved and by how much; empty where there is no single size.
+
+    Parameters
+    ----------
+    one : Suspect
+        Of a verdict.
+    """
+    if not math.isfinite(one.size):
+        return ""
+    moved = "up" if one.size > 0 else "down"
+    return f"moved {moved} by {wording.amount(100 * abs(one.size), 100 * one.half_width, '%')}"
+
+
 def _suspect(one: Suspect) -> str:
-    size = ""
-    if math.isfinite(one.size):
-        moved = "up" if one.size > 0 else "down"
-        size = f", moved {moved} by {wording.amount(100 * abs(one.size), 100 * one.half_width, '%')}"
-    return f"{one.name} ({one.kind}), {_percent(one.chance)}{size}; check first: {one.check}"
+    words = size_words(one)
+    size = f", {words}" if words else ""
+    return f"{one.name} ({one.kind}), {percent(one.chance)}{size}; check first: {one.check}"
 
 
 def _figures(verdict: Verdict) -> Iterator[str]:
@@ -126,12 +151,19 @@ def _figures(verdict: Verdict) -> Iterator[str]:
     yield f"  {'figure':<45} {'healthy':>9} {'shown':>9}{heads}"
     for shift in verdict.closures:
         held = {one.suspect: one.without for one in verdict.figures if one.name == shift.name}
-        cells = "".join(f"  {_value(held[name]):>{len(name) + 8}}" for name in names)
+        cells = "".join(f"  {value_words(held[name]):>{len(name) + 8}}" for name in names)
         label = f"{shift.name}, {shift.unit}"
-        yield f"  {label:<45} {_value(shift.before):>9} {_value(shift.now):>9}{cells}"
+        yield f"  {label:<45} {value_words(shift.before):>9} {value_words(shift.now):>9}{cells}"
 
 
-def _value(value: float) -> str:
+def value_words(value: float) -> str:
+    """Write a value as it was or is.
+
+    Parameters
+    ----------
+    value : float
+        NaN where it cannot be seen.
+    """
     return "not seen" if math.isnan(value) else wording.number(value, 2)
 
 
@@ -142,15 +174,24 @@ def _loss(verdict: Verdict, unit: Unit) -> Iterator[str]:
         return
     seems = {REACTOR: "", INSTRUMENT: " as the outlet reads, which is doubtful here"}
     yield (
-        f"yield {_signed(loss.yield_points)} points{seems.get(verdict.word, ' if the outlet reads right')}: "
-        f"conversion {_signed(loss.by_conversion)}, selectivity {_signed(loss.by_selectivity)}"
+        f"yield {signed(loss.yield_points)} points{seems.get(verdict.word, ' if the outlet reads right')}: "
+        f"conversion {signed(loss.by_conversion)}, selectivity {signed(loss.by_selectivity)}"
     )
-    yield "where it went: " + ", ".join(f"{name} {_signed(-points)}" for name, points in loss.by_product)
+    yield "where it went: " + ", ".join(f"{name} {signed(-points)}" for name, points in loss.by_product)
     if math.isfinite(loss.kg_h):
-        yield _made_less(loss, unit)
+        yield made_less(loss, unit)
 
 
-def _made_less(loss: Loss, unit: Unit) -> str:
+def made_less(loss: Loss, unit: Unit) -> str:
+    """Tell how much less of the wanted product is made, and what that is worth.
+
+    Parameters
+    ----------
+    loss : Loss
+        With a known `kg_h`.
+    unit : Unit
+        Names the species.
+    """
     told = f"{unit.wanted} {'lost' if loss.kg_h > 0 else 'gained'}: {wording.number(abs(loss.kg_h), 0)} kg/h"
     if not math.isfinite(loss.value_per_day):
         return told
@@ -159,13 +200,21 @@ def _made_less(loss: Loss, unit: Unit) -> str:
     return f"{told}, worth {worth} {loss.currency} per day; {made_up}"
 
 
-def _signed(value: float) -> str:
+def signed(value: float) -> str:
+    """Write a difference with its sign.
+
+    Parameters
+    ----------
+    value : float
+        Any unit.
+    """
     return ("+" if value > 0 else "") + wording.number(value, 2)
 
 
 def _shifts(title: str, shifts: tuple[Shift, ...]) -> Iterator[str]:
     if shifts:
         told = ", ".join(
-            f"{one.name} {_value(one.before)} to {_value(one.now)} {one.unit}".rstrip() for one in shifts
+            f"{one.name} {value_words(one.before)} to {value_words(one.now)} {one.unit}".rstrip()
+            for one in shifts
         )
         yield f"  {title}: {told}"

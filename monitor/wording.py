@@ -307,7 +307,10 @@ def limits(low: float | None, high: float | None, unit: str) -> str:
 
 @dataclass(frozen=True, slots=True)
 class Told:
-    """What is needed to tell of one episode; times zone-aware UTC, `cleared` None while it is open."""
+    """What is needed to tell of one episode; times zone-aware UTC, `cleared` None while it is open.
+
+    `drift` tells that the limit is what the figure was expected to be.
+    """
 
     figure: str
     unit: str
@@ -317,6 +320,15 @@ class Told:
     cleared: datetime | None
     worst: float
     worst_at: datetime | None
+    drift: bool = False
+
+    @property
+    def beyond(self) -> str:
+        """Say what the figure is beyond: `below 76.0 %`, `below the 82.38 % expected`."""
+        side = "below" if self.side == "low" else "above"
+        if self.drift:
+            return f"{side} the {number(self.limit, 2)} {self.unit}".rstrip() + " expected"
+        return f"{side} {plain(self.limit)} {self.unit}".strip()
 
 
 def episode(told: Told, *, value: float, half_width: float, now: datetime, zone: str) -> str:
@@ -338,9 +350,8 @@ def episode(told: Told, *, value: float, half_width: float, now: datetime, zone:
     str
         `Yield on feed has been below 76.0 % since 14 Apr 09:20 CEST (5 h); now 75.12 ± 0.63 %.`
     """
-    side = "below" if told.side == "low" else "above"
     what = f"{told.figure[:1].upper()}{told.figure[1:]}"
-    limit = f"{side} {plain(told.limit)} {told.unit}".strip()
+    limit = told.beyond
     since = local_time(told.raised, zone, now=now)
     worst = _worst(told, decimals_for(half_width) if half_width > 0 else 2, now, zone)
     if told.cleared is not None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from datetime import timedelta
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -15,9 +16,12 @@ from ingest.instruments import balance_instruments
 from ingest.ledger import Store
 from ingest.unit import Unit
 from ingest.unitfile import load
+from monitor import desk
 from monitor.amounts import amount_names
 from monitor.figures import figures_of
 from monitor.layout import BAR, figure_stage
+from monitor.register import registered
+from monitor.verdict import INSTRUMENT, Loss, Shift, Suspect, Verdict, Without, as_text
 from monitor.windows import FIELDS, MODES, REASONS
 
 DEMO = Path(__file__).parents[1] / "config" / "demo.toml"
@@ -106,19 +110,40 @@ def made_cells(of: Unit, start: pd.DatetimeIndex, off: np.ndarray) -> pd.DataFra
     )  # fmt: skip
 
 
+def verdict(last: pd.Timestamp) -> Verdict:
+    """An invented verdict: a channel reads low, the reactor is as it was."""
+    last_us = int(last.value // 1000)
+    name, hour_us = "AI-220 methacrolein", 3_600_000_000
+    return Verdict(
+        word=INSTRUMENT, reason="", is_provisional=False, first_us=last_us - 8 * hour_us, last_us=last_us,
+        healthy_us=(last_us - 900 * hour_us, last_us - 200 * hour_us), is_healthy_stated=True,
+        onset_us=last_us - 6 * hour_us, calibrated="AI-220",
+        chances=(("nothing", 0.0), ("instrument", 0.98), ("reactor", 0.02), ("several", 0.0)),
+        suspects=(Suspect(name, "instrument", 0.97, -0.031, 0.004, "the span gas of AI-220 methacrolein"),),
+        balance_p=1e-6, reaction_p=0.02, misfit_p=0.4,
+        closures=(Shift("yield on feed", "%", 82.7, 79.9), Shift("carbon closure", "%", 99.7, 98.1)),
+        adjustments=(Shift(name, "", 0.2, 3.4),), operating=(Shift("FI-201", "kg/h", 5300.0, 5310.0),),
+        outside=(), conditions=(), figures=(Without("yield on feed", "%", 79.9, name, 82.4),),
+        loss=Loss(-2.8, -0.1, -2.7, (("carbon dioxide", -1.4), ("acetone", 0.1)), 210.0, np.nan, np.nan, ""),
+        settle=("a laboratory sample of the outlet",), mark="made",
+    )  # fmt: skip
+
+
 def episode_frame(start: pd.DatetimeIndex) -> pd.DataFrame:
     """One open episode on yield, one that ended a day before the end on carbon closure."""
     last = start[-1]
     hours = [pd.Timedelta(hours=h) for h in (5, 30, 24, 2, 27)]
+    on = pd.Timedelta(hours=1)
     return pd.DataFrame(
         {
             "watch": ["yield on feed 8 h", "carbon closure 8 h"],
             "figure": ["yield on feed", "carbon closure"],
             "window": [pd.Timedelta(hours=8)] * 2, "side": ["low", "high"], "limit": [81.0, 103.0],
-            "priority": ["high", "low"], "raised": [last - hours[0], last - hours[1]],
+            "priority": ["high", "low"], "first_crossed": [last - hours[0] - on, last - hours[1] - on],
+            "raised": [last - hours[0], last - hours[1]],
             "cleared": pd.to_datetime([pd.NaT, last - hours[2]], utc=True),
             "suppressed": [False, False], "worst": [79.9, 104.2],
-            "worst_at": [last - hours[3], last - hours[4]],
+            "worst_at": [last - hours[3], last - hours[4]], "verdict": [as_text(verdict(last)), None],
         }
     )  # fmt: skip
 
@@ -138,4 +163,8 @@ def fill(
             pass_.splice(
                 of.key, stage, pa.Table.from_pandas(frame.copy().reset_index(), preserve_index=False)
             )
-        pass_.replace_episodes(of.key, episode_frame(start) if drop else episode_frame(start).iloc[1:])
+        episodes = episode_frame(start) if drop else episode_frame(start).iloc[1:]
+        pass_.replace_episodes(of.key, episodes)
+        newest = (start[-1] + of.cell).to_pydatetime()
+        names = [watch.name for watch in of.watches]
+        pass_.at_commit(partial(desk.put, alerts=registered(of.key, (), episodes, names, newest)))

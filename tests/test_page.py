@@ -65,7 +65,8 @@ def charts(test: AppTest) -> list[dict[str, Any]]:
 def test_now_shows_six_figures_with_half_width_unit_and_the_open_episode_in_words(monkeypatch, stores):
     said = text(shown(monkeypatch, stores["fallen"]))
     assert said.count("class='big'") == 6
-    assert "1 open episode, worst first" in said
+    assert "1 open alert, worst first" in said
+    assert "An instrument moved, not the reactor: AI-220 methacrolein" in said
     assert "Yield of methacrolein on isobutene fed has been below 81.0 % since 14 Apr 09:10 CEST" in said
     assert "± 0.28 %" in said
     assert "below 81.0 %" in said

@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import streamlit as st
 
-from monitor.page import balance, intake, now, shell, trend
+from monitor.page import alerts, balance, intake, now, shell, trend
 
 # A new view is one more line here.
 VIEWS = (
     ("Now", "now", now.view),
     ("Trend", "trend", trend.view),
     ("Balance", "balance", balance.view),
+    ("Alerts", "alerts", alerts.view),
     ("Intake", "intake", intake.view),
 )
 

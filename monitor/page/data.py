@@ -15,12 +15,15 @@ from typing import Any
 import pandas as pd
 import streamlit as st
 
+from ingest import journal
 from ingest.cells import OPERATING
 from ingest.instruments import balance_instruments
+from ingest.journal import Line
 from ingest.records import Export
 from ingest.unit import Unit
 from ingest.unitfile import load
-from monitor import board, store, witnesses
+from monitor import board, desk, shiftnote, store, witnesses
+from monitor.alerts import Alert, State
 from monitor.amounts import amount_names
 from monitor.days import figure_step
 from monitor.figures import Figure, figures_of
@@ -320,3 +323,99 @@ def last_export() -> datetime | None:
     """
     taken: datetime | None = _now("last_export")
     return taken
+
+
+@st.cache_data(max_entries=KEPT, show_spinner=False)
+def _alerts(folder: str, version: str, key: str, now: datetime) -> tuple[tuple[Alert, State], ...]:
+    del version  # part of the key
+    return desk.read(Path(folder), key, now)
+
+
+def alerts(unit: Unit, now: datetime) -> tuple[tuple[Alert, State], ...]:
+    """Give every alert of a unit with where it stands, to the minute.
+
+    Parameters
+    ----------
+    unit : Unit
+        One reactor.
+    now : datetime
+        Zone-aware; shelves end by themselves.
+
+    Returns
+    -------
+    tuple of (Alert, State)
+        As `desk.read` gives them.
+    """
+    minute = now.replace(second=0, microsecond=0)
+    return _alerts(str(site()[0]), version() or "", unit.key, minute)
+
+
+@st.cache_data(max_entries=KEPT, show_spinner=False)
+def _history(folder: str, version: str, _alert: Alert, key: str) -> tuple[tuple[datetime, Alert], ...]:
+    del version, key  # parts of the key
+    return desk.history(Path(folder), _alert)
+
+
+def history(alert: Alert) -> tuple[tuple[datetime, Alert], ...]:
+    """Give what an alert was at each pass that changed it.
+
+    Parameters
+    ----------
+    alert : Alert
+        One of them.
+
+    Returns
+    -------
+    tuple of (datetime, Alert)
+        Oldest first.
+    """
+    return _history(str(site()[0]), version() or "", alert, alert.id)
+
+
+@st.cache_data(max_entries=KEPT, show_spinner=False)
+def _lines(folder: str, version: str, key: str) -> tuple[Line, ...]:
+    del version  # part of the key
+    return journal.lines(Path(folder), unit=key)
+
+
+def lines(unit: Unit) -> tuple[Line, ...]:
+    """Give the journal of a unit.
+
+    Parameters
+    ----------
+    unit : Unit
+        One reactor.
+
+    Returns
+    -------
+    tuple of Line
+        In the order of writing.
+    """
+    return _lines(str(site()[0]), version() or "", unit.key)
+
+
+@st.cache_data(max_entries=KEPT, show_spinner=False)
+def _outages(
+    folder: str, version: str, key: str, span: tuple[datetime, datetime], _unit: Unit
+) -> tuple[shiftnote.Out, ...]:
+    del version, key  # parts of the key
+    return shiftnote.outages(_unit, store.cells(Path(folder), _unit, span))
+
+
+def outages(unit: Unit, first: datetime, last: datetime) -> tuple[shiftnote.Out, ...]:
+    """Find the instruments whose readings did not count in a span.
+
+    Parameters
+    ----------
+    unit : Unit
+        One reactor.
+    first, last : datetime
+        From the first cell start to before the second, zone-aware; cells of it are stored.
+
+    Returns
+    -------
+    tuple of Out
+        As `shiftnote.outages` gives them.
+    """
+    key = f"{unit.key} {[_identity(path) for path in site()[1]]}"
+    return _outages(str(site()[0]), version() or "", key, (first, last), unit)

@@ -40,7 +40,14 @@ def value(reading: Reading | None, unit: str) -> str:
 
 
 def panel(
-    unit: Unit, figure: Figure, watch: Watch | None, first: datetime, last: datetime, *, steady: bool
+    unit: Unit,
+    figure: Figure,
+    watch: Watch | None,
+    first: datetime,
+    last: datetime,
+    *,
+    steady: bool,
+    only: str = "",
 ) -> Panel:
     """Give the panel of a figure: limits, episodes of its watches, time that does not count.
 
@@ -56,6 +63,8 @@ def panel(
         Span, zone-aware.
     steady : bool
         Whether the steady figure is drawn, which leaves out more time.
+    only : str
+        The watch whose episodes are marked; empty for those of all watches on the figure.
 
     Returns
     -------
@@ -65,7 +74,7 @@ def panel(
     known = data.span(unit)
     end = known.last if known else pd.Timestamp(last)
     found = data.episodes(unit)
-    mine = found[found["figure"] == figure.name]
+    mine = found[(found["watch"] == only) if only else (found["figure"] == figure.name)]
     spans = data.operating(unit, first, last)
     return Panel(
         title=figure.label,
@@ -78,7 +87,9 @@ def panel(
         high=watch.high if watch else None,
         reference=100.0 if figure.name.endswith("closure") else None,
         shaded=board.shaded(spans, steady=steady, zone=unit.time_zone),
-        episodes=board.marked(mine, data.figures(unit), now=end, zone=unit.time_zone),
+        episodes=board.marked(
+            mine, data.figures(unit), now=end, zone=unit.time_zone, drifts=board.drift_watches(unit)
+        ),
     )
 
 

@@ -1,21 +1,19 @@
-"""How the unit does now: against limits, since when, how fresh, which episodes are open."""
+"""How the unit does now: against limits, since when, how fresh, which alerts are open, the shift's note."""
 
 from __future__ import annotations
 
-import math
 from datetime import datetime, timedelta
 from html import escape
-from typing import Any
 
 import pandas as pd
 import streamlit as st
 
 from ingest.unit import Unit
 from monitor import board, charts, wording
-from monitor.board import MODES, SHIFT, Reading, Row
+from monitor.board import MODES, SHIFT, Row
+from monitor.dossier import Dossier
 from monitor.figures import Figure
-from monitor.page import data, details, shell
-from monitor.wording import Told
+from monitor.page import data, details, shell, shift, told
 
 RECENT = timedelta(hours=48)
 STRIP_HEIGHT = 80
@@ -30,8 +28,11 @@ def view() -> None:
     if known is None:
         shell.nothing_yet()
         return
+    found = told.dossiers(unit, known)
+    groups = told.groups(found, known, every=False, length=RECENT)
     _freshness(unit, known)
-    _episodes(unit, known)
+    _alerts(unit, known, groups)
+    shift.last(unit)
     if _never_ran(unit, known):
         shell.empty(
             "The unit never ran in the time taken in.",
@@ -41,6 +42,7 @@ def view() -> None:
     rows = _rows(unit, known)
     for index, one in enumerate(rows):
         _draw_row(unit, one, known, last=index == len(rows) - 1)
+    shift.draw(unit, known, [one for group in groups for one in group], rows)
 
 
 def _never_ran(unit: Unit, known: data.Span) -> bool:
@@ -80,43 +82,29 @@ def _at(moment: pd.Timestamp, unit: Unit, clock: datetime) -> str:
     return wording.local_time(moment.to_pydatetime(), unit.time_zone, now=clock)
 
 
-def _episodes(unit: Unit, known: data.Span) -> None:
-    """Open episodes in words, worst first; if none, when the last one ended."""
-    found, figures = data.episodes(unit), data.figures(unit)
-    still = board.worst_first(found)
-    if still.empty:
-        ended = found["cleared"].max() if len(found) else None
+def _alerts(unit: Unit, known: data.Span, groups: tuple[tuple[Dossier, ...], ...]) -> None:
+    """Open alerts in words, worst first, with their verdict; if none, when the last one ended."""
+    if not groups:
+        cleared = data.episodes(unit)["cleared"]
+        ended = cleared.max() if len(cleared) else None
         last = f"; the last one ended {_at(ended, unit, known.last)}" if ended is not None else ""
         shell.write(f"<p>\u25cf No limit of {_count(len(unit.watches), 'watch')} is crossed{last}.</p>")
         return
-    tales = board.told(still, figures)
-    lines = [_episode(unit, tale, row, known) for tale, (_, row) in zip(tales, still.iterrows(), strict=True)]
-    shell.write(f"<h2>{_count(len(lines), 'open episode')}, worst first</h2><ol>{''.join(lines)}</ol>")
+    lines = [_alert(unit, one, joined=place > 0) for group in groups for place, one in enumerate(group)]
+    shell.write(f"<h2>{_count(len(lines), 'open alert')}, worst first</h2><ol>{''.join(lines)}</ol>")
 
 
-def _episode(unit: Unit, tale: Told, row: pd.Series[Any], known: data.Span) -> str:
-    """One open episode in words; one that is suppressed by design stays visible as such."""
-    now = _watched(unit, str(row["watch"]), str(row["figure"]))
-    value, half = (now.value, now.half_width) if now else (math.nan, math.nan)
-    end = known.last.to_pydatetime()
-    said = escape(wording.episode(tale, value=value, half_width=half, now=end, zone=unit.time_zone))
-    if bool(row["suppressed"]):
-        words = "suppressed by design while the unit does not run steadily"
-        return f"<li class='calm'>{wording.SHAPES['missing']} {words}: {said}</li>"
-    shape = wording.SHAPES["below" if tale.side == "low" else "above"]
-    return f"<li><span class='alarm'>{shape} {escape(str(row['priority']))} priority</span> {said}</li>"
+def _alert(unit: Unit, one: Dossier, *, joined: bool) -> str:
+    """One open alert in words; one that rests or is suppressed by design stays visible as such."""
+    css = "" if one.asks else " class='rest'"
+    name = f"<strong>{escape(one.alert.id)}</strong>"
+    why = "<span class='quiet'>by the same cause as the one above</span>" if joined else told.verdict(one)
+    return f"<li{css}>{told.head(one, unit)} {name}: {escape(one.said)}<br>{why}</li>"
 
 
 def _count(count: int, noun: str) -> str:
     plural = f"{noun}es" if noun.endswith("ch") else f"{noun}s"
     return f"{count} {noun if count == 1 else plural}"
-
-
-def _watched(unit: Unit, name: str, figure: str) -> Reading | None:
-    """Newest value of the window and mode that a watch looks at."""
-    watch = next((w for w in unit.watches if w.name == name), None) or board.watch_on(unit, figure)
-    window = watch.window if watch else SHIFT
-    return board.reading(data.latest(unit, window), figure, board.mode_of(watch))
 
 
 def _rows(unit: Unit, known: data.Span) -> list[Row]:

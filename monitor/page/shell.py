@@ -116,6 +116,14 @@ gap:0 1rem;padding:.3rem 0;cursor:pointer;align-items:baseline}
 @media (max-width:900px){.o summary{grid-template-columns:.8rem 1fr}.o summary span{grid-column:2}
 .o details>div{padding-left:1.8rem}}
 .stMultiSelect [data-testid=stMultiSelectTagsContainer] [data-tag]{background-color:var(--o-tag);color:#fff}
+.o ol.steps{list-style:decimal;padding-left:1.3rem}
+.o ol.steps li{padding:.1rem 0;border:0;margin:.1rem 0}
+.o ol li.rest{border-left-color:var(--o-grid)}
+.o .left{border-left:4px solid var(--o-series);padding:.1rem 0 .1rem .9rem;margin:.35rem 0;max-width:75rem;
+overflow-wrap:anywhere}
+.o table.health{width:auto}
+[class*="st-key-case"]{padding:.35rem .9rem;gap:.2rem}
+[class*="st-key-open"] button{padding:0;min-height:0}
 @media print{.stAppHeader,.stPopover,[data-testid=stPageLink]{display:none}}
 """
 
