@@ -17,6 +17,7 @@ from ingest.unit import AUXILIARY_KINDS
 
 HOUR = timedelta(hours=1)
 DAY = timedelta(days=1)
+LEAST_HEALTHY = timedelta(days=10)
 VOTE_LIMITS = (("down_below", "running_above"), ("down_above", "running_below"))
 
 
@@ -226,6 +227,9 @@ def _healthy_can_be_fitted(draft: Draft) -> Iterator[Problem]:
     first, last = entry.get("from"), entry.get("to")
     if None not in (first, last) and last <= first:
         yield Problem(entry.at("to"), f"{last.isoformat()} is not after from", "write a later moment")
+    elif None not in (first, last) and last - first < LEAST_HEALTHY:
+        words = f"{(last - first) / DAY:.1f} days are too few to learn from"
+        yield Problem(entry.at("to"), words, "write at least 10 days; 30 are better, and 60 best")
 
 
 def _events_name_instruments(draft: Draft) -> Iterator[Problem]:

@@ -23,7 +23,7 @@ from ingest.parts import instant_us, month_edges, times_us
 from ingest.passes import Pass
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit, Watch
-from monitor.cusum import Chart, settled
+from monitor.cusum import ALLOWED, Chart, settled
 from monitor.departure import SIDES, Blocks, chart_count, charts_of, departures, held_against, learnt, looks
 from monitor.drift import MICROSECOND, SUPPRESSED, whole_episodes
 from monitor.expectation import (
@@ -263,6 +263,12 @@ def _notes(unit: Unit, watch: Watch, one: Expectation, later: Blocks) -> Iterato
     if one.days < GOOD_DAYS:
         yield f"{unit.key}, {watch.name}: learnt from {one.days:.0f} healthy days; {GOOD_DAYS:g} are better"
     told = expected(one, later.end_us, later.point)
+    unsure = float(np.nanmax(told.error[-1:], initial=0.0)) / ALLOWED
+    if unsure > watch.shift_pct / 2:
+        yield (
+            f"{unit.key}, {watch.name}: so long after the healthy period, or so far from it, only changes "
+            f"above {2 * unsure:.1f} % are found; write a newer healthy period once there is one"
+        )
     recent = (later.end_us > later.end_us[-1:] - DAY_US) & later.running
     for place in np.unique(told.outside[recent & (told.outside >= 0)]).tolist():
         there = recent & (told.outside == place)

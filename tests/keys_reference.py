@@ -86,7 +86,7 @@ ABOUT = {
     " at the load, catalyst age and operating point of that window: `cusum` adds up what lies beyond half of `shift_pct`"
     " (a second sum looks for larger shifts), `ewma` averages with fading weights, `slope` looks at the trend of daily"
     " means over 30 d. When each of them alarms follows from `false_alarm_interval` and from how the figure wandered while"
-    " healthy; there is no threshold to tune.",
+    " healthy; there is no threshold to tune, and deadband and delays are those of limits.",
     "notify": "Where notices of alerts go: one when an alert is raised, clears, is withdrawn or gets another verdict. The"
     " last place in an hour is kept for alerts that quiet hours do not hold. A secret never stands in this file: it is in a"
     " variable of the environment, or in a file that only its owner can read.",

@@ -71,7 +71,7 @@ def test_too_short_a_stretch_and_an_expectation_not_yet_learnt_are_told(store):
     late = Event(UNIT.events[-1].at + timedelta(days=20), "calibration", "again", "AI-220")
     [one] = aged(store, replace(UNIT, events=(*UNIT.events, late)))
     assert "too few days" in one.why
-    renamed = replace(UNIT.watches[-2], name="another", test="cusum", window=timedelta(hours=1))
+    renamed = replace(UNIT.watches[0], name="another", test="cusum", window=timedelta(hours=1))
     [other] = aged(store, replace(UNIT, watches=(renamed,)))
     assert other.why == "no expectation has been learnt yet"
 

@@ -125,11 +125,11 @@ BAD = {
         "unit.cell", "7 min divides neither an hour nor a day", 'write for example cell = "10min"',
     ),
     "a window that is no whole number of cells": (
-        with_edit('cell = "10min"', 'cell = "10min"\nwindows = ["8h", "25min"]'),
+        with_edit('cell = "10min"', 'cell = "10min"\nwindows = ["1h", "8h", "25min"]'),
         "unit.windows", "25 min is no whole number of cells", "write multiples of cell",
     ),
     "a window twice": (
-        with_edit('cell = "10min"', 'cell = "10min"\nwindows = ["8h", "480min"]'),
+        with_edit('cell = "10min"', 'cell = "10min"\nwindows = ["1h", "8h", "480min"]'),
         "unit.windows", "8 h stands twice", "name each window once",
     ),
     "unknown time zone": (
@@ -594,7 +594,7 @@ BAD = {
     ),
     "a figure of a species that is not unwanted": (
         more(WATCH.replace("conversion", "share of isobutane")),
-        "watch[4].figure", "'share of isobutane' is no figure of this unit", "did you mean 'share of ",
+        "watch[5].figure", "'share of isobutane' is no figure of this unit", "did you mean 'share of ",
     ),
     "a budget for no figure": (
         with_edit('"yield on feed" = 83.0', '"yield on fed" = 83.0'),
@@ -610,7 +610,7 @@ BAD = {
     ),
     "a watch without limits": (
         more(WATCH.replace("low = 90\n", "")),
-        "watch[4]", "has neither low nor high", "write low = ... or high = ...",
+        "watch[5]", "has neither low nor high", "write low = ... or high = ...",
     ),
     "limits the wrong way round": (
         with_edit("high = 103.0", "high = 96"),
@@ -618,35 +618,39 @@ BAD = {
     ),
     "a deadband larger than the band": (
         more(WATCH.replace("low = 90", "low = 90\nhigh = 91\ndeadband = 2")),
-        "watch[4].deadband", "2 is not smaller than the band of 1", "smaller deadband or wider limits",
+        "watch[5].deadband", "2 is not smaller than the band of 1", "smaller deadband or wider limits",
     ),
     "two watches that would have one name": (
         more(WATCH + WATCH),
-        "watch[5].name", "'conversion 8 h' is the name of two watches", 'write name = "..." for one',
+        "watch[6].name", "'conversion 8 h' is the name of two watches", 'write name = "..." for one',
     ),
     "a test for drift with a limit": (
         more(WATCH.replace("low = 90", 'low = 90\ntest = "cusum"').replace("8h", "1h")),
-        "watch[4].low", "a test for drift (cusum) has no limits", "leave low out",
+        "watch[5].low", "a test for drift (cusum) has no limits", "leave low out",
     ),
     "a test for drift without a healthy period": (
-        NO_HEALTHY + "\n" + WATCH.replace("low = 90", 'test = "ewma"'),
-        "watch[4].test", "needs a healthy period to learn from", "write a section [healthy]",
+        NO_HEALTHY.replace('test = "cusum"', "low = 1") + "\n" + WATCH.replace("low = 90", 'test = "ewma"'),
+        "watch[5].test", "needs a healthy period to learn from", "write a section [healthy]",
     ),
     "a test for drift with windows that do not divide a day": (
         more(WATCH.replace("low = 90", 'test = "cusum"').replace("8h", "7d")),
-        "watch[4].window", "7 d do not divide a day", 'write for example window = "1h"',
+        "watch[5].window", "7 d do not divide a day", 'write for example window = "1h"',
     ),
     "more windows counted than there are": (
         more(WATCH.replace("low = 90", "low = 90\ncount = 3\namong = 2")),
-        "watch[4].count", "3 windows are more than among = 2", "write among = 3 or more",
+        "watch[5].count", "3 windows are more than among = 2", "write among = 3 or more",
     ),
     "half a window counted": (
         more(WATCH.replace("low = 90", "low = 90\ncount = 1.5\namong = 2")),
-        "watch[4].count", "1.5 is no whole number", "write count = 2",
+        "watch[5].count", "1.5 is no whole number", "write count = 2",
     ),
     "a healthy period that ends before it begins": (
         with_edit("to = 2026-03-27T00:00:00+01:00", "to = 2026-03-01T00:00:00+01:00"),
         "healthy.to", "2026-03-01T00:00:00+01:00 is not after from", "write a later moment",
+    ),
+    "a healthy period of a week": (
+        with_edit("to = 2026-03-27T00:00:00+01:00", "to = 2026-03-09T12:00:00+01:00"),
+        "healthy.to", "7.5 days are too few to learn from", "write at least 10 days",
     ),
     "a healthy period without its offset": (
         with_edit("from = 2026-03-02T00:00:00+01:00", "from = 2026-03-02T00:00:00"),

@@ -113,6 +113,19 @@ def test_a_pass_says_that_the_healthy_period_is_short(plant):
     assert any("healthy days; 30 are better" in note for note in told.notes)
 
 
+def test_a_unit_that_runs_as_it_never_did_while_healthy_is_told_so_and_goes_on(plant):
+    # the feed change of 18 March took the air per feed down by 5 %, which no healthy period before it saw
+    store, _, _ = plant
+    early = Healthy(UNIT.healthy.first, UNIT.healthy.first + timedelta(days=15), UNIT.healthy.operating_point)
+    told = again(store, replace(UNIT, healthy=early))
+    assert told.expectation is not None
+    [air] = (note for note in told.notes if "FI-202" in note)
+    assert "below what was seen while healthy" in air
+    assert any("only changes above" in note for note in told.notes)
+    sure = again(store).notes
+    assert not any("FI-202" in note or "only changes above" in note for note in sure)
+
+
 def test_a_healthy_period_without_data_gives_no_episodes_and_says_why(plant):
     store, _, _ = plant
     year = timedelta(days=365)

@@ -212,8 +212,10 @@ def test_a_unit_that_is_never_turned_down_has_that_limit_where_it_is_down(tmp_pa
 
 
 def test_windows_come_in_order_of_length(tmp_path: Path):
-    unit = loaded(tmp_path, with_edit('cell = "10min"', 'cell = "10min"\nwindows = ["24h", "8h", "2h"]'))
-    assert unit.windows == tuple(timedelta(hours=hours) for hours in (2, 8, 24))
+    unit = loaded(
+        tmp_path, with_edit('cell = "10min"', 'cell = "10min"\nwindows = ["24h", "8h", "1h", "2h"]')
+    )
+    assert unit.windows == tuple(timedelta(hours=hours) for hours in (1, 2, 8, 24))
 
 
 def test_a_byte_order_mark_and_line_ends_of_windows_change_nothing(tmp_path: Path):
@@ -273,6 +275,7 @@ def test_budget_and_guarantee_are_numbers_by_figure():
 
 
 def test_prices_are_read_as_they_are_stated_and_may_be_left_out(tmp_path):
-    text = '[prices]\ncurrency = "EUR"\nwanted_per_kg = 1.6\nkey_reactant_per_kg = 0.9\n'
-    assert loaded(tmp_path, DEMO + text).prices == Prices("EUR", 1.6, 0.9)
-    assert DEMO_UNIT.prices is None
+    assert DEMO_UNIT.prices == Prices("EUR", 1.6, 0.9)
+    stated = '[prices] # invented; they tell what a loss is worth\ncurrency = "EUR"\n'
+    without = with_edit(f"{stated}wanted_per_kg = 1.60\nkey_reactant_per_kg = 0.90\n", "")
+    assert loaded(tmp_path, without).prices is None
