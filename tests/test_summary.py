@@ -17,6 +17,7 @@ from ingest.errors import OutletError, StoreError, UnitFileError
 from ingest.ledger import Store
 from ingest.parts import instant_us
 from ingest.unitfile import load
+from monitor import desk
 from monitor.figures import figures_of
 from monitor.run import run_pass
 from monitor.summary import exclusions
@@ -515,3 +516,37 @@ def test_a_healthy_period_that_is_too_short_is_told_in_words(tmp_path):
 
 def test_without_a_healthy_period_nothing_is_expected(tmp_path):
     assert month_of(tmp_path, made(tmp_path), 2026, 4).tables["expectation"].empty
+
+
+# --- alerts
+
+WATCH = '\n[[watch]]\nfigure = "selectivity on converted"\nwindow = "1h"\nlow = 80.0\npriority = "high"\n'
+
+
+def test_alerts_are_told_with_what_people_made_of_them(tmp_path):
+    day = np.arange(len(APRIL)) // 144
+    low = np.isin(day, (9, 19, 25)) & (np.arange(len(APRIL)) % 144 < 60)  # ten hours on three days
+    unit = made(tmp_path, selectivity=np.where(low, 0.70, 0.86), more=WATCH)
+    known = desk.known(tmp_path / "store", unit.key)
+    assert len(known) == 3
+    for alert, cause in zip(known[:2], ("false", "reactor"), strict=True):
+        journal.write(
+            tmp_path / "store", who="C. Name", act="close", unit=unit.key, subject=alert.id, note="seen",
+            detail={"cause": cause},
+        )  # fmt: skip
+    found = month_of(tmp_path, unit, 2026, 4)
+    table = found.tables["alerts"]
+    assert table["outcome"].tolist() == ["false", "confirmed", "open"]
+    assert table["cause"].tolist() == ["false", "reactor", ""]
+    assert table["by"].tolist() == ["C. Name", "C. Name", ""]
+    assert [one[:10] for one in table["raised"]] == ["2026-04-10", "2026-04-20", "2026-04-26"]
+    assert table["hours"].tolist() == pytest.approx([10, 10, 10], abs=1.1)  # windows of 1 h
+    counts = dict(zip(*(found.tables["alert counts"][name] for name in ("item", "number")), strict=True))
+    assert counts == {"stood in this span": 3, "raised in it": 3, "confirmed": 1, "false": 1, "open": 1}
+
+
+def test_an_alert_of_another_month_is_not_told(tmp_path):
+    low = np.arange(len(APRIL)) < 60
+    unit = made(tmp_path, selectivity=np.where(low, 0.70, 0.86), more=WATCH)
+    later = summed(tmp_path, unit, span_of("UTC", date(2026, 4, 10), date(2026, 4, 20)))
+    assert later.tables["alerts"].empty
