@@ -39,7 +39,7 @@ from monitor.hypotheses import (
 from monitor.losses import loss_of
 from monitor.onset import calibrated_at, near, odds, onset_us
 from monitor.settling import reactor_check, settling
-from monitor.suspicion import check_of, put_right
+from monitor.suspicion import CHECKS, put_right, sort_of
 from monitor.verdict import (
     CANNOT,
     INSTRUMENT,
@@ -325,10 +325,11 @@ def _suspects(unit: Unit, belief: Belief) -> tuple[Suspect, ...]:
         places = [i for i, one in enumerate(belief.names) if one == name]
         best = max(places, key=lambda i: float(belief.chance[i]))
         kind = belief.kinds[best]
-        check = check_of(unit, name) if kind == OWN else reactor_check(name)
+        sort = sort_of(unit, name) if kind == OWN else ""
+        check = CHECKS[sort] if sort else reactor_check(name)
         chance = float(belief.chance[places].sum())
         wide = TWO_SIDED_95 * float(belief.standard_error[best])
-        found.append(Suspect(name, kind, chance, float(belief.size[best]), wide, check))
+        found.append(Suspect(name, kind, chance, float(belief.size[best]), wide, check, sort))
     return tuple(found)
 
 

@@ -239,7 +239,7 @@ def _suspect(
         right = put_right(unit, problem, right, name, size)
     return Suspect(
         parts=tuple(
-            Part(name, size, TWO_SIDED_95 * error, check_of(unit, name)) for name, size, error in parts
+            Part(name, size, TWO_SIDED_95 * error, CHECKS[sort_of(unit, name)]) for name, size, error in parts
         ),
         is_likeliest=is_likeliest,
         is_plausible=_is_plausible((parts, is_likeliest)),
@@ -299,8 +299,8 @@ def main_figures(unit: Unit, problem: Problem, cells: Cells) -> tuple[tuple[Figu
     return main, tuple(float(value[one.name, "as operated"]) for one in main)
 
 
-def check_of(unit: Unit, cause: str) -> str:
-    """Give what to check first where a cause is suspected.
+def sort_of(unit: Unit, cause: str) -> str:
+    """Tell what sort of thing a cause is: a key of `CHECKS`.
 
     Parameters
     ----------
@@ -309,11 +309,6 @@ def check_of(unit: Unit, cause: str) -> str:
     cause : str
         One of `fit.causes_of`.
     """
-    return CHECKS[_sort(unit, cause)]
-
-
-def _sort(unit: Unit, cause: str) -> str:
-    """Tell what sort of thing a cause is: a key of `CHECKS`."""
     one = next((one for one in unit.instruments if one.name == cause), None)
     if one is None:
         return "shared" if cause in {shared.name for shared in unit.shared} else "air"

@@ -17,6 +17,8 @@ ANSWERS = {
     CANNOT: "It cannot be told whether the reactor moved or an instrument",
     NOTHING: "Nothing moved beyond what it does while all is well",
 }
+# Where all that is suspected are stated values, no instrument is at fault.
+STATED = "What is fed is not what the unit file states"
 LEAST_P = 1e-4  # chances below that are told as below that
 
 
@@ -33,7 +35,8 @@ def headline(verdict: Verdict) -> str:
     told = f": {names}{more}" if names else ""
     why = f" ({verdict.reason})" if verdict.reason else ""
     early = "Provisional: " if verdict.is_provisional else ""
-    return f"{SHAPES[verdict.word]} {early}{ANSWERS[verdict.word]}{told}{why}."
+    stated = verdict.word == INSTRUMENT and all(one.sort == "declared" for one in verdict.suspects)
+    return f"{SHAPES[verdict.word]} {early}{STATED if stated else ANSWERS[verdict.word]}{told}{why}."
 
 
 def lines(verdict: Verdict, unit: Unit) -> Iterator[str]:

@@ -23,8 +23,8 @@ LEAD = timedelta(hours=48)  # before the window, in which the onset is looked fo
 class Suspect:
     """Something that may have moved: its chance (0 to 1), likely size and 95 % half-width, what to check.
 
-    `kind` is 'instrument' or 'reactor'. A size is a fraction of the reading, or of the share of a product;
-    NaN where there is no single one.
+    `kind` is 'instrument' or 'reactor', `sort` what sort of instrument: a key of `suspicion.CHECKS`, or ''.
+    A size is a fraction of the reading, or of the share of a product; NaN where there is no single one.
     """
 
     name: str
@@ -33,6 +33,7 @@ class Suspect:
     size: float
     half_width: float
     check: str
+    sort: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -208,7 +209,8 @@ def read(row: Mapping[str, Any]) -> Verdict | None:
 def _made(kind: Any, value: Any) -> Any:
     """Give a value of JSON the type that it had."""
     hints = get_type_hints(kind)
-    return kind(**{one.name: _typed(hints[one.name], value[one.name]) for one in fields(kind)})
+    held = [one.name for one in fields(kind) if one.name in value]
+    return kind(**{name: _typed(hints[name], value[name]) for name in held})
 
 
 def _typed(kind: Any, value: Any) -> Any:

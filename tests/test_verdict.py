@@ -350,6 +350,23 @@ def test_every_word_has_a_shape_and_every_line_stands_alone(stored):
         assert any("held against the healthy time" in line for line in whole)
 
 
+def test_a_stated_value_that_is_no_longer_true_is_not_called_an_instrument(stored):
+    found = read(told(stored)[0])
+    assert found.word == "instrument"
+    one = replace(found.suspects[0], name="isobutane in feed", sort="declared")
+    feed = headline(replace(found, suspects=(one,)))
+    assert feed == "\u25c6 What is fed is not what the unit file states: isobutane in feed."
+    both = headline(replace(found, suspects=(one, found.suspects[0])))
+    assert both.startswith("\u25c6 An instrument moved, not the reactor: isobutane in feed, AI-220 meth")
+
+
+def test_a_line_of_text_from_before_a_field_was_there_is_still_read(stored):
+    table = json.loads(told(stored)[0][COLUMN])
+    for one in table["suspects"]:
+        del one["sort"]
+    assert read({COLUMN: json.dumps(table)}).suspects[0].sort == ""
+
+
 def test_a_verdict_is_taken_over_while_nothing_changed_and_made_anew_where_data_did(stored):
     unit, store, _ = stored
     view = Store(store).snapshot()
