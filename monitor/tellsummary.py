@@ -44,6 +44,8 @@ def made(done: Sequence[Done]) -> Iterable[str]:
         if one.fault:
             continue
         yield f"{one.unit_file.stem}: {one.span}, {_standing(one)}"
+        if one.no_data_h > 0:
+            yield f"  {one.no_data_h:g} h of it are without data: what comes in later makes another revision"
         singles = [path for path in one.files if path.suffix in (".xlsx", ".html")]
         yield from (f"  {path}" for path in singles)
         folders = sorted({path.parent for path in one.files if path not in singles})

@@ -423,6 +423,23 @@ def test_some_days_are_summed_up_like_a_month(plant, tmp_path):
     assert done.exception is None
     hours = pq.read_table(tmp_path / "made-2026-03-02_2026-03-15-draft" / "hours.parquet").to_pandas()
     assert hours.set_index("item").loc["calendar", "hours"] == 14 * 24
+    assert "without data" not in done.output
+
+
+def test_a_month_that_is_not_over_is_told(plant, tmp_path):
+    words = (
+        "--unit",
+        plant / "made.toml",
+        "--store",
+        plant / "store",
+        "--out",
+        tmp_path,
+        "--draft",
+        "--form",
+        "csv",
+    )
+    done = outlet_run("month", "--from", "2026-03-30", "--to", "2026-04-02", *words)
+    assert "  48 h of it are without data: what comes in later makes another revision" in done.output
 
 
 def test_many_units_are_summed_up_on_several_processes_and_a_fault_of_one_stops_no_other(plant, tmp_path):

@@ -18,7 +18,8 @@ from monitor.summary.files import write
 from monitor.summary.identity import Stamp
 from monitor.summary.issue import issue, sealed
 from monitor.summary.making import summarise
-from monitor.summary.span import Span, month_span, span_of
+from monitor.summary.span import WHOLE, Span, month_span, span_of
+from monitor.summary.tonnes import NO_DATA
 
 Progress = Callable[[str, int, int], None]
 
@@ -45,7 +46,8 @@ class Done:
     files: tuple[Path, ...]
     revision: int
     is_new: bool
-    changed: int  # figures that this revision changes
+    changed: int  # entries that this revision changes
+    no_data_h: float  # of the span
     fault: str
 
 
@@ -103,9 +105,20 @@ def one_of(unit_file: Path, order: Order) -> Done:
             summary, is_new = issued.summary, issued.is_new
         files = write(summary, order.out, order.forms)
     except OutletError as fault:
-        return Done(unit_file, "", (), 0, is_new=False, changed=0, fault=str(fault))
+        return Done(unit_file, "", (), 0, is_new=False, changed=0, no_data_h=0.0, fault=str(fault))
     changed = len(summary.tables["changes"]) if "changes" in summary.tables else 0
-    return Done(unit_file, asked.name, tuple(files), summary.revision, is_new, changed, fault="")
+    hours = summary.tables["hours"]
+    missing = hours.loc[(hours["stretch"] == WHOLE) & (hours["item"] == NO_DATA), "hours"]
+    return Done(
+        unit_file=unit_file,
+        span=asked.name,
+        files=tuple(files),
+        revision=summary.revision,
+        is_new=is_new,
+        changed=changed,
+        no_data_h=float(missing.iloc[0]),
+        fault="",
+    )
 
 
 def _span(zone: str, order: Order) -> Span:
