@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import streamlit as st
 
-from monitor.page import alerts, balance, intake, now, shell, trend
+from monitor.page import alerts, balance, intake, month, now, shell, trend
 
 # A new view is one more line here.
 VIEWS = (
@@ -12,6 +12,7 @@ VIEWS = (
     ("Trend", "trend", trend.view),
     ("Balance", "balance", balance.view),
     ("Alerts", "alerts", alerts.view),
+    ("Month", "month", month.view),
     ("Intake", "intake", intake.view),
 )
 

@@ -85,7 +85,7 @@ font-size:.95rem}
 [class*="st-key-how"] button{padding-left:0;text-align:left;min-height:0}
 [data-testid=stMain] [data-testid=stVerticalBlock]{gap:.6rem}
 @media (max-width:640px){.stMainBlockContainer{padding:.7rem .8rem 2rem}
-.o .numbers{grid-template-columns:1fr}.o .wide{display:none}.o td,.o th{padding-right:.4rem}
+.o .numbers,.o dl{grid-template-columns:1fr}.o dd{margin-left:.9rem}.o .wide{display:none}.o td,.o th{padding-right:.4rem}
 [data-testid=stMain] [data-testid=stVerticalBlock]>*{--gap:.3rem}
 [data-testid=stMain] .stHorizontalBlock,[data-testid=stMain] [data-testid=stLayoutWrapper]>div{row-gap:.3rem}}
 .o ol{list-style:none;margin:0;padding:0}
@@ -124,6 +124,14 @@ overflow-wrap:anywhere}
 .o table.health{width:auto}
 [class*="st-key-case"]{padding:.35rem .9rem;gap:.2rem}
 [class*="st-key-open"] button{padding:0;min-height:0}
+.o .sheet{overflow-x:auto}
+.o .sheet td.n,.o .sheet th.n{text-align:right;white-space:nowrap}
+.o .sheet td{white-space:nowrap}.o .sheet td.long{min-width:16rem;white-space:normal;overflow-wrap:anywhere}
+.o .sheet th{vertical-align:bottom}.o .sheet th.group{text-align:center;border-bottom:1px solid var(--o-grid)}
+.o .sheet tbody td{border-bottom:1px solid var(--o-grid)}.o .sheet td:last-child{padding-right:0}
+.o .sheet .word{color:var(--o-quiet)}.o .sheet div.word{white-space:normal;min-width:9rem}
+.o .sheet tr.stretch td{font-weight:600;padding-top:.6rem}
+.o .caption{font-weight:600;font-size:.92rem;margin-top:.4rem}
 @media print{.stAppHeader,.stPopover,[data-testid=stPageLink]{display:none}}
 """
 

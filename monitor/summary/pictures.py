@@ -19,8 +19,8 @@ FIRST = ("yield on feed", "selectivity on converted", "conversion")
 FONT = "Arial, Helvetica, sans-serif"
 SECOND = "#D55E00"  # of the Okabe-Ito set (2008), as the first series colour is
 HOURS = {
-    "running [h]": "#0072B2", "starting [h]": "#56B4E9", "turned down [h]": "#CC79A7", "down [h]": "#4f5d66",
-    "not known [h]": "#b8c0c4", "no data [h]": "#e2e6e4",
+    "running [h]": "#0072B2", "starting [h]": "#56B4E9", "turned down [h]": "#CC79A7",
+    "down [h]": LIGHT.quiet, "not known [h]": "#b8c0c4", "no data [h]": LIGHT.grid,
 }  # fmt: skip
 
 
@@ -150,7 +150,8 @@ def hours_by_day(summary: Summary, *, ink: Ink = LIGHT) -> Spec:
     data = days.melt("day", there, "what", "hours")
     data["what"] = data["what"].str.removesuffix(" [h]")
     words = [name.removesuffix(" [h]") for name in there]
-    scale = {"domain": words, "range": [HOURS[name] for name in there]}
+    inks = HOURS | {"down [h]": ink.quiet, "no data [h]": ink.grid}
+    scale = {"domain": words, "range": [inks[name] for name in there]}
     return _sized(
         {
             "mark": {"type": "bar", "width": {"band": 0.8}},
