@@ -131,18 +131,15 @@ def _post(notice: Notice, target: Target, secret: Secret, now: datetime, timeout
     path = (parts.path or "/") + (f"?{parts.query}" if parts.query else "")
     try:
         line.request("POST", path, body, headers(body, target, secret.value, now))
-        answer = line.getresponse()
+        with line.getresponse() as answer:
+            status, reason = answer.status, shown(secret.hide(answer.reason))[:MOST_WORDS]
     finally:
         line.close()
-    if answer.status in MOVED:
-        raise Undelivered(
-            f"answers {answer.status}: it has moved; write the address where it is now", is_unreachable=True
-        )
-    if not http.client.OK <= answer.status < MOVED.start:
-        reason = shown(secret.hide(answer.reason))[:MOST_WORDS]
-        raise Undelivered(
-            f"answers {answer.status} {reason}".strip(), is_unreachable=answer.status not in REFUSED
-        )
+    if status in MOVED:
+        words = f"answers {status}: it has moved; write the address where it is now"
+        raise Undelivered(words, is_unreachable=True)
+    if not http.client.OK <= status < MOVED.start:
+        raise Undelivered(f"answers {status} {reason}".strip(), is_unreachable=status not in REFUSED)
 
 
 def _context(target: Target) -> ssl.SSLContext:
