@@ -18,6 +18,7 @@ from monitor.commands.notifying import notify
 from monitor.commands.reporting import exclude, month
 from monitor.commands.running import demo, follow, page, run
 from monitor.commands.shared import FINE, STOPPED, STOPPED_WORDS, YOURS
+from monitor.commands.trying import try_limits
 
 # Matrices here are small: more threads of the linear algebra cost twice the processor time and no less time.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -74,6 +75,7 @@ for one in (
     follow,
     page,
     alerts,
+    try_limits,
     notify,
     lag,
     suspects,

@@ -73,6 +73,35 @@ class Present:
     end: datetime
 
 
+def verdicts(found: Sequence[tuple[Alert, State]], episodes: pd.DataFrame) -> dict[str, Verdict]:
+    """Give the verdict of each alert that has one.
+
+    Parameters
+    ----------
+    found : sequence of (Alert, State)
+        As `desk.read` gives them.
+    episodes : DataFrame
+        Of the unit, as stored; not changed.
+
+    Returns
+    -------
+    dict
+        Id of the alert -> verdict of its episode.
+    """
+    rows = _by_raise(episodes)
+    told = {alert.id: read(rows.get(_raise_of(alert), {})) for alert, _ in found}
+    return {name: verdict for name, verdict in told.items() if verdict is not None}
+
+
+def _by_raise(episodes: pd.DataFrame) -> dict[tuple[Any, ...], dict[str, Any]]:
+    records: list[Any] = episodes.to_dict("records")
+    return {(row["watch"], row["side"], row["raised"]): row for row in records}
+
+
+def _raise_of(alert: Alert) -> tuple[Any, ...]:
+    return alert.watch, alert.side, pd.Timestamp(alert.raised)
+
+
 def dossiers(
     unit: Unit, found: Sequence[tuple[Alert, State]], episodes: pd.DataFrame, present: Present
 ) -> tuple[Dossier, ...]:
@@ -94,12 +123,11 @@ def dossiers(
     tuple of Dossier
         In the same order.
     """
-    records: list[Any] = episodes.to_dict("records")
-    rows = {(row["watch"], row["side"], row["raised"]): row for row in records}
+    rows = _by_raise(episodes)
     drifts = {watch.name for watch in unit.watches if watch.test != "limits"}
     made = []
     for alert, state in found:
-        row = rows.get((alert.watch, alert.side, pd.Timestamp(alert.raised)), {})
+        row = rows.get(_raise_of(alert), {})
         reading = present.readings.get(alert.watch)
         told = _told(alert, row, present.figures.get(alert.figure), drift=alert.watch in drifts)
         said = wording.episode(

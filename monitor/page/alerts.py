@@ -12,7 +12,7 @@ from ingest.unit import Unit
 from monitor import alerthealth, wording
 from monitor.alerthealth import CHATTERING, STALE
 from monitor.dossier import Dossier
-from monitor.page import data, opened, shell, spans, told
+from monitor.page import data, opened, shell, spans, told, trying
 
 OPEN, ALL = "open", "all of 30 d"
 BACK = timedelta(days=30)
@@ -29,6 +29,7 @@ def view() -> None:
         return
     which = spans.choice("Alerts", [OPEN, ALL], OPEN, "alerts")
     _body(unit.key, which)
+    trying.draw(unit.key)
 
 
 @st.fragment(run_every=shell.REFRESH)

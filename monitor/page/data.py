@@ -20,13 +20,14 @@ from ingest.cells import OPERATING
 from ingest.instruments import balance_instruments
 from ingest.journal import Line
 from ingest.records import Export
-from ingest.unit import Unit
+from ingest.unit import Unit, Watch
 from ingest.unitfile import load
-from monitor import board, desk, shiftnote, store, witnesses
+from monitor import board, desk, shiftnote, store, tryout, witnesses
 from monitor.alerts import Alert, State
 from monitor.amounts import amount_names
 from monitor.days import figure_step
 from monitor.figures import Figure, figures_of
+from monitor.trials import Point, Trial
 
 Frame = pd.DataFrame
 KEPT = 64  # answers kept per getter
@@ -419,3 +420,46 @@ def outages(unit: Unit, first: datetime, last: datetime) -> tuple[shiftnote.Out,
     """
     key = f"{unit.key} {[_identity(path) for path in site()[1]]}"
     return _outages(str(site()[0]), version() or "", key, (first, last), unit)
+
+
+@st.cache_data(max_entries=KEPT, show_spinner="Trying it on the past ...")
+def _trial(
+    folder: str,
+    version: str,
+    key: str,
+    now: datetime,
+    _unit: Unit,
+    *,
+    past: timedelta | None,
+    watch: str,
+    _watch: Watch,
+) -> tuple[Trial, tuple[Point, ...]]:
+    del version, key, watch  # parts of the key
+    span = tryout.whole_span(Path(folder), _unit, past)
+    return tryout.trial(Path(folder), _unit, _watch, span, now=now)
+
+
+def trial(unit: Unit, watch: Watch, past: timedelta | None, now: datetime) -> tuple[Trial, tuple[Point, ...]]:
+    """Try a watch on the last part of the record.
+
+    Parameters
+    ----------
+    unit : Unit
+        One reactor.
+    watch : Watch
+        Real or proposed.
+    past : timedelta or None
+        How much of the record; None for all.
+    now : datetime
+        Zone-aware.
+
+    Returns
+    -------
+    tuple of Trial and tuple of Point
+        As `tryout.trial` gives them.
+    """
+    key = f"{unit.key} {[_identity(path) for path in site()[1]]}"
+    hour = now.replace(minute=0, second=0, microsecond=0)
+    return _trial(
+        str(site()[0]), version() or "", key, hour, unit, past=past, watch=repr(watch), _watch=watch
+    )

@@ -85,7 +85,8 @@ font-size:.95rem}
 [class*="st-key-how"] button{padding-left:0;text-align:left;min-height:0}
 [data-testid=stMain] [data-testid=stVerticalBlock]{gap:.6rem}
 @media (max-width:640px){.stMainBlockContainer{padding:.7rem .8rem 2rem}
-.o .numbers,.o dl{grid-template-columns:1fr}.o dd{margin-left:.9rem}.o .wide{display:none}.o td,.o th{padding-right:.4rem}
+.o .numbers,.o dl{grid-template-columns:1fr}.o dd{margin-left:.9rem}
+.o .wide{display:none}.o td,.o th{padding-right:.4rem}
 [data-testid=stMain] [data-testid=stVerticalBlock]>*{--gap:.3rem}
 [data-testid=stMain] .stHorizontalBlock,[data-testid=stMain] [data-testid=stLayoutWrapper]>div{row-gap:.3rem}}
 .o ol{list-style:none;margin:0;padding:0}

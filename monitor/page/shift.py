@@ -35,9 +35,7 @@ def last(unit: Unit) -> None:
     this = shiftnote.shift_at(unit.shift_starts, unit.time_zone, shell.clock())
     notes = shiftnote.last_notes(data.lines(unit), this)
     if notes:
-        shell.write(
-            f"<h2>Note of shift {_whose(unit, notes)}</h2><div class='left'>{_notes(unit, notes)}</div>"
-        )
+        shell.write(f"<h2>Note of shift {_whose(unit, notes)}</h2>{_notes(unit, notes)}")
 
 
 def draw(unit: Unit, known: data.Span, found: Sequence[Dossier], rows: Sequence[Row]) -> None:
@@ -137,12 +135,13 @@ def _leave(unit: str, this: Shift, seen: int, detail: Mapping[str, object]) -> N
 
 def _notes(unit: Unit, notes: Sequence[Line]) -> str:
     """Notes as they were written, line breaks kept."""
-    return "".join(
-        f"<p class='row'>{'<br>'.join(escape(one) for one in line.note.splitlines())}</p>"
+    told = "".join(
+        f"<p>{'<br>'.join(escape(one) for one in line.note.splitlines())}</p>"
         f"<p class='quiet'>{escape(line.who)}, "
         f"{wording.local_time(datetime.fromisoformat(line.written), unit.time_zone, now=shell.clock())}</p>"
         for line in notes
     )
+    return f"<div class='left'>{told}</div>" if told else ""
 
 
 def _lists(stood: Mapping[str, Sequence[str]]) -> str:

@@ -97,5 +97,5 @@ def verdict(one: Dossier) -> str:
         HTML.
     """
     if one.verdict is None:
-        return "<span class='quiet'>\u25cb No verdict yet.</span>"
-    return escape(tellverdict.headline(one.verdict))
+        return "<span class='quiet'>No verdict yet.</span>"
+    return f"Verdict: {escape(tellverdict.headline(one.verdict))}"
