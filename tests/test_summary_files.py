@@ -340,7 +340,8 @@ def test_late_data_make_a_second_revision_that_lists_exactly_what_changed(plant,
         second.summary.digest,
     ]
     page = (tmp_path / "made-2026-03-revision-2.html").read_text(encoding="utf-8")
-    assert "What revision 2 changes" in page
+    assert f"{len(listed)} entries of revision 1 are changed" in page
+    assert page.index("What the words mean") < page.index("What revision 2 changes")
 
 
 def by_hand(old: Summary, new: Summary) -> list[dict[str, str]]:

@@ -72,9 +72,10 @@ def report(summary: Summary) -> str:
 def _sections(summary: Summary) -> Iterable[str]:
     """The page from top to bottom."""
     yield _head(summary)
-    if "changes" in summary.tables:
-        yield f"<h2>What revision {summary.revision} changes</h2>"
-        yield printed.table(summary, "changes")
+    changed = summary.tables.get("changes")
+    if changed is not None:
+        words = f"{len(changed)} entries of revision {summary.revision - 1} are changed"
+        yield f"<p><strong>{words}</strong>; they are listed at the end.</p>"
     yield "<h2>Figures read first</h2>"
     yield printed.figures(summary, HEADLINE)
     yield f'<div class="two">{"".join(_pictures(summary))}</div>'
@@ -106,6 +107,9 @@ def _sections(summary: Summary) -> Iterable[str]:
     yield printed.table(summary, "identity")
     yield "<h2>What the words mean</h2>"
     yield printed.table(summary, "definitions")
+    if changed is not None:
+        yield f'<h2 class="new">What revision {summary.revision} changes</h2>'
+        yield printed.table(summary, "changes")
     yield "<footer>" + "".join(f"<p>{escape(one)}</p>" for one in CAUTIONS) + "</footer>"
 
 
