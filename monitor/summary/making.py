@@ -314,7 +314,7 @@ def _catalyst(job: _Job, charges: Mapping[str, Charge | None]) -> pd.DataFrame:
     return pd.DataFrame(
         {
             "charge": [span.charge_name(one.charged, zone) for one in known],
-            "charged": [pd.Timestamp(one.charged) for one in known],
+            "charged": [pd.Timestamp(one.charged).tz_convert("UTC") for one in known],
             "age [d]": [one.age_days for one in known],
             "record from": [one.record_from for one in known],
             "on stream [h]": [one.on_stream_h for one in known],
