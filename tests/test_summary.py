@@ -220,7 +220,9 @@ def test_tonnes_of_time_not_seen_are_told_apart(tmp_path):
 
 
 CHARGED = "\n[catalyst]\ncharged = 2026-01-10T06:00:00Z\n"
-CHANGE = f'{CHARGED}[[event]]\nat = 2026-04-16T12:00:00Z\nkind = "catalyst change"\nname = "new charge"\n'
+CHANGE = (
+    f'{CHARGED}[[event]]\nat = 2026-04-16T14:00:00+02:00\nkind = "catalyst change"\nname = "new charge"\n'
+)
 
 
 def test_a_catalyst_change_in_mid_month_gives_two_rows_and_the_whole(tmp_path):
@@ -247,6 +249,8 @@ def test_a_catalyst_change_in_mid_month_gives_two_rows_and_the_whole(tmp_path):
         90.0, abs=1e-3
     )
     assert found.tables["catalyst"]["charge"].tolist() == stretches[:2]
+    charged = ["2026-01-10 06:00 +00:00", "2026-04-16 12:00 +00:00"]
+    assert found.tables["catalyst"]["charged"].tolist() == charged
     assert found.tables["catalyst"]["age [d]"].tolist() == pytest.approx(
         [96.25, 14.5]
     )  # 10 Jan 06:00, 16 Apr 12:00
