@@ -41,8 +41,8 @@ PRIOR_UNSEEN = 1.0
 PRIOR_SEVERAL = 0.05  # that two things moved at once, of all cases in which something did
 
 BENDS = 3  # rounds in which directions and sizes settle
-MISFIT = 0.01  # chance of so poor a fit of the best hypothesis by itself
-SECOND = 0.01  # chance that a second cause explains so much by itself, over all of them
+MISFIT = 0.003  # chance of so poor a fit of the best hypothesis by itself
+SECOND = 0.003  # chance that a second cause explains so much by itself, over all of them
 SET = 0.95  # chance that a set of names holds the right one
 
 

@@ -28,7 +28,7 @@ from monitor.explain import Reference, explain, picture_of
 from monitor.healthy import LENGTH, Baseline, baseline_of
 from monitor.verdict import COLUMN, INSTRUMENT, LEAD, REACTOR, as_text, is_marked
 
-METHOD = "1"  # to be raised when the same cells give another verdict
+METHOD = "2"  # to be raised when the same cells give another verdict
 BEFORE = timedelta(days=30)  # healthy time where none is stated: so much before the episode
 APART = timedelta(days=1)  # left out between that and the onset
 AGAIN = (timedelta(hours=16), timedelta(hours=64))  # after the first window, if that tells nothing

@@ -88,12 +88,16 @@ LEAST, MOST = 0.5, 3.0  # sizes, in those that are visible
 
 @dataclass(frozen=True)
 class Trial:
-    """Faults to put into one window, of which kind, and the word and name that would be right."""
+    """Faults to put into one window, of which kind, and the word and name that would be right.
+
+    `visible` is the size of a fault of an instrument in those that the balance shows in 90 of 100 windows.
+    """
 
     kind: str
     faults: tuple[Fault, ...]
     word: str
     name: str = ""
+    visible: float = 0.0
 
 
 def trials(judge: Judge, each: int, seed: int) -> list[Trial]:
@@ -119,7 +123,8 @@ def _of_instrument(judge: Judge, name: str, rng: np.random.Generator) -> Trial:
         kind = "span"
     elif " in " in name:
         kind = "feed composition"
-    return Trial(kind, (_off(judge, name, rng),), "instrument", name)
+    fault = _off(judge, name, rng)
+    return Trial(kind, (fault,), "instrument", name, abs(fault.size) / judge.by_balance[name])
 
 
 def _off(judge: Judge, name: str, rng: np.random.Generator, least: float = LEAST) -> Fault:

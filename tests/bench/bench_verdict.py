@@ -21,6 +21,7 @@ from tests.verdicts_made import demo, propene, rows_of
 WORDS = ("instrument", "reactor", "cannot tell", "nothing moved")
 STATED = WORDS[:2]
 EACH = 2  # faults of each instrument in one plant
+LARGE = 1.5  # sizes, in those that are visible
 LEAST_MOVE = 0.5  # points of the shown yield
 
 
@@ -64,6 +65,7 @@ def musts(found: Sequence[Result], healthy: Sequence[Said]) -> list[list[str]]:
     clear = [one for one in moved if one.trial.kind not in PARALLEL]
     stated = [one for one in moved if one.said.word in STATED]
     own = [one for one in clear if one.trial.name]
+    large = [one for one in single if one.trial.visible >= LARGE and one.trial.kind not in PARALLEL]
     return [
         must("class stated, faults that can be told", "90 %", [one in stated for one in clear]),
         must("class stated, parallel ones too", "", [one in stated for one in moved]),
@@ -77,6 +79,7 @@ def musts(found: Sequence[Result], healthy: Sequence[Said]) -> list[list[str]]:
             f"{np.mean([len(one.said.names) for one in own]):.2f}",
             "",
         ],
+        must("instrument 1.5 x visible: class stated", "", [one.said.word in STATED for one in large]),
         must("two at once called one clean cause", "<= 5 %", [one.said.word in STATED for one in two]),
         must("all sizes: wrong name, or classes swapped", "<= 3 %", [wrong(one) for one in single]),
     ]
