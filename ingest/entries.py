@@ -17,6 +17,7 @@ from ingest.keys import NESTED, Key, rows
 
 _CLOCK = re.compile(r"(?:[01]\d|2[0-3]):[0-5]\d")
 
+
 @dataclass(slots=True)
 class Entry:
     """One table of the file after reading: only values that passed, and the place each was written at."""

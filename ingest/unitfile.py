@@ -10,7 +10,16 @@ from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
-from ingest import analyzerrules, chemistry, draft, instrumentrules, notifyrules, quantities, unitrules, watchrules
+from ingest import (
+    analyzerrules,
+    chemistry,
+    draft,
+    instrumentrules,
+    notifyrules,
+    quantities,
+    unitrules,
+    watchrules,
+)
 from ingest import keys as table
 from ingest.draft import Draft
 from ingest.entries import Entry

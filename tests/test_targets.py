@@ -53,7 +53,7 @@ BAD = {
     "another port than a number": (
         HOOK.replace("plant.example", "plant.example:x"), r"notify\[desk\]\.url: is not a web",
     ),
-    "mail in the clear": (MAIL + 'tls = "none"\n', r"notify\[shift\]\.tls: 'none' sends in the clear to mail"),
+    "mail in the clear": (MAIL + 'tls = "none"\n', r"notify\[shift\]\.tls: 'none' sends in the clear"),
     "a login without a secret": (
         MAIL.replace('secret_file = "mail.secret"', ""), r"notify\[shift\]\.secret_env: missing",
     ),
