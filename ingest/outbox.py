@@ -106,6 +106,22 @@ def listed(ledger: sqlite3.Connection, target: str, since: datetime) -> tuple[No
     return _where(ledger, "target = ? AND (state = 'waiting' OR made >= ?)", (target, stamp(since)))
 
 
+def targets(ledger: sqlite3.Connection) -> tuple[str, ...]:
+    """List the targets that notices wait for.
+
+    Parameters
+    ----------
+    ledger : sqlite3.Connection
+
+    Returns
+    -------
+    tuple of str
+        By name.
+    """
+    query = "SELECT DISTINCT target FROM outbox WHERE state = 'waiting' ORDER BY target"
+    return tuple(target for (target,) in ledger.execute(query))
+
+
 def sent_since(ledger: sqlite3.Connection, target: str, since: datetime) -> int:
     """Count what has reached a target since an instant.
 

@@ -118,7 +118,7 @@ def _standing(change: Change) -> str:
     if change.event == "withdrawn":
         return "withdrawn: by what is known now it is suppressed by design, the unit not running steadily"
     if change.event == "verdict":
-        return "still active, with another verdict than before"
+        return "still active; the verdict is new"
     return change.event if change.alert.active or change.event == "cleared" else "raised, and over by now"
 
 

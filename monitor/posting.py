@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Iterable, Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import asdict, dataclass
 from datetime import datetime, timedelta
 from pathlib import Path
@@ -18,6 +18,7 @@ from monitor.sending import TIMEOUT_S, Undelivered, send
 HOUR = timedelta(hours=1)
 FIRST_PAUSE, LONGEST_PAUSE = timedelta(minutes=1), timedelta(hours=4)
 GIVE_UP = timedelta(days=7)
+GONE = "the unit file no longer names this target"
 TOLD_FOR = timedelta(days=30)  # so long people are told of what was given up
 
 
@@ -39,13 +40,13 @@ class Posted:
 
 
 def post(
-    units: Iterable[Unit], store: Path, now: datetime, *, timeout_s: float = TIMEOUT_S
+    units: Collection[Unit], store: Path, now: datetime, *, timeout_s: float = TIMEOUT_S
 ) -> tuple[Posted, ...]:
     """Send what is due to every target of some units.
 
     Parameters
     ----------
-    units : iterable of Unit
+    units : collection of Unit
     store : Path
         Folder of the store.
     now : datetime
@@ -56,9 +57,15 @@ def post(
     Returns
     -------
     tuple of Posted
-        One for each target.
+        One for each target, and for each that a unit file no longer names while notices wait for it.
     """
-    return tuple(_post(store, unit, target, now, timeout_s) for unit in units for target in unit.targets)
+    named = [(unit, target) for unit in units for target in unit.targets]
+    posted = [_post(store, unit, target, now, timeout_s) for unit, target in named]
+    with database.reading(store) as ledger:
+        waited_for = outbox.targets(ledger)
+    keys = {unit.key for unit in units}
+    gone = set(waited_for) - {address_of(unit, target) for unit, target in named}
+    return (*posted, *(_gone(store, one, now) for one in sorted(gone) if one.partition("/")[0] in keys))
 
 
 def _post(store: Path, unit: Unit, target: Target, now: datetime, timeout_s: float) -> Posted:
@@ -70,13 +77,27 @@ def _post(store: Path, unit: Unit, target: Target, now: datetime, timeout_s: flo
         trouble = str(fault) if fault else trouble
         if fault is not None and fault.is_unreachable:
             break
+    return _told(store, address, sent, trouble, now)
+
+
+def _gone(store: Path, address: str, now: datetime) -> Posted:
+    """Let notices wait for a target that the unit file no longer names, as for one that takes none."""
+    with database.writing(store) as ledger:
+        for one in outbox.due(ledger, address, now - GIVE_UP):
+            outbox.failed(ledger, one.id, GONE, for_good=True)
+    return _told(store, address, 0, GONE, now)
+
+
+def _told(store: Path, address: str, sent: int, trouble: str, now: datetime) -> Posted:
+    """Tell how it stands with a target."""
     with database.reading(store) as ledger:
         listed = outbox.listed(ledger, address, now - TOLD_FOR)
     given_up = tuple(str(one.body["subject"]) for one in listed if one.state == outbox.GIVEN_UP)
     waiting = [one for one in listed if one.state == outbox.WAITING]
     # What is at rest after a failure has the reason with it, also where nothing was tried just now.
     trouble = trouble or next((one.last_error for one in waiting if one.last_error), "")
-    return Posted(unit.key, target.name, sent, len(waiting), trouble, given_up)
+    unit, _, name = address.partition("/")
+    return Posted(unit, name, sent, len(waiting), trouble, given_up)
 
 
 def _claimed(store: Path, address: str, per_hour: int, now: datetime) -> Notice | None:

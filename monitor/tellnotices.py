@@ -44,5 +44,5 @@ def troubles(results: Iterable[Posted]) -> Iterator[str]:
         if one.trouble:
             yield (
                 f"{one.unit}/{one.target}: notices do not arrive: {one.trouble}\n"
-                "  They are tried again; try it with 'outlet notify --test'."
+                "  Put it right within a week; 'outlet notify --test' tries a target."
             )

@@ -274,6 +274,18 @@ def test_targets_of_one_name_of_two_units_are_two(store: Path, desk: Desk):
     assert [(one.unit, one.sent) for one in told] == [("made", 1), ("other", 1)]
 
 
+def test_what_waits_for_a_target_that_is_gone_is_told_and_given_up_after_a_week(store: Path, desk: Desk):
+    put(store, "n1", target="made/office")
+    for hours, left in ((0, 1), (7 * 24 - 1, 1), (7 * 24 + 1, 0)):
+        there, gone = post([unit_with(hook(desk))], store, NOW + hours * HOUR)
+        assert (there.target, there.waiting, there.trouble) == ("desk", 0, "")
+        assert (gone.target, gone.waiting) == ("office", left)
+        assert gone.trouble == "the unit file no longer names this target"
+    assert gone.given_up == ("n1 happened",)
+    assert len(post([unit_with(hook(desk))], store, NOW + 200 * HOUR)) == 1
+    assert desk.requests == []
+
+
 def _post_all(store: Path, url: str) -> int:
     [one] = post([unit_with(replace(HOOK, url=url, per_hour=1000))], store, NOW)
     return one.sent
@@ -387,17 +399,33 @@ def outlet(*words: str | Path) -> subprocess.CompletedProcess[str]:
 
 def test_the_command_sends_what_is_due_and_tells_what_waits(tmp_path: Path, store: Path, desk: Desk):
     put(store, "n1", target="demo/desk", made=datetime.now(UTC))
-    words = ("notify", "--unit", unit_file(tmp_path, desk), "--store", store)
+    file = unit_file(tmp_path, desk, 'secret_env = "MADE_SECRET"\n')
+    words = ("notify", "--unit", file, "--store", store)
     desk.answer = lambda number: 500 if number == 1 else 204
     done = outlet(*words)
     assert (done.returncode, done.stdout) == (2, "demo/desk: 0 sent, 1 waiting\n")
     assert done.stderr.startswith(
-        "demo/desk: notices do not arrive: answers 500 Internal Server Error\n  They"
+        "demo/desk: notices do not arrive: answers 500 Internal Server Error\n  Put"
     )
     done = outlet(*words, "--json")
     # it is at rest now, which is told with the reason
     assert json.loads(done.stdout)["targets"][0]["trouble"] == "answers 500 Internal Server Error"
     assert len(desk.requests) == 1
+    assert 'keyid="desk"' in desk.requests[0][0]["signature-input"]
+    assert SECRET not in f"{done.stdout}{done.stderr}{desk.requests}"
+    assert SECRET.encode() not in everything_written(tmp_path)
+
+
+def test_a_run_sends_what_is_due_and_is_no_failure_if_that_does_not_arrive(
+    tmp_path: Path, store: Path, desk: Desk
+):
+    put(store, "n1", target="demo/desk", made=datetime.now(UTC))
+    (tmp_path / "in").mkdir()
+    desk.answer = lambda number: 503
+    done = outlet("run", "--unit", unit_file(tmp_path, desk), "--store", store, tmp_path / "in")
+    assert done.returncode == 0
+    assert "demo/desk: notices do not arrive: answers 503 Service Unavailable" in done.stderr
+    assert desk.ids == ["n1"]
 
 
 def test_the_command_tries_a_target_and_says_which_there_are(tmp_path: Path, desk: Desk):
