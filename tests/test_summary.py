@@ -511,8 +511,10 @@ def test_a_change_of_catalyst_ends_what_the_healthy_period_lets_one_expect(tmp_p
     assert after["remark"] == "the catalyst was changed after the healthy period"
 
 
-def test_a_healthy_period_that_is_too_short_is_told_in_words(tmp_path):
-    unit = since_march(tmp_path, 0.84, HEALTHY.format("2026-03-05") + CHARGED)
+def test_a_healthy_period_with_too_little_on_record_is_told_in_words(tmp_path):
+    # from 19 February on, of which the record holds the last four days
+    healthy = HEALTHY.format("2026-03-05").replace("2026-03-01", "2026-02-19")
+    unit = since_march(tmp_path, 0.84, healthy + CHARGED)
     told = row(month_of(tmp_path, unit, 2026, 4), "expectation", figure="yield on feed")
     assert "days of steady running" in told["remark"]
     assert np.isnan(told["expected"])
