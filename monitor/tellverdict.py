@@ -154,7 +154,7 @@ def _figures(verdict: Verdict) -> Iterator[str]:
     yield f"  {'figure':<45} {'healthy':>9} {'shown':>9}{heads}"
     for shift in verdict.closures:
         held = {one.suspect: one.without for one in verdict.figures if one.name == shift.name}
-        cells = "".join(f"  {value_words(held[name]):>{len(name) + 8}}" for name in names)
+        cells = "".join(f"  {value_words(held.get(name, math.nan)):>{len(name) + 8}}" for name in names)
         label = f"{shift.name}, {shift.unit}"
         yield f"  {label:<45} {value_words(shift.before):>9} {value_words(shift.now):>9}{cells}"
 

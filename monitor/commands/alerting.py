@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import getpass
+import json
 from collections.abc import Callable, Sequence
 from dataclasses import asdict
 from datetime import UTC, datetime, timedelta
@@ -81,11 +82,21 @@ def show(alert: str, unit_file: Path, store: Path, as_json: bool) -> None:
     """Show all about one alert: condition, verdict, what late data changed, journal."""
     from ingest.unitfile import load
     from monitor.desk import find, history
+    from monitor.dossier import verdicts
+    from monitor.store import episodes
     from monitor.tellalerts import as_table, told
+    from monitor.tellverdict import lines
+    from monitor.verdict import as_text
 
     unit = load(unit_file)
     one, state = find(store, alert, datetime.now(UTC))
-    say(as_table(one, state), told(one, state, history(store, one), unit.time_zone), as_json=as_json)
+    verdict = verdicts([(one, state)], episodes(store, one.unit)).get(one.id)
+    said = [
+        *told(one, state, history(store, one), unit.time_zone),
+        *(lines(verdict, unit) if verdict else ()),
+    ]
+    table = {**as_table(one, state), "verdict": json.loads(as_text(verdict)) if verdict else None}
+    say(table, said, as_json=as_json)
 
 
 @alerts.command()

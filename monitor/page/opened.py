@@ -1,4 +1,4 @@
-"""One alert, opened: its figure, what the verdict rests on, what to check first, its journal and the acts."""
+"""One alert, opened: its figure, what to check first, the acts and its journal, what the verdict rests on."""
 
 from __future__ import annotations
 
@@ -50,15 +50,16 @@ def draw(unit: Unit, one: Dossier, known: data.Span) -> None:
         Time that the store knows.
     """
     _chart(unit, one.alert, known)
-    rests, lost, do = st.columns([4, 4, 3.4], gap="large")
-    with rests:
-        shell.write(_rests(unit, one))
-    with lost:
-        shell.write(_numbers(unit, one))
+    # A narrow screen stacks them in this order: what to do comes first.
+    do, lost, rests = st.columns([3.4, 4, 4], gap="large")
     with do:
         shell.write(_checks(one))
         _acts(unit, one)
         shell.write(_journal(unit, one))
+    with lost:
+        shell.write(_numbers(unit, one))
+    with rests:
+        shell.write(_rests(unit, one))
 
 
 def _chart(unit: Unit, alert: Alert, known: data.Span) -> None:
@@ -165,7 +166,7 @@ def _suspects(verdict: Verdict) -> str:
         f"<td>{tellverdict.percent(one.chance)}</td><td>{escape(tellverdict.size_words(one))}</td></tr>"
         for one in verdict.suspects
     )
-    heads = "".join(f"<th scope='col'>{name}</th>" for name in ("", "is", "chance", "size"))
+    heads = "".join(f"<th scope='col'>{name}</th>" for name in ("", "is", "chance", ""))
     return f"<h3>Suspects</h3><table><tr>{heads}</tr>{rows}</table>"
 
 
