@@ -10,11 +10,15 @@ from pathlib import Path
 import pandas as pd
 import pyarrow as pa
 
+from ingest.archive import SITE, STAGE
 from ingest.balance import problem_of
 from ingest.cells import RUNNING, Cells, cells_from_frame
 from ingest.errors import StoreError
 from ingest.ledger import Store
+from ingest.parts import instant_us
+from ingest.readings import read_months
 from ingest.records import Export
+from ingest.screen import Finding, tally
 from ingest.snapshot import Snapshot
 from ingest.unit import Unit
 from monitor import deliveries
@@ -107,6 +111,34 @@ def cells(folder: Path, unit: Unit, span: tuple[datetime, datetime]) -> Cells:
     if not table.num_rows:
         raise _nothing(folder, unit.key, f"no cells of {unit.key} from {span[0]:%F} to {span[1]:%F}")
     return cells_from_frame(unit, _frame(table, "start"))
+
+
+def findings(folder: Path, unit: Unit, span: tuple[datetime, datetime]) -> tuple[Finding, ...]:
+    """Ask every check what it says of the readings of a span.
+
+    Parameters
+    ----------
+    folder : Path
+        The store.
+    unit : Unit
+        One reactor.
+    span : tuple of datetime
+        From the first reading to before the second, zone-aware.
+
+    Returns
+    -------
+    tuple of Finding
+        For each instrument with a tag and each check, in their order. At both ends a check may look at
+        fewer readings than it did when the cells were made.
+    """
+    first, last = (instant_us(edge) for edge in span)
+    tags = [one.tag for one in unit.instruments if one.tag is not None]
+
+    def look(view: Snapshot) -> tuple[Finding, ...]:
+        paths = view.paths(SITE, STAGE, first=first, last=last)
+        return tally(unit, read_months(paths, tags, first, last))
+
+    return Store(folder).look(look)
 
 
 def last_running(folder: Path, unit: Unit, length: timedelta) -> Cells:

@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import streamlit as st
 
-from monitor.page import alerts, balance, intake, month, now, shell, trend
+from monitor.page import alerts, balance, instruments, intake, month, now, shell, trend
 
 # A new view is one more line here.
 VIEWS = (
     ("Now", "now", now.view),
     ("Trend", "trend", trend.view),
     ("Balance", "balance", balance.view),
+    ("Instruments", "instruments", instruments.view),
     ("Alerts", "alerts", alerts.view),
     ("Month", "month", month.view),
     ("Intake", "intake", intake.view),

@@ -92,10 +92,10 @@ def _head(summary: Summary, held: Standing) -> None:
     shell.write(f"<p>{_standing(held, summary.span)}</p>")
     if len(held.changes):
         with st.expander(f"What changed since revision {held.last}"):
-            _table(printed.table(with_tables(held.summary, 0, changes=held.changes), "changes"))
+            shell.sheet(printed.table(with_tables(held.summary, 0, changes=held.changes), "changes"))
     if "changes" in summary.tables:
         with st.expander(f"What revision {summary.revision} changed"):
-            _table(printed.table(summary, "changes"))
+            shell.sheet(printed.table(summary, "changes"))
 
 
 def _standing(held: Standing, span: str) -> str:
@@ -128,7 +128,7 @@ def _downloads(summary: Summary) -> None:
 def _first(summary: Summary) -> None:
     """What is read first: main figures in both modes, and by day."""
     shell.write("<h2>Figures read first</h2>")
-    _table(printed.figures(summary, HEADLINE))
+    shell.sheet(printed.figures(summary, HEADLINE))
     _pictures(pictures.front(summary, ink=shell.ink()))
 
 
@@ -136,13 +136,13 @@ def _hours(summary: Summary) -> None:
     left, right = st.columns(2, gap="large")
     with left:
         shell.write("<h2>Hours</h2>")
-        _table(printed.table(summary, "hours"))
+        shell.sheet(printed.table(summary, "hours"))
         _picture("Hours of each day", pictures.hours_by_day(summary, ink=shell.ink()), "hours")
     with right:
         shell.write("<h2>Tonnes</h2>")
-        _table(printed.table(summary, "tonnes"))
+        shell.sheet(printed.table(summary, "tonnes"))
         shell.write("<h2>Catalyst</h2>")
-        _table(printed.table(summary, "catalyst"))
+        shell.sheet(printed.table(summary, "catalyst"))
 
 
 def _compared(unit: Unit, summary: Summary, asked: Span, other: Span | None) -> None:
@@ -154,19 +154,19 @@ def _compared(unit: Unit, summary: Summary, asked: Span, other: Span | None) -> 
             found = study.against(unit, asked, other)
     shell.write(f"<h2>{escape(title)}</h2>")
     first = found[found["figure"].isin(HEADLINE)]
-    _table(printed.comparisons(with_tables(summary, summary.revision, comparisons=first)))
+    shell.sheet(printed.comparisons(with_tables(summary, summary.revision, comparisons=first)))
     with st.expander(f"{title}: all figures"):
-        _table(printed.comparisons(with_tables(summary, summary.revision, comparisons=found)))
+        shell.sheet(printed.comparisons(with_tables(summary, summary.revision, comparisons=found)))
     shell.write("<h2>Against the healthy period</h2>")
-    _table(printed.table(summary, "expectation"))
+    shell.sheet(printed.table(summary, "expectation"))
 
 
 def _folded(summary: Summary) -> None:
     """The long tables, each under its heading."""
     with st.expander("All figures"):
-        _table(printed.figures(summary, None))
+        shell.sheet(printed.figures(summary, None))
     with st.expander("Figures by day"):
-        _table(printed.by_day(summary))
+        shell.sheet(printed.by_day(summary))
     for name, heading in FOLDED.items():
         rows = len(summary.tables[name])
         with st.expander(heading if rows else f"{heading}: none"):
@@ -175,12 +175,7 @@ def _folded(summary: Summary) -> None:
             if name == "balances":
                 spec = pictures.closures_by_day(summary, ink=shell.ink())
                 _picture("Closures by day as read [%], 95 % interval", spec, "closures")
-            _table(printed.table(summary, name))
-
-
-def _table(html: str) -> None:
-    """A table that is wider than the screen moves by itself, also by keyboard."""
-    shell.write(f'<div class="sheet" tabindex="0">{html}</div>')
+            shell.sheet(printed.table(summary, name))
 
 
 def _pictures(specs: Mapping[str, Spec]) -> None:

@@ -132,6 +132,8 @@ overflow-wrap:anywhere}
 .o .sheet tbody td{border-bottom:1px solid var(--o-grid)}.o .sheet td:last-child{padding-right:0}
 .o .sheet .word{color:var(--o-quiet)}.o .sheet div.word{white-space:normal;min-width:9rem}
 .o .sheet tr.stretch td{font-weight:600;padding-top:.6rem}
+.o ol.first{counter-reset:place;max-width:75rem}.o ol.first li{counter-increment:place}
+.o ol.first p:first-child::before{content:counter(place) ". "}
 .o .caption{font-weight:600;font-size:.92rem;margin-top:.4rem}
 @media print{.stAppHeader,.stPopover,[data-testid=stPageLink]{display:none}}
 """
@@ -148,6 +150,17 @@ def write(html: str, *, width: Literal["stretch", "content"] = "stretch") -> Non
         Of the block.
     """
     st.html(f'<div class="o">{html}</div>', width=width)
+
+
+def sheet(html: str) -> None:
+    """Write a table that moves by itself where it is wider than the screen, also by keyboard.
+
+    Parameters
+    ----------
+    html : str
+        The table.
+    """
+    write(f'<div class="sheet" tabindex="0">{html}</div>')
 
 
 def draw(chart: Chart, key: str, **more: Any) -> Any:
