@@ -12,11 +12,14 @@ from ingest import database, outbox
 from ingest.errors import OutletError
 from ingest.outbox import Notice
 from ingest.unit import Target, Unit
-from monitor.notices import address_of, digest, next_turn, trial
+from monitor.notices import address_of, digest, is_urgent, next_turn, trial
 from monitor.sending import TIMEOUT_S, Undelivered, send
 
 HOUR = timedelta(hours=1)
 FIRST_PAUSE, LONGEST_PAUSE = timedelta(minutes=1), timedelta(hours=4)
+PROBE = timedelta(
+    minutes=15
+)  # a target is tried so often while anything else waits for it, or what is urgent
 GIVE_UP = timedelta(days=7)
 GONE = "the unit file no longer names this target"
 TOLD_FOR = timedelta(days=30)  # so long people are told of what was given up
@@ -114,7 +117,7 @@ def _claimed(store: Path, address: str, per_hour: int, now: datetime) -> Notice 
             outbox.join(ledger, letter.notice, [one.id for one in turn.join])
             turn = next_turn(outbox.due(ledger, address, now), sent, per_hour)
         if turn.send is not None:
-            outbox.claim(ledger, turn.send.id, now + pause(turn.send.id, turn.send.tries))
+            outbox.claim(ledger, turn.send.id, now + _rest(turn.send))
     return turn.send
 
 
@@ -126,14 +129,19 @@ def _sent(store: Path, notice: Notice, target: Target, now: datetime, timeout_s:
         with database.writing(store) as ledger:
             outbox.failed(ledger, notice.id, str(fault), for_good=now - notice.made > GIVE_UP)
             if fault.is_unreachable:
-                outbox.hold_back(ledger, notice.target, now + pause(notice.id, notice.tries))
+                outbox.hold_back(ledger, notice.target, now + min(_rest(notice), PROBE))
         return fault
     with database.writing(store) as ledger:
         outbox.arrived(ledger, notice.id, now)
     return None
 
 
-def pause(notice: str, tries: int) -> timedelta:
+def _rest(notice: Notice) -> timedelta:
+    """How long a notice rests before its next try."""
+    return pause(notice.id, notice.tries, longest=PROBE if is_urgent(notice) else LONGEST_PAUSE)
+
+
+def pause(notice: str, tries: int, *, longest: timedelta = LONGEST_PAUSE) -> timedelta:
     """Give the time to the next try: doubled with each, and spread so that not all come at once.
 
     Parameters
@@ -142,14 +150,16 @@ def pause(notice: str, tries: int) -> timedelta:
         Its id, which decides on the spread: a resend is as predictable as a first try.
     tries : int
         Before the one that is made now.
+    longest : timedelta
+        Where doubling ends.
 
     Returns
     -------
     timedelta
-        Half of it and up to half as much again; a minute at first, four hours at most.
+        A minute at first; half of it and up to half as much again.
     """
     spread = int.from_bytes(hashlib.sha256(f"{notice} {tries}".encode()).digest()[:4]) / 2**32
-    plain: timedelta = min(FIRST_PAUSE * 2 ** min(tries, 16), LONGEST_PAUSE)
+    plain: timedelta = min(FIRST_PAUSE * 2 ** min(tries, 16), longest)
     return plain * (0.5 + spread)
 
 

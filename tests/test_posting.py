@@ -11,6 +11,7 @@ from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta
+from itertools import pairwise
 from pathlib import Path
 
 import pytest
@@ -247,6 +248,33 @@ def test_pauses_double_from_a_minute_to_four_hours_and_are_spread():
         assert 0.5 <= min(found) < 0.7
         assert 1.3 < max(found) <= 1.5
     assert pause("n", 5000) <= 1.5 * LONGEST_PAUSE
+
+
+def test_what_is_urgent_is_tried_again_at_least_each_half_hour_however_long_a_target_is_away(
+    store: Path, desk: Desk
+):
+    put(store, "old")
+    desk.answer = lambda number: 503
+    for hour in range(12):
+        posted(store, hook(desk), hour)
+    put(store, "urgent", made=NOW + 12 * HOUR, urgent=True, priority="high")
+    times = []
+    for minute in range(0, 360, 5):
+        before = desk.ids.count("urgent")
+        posted(store, hook(desk), 12 + minute / 60)
+        times += [minute] * (desk.ids.count("urgent") - before)
+    assert times[0] == 0
+    gaps = [late - early for early, late in pairwise(times)]
+    # ten minutes and half as much again, ten more where another one has just failed, seen each five minutes
+    assert max(gaps) <= 30
+    desk.answer = lambda number: 204
+    assert posted(store, hook(desk), 18.5).sent >= 1
+    assert desk.ids.count("urgent") == len(times) + 1
+
+
+def test_what_quiet_hours_hold_goes_out_at_their_end(store: Path, desk: Desk):
+    put(store, "n1", made=NOW + 6 * HOUR)  # the same as made earlier and held until then
+    assert (posted(store, hook(desk), 5.99).sent, posted(store, hook(desk), 6).sent) == (0, 1)
 
 
 def test_an_hour_with_too_many_ends_in_a_digest(store: Path, desk: Desk):
