@@ -4,16 +4,20 @@ from __future__ import annotations
 
 from dataclasses import replace
 from datetime import UTC, datetime, time, timedelta
+from pathlib import Path
 
 import numpy as np
+import pytest
 
 from ingest.cells import OPERATING, Cells
 from ingest.conditions import CALIBRATING, GOOD, STALE, UNCERTAIN_QUALITY
+from ingest.errors import UnitFileError
 from ingest.journal import Line
 from monitor import shiftnote
 from monitor.alerts import ACKNOWLEDGED, NORMAL, SHELVED, UNACKNOWLEDGED, Alert, State
 from monitor.shiftnote import ACT, Out, Shift
 from tests import page_made
+from tests.unitfiles_made import loaded, with_edit
 
 BERLIN = "Europe/Berlin"
 THREE = (time(6), time(14), time(22))
@@ -62,6 +66,18 @@ def test_shifts_follow_one_another_without_gap_over_a_whole_year():
 def test_one_shift_a_day_lasts_a_day():
     shift = shiftnote.shift_at((time(7),), "UTC", utc(2026, 4, 14, 6))
     assert shift == Shift(utc(2026, 4, 13, 7), utc(2026, 4, 14, 7))
+
+
+def test_the_unit_file_says_when_shifts_begin_else_they_are_three(tmp_path: Path):
+    assert UNIT.shift_starts == THREE
+    two = loaded(tmp_path, with_edit("[unit]\n", '[unit]\nshift_starts = ["18:00", "06:00"]\n'))
+    assert two.shift_starts == (time(6), time(18))
+
+
+@pytest.mark.parametrize("wrong", ['["6:00"]', '["24:00"]', '["06:00", "06:00"]', "[]", '"06:00"', "[6]"])
+def test_what_is_no_list_of_times_of_day_is_refused(tmp_path: Path, wrong: str):
+    with pytest.raises(UnitFileError, match=r"unit\.shift_starts"):
+        loaded(tmp_path, with_edit("[unit]\n", f"[unit]\nshift_starts = {wrong}\n"))
 
 
 def note(number: int, first: datetime, text: str) -> Line:

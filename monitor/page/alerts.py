@@ -38,9 +38,9 @@ def _body(key: str, which: str) -> None:
     known = data.span(unit)
     if known is None:
         return
-    found = told.dossiers(unit, known)
+    found = told.dossiers(unit, known, BACK)
     groups = told.groups(found, known, every=which == ALL, length=BACK)
-    chosen = _chosen(groups)
+    chosen = _chosen(key, groups)
     shell.write(f"<p>{escape(_count(groups, known, unit))}</p>")
     for group in groups:
         with st.container(border=True, key=f"case {group[0].alert.id}"):
@@ -49,13 +49,13 @@ def _body(key: str, which: str) -> None:
     _health(found, known)
 
 
-def _chosen(groups: tuple[tuple[Dossier, ...], ...]) -> str:
+def _chosen(key: str, groups: tuple[tuple[Dossier, ...], ...]) -> str:
     """Which alert is open: the one the address names, at first the worst; none once it was closed."""
-    if CHOSEN not in st.session_state:
-        worst = groups[0][0].alert.id if groups else NONE
-        st.session_state[CHOSEN] = st.query_params.get(CHOSEN, worst)
-    st.query_params[CHOSEN] = st.session_state[CHOSEN]
-    return str(st.session_state[CHOSEN])
+    chosen = str(st.session_state.get(CHOSEN) or st.query_params.get(CHOSEN, ""))
+    if chosen != NONE and chosen.rpartition("-")[0] != key:  # none yet, or of another unit
+        chosen = groups[0][0].alert.id if groups else NONE
+    st.session_state[CHOSEN] = st.query_params[CHOSEN] = chosen
+    return chosen
 
 
 def _choose(alert: str) -> None:

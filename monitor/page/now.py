@@ -28,7 +28,7 @@ def view() -> None:
     if known is None:
         shell.nothing_yet()
         return
-    found = told.dossiers(unit, known)
+    found = told.dossiers(unit, known, RECENT)
     groups = told.groups(found, known, every=False, length=RECENT)
     _freshness(unit, known)
     _alerts(unit, known, groups)

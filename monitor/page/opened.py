@@ -14,7 +14,6 @@ from ingest.journal import Line
 from ingest.unit import Unit, Watch
 from monitor import charts, desk, tellalerts, tellverdict, wording
 from monitor.alerts import (
-    ACKNOWLEDGED,
     CAUSES,
     CLOSE,
     NORMAL,
@@ -228,7 +227,7 @@ def _acts(unit: Unit, one: Dossier) -> None:
     shell.write("<h3>What is done</h3>")
     acts.name()
     with st.container(horizontal=True, gap="small"):
-        if condition not in (NORMAL, ACKNOWLEDGED):
+        if one.asks:
             st.button(
                 "Take", key=f"take {alert} {seen}", type="primary", on_click=_do,
                 args=(unit.key, alert, seen, TAKE), help="You look after it.",

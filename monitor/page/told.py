@@ -13,8 +13,8 @@ from monitor.dossier import Dossier, Present
 from monitor.page import data, shell
 
 
-def dossiers(unit: Unit, known: data.Span) -> tuple[Dossier, ...]:
-    """Give every alert of a unit with all that belongs to it.
+def dossiers(unit: Unit, known: data.Span, length: timedelta) -> tuple[Dossier, ...]:
+    """Give the open alerts of a unit, and those raised lately, with all that belongs to them.
 
     Parameters
     ----------
@@ -22,8 +22,11 @@ def dossiers(unit: Unit, known: data.Span) -> tuple[Dossier, ...]:
         One reactor.
     known : Span
         Time that the store knows.
+    length : timedelta
+        How far back from its end those reach that are back to normal.
     """
-    found = data.alerts(unit, shell.clock())
+    since = (known.last - length).to_pydatetime()
+    found = [one for one in data.alerts(unit, shell.clock()) if one[1].open or one[0].raised >= since]
     names = {alert.watch: alert.figure for alert, _ in found}
     present = Present(
         figures=data.figures(unit),
