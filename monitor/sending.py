@@ -82,7 +82,7 @@ def _told(fault: Exception, secret: Secret) -> str:
         words = _answer(fault.smtp_code, fault.smtp_error)
     elif isinstance(fault, ssl.SSLCertVerificationError):
         words = f"its certificate is not accepted: {fault.verify_message}"
-    elif isinstance(fault, TimeoutError):
+    elif TimeoutError in (type(fault), type(fault.__context__)):  # smtplib makes another one of it
         words = "no answer in time"
     return shown(secret.hide(words or type(fault).__name__))[:MOST_WORDS]
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 import signal
+import socket
 import subprocess
 import sys
 from collections.abc import Iterator
@@ -201,6 +202,13 @@ def test_a_webhook_that_hangs_is_left_in_time(store: Path, desk: Desk):
     assert posted(store, hook(desk), timeout_s=0.2).trouble == "no answer in time"
     assert posted(store, hook(desk), 1).sent == 2
     assert sorted(desk.ids) == ["n1", "n1", "n2"]
+
+
+def test_a_mail_server_that_says_nothing_is_left_in_time(store: Path):
+    put(store, "n1")
+    with socket.create_server(("127.0.0.1", 0)) as silent:
+        told = posted(store, mail_to(Mailbox(silent.getsockname()[1]), None), timeout_s=0.2)
+    assert (told.trouble, told.waiting) == ("no answer in time", 1)
 
 
 def test_a_server_that_dies_once_it_has_a_notice_gets_it_again_under_the_same_id(store: Path, desk: Desk):
