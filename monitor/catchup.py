@@ -42,7 +42,7 @@ from monitor.days import DAY_US, Day, Plan, changed_days, rows
 from monitor.layout import states_table, table_of
 from monitor.months import days_before, figure_tables, runs_of, worked_out
 
-METHOD = "2"  # to be raised when the same readings and unit file give other numbers: all days become due
+METHOD = "3"  # to be raised when the same readings and unit file give other numbers: all days become due
 PLAN_STAGE, PLAN_MONTH = "plan", "1970-01"  # one row that tells what the stored months were worked out with
 DERIVED = ("cells", "states", "figures-")
 # What a unit file says that no stored number depends on: a change of it makes nothing due.

@@ -13,7 +13,7 @@ from datetime import timedelta
 import numpy as np
 from numpy.typing import NDArray
 
-from ingest.cells import DOWN, RUNNING
+from ingest.cells import DOWN, NOT_KNOWN, RUNNING
 from monitor.amounts import Amounts
 from monitor.sums import CellTerms, Functionals, Total, between, cell_terms
 
@@ -37,7 +37,7 @@ class Tally:
 
     group: NDArray[np.intp]  # (f, 2): which of `sums` belongs to a figure in a mode
     sums: tuple[Sums, ...]
-    idle: NDArray[np.int32]  # (2, b) cells that are not of the mode
+    idle: NDArray[np.int32]  # (2, b) cells that are known not to be of the mode
     told: NDArray[np.int32]  # (2, b) cells of it with any amount seen
     unsolved: NDArray[np.int32]  # (2, b) cells of it without a converged balance
     hold: tuple[timedelta, ...]  # (c,) time between independent results of each class
@@ -73,7 +73,8 @@ def tally(plan: Functionals, amounts: Amounts, unsolved: Mask, bounds: NDArray[n
     for place, (_, users) in enumerate(groups):
         group[tuple(np.array(users).T)] = place
     idle, told_in, unsolved_in = (
-        total(flags.astype(np.int32))[0] for flags in (~modes, modes & told, modes & unsolved[rows])
+        total(flags.astype(np.int32))[0]
+        for flags in (idle_in(operating), modes & told, modes & unsolved[rows])
     )
     return Tally(
         group=group,
@@ -83,6 +84,23 @@ def tally(plan: Functionals, amounts: Amounts, unsolved: Mask, bounds: NDArray[n
         unsolved=unsolved_in,
         hold=amounts.hold,
     )
+
+
+def idle_in(operating: NDArray[np.int8]) -> Mask:
+    """Tell which cells are known not to be of a mode.
+
+    Parameters
+    ----------
+    operating : ndarray of int8, shape (t,)
+        Index into `cells.OPERATING`.
+
+    Returns
+    -------
+    ndarray of bool, shape (2, t)
+        As operated, steady. A cell whose condition is not known may have run: it is missing time, not idle
+        time, or a few cells after a hole in the record would pass for a whole window.
+    """
+    return np.array([operating == DOWN, (operating != RUNNING) & (operating != NOT_KNOWN)])
 
 
 def _by_mask(plan: Functionals, seen: Mask, modes: Mask) -> list[Group]:

@@ -7,13 +7,12 @@ from dataclasses import replace
 
 import numpy as np
 import pandas as pd
-from numpy.typing import NDArray
 
-from ingest.cells import DOWN, RUNNING
 from ingest.unit import Unit
 from monitor.figures import Figure
 from monitor.summary.record import Record
 from monitor.summary.span import Span, Stretch
+from monitor.tallies import idle_in
 from monitor.windows import MODES, REASONS, span_figures
 
 SELECTIVITY = "selectivity on converted"
@@ -160,14 +159,8 @@ def _counted_h(unit: Unit, record: Record, stretch: Stretch, mode: str) -> float
     """Time of a mode in a stretch [h]; what the record does not hold counts as running."""
     start, operating = record.cells.start, record.amounts.operating
     inside = (start >= stretch.first_us) & (start < stretch.last_us)
-    idle = _idle(operating[inside], mode).sum() * unit.cell.total_seconds() / 3600
+    idle = idle_in(operating[inside])[MODES.index(mode)].sum() * unit.cell.total_seconds() / 3600
     return (stretch.last_us - stretch.first_us) / 3.6e9 - float(idle)
-
-
-def _idle(operating: NDArray[np.int8], mode: str) -> NDArray[np.bool_]:
-    """Tell which cells are not of a mode."""
-    idle: NDArray[np.bool_] = operating == DOWN if mode == MODES[0] else operating != RUNNING
-    return idle
 
 
 def _of_mode(figure: Figure, told: pd.Series, days: pd.DataFrame) -> tuple[object, ...]:
