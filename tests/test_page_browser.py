@@ -18,7 +18,7 @@ from tests import page_made
 pytestmark = pytest.mark.browser
 
 END = "2026-04-14T12:20Z"
-VIEWS = ("", "trend", "balance")
+VIEWS = ("", "trend", "balance", "alerts")
 QUIET = [
     "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking",
     "--disable-component-update", "--disable-sync",
@@ -122,7 +122,7 @@ def opened(browser: Browser, port: int) -> Iterator[Opened]:
 
 @pytest.mark.parametrize("scheme", ["light", "dark"])
 @pytest.mark.parametrize("wide", [True, False], ids=["1920", "390"])
-@pytest.mark.parametrize("path", VIEWS, ids=["now", "trend", "balance"])
+@pytest.mark.parametrize("path", VIEWS, ids=["now", "trend", "balance", "alerts"])
 def test_a_view_is_drawn_without_fault_and_fits_the_screen(
     opened: Opened, path: str, wide: bool, scheme: str
 ):
