@@ -177,7 +177,7 @@ def test_what_is_urgent_goes_first_and_has_a_place_when_the_hour_is_full():
 
 
 def test_what_was_tried_may_have_arrived_and_never_goes_under_another_id():
-    due = [notice("a", tries=1), notice("b", tries=2), notice("c"), notice("d"), notice("e")]
+    due = [notice("c"), notice("d"), notice("e"), notice("a", tries=1), notice("b", tries=2)]
     assert sent_in_an_hour(due, 4) == [["a"], ["b"], ["c", "d", "e"]]
 
 
