@@ -161,21 +161,3 @@ def table_of(frame: pd.DataFrame) -> pa.Table:
 
 def _instants(time_us: NDArray[np.int64]) -> pa.Array:
     return pa.array(time_us, pa.int64()).cast(pa.timestamp("us", "UTC"))
-
-
-def utc_index(time_us: NDArray[np.int64], name: str) -> pd.DatetimeIndex:
-    """Make an index of instants.
-
-    Parameters
-    ----------
-    time_us : ndarray of int64, shape (t,)
-        [us since 1970, UTC].
-    name : str
-        Of the index.
-
-    Returns
-    -------
-    DatetimeIndex
-        Zone-aware UTC, in microseconds.
-    """
-    return pd.DatetimeIndex(time_us.astype("datetime64[us]"), name=name).tz_localize("UTC")
