@@ -15,6 +15,7 @@ from streamlit.testing.v1 import AppTest
 
 from ingest import journal
 from ingest.journal import Line
+from monitor import desk
 from monitor.page import acts
 from tests import page_made
 from tests.source import ROOT
@@ -177,6 +178,35 @@ def test_the_next_shift_sees_the_note_of_the_last_one(monkeypatch, store):
     assert "Note of shift 14 Apr 06:00 to 14:00 CEST" in said
     assert "Load goes up at ten." in said
     assert "FI-201: stuck" in said
+
+
+def test_limits_are_tried_on_the_page_and_nothing_is_written(monkeypatch, store):
+    before = page_made.DEMO.read_bytes()
+    test = shown(monkeypatch, store, ALERTS, alert="none")
+    test.number_input(key="try Low yield on feed 8 h").set_value(80.5)
+    test = pressed(test, "Try")
+    assert "1 episode from" in text(test)
+    assert f"not judged yet ({ID}, not closed yet)" in text(test)
+    assert "low = 80.5" in test.code[0].value
+    (curve,) = charts(test)
+    assert curve["layer"][0]["data"] == {"name": "trial"}
+    assert (page_made.DEMO.read_bytes(), lines(store)) == (before, ())
+
+
+def test_limits_that_cannot_be_tried_are_told_with_what_to_do(monkeypatch, store):
+    test = shown(monkeypatch, store, ALERTS, alert="none")
+    test.number_input(key="try Low yield on feed 8 h").set_value(None)
+    said = text(pressed(test, "Try"))
+    assert "there is no limit" in said
+    assert "Write a low or a high one, or both." in said
+
+
+def test_a_shelved_alert_stands_on_the_first_view_with_its_end(monkeypatch, store):
+    desk.shelve(store, ID, "A. Moor", reason="span gas is being changed")
+    said = text(shown(monkeypatch, store, NOW))
+    assert "shelved by A. Moor until" in said
+    assert "<li class='rest'>" in said
+    assert "<dt>shelved or out of service</dt>" in said
 
 
 @pytest.fixture(scope="module")

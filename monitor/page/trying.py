@@ -62,7 +62,7 @@ def _asked(unit: Unit, watch: Watch | None) -> Watch:
             windows = {wording.window(one): one for one in unit.windows}
             window = windows[st.selectbox("Window", list(windows), key=f"try window {place}", width=110)]
         low, high = (
-            st.number_input(f"{side} limit", value=value, key=f"try {side} {place}", format="%.6g", width=130)
+            _limit(f"{side} limit", value, f"try {side} {place}")
             for side, value in (("Low", start.low), ("High", start.high))
         )
         deadband = st.number_input(
@@ -77,6 +77,13 @@ def _asked(unit: Unit, watch: Watch | None) -> Watch:
         start, figure=figure, window=window, low=low, high=high, deadband=deadband,
         on_delay=on * HOUR, off_delay=off * HOUR,
     )  # fmt: skip
+
+
+def _limit(label: str, value: float | None, key: str) -> float | None:
+    """One limit; it can be emptied, so what it begins with is set here and not as its default."""
+    if key not in st.session_state:
+        st.session_state[key] = value
+    return st.number_input(label, value=None, key=key, format="%.6g", width=130)
 
 
 def _usual(unit: Unit) -> Watch:
