@@ -9,6 +9,7 @@ from itertools import pairwise
 from typing import Any
 
 from ingest.journal import Line
+from ingest.unit import Unit
 from monitor import wording
 from monitor.alerthealth import PERIOD, Health
 from monitor.alerts import CLOSE, SHELVED, Alert, Group, State
@@ -24,15 +25,15 @@ ACTS = {
 }
 
 
-def listed(groups: Sequence[Group], zone: str) -> Iterator[str]:
+def listed(groups: Sequence[Group], unit: Unit) -> Iterator[str]:
     """Tell the alerts of a unit, worst first; those of one cause under the first of them.
 
     Parameters
     ----------
     groups : sequence of Group
         From `alerts.grouped`.
-    zone : str
-        The plant's time zone.
+    unit : Unit
+        Gives watches and time zone.
 
     Yields
     ------
@@ -42,11 +43,11 @@ def listed(groups: Sequence[Group], zone: str) -> Iterator[str]:
     if not groups:
         yield "no alert is open"
     for group in groups:
-        yield headline(*group.head, zone)
-        yield from (f"  with it: {headline(*one, zone)}" for one in group.others)
+        yield headline(*group.head, unit)
+        yield from (f"  with it: {headline(*one, unit)}" for one in group.others)
 
 
-def headline(alert: Alert, state: State, zone: str) -> str:
+def headline(alert: Alert, state: State, unit: Unit) -> str:
     """Tell one alert in one line.
 
     Parameters
@@ -54,19 +55,22 @@ def headline(alert: Alert, state: State, zone: str) -> str:
     alert : Alert
     state : State
         Where it stands.
-    zone : str
-        The plant's time zone.
+    unit : Unit
+        Gives watches and time zone.
 
     Returns
     -------
     str
         `line3-17 high  yield on feed, 8 h below 76.0 since 2026-03-29 06:00, unacknowledged; reactor`.
     """
+    zone = unit.time_zone
     since = wording.local_time(alert.raised, zone)
     span = f"since {since}" if alert.active else f"{since} to {_end(alert, zone)}"
     said = f"; {alert.cause}" if alert.cause else ""
     names = f" ({', '.join(alert.suspects)})" if alert.suspects else ""
-    return f"{alert.id} {alert.priority}  {crossing(alert)} {span}, {standing(state, zone)}{said}{names}"
+    return (
+        f"{alert.id} {alert.priority}  {_crossing(alert, unit)} {span}, {standing(state, zone)}{said}{names}"
+    )
 
 
 def _end(alert: Alert, zone: str) -> str:
@@ -76,21 +80,12 @@ def _end(alert: Alert, zone: str) -> str:
     return wording.local_time(alert.cleared, zone)
 
 
-def crossing(alert: Alert) -> str:
-    """Say which limit is crossed.
-
-    Parameters
-    ----------
-    alert : Alert
-
-    Returns
-    -------
-    str
-        `yield on feed, 8 h below 76.0`.
-    """
+def _crossing(alert: Alert, unit: Unit) -> str:
+    """Which limit is crossed; that of a test for drift is what was expected."""
     side = "below" if alert.side == "low" else "above"
-    window = wording.window(timedelta(hours=alert.window_h))
-    return f"{alert.figure}, {window} {side} {wording.plain(alert.limit)}"
+    drifts = any(one.name == alert.watch and one.test != "limits" for one in unit.watches)
+    limit = f"the {wording.number(alert.limit, 2)} expected" if drifts else wording.plain(alert.limit)
+    return f"{alert.figure}, {wording.window(timedelta(hours=alert.window_h))} {side} {limit}"
 
 
 def standing(state: State, zone: str) -> str:
@@ -113,7 +108,7 @@ def standing(state: State, zone: str) -> str:
     return f"{state.condition}{by}{until if state.condition == SHELVED else ''}{closed}"
 
 
-def told(alert: Alert, state: State, history: Sequence[tuple[datetime, Alert]], zone: str) -> Iterator[str]:
+def told(alert: Alert, state: State, history: Sequence[tuple[datetime, Alert]], unit: Unit) -> Iterator[str]:
     """Tell all about one alert: how it stands, what late data changed, and its lines of the journal.
 
     Parameters
@@ -123,15 +118,16 @@ def told(alert: Alert, state: State, history: Sequence[tuple[datetime, Alert]], 
         Where it stands.
     history : sequence of (datetime, Alert)
         From `desk.history`.
-    zone : str
-        The plant's time zone.
+    unit : Unit
+        Gives watches and time zone.
 
     Yields
     ------
     str
         One line.
     """
-    yield headline(alert, state, zone)
+    zone = unit.time_zone
+    yield headline(alert, state, unit)
     yield f"  limit first crossed {wording.local_time(alert.first_crossed, zone)}"
     if alert.withdrawn:
         yield f"  withdrawn: {alert.withdrawn}"

@@ -69,7 +69,7 @@ def list_(unit_files: Sequence[Path], store: Path, every: bool, as_json: bool) -
         known = edges(store, unit.key)
         counts = health(found, min(now, known[1] + unit.cell) if known else now)
         units[unit.key] = {"alerts": [as_table(*one) for one in shown], "health": asdict(counts)}
-        told += [f"{unit.name} [{unit.key}]", *listed(grouped(shown), unit.time_zone), *healthy(counts)]
+        told += [f"{unit.name} [{unit.key}]", *listed(grouped(shown), unit), *healthy(counts)]
     say({"units": units}, told, as_json=as_json)
 
 
@@ -92,7 +92,7 @@ def show(alert: str, unit_file: Path, store: Path, as_json: bool) -> None:
     one, state = find(store, alert, datetime.now(UTC))
     verdict = verdicts([(one, state)], episodes(store, one.unit)).get(one.id)
     said = [
-        *told(one, state, history(store, one), unit.time_zone),
+        *told(one, state, history(store, one), unit),
         *(lines(verdict, unit) if verdict else ()),
     ]
     table = {**as_table(one, state), "verdict": json.loads(as_text(verdict)) if verdict else None}
