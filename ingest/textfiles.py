@@ -286,6 +286,8 @@ def _quick(file: TextFile, dialect: Dialect, columns: Sequence[int], lines: Line
     """
     blanks = not dialect.layout.is_long and _holds_blanks(lines.data, ord(file.separator))
     words = frozenset({""}) if blanks else dialect.numbers.missing
+    if dialect.clock.form in EPOCHS and (b"0x" in lines.data or b"0X" in lines.data):
+        return None  # Arrow reads whole numbers in base 16, too
     block = file.parse(lines, _types(dialect, columns, quick=True), **_settings(dialect, words))
     if block is None or not _clean(block, dialect, columns):
         return None

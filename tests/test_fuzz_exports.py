@@ -354,11 +354,12 @@ def test_a_time_zone_that_is_no_text_is_damage(tmp_path: Path):
         opened(tmp_path / "x.parquet", zone=ZONE, wanted=WANTED)
 
 
-def test_seconds_in_exponents_are_no_times_whatever_stands_beside_them(tmp_path: Path):
+@pytest.mark.parametrize("odd", ["1.79e9", "0x6ADCF3E0"])
+def test_seconds_in_exponents_or_base_16_are_no_times_whatever_stands_beside_them(tmp_path: Path, odd: str):
     # 1.79e9 has lost the last seven digits of the seconds that it once was.
     for other in ("1792879260", "1792879260.5"):
         path = tmp_path / "x.csv"
-        path.write_text(f"time,A\n1792879200,1\n{other},2\n1.79e9,3\n", encoding="utf-8")
+        path.write_text(f"time,A\n1792879200,1\n{other},2\n{odd},3\n", encoding="utf-8")
         batches = opened(path, zone=ZONE, wanted=WANTED)
         assert sum(len(series.time) for readings in batches for series in readings.values()) == 2
-        assert [(one.row, one.text) for one in batches.account().evidence] == [(4, "1.79e9")]
+        assert [(one.row, one.text) for one in batches.account().evidence] == [(4, odd)]
