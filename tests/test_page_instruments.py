@@ -109,3 +109,19 @@ def test_the_view_is_drawn_and_fits_a_screen_and_a_phone(chromium: str, store: P
             assert [one for one in said if not one.startswith(KNOWN[0]) and KNOWN[1] not in one] == []
             context.close()
         browser.close()
+
+
+@pytest.mark.browser
+def test_every_view_can_be_reached_from_every_other_that_has_a_span(chromium: str, store: Path):
+    with serving(store) as port, sync_playwright() as play:
+        browser = play.chromium.launch(executable_path=chromium, args=QUIET)
+        page = browser.new_page()
+        page.goto(f"http://127.0.0.1:{port}/trend")
+        seven = page.get_by_role("radiogroup", name="Span").get_by_role("radio", name="7 d")
+        drawn = {"Trend": "Draw across a chart", "Balance": "Raw closures", "Instruments": "Condition over"}
+        page.get_by_text(drawn["Trend"]).first.wait_for(timeout=30_000)
+        for view in ("Balance", "Instruments", "Trend", "Instruments", "Balance", "Trend"):
+            page.get_by_role("link", name=view, exact=True).click()
+            page.get_by_text(drawn[view]).first.wait_for(timeout=30_000)
+            assert seven.get_attribute("aria-checked") == "true", view
+        browser.close()

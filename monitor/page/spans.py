@@ -41,7 +41,11 @@ def choice(label: str, options: list[str], usual: str, key: str) -> str:
     str
         The one chosen.
     """
-    if key not in st.session_state and key not in st.query_params:
+    held = st.session_state.get(key)
+    if held in options:
+        # Claimed anew: else the widget of another view takes it away where the address leaves it out.
+        st.session_state[key] = held
+    elif st.query_params.get(key) not in options:
         # Set here and not as the default: the brush sets it too, and an address leaves out defaults.
         st.session_state[key] = usual
     return str(st.segmented_control(label, options, required=True, key=key, bind="query-params"))
