@@ -1,4 +1,4 @@
-"""The only place that reads for the page, and the only one that caches; every key holds the store's version.
+"""What all views read of the store, cached; every key holds the store's version.
 
 Frames come from what a pass wrote. The version of the store is in the key of every cached answer, so that
 a pass shows at the next refresh and nothing stale is ever shown.
