@@ -31,7 +31,7 @@ def shelf(number: int, until: timedelta) -> Line:
 
 
 TAKEN, SHELF = line("acknowledge"), shelf(2, timedelta(hours=20))
-# Conditions and ways between them: ANSI/ISA-18.2-2016 / IEC 62682:2014 as quoted in an open course text on
+# Conditions and ways between them: ANSI/ISA-18.2-2016 / IEC 62682:2014 as quoted in an open text on
 # programming; the standards themselves were not seen. Alerts here do not latch.
 TRANSITIONS = [
     ("condition present: unacknowledged", ALERT, [], "unacknowledged"),
