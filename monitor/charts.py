@@ -296,7 +296,10 @@ def _places(line: pd.DataFrame) -> int:
 
 
 def _clipped(spans: pd.DataFrame, panel: Panel) -> pd.DataFrame:
-    """Cut spans to what is shown and find out which have room for their word (15 % of the width)."""
+    """Cut spans to what is shown and find out which have room for their word (15 % of the width).
+
+    Words of spans that end together would stand on one another: the first of them bears all.
+    """
     kept = spans[(spans["end"] > panel.first) & (spans["start"] < panel.last)]
     start = pd.DatetimeIndex(kept["start"]).as_unit("us")
     end = pd.DatetimeIndex(kept["end"]).as_unit("us")
@@ -304,9 +307,12 @@ def _clipped(spans: pd.DataFrame, panel: Panel) -> pd.DataFrame:
     length = end - start
     text = kept["text"].to_numpy(object)
     room = np.asarray(length > 0.15 * (panel.last - panel.first))
-    word = kept["word"].to_numpy(object)
+    word = kept["word"].where(room)
+    joined = word.groupby(end).transform(lambda words: "; ".join(dict.fromkeys(words.dropna())))
+    room &= ~pd.Series(end.where(room)).duplicated().to_numpy()
+    shown = joined.where(room, kept["word"]).to_numpy(object)
     return pd.DataFrame(
-        {"start": start, "end": end, "middle": start + length / 2, "word": word, "text": text, "room": room}
+        {"start": start, "end": end, "middle": start + length / 2, "word": shown, "text": text, "room": room}
     )
 
 

@@ -151,6 +151,13 @@ def test_spans_are_cut_to_what_is_shown_and_only_wide_ones_bear_their_word():
     assert kept["start"].iloc[0] == END - pd.Timedelta(days=7)
 
 
+def test_episodes_that_end_together_bear_their_words_in_one_place():
+    spans = pd.concat([made_spans("below 81.0"), made_spans("below the 82.38 expected")], ignore_index=True)
+    drawn = made_trend(days=1, episodes=spans).data["episodes"]
+    assert list(drawn["room"]) == [True, *[False] * (len(drawn) - 1)]
+    assert drawn["word"][0] == "below 81.0; below the 82.38 expected"
+
+
 def test_axis_labels_are_plant_time_through_the_doubled_hour():
     # Directive 2000/84/EC: on 25 Oct 2026 in Berlin the hour from 02:00 comes twice, at 00:00Z and at 01:00Z.
     first, last = pd.Timestamp("2026-10-24T22:00Z"), pd.Timestamp("2026-10-25T05:00Z")
