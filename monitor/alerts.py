@@ -13,6 +13,7 @@ from datetime import datetime, timedelta
 from typing import Any
 
 from ingest.journal import Line
+from ingest.unit import PRIORITIES
 
 KIND = "alert"  # of the store's documents
 CONDITIONS = (
@@ -28,7 +29,7 @@ UNACKNOWLEDGED, ACKNOWLEDGED, RETURNED, SHELVED, SUPPRESSED, OUT_OF_SERVICE, NOR
 TAKE, SHELVE, UNSHELVE, NOTE, CLOSE = "acknowledge", "shelve", "unshelve", "note", "close"
 REST, RESUME = "out of service", "back in service"
 CAUSES = ("reactor", "instrument", "data", "planned", "false")
-PRIORITIES = ("high", "medium", "low")
+LONGEST_SHELF = timedelta(hours=8)  # at most a shift
 
 
 @dataclass(frozen=True, slots=True)

@@ -16,6 +16,7 @@ from monitor.alerts import (
     CAUSES,
     CLOSE,
     KIND,
+    LONGEST_SHELF,
     NORMAL,
     NOTE,
     OUT_OF_SERVICE,
@@ -31,8 +32,6 @@ from monitor.alerts import (
     from_body,
     subject_of_watch,
 )
-
-LONGEST_SHELF = timedelta(hours=8)  # at most a shift
 
 
 def known(folder: Path, unit: str) -> tuple[Alert, ...]:
@@ -133,10 +132,13 @@ def find(folder: Path, alert_id: str, now: datetime) -> tuple[Alert, State]:
         There is no such alert.
     """
     unit = alert_id.rpartition("-")[0]
-    for alert, state in read(folder, unit, now):
-        if alert.id == alert_id:
-            return alert, state
-    raise StoreError(f"alert {alert_id}: there is none in {folder}", remedy="List them: outlet alerts --all")
+    kept = documents.latest(folder, unit, KIND, alert_id)
+    if kept is None:
+        raise StoreError(
+            f"alert {alert_id}: there is none in {folder}", remedy="List them: outlet alerts list --all"
+        )
+    alert = from_body(kept.body)
+    return alert, fold(alert, journal.lines(folder, unit=unit), now)
 
 
 def history(folder: Path, alert: Alert) -> tuple[tuple[datetime, Alert], ...]:

@@ -11,8 +11,8 @@ from typing import Any
 from zoneinfo import ZoneInfo
 
 from ingest.outbox import Notice
-from ingest.unit import Target, Unit
-from monitor.alerts import OUT_OF_SERVICE, PRIORITIES, SHELVED, Alert, Group, State, grouped
+from ingest.unit import PRIORITIES, Target, Unit
+from monitor.alerts import OUT_OF_SERVICE, SHELVED, Alert, Group, State, grouped
 from monitor.noticetext import EVENTS, Change, in_words, subject_of, together, trial_words
 
 RAISED, VERDICT, CLEARED, WITHDRAWN = EVENTS

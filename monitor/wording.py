@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from zoneinfo import ZoneInfo
 
+from ingest.unit import PRIORITIES
+
 MINUS = "\u2212"
 
 # Why a figure is not shown: what stands in its place, and what it means. Keys as in windows.REASONS.
@@ -40,7 +42,7 @@ SHAPES = {
     "free": "\u25cb",
     "missing": "\u25c7",
 }
-PRIORITY_RANK = {"high": 0, "medium": 1, "low": 2}
+PRIORITY_RANK = {priority: rank for rank, priority in enumerate(PRIORITIES)}
 OPERATING_SHAPES = {
     "running": "\u25cf",
     "starting": "\u25d4",

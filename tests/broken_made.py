@@ -31,6 +31,7 @@ from ingest.intake import take_in
 from ingest.ledger import Store
 from ingest.readings import read_months
 from ingest.unit import ExportRules, Unit
+from tests.memory import peak_mb
 from tests.units_made import made_instrument, made_unit
 
 ODD_TAGS = ("../../x", "C:\\x", "=cmd()", "two\nlines", "t" * 400)
@@ -624,14 +625,8 @@ def passed(case: Broken, good: Path, folder: Path, top: Path) -> dict[str, Any]:
         ],
         "good": {tag: series.value.tolist() for tag, series in held.items()},
         "appeared": sorted(after - before),
-        "peak_mb": _peak_mb(),
+        "peak_mb": peak_mb(),
     }
-
-
-def _peak_mb() -> float:
-    """The most memory that this process held; ru_maxrss would count its parent's at the fork as well."""
-    status = Path("/proc/self/status").read_text(encoding="utf-8")
-    return int(status.split("VmHWM:")[1].split()[0]) / 1024
 
 
 def _outside(top: Path, store: Path) -> set[str]:

@@ -12,13 +12,13 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from monitor.alerts import CAUSES
+from monitor.alerts import CAUSES, LONGEST_SHELF
 from monitor.commands.shared import json_option, say, store_option, unit_option, units_option
 
 if TYPE_CHECKING:
     from ingest.journal import Line
 
-LONGEST_H = 8.0  # desk.LONGEST_SHELF, which it would take too long to import here
+LONGEST_H = LONGEST_SHELF / timedelta(hours=1)
 
 _id = click.argument("alert", metavar="ID")
 

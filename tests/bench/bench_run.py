@@ -19,6 +19,7 @@ from datetime import timedelta
 from pathlib import Path
 
 from tests.bench.marked import show, table
+from tests.memory import peak_mb
 
 STEP = "--step"
 YEAR, DAY_US = 365, 86_400_000_000
@@ -43,10 +44,7 @@ def step(store: Path, export: Path) -> None:
     begun = time.process_time()
     result = run_pass([unit], store, [export], progress=lambda *_: None, settle=timedelta(0))
     passed = time.process_time() - begun
-    # Linux: ru_maxrss would count the parent's memory at the fork as well.
-    status = Path("/proc/self/status").read_text(encoding="utf-8")
-    peak = int(status.split("VmHWM:")[1].split()[0]) / 1024
-    told = {"passed": passed, "peak": peak, "days": result.units[0].days, "steps": result.processor_s}
+    told = {"passed": passed, "peak": peak_mb(), "days": result.units[0].days, "steps": result.processor_s}
     sys.stdout.write(json.dumps(told))
 
 
